@@ -1,0 +1,206 @@
+"""One pass of the adaptive loop: assemble, solve, estimate; and the plan for the next."""
+
+import time
+from collections.abc import Callable
+from dataclasses import dataclass, field, replace
+
+import numpy as np
+from numpy.typing import NDArray
+from scipy.linalg import lapack
+
+from .bisection import SPLIT_U, SPLIT_V, split_panels
+from .errors import NumericalError
+from .extrapolation import SMOOTH_DECAY, decay_of_parts, extrapolate, realised_share
+from .galerkin import galerkin_matrix
+from .indicator import two_level_indicator
+from .panels import Panels
+from .refinement import choose_splits, gain_worth
+from .solution import Notice
+
+__all__ = ["PassResult", "Plan", "plan_next", "run_pass"]
+
+FloatArray = NDArray[np.float64]
+IntArray = NDArray[np.int64]
+BoolArray = NDArray[np.bool_]
+Progress = Callable[..., None]
+
+#: The factorisation is repeated with this share added to the diagonal if it fails: two panels coincide.
+COINCIDENT = 1e-10
+
+
+@dataclass(frozen=True, eq=False)
+class PassResult:
+    """What one pass found; bare values, multiply by 4 pi eps for farads.
+
+    Attributes
+    ----------
+    panels : Panels
+    matrix : (n_panels, n_panels) float, m3
+        Galerkin matrix, lower triangle.
+    density : (n_panels, n_conductors) float
+        Solution of ``A density = areas`` for each conductor at 1 V.
+    value : (n_conductors, n_conductors) float, m
+        Galerkin value of the capacitance matrix.
+    gains : (n_panels, 2, n_conductors) float
+        Two-level gains.
+    decay : (n_panels, 2) float
+        How much less each further split gains.
+    realised : float
+        What the splits before this pass gained over what was promised.
+    limit : (n_conductors, n_conductors) float, m
+        Extrapolated value.
+    change : (n_conductors, n_conductors) float or None
+        ``limit`` less that of the pass before.
+    seconds : dict of str to float
+    notices : list of Notice
+    """
+
+    panels: Panels
+    matrix: FloatArray
+    density: FloatArray
+    value: FloatArray
+    gains: FloatArray
+    decay: FloatArray
+    realised: float
+    limit: FloatArray
+    change: FloatArray | None
+    seconds: dict[str, float]
+    notices: list[Notice] = field(default_factory=list)
+
+
+@dataclass(frozen=True, eq=False)
+class Plan:
+    """Panels for the next pass, and what is known about them.
+
+    Attributes
+    ----------
+    panels : Panels
+        Those taken over from the pass before come first.
+    known : (m, m) float or None
+        Galerkin matrix of the first m panels.
+    parent : (n_panels,) int
+        Panel of the pass before.
+    was_split : (n_before, 2) bool
+    worth : (n_before, 2) float
+        Of the gains before the split.
+    weights : (n_conductors, n_conductors) float
+        With which the worth was measured.
+    before : PassResult or None
+        Without its matrix.
+    """
+
+    panels: Panels
+    known: FloatArray | None = None
+    parent: IntArray | None = None
+    was_split: BoolArray | None = None
+    worth: FloatArray | None = None
+    weights: FloatArray | None = None
+    before: PassResult | None = None
+
+
+def run_pass(plan: Plan, report: Callable[[str, float, float], None]) -> PassResult:
+    """Assemble, solve and estimate.
+
+    Parameters
+    ----------
+    plan : Plan
+    report : callable
+        Told (stage, done, total).
+
+    Returns
+    -------
+    PassResult
+
+    Raises
+    ------
+    NumericalError
+        If the matrix is not positive definite.
+    """
+    panels = plan.panels
+    seconds: dict[str, float] = {}
+    start = time.perf_counter()
+    matrix = galerkin_matrix(
+        panels.corners, known=plan.known, progress=lambda done, total: report("matrix", done, total)
+    )
+    seconds["matrix"] = time.perf_counter() - start
+    start = time.perf_counter()
+    report("factorisation", 0.0, 1.0)
+    potentials = (panels.conductor[:, None] == np.arange(panels.n_conductors)).astype(np.float64)
+    charges = panels.areas[:, None] * potentials
+    density, notices = _solve(matrix, charges)
+    value = charges.T @ density
+    value = 0.5 * (value + value.T)
+    seconds["factorisation"] = time.perf_counter() - start
+    start = time.perf_counter()
+    gains = two_level_indicator(
+        panels,
+        density,
+        np.diag(matrix).copy(),
+        potentials,
+        progress=lambda done, total: report("estimate", done, total),
+    )
+    decay, realised = _history(plan, value, gains)
+    limit = extrapolate(value, gains, decay, realised)
+    change = None if plan.before is None else limit - plan.before.limit
+    seconds["estimate"] = time.perf_counter() - start
+    return PassResult(panels, matrix, density, value, gains, decay, realised, limit, change, seconds, notices)
+
+
+def _solve(matrix: FloatArray, charges: FloatArray) -> tuple[FloatArray, list[Notice]]:
+    """Bare densities by Cholesky factorisation of the lower triangle."""
+    notices = []
+    # the transpose of the lower triangle in C order is the upper one in Fortran order: no copy but this one
+    factor, info = lapack.dpotrf(np.array(matrix.T, order="F"), lower=0, clean=0, overwrite_a=1)
+    if info != 0:
+        shifted = np.array(matrix.T, order="F")
+        shifted[np.diag_indices_from(shifted)] *= 1.0 + COINCIDENT
+        factor, info = lapack.dpotrf(shifted, lower=0, clean=0, overwrite_a=1)
+        if info != 0:
+            raise NumericalError(
+                f"the matrix of {len(matrix)} panels is not positive definite: panels coincide or cross"
+            )
+        text = (
+            "panels coincide: bodies of one conductor overlap or touch along a face; the capacitances hold, "
+            "but how the charge is shared there is arbitrary"
+        )
+        notices.append(Notice("coincident-panels", text))
+    density, _ = lapack.dpotrs(factor, charges, lower=0)
+    return np.ascontiguousarray(density), notices
+
+
+def _history(plan: Plan, value: FloatArray, gains: FloatArray) -> tuple[FloatArray, float]:
+    """Decay of each panel's gains and the realised share of what was promised."""
+    before = plan.before
+    if before is None or plan.parent is None or plan.was_split is None or plan.worth is None or plan.weights is None:
+        return np.full((len(plan.panels), 2), SMOOTH_DECAY), 1.0
+    promised = np.einsum("pdi,pd->i", before.gains**2, plan.was_split) / np.diag(value)
+    gained = (np.diag(value) - np.diag(before.value)) / np.diag(value)
+    decay = decay_of_parts(plan.parent, plan.was_split, plan.worth, gain_worth(gains, plan.weights), before.decay)
+    return decay, realised_share(gained, promised)
+
+
+def plan_next(result: PassResult, weights: FloatArray) -> Plan:
+    """Split the panels that hold most of what is missing.
+
+    Parameters
+    ----------
+    result : PassResult
+    weights : (n_conductors, n_conductors) float
+        How much each entry of the capacitance matrix matters.
+
+    Returns
+    -------
+    Plan
+    """
+    worth = gain_worth(result.gains, weights)
+    split = choose_splits(worth)
+    panels, parent = split_panels(result.panels, split)
+    kept = parent[: int(np.count_nonzero(split == 0))]
+    was_split = np.stack([(split & SPLIT_U) > 0, (split & SPLIT_V) > 0], axis=1)
+    was_split[result.panels.n_corners == 3] = (split > 0)[result.panels.n_corners == 3, None]
+    known = result.matrix[np.ix_(kept, kept)]
+    return Plan(panels, known, parent, was_split, worth, weights, _without_matrix(result))
+
+
+def _without_matrix(result: PassResult) -> PassResult:
+    return replace(result, matrix=np.zeros((0, 0)))

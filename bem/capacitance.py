@@ -1,0 +1,244 @@
+"""The main job: Maxwell capacitance matrix of conductors in one medium, with its uncertainty."""
+
+import time
+from collections.abc import Callable
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+from .adaptive import PassResult, Plan, plan_next, run_pass
+from .constants import FOUR_PI_EPSILON_0
+from .creases import find_creases
+from .errors import InputError
+from .extrapolation import extrapolation_uncertainty
+from .facets import Facets, facet_shift, find_facets
+from .flats import panel_regions
+from .memory import dense_bytes, free_memory, panels_that_fit, peak_memory, refuse_if_too_large
+from .panels import Panels
+from .refinement import accuracy_targets, sharp_sides, starting_panels
+from .regions import find_regions
+from .solution import CapacitanceSolution, Notice, Pass
+from .surface import Surface
+
+__all__ = ["solve_capacitance"]
+
+FloatArray = NDArray[np.float64]
+Progress = Callable[..., None]
+
+#: Most panels of a dense solve; beyond, factorisation takes minutes a pass.
+MOST_PANELS = 15_000
+#: Relative error of the matrix entries, and with it of the energies, that the rules of
+#: :mod:`daraf.bem.pairs` leave at worst; expanded uncertainty of the line "integration".
+INTEGRATION = 1e-6
+#: Splitting panels is pointless once it can lower the uncertainty of no entry by more than this share.
+POINTLESS = 0.3
+
+
+@dataclass(frozen=True, eq=False)
+class _Judgement:
+    """Value, uncertainty and what drives it, bare; the last column is the sum over all conductors."""
+
+    value: FloatArray
+    lines: dict[str, FloatArray]
+    total: FloatArray
+    targets: FloatArray
+
+    @property
+    def reached(self) -> bool:
+        n = len(self.value)
+        return bool((self.total[:, :n] <= self.targets).all())
+
+    @property
+    def pointless(self) -> bool:
+        """Whether no entry that misses its target would gain from smaller panels."""
+        n = len(self.value)
+        fixed = np.hypot(self.lines["facets"], self.lines["integration"])[:, :n]
+        missed = self.total[:, :n] > self.targets
+        return bool((~missed | (self.lines["discretisation"][:, :n] < POINTLESS * fixed)).all())
+
+    @property
+    def excess(self) -> float:
+        """Largest uncertainty over its target."""
+        n = len(self.value)
+        return float((self.total[:, :n] / self.targets).max())
+
+
+def solve_capacitance(
+    surface: Surface,
+    *,
+    relative_permittivity: float = 1.0,
+    accuracy: float = 0.01,
+    memory_limit: int | None = None,
+    facets: str = "auto",
+    progress: Progress | None = None,
+) -> CapacitanceSolution:
+    """Maxwell capacitance matrix of conductors in one homogeneous medium.
+
+    Symmetric Galerkin boundary elements with one constant charge density per flat panel, refined where the
+    two-level indicator asks for it, extrapolated, with a budget of uncertainty.
+
+    Parameters
+    ----------
+    surface : Surface
+        Outward oriented closed bodies and open sheets, m.
+    relative_permittivity : float
+        Of the medium, at least 1.
+    accuracy : float
+        Relative expanded uncertainty (k = 2) asked of every self entry and every coupling above 1e-3 of
+        ``sqrt(C_ii C_jj)``; weaker couplings are held to that floor.
+    memory_limit : int, optional
+        Bytes; nine tenths of the free memory by default.
+    facets : {"auto", "true"}
+        "auto": edges that turn gently in rows stand for a smooth surface, whose capacitance is wanted;
+        "true": the facets are the part.
+    progress : callable, optional
+        Called with (stage, done, total, note). It may raise KeyboardInterrupt: what the finished passes
+        gave is then returned, marked ``interrupted``.
+
+    Returns
+    -------
+    CapacitanceSolution
+
+    Raises
+    ------
+    InputError
+        If a parameter is out of range.
+    MemoryRefused
+        If the coarsest panels would not fit into memory.
+    """
+    if not 0.0 < accuracy < 1.0:
+        raise InputError(f"accuracy must lie between 0 and 1, got {accuracy:g}")
+    if not 1.0 <= relative_permittivity < float("inf"):
+        raise InputError(f"relative permittivity must be at least 1, got {relative_permittivity:g}")
+    if facets not in ("auto", "true"):
+        raise InputError(f"facets must be 'auto' or 'true', got {facets!r}")
+    begin = time.perf_counter()
+    limit = memory_limit if memory_limit is not None else int(0.9 * free_memory())
+    report = progress or _silent
+    report("panels", 0.0, 1.0, "")
+    start, round_parts, notices, most = _prepare(surface, facets, limit)
+    seconds = {"panels": time.perf_counter() - begin}
+    passes: list[Pass] = []
+    plan: Plan | None = Plan(start)
+    result = judgement = None
+    interrupted = False
+    try:
+        while plan is not None:
+            result, judgement = _pass(plan, round_parts, accuracy, passes, report)
+            for stage, time_spent in result.seconds.items():
+                seconds[stage] = seconds.get(stage, 0.0) + time_spent
+            notices += [notice for notice in result.notices if notice not in notices]
+            plan = None if judgement.reached or judgement.pointless else _next(result, judgement, most, limit)
+    except KeyboardInterrupt:
+        if result is None or judgement is None:
+            raise
+        interrupted = True
+    seconds["total"] = time.perf_counter() - begin
+    n = surface.n_conductors
+    farads = FOUR_PI_EPSILON_0 * relative_permittivity
+    value, total = farads * judgement.value, farads * judgement.total
+    return CapacitanceSolution(
+        conductor_names=surface.conductor_names,
+        maxwell=value[:, :n],
+        maxwell_uncertainty=total[:, :n],
+        to_infinity=value[:, n],
+        to_infinity_uncertainty=total[:, n],
+        budget={cause: farads * line[:, :n] for cause, line in judgement.lines.items()},
+        accuracy=accuracy,
+        relative_permittivity=relative_permittivity,
+        reached=judgement.reached,
+        panels=result.panels,
+        densities=np.ascontiguousarray(farads * result.density.T),
+        passes=[Pass(p.panels, farads * p.maxwell, farads * p.estimate, p.seconds) for p in passes],
+        method="dense Cholesky",
+        iterations=0,
+        seconds=seconds,
+        peak_memory_bytes=peak_memory(),
+        warnings=notices + _guards(surface, judgement, value, total),
+        interrupted=interrupted,
+    )
+
+
+def _silent(stage: str, done: float, total: float, note: str = "") -> None:
+    return None
+
+
+def _prepare(surface: Surface, facets: str, limit: int) -> tuple[Panels, Facets | None, list[Notice], int]:
+    """Panels to start from, the round parts, notices, and the most panels that there is room for."""
+    regions, notices = find_regions(surface)
+    creases = find_creases(surface, regions)
+    panels, more = panel_regions(surface, regions, creases=creases)
+    refuse_if_too_large(len(panels), limit)
+    most = max(len(panels), min(MOST_PANELS, panels_that_fit(limit)))
+    round_parts = find_facets(surface, regions, creases) if facets == "auto" else None
+    sharp = sharp_sides(surface, creases, panels)
+    return starting_panels(panels, sharp, max(len(panels), most // 4)), round_parts, notices + more, most
+
+
+def _pass(
+    plan: Plan, round_parts: Facets | None, accuracy: float, passes: list[Pass], report: Progress
+) -> tuple[PassResult, _Judgement]:
+    start = time.perf_counter()
+    note = f"pass {len(passes) + 1}, {len(plan.panels)} panels"
+    result = run_pass(plan, lambda stage, done, total: report(stage, done, total, note))
+    judgement = _judge(result, round_parts, accuracy, len(passes) + 1)
+    flat = result.gains.reshape(-1, result.gains.shape[2])
+    passes.append(Pass(len(result.panels), result.value, flat.T @ flat, time.perf_counter() - start))
+    report("pass", float(len(passes)), 0.0, f"{note}, uncertainty {judgement.excess:.3g} x the one asked")
+    return result, judgement
+
+
+def _judge(result: PassResult, round_parts: Facets | None, accuracy: float, n_passes: int) -> _Judgement:
+    """Extrapolated value with the lines of its budget, one column more for the sum over all conductors."""
+    n = len(result.value)
+    sums = np.hstack([np.eye(n), np.ones((n, 1))])
+    value = result.limit @ sums
+    scale = np.sqrt(np.outer(np.diag(result.limit), np.diag(result.limit)))
+    lines = {
+        "discretisation": extrapolation_uncertainty(
+            result.gains, result.decay, result.realised, result.change, sums, n_passes
+        ),
+        "facets": np.zeros_like(value),
+        "integration": INTEGRATION * np.hstack([scale, scale.max(axis=1, keepdims=True)]),
+    }
+    if round_parts is not None and round_parts.any:
+        shift, lines["facets"] = facet_shift(round_parts, result.panels, result.density, sums)
+        value = value + shift
+    total = np.sqrt(sum(line**2 for line in lines.values()))
+    return _Judgement(value, lines, total, accuracy_targets(value[:, :n], accuracy))
+
+
+def _next(result: PassResult, judgement: _Judgement, most: int, limit: int) -> Plan | None:
+    """Plan of the next pass, or None if there is no room for it."""
+    n = len(judgement.value)
+    plan = plan_next(result, judgement.lines["discretisation"][:, :n] / judgement.targets**2)
+    if len(plan.panels) > most or dense_bytes(len(plan.panels), len(result.panels)) > limit:
+        return None
+    return plan
+
+
+def _guards(surface: Surface, judgement: _Judgement, value: FloatArray, total: FloatArray) -> list[Notice]:
+    """Signs that a capacitance matrix must have, and what kept the accuracy from being reached."""
+    n = surface.n_conductors
+    notices = []
+    names = surface.conductor_names
+    for i in range(n):
+        for j in range(i + 1, n):
+            if value[i, j] > total[i, j]:
+                text = (
+                    f"coupling {names[i]} - {names[j]} has the wrong sign: {value[i, j]:.3g} F, "
+                    f"uncertainty {total[i, j]:.2g} F"
+                )
+                notices.append(Notice("maxwell-sign", text))
+        if value[i, n] < -total[i, n]:
+            text = f"row sum of {names[i]} is negative: {value[i, n]:.3g} F, uncertainty {total[i, n]:.2g} F"
+            notices.append(Notice("maxwell-sign", text))
+    if not judgement.reached:
+        worst = np.unravel_index(np.argmax(judgement.total[:, :n] / judgement.targets), (n, n))
+        cause = max(judgement.lines, key=lambda line: judgement.lines[line][worst])
+        text = f"the accuracy asked was not reached: {names[worst[0]]} - {names[worst[1]]} is driven by {cause}"
+        if cause == "facets":
+            text += "; export round parts with a finer tolerance, or declare the facets true"
+        notices.append(Notice("accuracy-not-reached", text))
+    return notices

@@ -1,0 +1,178 @@
+"""Two-level residual indicator: what splitting each panel would add to the capacitance matrix.
+
+The trial space is enriched panel by panel with the functions that its split would add. With the residual
+``r_i`` of the solution for conductor i at 1 V and a new function psi, made orthogonal in the energy product to
+the panel's constant, ``r_i(psi) r_j(psi) / a(psi, psi)`` is the gain of entry (i, j) from psi alone; the sum
+over all panels estimates exact minus Galerkin value, signed, and its diagonal is never negative
+(Mund, Stephan and Weisse, Computing 60 (1998) 243, for the energy norm; the product form is its polarisation).
+"""
+
+from collections.abc import Callable
+
+import numpy as np
+from numpy.typing import NDArray
+
+from .bisection import SPLIT_U, SPLIT_V, children, halves
+from .frames import AREA, CENTROID, FRAME_SIZE, RADIUS, panel_frames
+from .jit import kernel, parallel_kernel, prange
+from .near import close_pair_integral, self_integral
+from .pairs import far_integral, middle_integral
+from .panels import Panels
+from .polygon import polygon_distance
+
+__all__ = ["child_potentials", "two_level_indicator"]
+
+FloatArray = NDArray[np.float64]
+
+#: Centre distance over the sum of the radii of panel and source, beyond which one point on the part and on the
+#: source, or two by two, are enough.
+_PART_FAR, _PART_FAR_2 = 10.0, 2.5
+
+
+@parallel_kernel
+def child_potentials(parts, frames, density, moments, first, last):
+    """Integrals of the potential of all panels over the parts of panels `first` <= p < `last`.
+
+    Parameters
+    ----------
+    parts : (n, 4, FRAME_SIZE) float
+        Parts of each panel; one without area is passed over.
+    frames : (n, FRAME_SIZE) float
+    density : (n, n_conductors) float
+        Bare charge densities.
+    moments : (n, 4, n_conductors) float
+        Written: ``sum_j density_j int_part int_j dS dS / r``.
+
+    Notes
+    -----
+    The rules are coarser than in the matrix: 1e-3 of a moment's *variation* over the panel is enough.
+    """
+    n_columns = density.shape[1]
+    for p in prange(first, last):
+        for c in range(4):
+            for k in range(n_columns):
+                moments[p, c, k] = 0.0
+        for j in range(len(frames)):
+            x = frames[p, CENTROID] - frames[j, CENTROID]
+            y = frames[p, CENTROID + 1] - frames[j, CENTROID + 1]
+            z = frames[p, CENTROID + 2] - frames[j, CENTROID + 2]
+            ratio = np.sqrt(x * x + y * y + z * z) / (frames[p, RADIUS] + frames[j, RADIUS])
+            for c in range(4):
+                if parts[p, c, AREA] == 0.0:
+                    continue
+                value = _part_integral(parts[p, c], frames[j], ratio)
+                for k in range(n_columns):
+                    moments[p, c, k] += value * density[j, k]
+
+
+@kernel
+def _part_integral(part, source, ratio):
+    """Integral of 1/r over a part of a panel and a source panel, to about 1e-3 of its variation."""
+    if ratio > _PART_FAR:
+        return far_integral(part, source, 1)
+    if ratio > _PART_FAR_2:
+        return far_integral(part, source, 2)
+    outer, inner = (part, source) if part[RADIUS] <= source[RADIUS] else (source, part)
+    distance = polygon_distance(inner, outer[CENTROID], outer[CENTROID + 1], outer[CENTROID + 2])
+    if distance > 1.5 * outer[RADIUS]:
+        return middle_integral(outer, inner, 2)
+    return close_pair_integral(outer, inner)
+
+
+@parallel_kernel
+def _self_integrals(frames, values):
+    for p in prange(len(frames)):
+        values[p] = self_integral(frames[p])
+
+
+@parallel_kernel
+def _thirds_gram(parts, gram):
+    """Galerkin matrices of the three parts of each triangle, (n, 3, 3)."""
+    for p in prange(len(parts)):
+        for c in range(3):
+            gram[p, c, c] = self_integral(parts[p, c])
+            for d in range(c):
+                gram[p, c, d] = close_pair_integral(parts[p, c], parts[p, d])
+                gram[p, d, c] = gram[p, c, d]
+
+
+def two_level_indicator(
+    panels: Panels,
+    density: FloatArray,
+    self_terms: FloatArray,
+    potentials: FloatArray,
+    *,
+    progress: Callable[[float, float], None] | None = None,
+) -> FloatArray:
+    """Two-level gains of every panel.
+
+    Parameters
+    ----------
+    panels : Panels
+    density : (n_panels, n_conductors) float
+        Bare charge density per volt: the solution of ``A density = areas``.
+    self_terms : (n_panels,) float, m3
+        Diagonal of the Galerkin matrix.
+    potentials : (n_panels, n_conductors) float
+        The potential of each panel in each excitation.
+    progress : callable, optional
+        Told (panels done, panels in all).
+
+    Returns
+    -------
+    gains : (n_panels, 2, n_conductors) float
+        ``r_i(psi) / sqrt(a(psi, psi))``, bare: for a quadrilateral of the split along u and along v, for a
+        triangle of two orthonormal functions of its split in three. The sum over panels of
+        ``gain_i gain_j`` estimates exact minus Galerkin value of entry (i, j).
+    """
+    centre = panels.corners.reshape(-1, 3).mean(axis=0)
+    parts_corners = children(panels.corners - centre, panels.n_corners)
+    n = len(panels)
+    parts = panel_frames(parts_corners.reshape(-1, 4, 3)).reshape(n, 4, FRAME_SIZE)
+    frames = panel_frames(panels.corners - centre)
+    moments = np.empty((n, 4, density.shape[1]))
+    block = max(8, 400_000 // n)
+    for first in range(0, n, block):
+        child_potentials(parts, frames, density, moments, first, min(n, first + block))
+        if progress is not None:
+            progress(min(n, first + block), n)
+    residual = parts[:, :, AREA, None] * potentials[:, None, :] - moments
+    gains = np.zeros((n, 2, density.shape[1]))
+    quads = np.flatnonzero(panels.n_corners == 4)
+    triangles = np.flatnonzero(panels.n_corners == 3)
+    _quad_gains(panels.corners[quads] - centre, residual[quads], self_terms[quads], gains, quads)
+    _triangle_gains(parts[triangles], residual[triangles], gains, triangles)
+    return gains
+
+
+def _quad_gains(
+    corners: FloatArray, residual: FloatArray, whole: FloatArray, gains: FloatArray, chosen: NDArray[np.int64]
+) -> None:
+    if len(chosen) == 0:
+        return
+    sum_residual = residual.sum(axis=1)
+    for slot, direction in enumerate((SPLIT_U, SPLIT_V)):
+        pair = halves(corners, direction)
+        first, second = np.empty(len(chosen)), np.empty(len(chosen))
+        _self_integrals(panel_frames(pair[:, 0]), first)
+        _self_integrals(panel_frames(pair[:, 1]), second)
+        # a(first, whole) from a(whole, whole) = a(1, 1) + a(2, 2) + 2 a(1, 2)
+        share = 0.5 * (first + whole - second) / whole
+        norm2 = first - share**2 * whole
+        half = residual[:, 0] + residual[:, 1] if direction == SPLIT_U else residual[:, 0] + residual[:, 2]
+        gains[chosen, slot] = (half - share[:, None] * sum_residual) / np.sqrt(norm2)[:, None]
+
+
+def _triangle_gains(parts: FloatArray, residual: FloatArray, gains: FloatArray, chosen: NDArray[np.int64]) -> None:
+    if len(chosen) == 0:
+        return
+    gram = np.empty((len(chosen), 3, 3))
+    _thirds_gram(np.ascontiguousarray(parts), gram)
+    with_whole = gram.sum(axis=2)
+    whole = with_whole.sum(axis=1)
+    share = with_whole / whole[:, None]
+    local = gram - share[:, :, None] * with_whole[:, None, :]
+    reduced = residual[:, :3] - share[:, :, None] * residual[:, :3].sum(axis=1)[:, None, :]
+    # two of the three functions span the space; orthonormal combinations by Cholesky
+    root = np.linalg.cholesky(local[:, :2, :2])
+    gains[chosen] = np.linalg.solve(root, reduced[:, :2])
