@@ -1,0 +1,309 @@
+"""Bodies: connected pieces of mesh, read from files, named, in metres."""
+
+import difflib
+import unicodedata
+from collections.abc import Iterable, Sequence
+from dataclasses import dataclass, field, replace
+from functools import cached_property
+from pathlib import Path
+from typing import TYPE_CHECKING
+
+import numpy as np
+from numpy.typing import NDArray
+
+from daraf.bem.errors import InputError
+
+from .mesh_units import METRES_PER_UNIT, box_in_plausible_units, length_unit, size_text
+from .topology import connected_pieces
+from .welding import weld
+
+if TYPE_CHECKING:
+    from .readers import RawPart
+
+__all__ = ["Body", "Fault", "MeshSet", "pick_bodies", "read_bodies", "read_mesh_set"]
+
+FloatArray = NDArray[np.float64]
+IntArray = NDArray[np.int64]
+Pick = str | int | Sequence[str | int]
+
+_LONGEST_NAME = 60
+
+#: Coordinates rounded to more than this share of the median edge have lost the shape.
+_LOST_SHAPE = 0.1
+
+
+@dataclass(frozen=True)
+class Fault:
+    """Something about a body that a reader of the drawing should know.
+
+    Attributes
+    ----------
+    code : str
+        Stable word for scripts, such as ``holes``.
+    severity : {"note", "warning", "error"}
+        Legitimate but worth saying; mended or tolerable; not fit to solve.
+    count : int
+    place : tuple of 3 float or None, m
+        Where the first of them is.
+    text : str
+        What is wrong.
+    remedy : str
+        What to do.
+    """
+
+    code: str
+    severity: str
+    count: int
+    place: tuple[float, float, float] | None
+    text: str
+    remedy: str
+
+
+@dataclass(frozen=True, eq=False)
+class Body:
+    """One connected piece of mesh.
+
+    Attributes
+    ----------
+    name : str
+        Unique among the bodies read together.
+    vertices : (nv, 3) float, m
+    triangles : (nt, 3) int
+    file : str
+    index_in_file : int
+        From 1, in the order of the file.
+    faults : list of Fault
+        What reading alone showed; `inspect_bodies` finds the rest.
+    notes : list of str
+        Every change made to the geometry.
+    solid : int
+        Which part (solid, object) of the file it came from, from 1.
+    spacing : float, m
+        Rounding of the coordinates as stored in the file, half a step.
+    """
+
+    name: str
+    vertices: FloatArray
+    triangles: IntArray
+    file: str = ""
+    index_in_file: int = 1
+    faults: list[Fault] = field(default_factory=list)
+    notes: list[str] = field(default_factory=list)
+    solid: int = 1
+    spacing: float = 0.0
+
+    @cached_property
+    def box(self) -> FloatArray:
+        """Lower and upper corner of the bounding box, (2, 3) m."""
+        used = self.vertices[self.triangles.ravel()]
+        return np.array([used.min(axis=0), used.max(axis=0)])
+
+    @cached_property
+    def diagonal(self) -> float:
+        """Diagonal of the bounding box, m."""
+        return float(np.linalg.norm(np.diff(self.box, axis=0)))
+
+
+@dataclass(frozen=True, eq=False)
+class MeshSet:
+    """Bodies of several files, and the unit they were read in (None: unknown, then 1 unit = 1 "m")."""
+
+    bodies: list[Body]
+    unit: str | None
+    files: list[str]
+
+
+def read_bodies(paths: str | Path | Iterable[str | Path], unit: str | None, *, pick: Pick | None = None) -> list[Body]:
+    """Read mesh files and split them into named bodies.
+
+    Equal vertices are merged with a tolerance relative to the size of the part; nothing else is changed.
+
+    Parameters
+    ----------
+    paths : str, Path or several
+        STL, OBJ, PLY, OFF, GLB and 3MF, told apart by extension.
+    unit : str or None
+        Unit of the files, one of ``m, cm, mm, um, in, mil, ft``. GLB and 3MF carry their own.
+    pick : str, int or several, optional
+        Names, or numbers from 1 in reading order, of the bodies wanted; all by default.
+
+    Returns
+    -------
+    list of Body
+
+    Raises
+    ------
+    InputError
+        If a file is unusable, the unit is missing or contradicts the file, or a picked body does not exist.
+    """
+    bodies = read_mesh_set(paths, unit, unit_needed=True).bodies
+    return bodies if pick is None else pick_bodies(bodies, pick)
+
+
+def read_mesh_set(paths: str | Path | Iterable[str | Path], unit: str | None, *, unit_needed: bool) -> MeshSet:
+    """As `read_bodies`, but a missing unit may stand: the vertices are then in the unit of the files.
+
+    Parameters
+    ----------
+    paths : str, Path or several
+    unit : str or None
+    unit_needed : bool
+
+    Returns
+    -------
+    MeshSet
+
+    Raises
+    ------
+    InputError
+        As `read_bodies`.
+    """
+    from .readers import read_file
+
+    stated = None if unit is None else length_unit(unit)
+    names = [paths] if isinstance(paths, str | Path) else list(paths)
+    if not names:
+        raise InputError("no mesh file is named; name at least one")
+    raws = [read_file(path) for path in names]
+    units = [_unit_of(raw.path, raw.unit, stated, unit_needed, raw.parts) for raw in raws]
+    if None in units and any(u is not None for u in units):
+        bare = raws[units.index(None)].path
+        raise InputError(f"{bare}: carries no unit while another file does; state its unit, for example mm")
+    bodies: list[Body] = []
+    for raw, file_unit in zip(raws, units, strict=True):
+        scale = 1.0 if file_unit is None else METRES_PER_UNIT[file_unit]
+        bodies.extend(_split(raw.path, raw.parts, scale, file_unit or "file units"))
+    return MeshSet(_unique_names(bodies), stated or units[0], [str(name) for name in names])
+
+
+def _unit_of(path: Path, own: str | None, stated: str | None, needed: bool, parts: list["RawPart"]) -> str | None:
+    if own is not None:
+        if stated not in (None, own):
+            raise InputError(f"{path}: the file says {own}, the unit stated is {stated}; state {own} or none")
+        return own
+    if stated is None and needed:
+        corners = np.concatenate([part.vertices[part.triangles.ravel()] for part in parts])
+        extents = np.ptp(corners, axis=0)
+        raise InputError(
+            f"{path}: the format carries no unit, and none is stated; its bounding box {size_text(extents)} "
+            f"would be {box_in_plausible_units(extents)}: state the unit"
+        )
+    return stated
+
+
+def _split(path: Path, parts: list["RawPart"], scale: float, unit: str) -> list[Body]:
+    """Weld every part, cut it into connected pieces, name them."""
+    bodies: list[Body] = []
+    for number, part in enumerate(parts, start=1):
+        vertices, triangles, n_moved, tolerance = weld(part.vertices, part.triangles)
+        _check_shape(path, part.name, vertices, triangles, part.spacing)
+        n_pieces, piece = connected_pieces(triangles)
+        notes = []
+        if n_moved:
+            notes.append(f"merged {n_moved} vertices closer than {tolerance:.2g} {unit} to another one")
+        name = _clean(part.name)
+        named = name or _clean(path.stem) or "file"
+        numbered = n_pieces > 1 or (not name and len(parts) > 1)
+        order = np.argsort(piece, kind="stable")
+        for k, rows in enumerate(np.split(order, np.cumsum(np.bincount(piece))[:-1]), start=1):
+            used, index = np.unique(triangles[rows], return_inverse=True)
+            body = Body(
+                name=f"{named}-{k}" if numbered else named,
+                vertices=np.ascontiguousarray(vertices[used] * scale),
+                triangles=np.ascontiguousarray(index.reshape(-1, 3), dtype=np.int64),
+                file=str(path),
+                index_in_file=len(bodies) + 1,
+                notes=list(notes),
+                solid=number,
+                spacing=part.spacing * scale,
+            )
+            bodies.append(body)
+    return bodies
+
+
+def _check_shape(path: Path, name: str, vertices: FloatArray, triangles: IntArray, spacing: float) -> None:
+    """Refuse a part that is a point or a line, or whose coordinates are too coarse to hold its shape."""
+    label = f"solid {name!r}" if name else "the mesh"
+    corners = vertices[triangles]
+    sides = np.linalg.norm(np.roll(corners, -1, axis=1) - corners, axis=2)
+    edge = float(np.median(sides[sides > 0.0])) if (sides > 0.0).any() else 0.0
+    doubled = np.linalg.norm(np.cross(corners[:, 1] - corners[:, 0], corners[:, 2] - corners[:, 0]), axis=1)
+    flat = not (doubled > 1e-12 * sides.max(axis=1) ** 2).any()
+    # a true edge rounds to nothing or to whole steps: a lost shape shows as edges of a few steps
+    largest = float(np.abs(vertices).max())
+    if edge > 0.0 and spacing > _LOST_SHAPE * edge:
+        raise InputError(
+            f"{path}: {label}: coordinates near {largest:.3g} in single precision are rounded to steps of "
+            f"{2 * spacing:.2g}, its edges are {edge:.2g} long: the shape is lost; move the part to the "
+            "origin in CAD and export it again"
+        )
+    if flat:
+        raise InputError(
+            f"{path}: {label}: all {len(triangles)} faces have no area, at a rounding of {2 * spacing:.2g} "
+            f"for coordinates near {largest:.3g}; export it as a surface mesh, near the origin"
+        )
+
+
+def _clean(name: str) -> str:
+    """A name that can be printed: no control or formatting characters, single blanks, of bounded length."""
+    kept = "".join(" " if c.isspace() else c for c in name if c.isspace() or unicodedata.category(c)[0] != "C")
+    return " ".join(kept.split())[:_LONGEST_NAME].rstrip()
+
+
+def _unique_names(bodies: list[Body]) -> list[Body]:
+    """Append ``-2``, ``-3`` ... to names that were used before."""
+    wanted = {body.name for body in bodies}
+    taken: set[str] = set()
+    result = []
+    for body in bodies:
+        name, k = body.name, 1
+        while name in taken or (k > 1 and name in wanted):
+            k += 1
+            name = f"{body.name}-{k}"
+        taken.add(name)
+        result.append(body if name == body.name else replace(body, name=name))
+    return result
+
+
+def pick_bodies(bodies: list[Body], pick: Pick) -> list[Body]:
+    """Bodies by name or by number from 1; ``"all"`` for all of them.
+
+    Parameters
+    ----------
+    bodies : list of Body
+    pick : str, int or several
+
+    Returns
+    -------
+    list of Body
+        In the order asked, none twice.
+
+    Raises
+    ------
+    InputError
+        If a name or number does not exist.
+    """
+    by_name = {body.name: k for k, body in enumerate(bodies)}
+    chosen: list[int] = []
+    for item in [pick] if isinstance(pick, str | int) else pick:
+        if item == "all" and "all" not in by_name:
+            found = list(range(len(bodies)))
+        elif isinstance(item, str):
+            found = [by_name[item]] if item in by_name else []
+        else:
+            found = [int(item) - 1] if 1 <= item <= len(bodies) else []
+        if not found:
+            raise InputError(_no_such_body(bodies, item))
+        chosen.extend(k for k in found if k not in chosen)
+    return [bodies[k] for k in chosen]
+
+
+def _no_such_body(bodies: list[Body], item: str | int) -> str:
+    files = ", ".join(dict.fromkeys(body.file for body in bodies))
+    names = [body.name for body in bodies]
+    if not isinstance(item, str):
+        return f"{files}: there is no body number {item}; they are numbered 1 to {len(bodies)}"
+    near = difflib.get_close_matches(item, names, n=1)
+    hint = f" (did you mean {near[0]!r}?)" if near else ""
+    listed = ", ".join(repr(name) for name in names[:12]) + (", ..." if len(names) > 12 else "")
+    return f"{files}: there is no body named {item!r}{hint}; there are {listed}"

@@ -1,0 +1,342 @@
+"""What is in mesh files: bodies, sizes, gaps and faults."""
+
+from collections.abc import Iterable, Sequence
+from dataclasses import dataclass, field, replace
+from pathlib import Path
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+from daraf.bem.errors import InputError
+
+from .bodies import Body, Fault, read_mesh_set
+from .contacts import Contact, cavity_walls, contacts, shapes_of
+from .faults import faults_of
+from .gaps import Approach, Shape, box_gap, closest_approach
+from .inspection_text import inspection_to_text
+from .mending import make_fit, orient
+from .topology import boundary_loops, edges_of
+
+__all__ = [
+    "BodyReport",
+    "Gap",
+    "Inspection",
+    "Spread",
+    "inspect_bodies",
+    "inspect_files",
+    "inspection_to_dict",
+    "inspection_to_text",
+]
+
+FloatArray = NDArray[np.float64]
+Place = tuple[float, float, float]
+
+#: Up to so many bodies every gap is computed; beyond, those to the nearest few of each body.
+_ALL_PAIRS = 24
+_NEAREST = 3
+
+
+@dataclass(frozen=True)
+class Spread:
+    """Smallest, median and largest of many values."""
+
+    smallest: float
+    median: float
+    largest: float
+
+
+@dataclass(frozen=True)
+class Gap:
+    """Smallest distance to another body: its name, metres, the place on this and on that body."""
+
+    other: str
+    distance: float
+    place: Place
+    place_other: Place
+
+
+@dataclass(frozen=True, eq=False)
+class BodyReport:
+    """What there is to say about one body.
+
+    Attributes
+    ----------
+    name, file : str
+    number : int
+        From 1, in the order read.
+    panels : int
+    closed : bool
+    loops : int
+        Boundary loops of an open body.
+    box : (2, 3) float, m
+    area : float, m2
+    volume : float or None, m3
+        Of a closed body.
+        Like edges and aspect without the panels that a solve removes.
+    edges : Spread, m
+    aspect : Spread
+        Longest edge over the height upon it; 1.15 for an equilateral triangle.
+    gaps : list of Gap
+        Nearest first.
+    faults : list of Fault
+    notes : list of str
+        What reading changed.
+    """
+
+    name: str
+    file: str
+    number: int
+    panels: int
+    closed: bool
+    loops: int
+    box: FloatArray
+    area: float
+    volume: float | None
+    edges: Spread
+    aspect: Spread
+    gaps: list[Gap]
+    faults: list[Fault]
+    notes: list[str] = field(default_factory=list)
+
+
+@dataclass(frozen=True, eq=False)
+class Inspection:
+    """All bodies of some files.
+
+    Attributes
+    ----------
+    files : list of str
+    unit : str or None
+        Unit of the files; None if none is known, and then every length is in the unit of the files.
+    bodies : list of BodyReport
+    """
+
+    files: list[str]
+    unit: str | None
+    bodies: list[BodyReport]
+
+    @property
+    def box(self) -> FloatArray:
+        """Lower and upper corner of the box about all bodies, (2, 3) m."""
+        boxes = np.array([body.box for body in self.bodies])
+        return np.array([boxes[:, 0].min(axis=0), boxes[:, 1].max(axis=0)])
+
+
+def inspect_files(paths: str | Path | Iterable[str | Path], unit: str | None = None) -> Inspection:
+    """Read mesh files and look at every body.
+
+    Parameters
+    ----------
+    paths : str, Path or several
+    unit : str, optional
+        Unit of the files. Without one, lengths stay in the unit of the files.
+
+    Returns
+    -------
+    Inspection
+
+    Raises
+    ------
+    InputError
+        If a file cannot be used.
+    """
+    read = read_mesh_set(paths, unit, unit_needed=False)
+    return replace(inspect_bodies(read.bodies), files=read.files, unit=read.unit)
+
+
+def inspect_bodies(bodies: Sequence[Body], unit: str | None = None) -> Inspection:
+    """Look at every body and at every pair of them.
+
+    Parameters
+    ----------
+    bodies : sequence of Body
+        As read, neither mended nor oriented.
+    unit : str, optional
+        Unit to show lengths in.
+
+    Returns
+    -------
+    Inspection
+    """
+    shapes = shapes_of(_as_solved(bodies))
+    found = contacts([shape.body for shape in shapes], shapes=shapes)
+    cavities = cavity_walls(shapes)
+    gaps = _gaps(shapes, found)
+    reports = []
+    for k, (body, shape) in enumerate(zip(bodies, shapes, strict=True)):
+        own = faults_of(shape if shape.body is body else Shape(body))
+        if k in cavities:
+            own = [_cavity(bodies[cavities[k]]) if fault.code == "inside-out" else fault for fault in own]
+        faults = [*own, *_contact_faults(k, found, bodies)]
+        reports.append(_report(k, replace(body, faults=faults), shape, gaps[k]))
+    return Inspection(list(dict.fromkeys(body.file for body in bodies)), unit, reports)
+
+
+def _as_solved(bodies: Sequence[Body]) -> list[Body]:
+    """Bodies as a solve would take them: open or closed, and what encloses what, is asked of these."""
+    fitted = []
+    for body in bodies:
+        try:
+            fitted.append(make_fit(body))
+        except InputError:  # nothing is left of it: its faults say so
+            fitted.append(body)
+    return orient(fitted)
+
+
+def _report(k: int, body: Body, shape: Shape, gaps: list[Gap]) -> BodyReport:
+    sides = np.roll(shape.corners, -1, axis=1) - shape.corners
+    lengths = np.linalg.norm(sides, axis=2)
+    doubled = np.linalg.norm(np.cross(sides[:, 0], sides[:, 1]), axis=1)
+    longest = lengths.max(axis=1)
+    sized = doubled > 1e-12 * longest**2
+    solved = shape.body
+    loops = len(boundary_loops(solved.vertices, solved.triangles, edges_of(solved.triangles))[0])
+    return BodyReport(
+        name=body.name,
+        file=body.file,
+        number=k + 1,
+        panels=len(body.triangles),
+        closed=shape.volume is not None,
+        loops=loops,
+        box=shape.box,
+        area=float(0.5 * doubled.sum()),
+        volume=None if shape.volume is None else abs(shape.volume),
+        edges=_spread(lengths.ravel()),
+        aspect=_spread(longest[sized] ** 2 / doubled[sized]),
+        gaps=gaps,
+        faults=body.faults,
+        notes=list(body.notes),
+    )
+
+
+def _spread(values: FloatArray) -> Spread:
+    if len(values) == 0:
+        return Spread(float("inf"), float("inf"), float("inf"))
+    return Spread(float(values.min()), float(np.median(values)), float(values.max()))
+
+
+def _gaps(shapes: list[Shape], found: list[Contact]) -> list[list[Gap]]:
+    """Gaps of each body to the others, nearest first; 0 where two bodies meet."""
+    n = len(shapes)
+    meeting = {(contact.body_a, contact.body_b): contact for contact in found if contact.meets}
+    known: dict[tuple[int, int], Approach] = {}
+    bounds = np.array([[box_gap(a, b) for b in shapes] for a in shapes])
+    result: list[list[Gap]] = []
+    for i in range(n):
+        near: list[tuple[float, int]] = []
+        for j in np.argsort(bounds[i], kind="stable").tolist():
+            full = len(near) >= _NEAREST and n > _ALL_PAIRS
+            if j == i or (full and bounds[i, j] > sorted(near)[_NEAREST - 1][0]):
+                continue
+            pair = (min(i, j), max(i, j))
+            if pair not in known:
+                known[pair] = _approach(shapes, pair, meeting)
+            near.append((known[pair].distance, j))
+        near.sort()
+        result.append([_gap(shapes, i, j, known) for _, j in (near if n <= _ALL_PAIRS else near[:_NEAREST])])
+    return result
+
+
+def _approach(shapes: list[Shape], pair: tuple[int, int], meeting: dict[tuple[int, int], Contact]) -> Approach:
+    if pair in meeting:
+        place = meeting[pair].place
+        return Approach(0.0, place, place, 0, 0)
+    return closest_approach(shapes[pair[0]], shapes[pair[1]])
+
+
+def _gap(shapes: list[Shape], i: int, j: int, known: dict[tuple[int, int], Approach]) -> Gap:
+    approach = known[min(i, j), max(i, j)]
+    here, there = approach.point_a, approach.point_b
+    if i > j:
+        here, there = there, here
+    return Gap(shapes[j].body.name, approach.distance, here, there)
+
+
+def _cavity(outer: Body) -> Fault:
+    text = f"is the wall of a cavity in {outer.name!r}"
+    return Fault("cavity-wall", "note", 1, None, text, "its normals point into the cavity")
+
+
+def _contact_faults(k: int, found: list[Contact], bodies: Sequence[Body]) -> list[Fault]:
+    """Contacts of one body with others, told from its own side."""
+    faults = []
+    for contact in found:
+        if k not in (contact.body_a, contact.body_b):
+            continue
+        other = bodies[contact.body_b if contact.body_a == k else contact.body_a].name
+        if contact.kind == "inside":
+            if contact.body_a == k:
+                text, remedy = f"lies inside {other!r}", "fine if that is meant"
+                faults.append(Fault("inside-other", "note", 1, contact.place, text, remedy))
+            continue
+        text = f"{contact.kind} {other!r}"
+        remedy = "give both to one conductor, or separate them in CAD"
+        faults.append(Fault(f"{contact.kind}-other", "warning", 1, contact.place, text, remedy))
+    return faults
+
+
+def inspection_to_dict(inspection: Inspection) -> dict[str, Any]:
+    """The inspection as plain numbers, lists and words, ready for JSON; lengths in m.
+
+    Parameters
+    ----------
+    inspection : Inspection
+
+    Returns
+    -------
+    dict
+        ``length_unit`` is ``"m"``, or ``"file"`` if the unit of the files is not known.
+    """
+    return {
+        "files": inspection.files,
+        "unit": inspection.unit,
+        "length_unit": "m" if inspection.unit else "file",
+        "bodies": [_body_to_dict(body) for body in inspection.bodies],
+    }
+
+
+def _body_to_dict(body: BodyReport) -> dict[str, Any]:
+    return {
+        "number": body.number,
+        "name": body.name,
+        "file": body.file,
+        "panels": body.panels,
+        "closed": body.closed,
+        "boundary_loops": body.loops,
+        "box": {"low": body.box[0].tolist(), "high": body.box[1].tolist()},
+        "area": body.area,
+        "volume": body.volume,
+        "edge_length": _spread_to_dict(body.edges),
+        "aspect_ratio": _spread_to_dict(body.aspect),
+        "gaps": [
+            {
+                "other": gap.other,
+                "distance": gap.distance,
+                "at": list(gap.place),
+                "at_other": list(gap.place_other),
+            }
+            for gap in body.gaps
+        ],
+        "faults": [
+            {
+                "code": fault.code,
+                "severity": fault.severity,
+                "count": fault.count,
+                "at": None if fault.place is None else list(fault.place),
+                "text": fault.text,
+                "remedy": fault.remedy,
+            }
+            for fault in body.faults
+        ],
+        "notes": body.notes,
+    }
+
+
+def _spread_to_dict(spread: Spread) -> dict[str, float | None]:
+    finite = np.isfinite(spread.largest)
+    return {
+        "min": spread.smallest if finite else None,
+        "median": spread.median if finite else None,
+        "max": spread.largest if finite else None,
+    }

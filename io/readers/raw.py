@@ -1,0 +1,172 @@
+"""What a reader hands back, the registry of formats, and the checks that every format shares."""
+
+import os
+import re
+from collections.abc import Callable
+from dataclasses import dataclass
+from pathlib import Path
+
+import numpy as np
+from numpy.typing import NDArray
+
+from daraf.bem.errors import InputError
+
+__all__ = [
+    "READERS",
+    "RawFile",
+    "RawPart",
+    "check_part",
+    "decimal_comma_line",
+    "looks_like_text",
+    "normalised_text",
+    "read_bytes",
+    "register",
+    "text_spacing",
+]
+
+FloatArray = NDArray[np.float64]
+IntArray = NDArray[np.int64]
+
+#: Largest relative distance between a number and its nearest single-precision value.
+_SINGLE = 2.0**-24
+
+
+@dataclass(frozen=True, eq=False)
+class RawPart:
+    """One solid, object or node of a file, in the unit of the file, nothing merged.
+
+    Attributes
+    ----------
+    name : str
+        As written in the file; empty where the format has none.
+    vertices : (nv, 3) float
+    triangles : (nt, 3) int
+    spacing : float
+        Rounding of the coordinates as stored, half a step, in the unit of the file.
+    """
+
+    name: str
+    vertices: FloatArray
+    triangles: IntArray
+    spacing: float
+
+
+@dataclass(frozen=True, eq=False)
+class RawFile:
+    """All parts of one file and the unit it carries (None where the format has none)."""
+
+    path: Path
+    parts: list[RawPart]
+    unit: str | None = None
+
+
+Reader = Callable[[Path], RawFile]
+READERS: dict[str, Reader] = {}
+
+
+def register(*extensions: str) -> Callable[[Reader], Reader]:
+    """Decorator: this function reads files with these extensions (with the dot, lower case)."""
+
+    def put(reader: Reader) -> Reader:
+        for extension in extensions:
+            READERS[extension] = reader
+        return reader
+
+    return put
+
+
+def read_bytes(path: Path) -> bytes:
+    """Whole content of a file that exists and is not empty.
+
+    Raises
+    ------
+    InputError
+        If it is missing, a folder, empty or not readable.
+    """
+    try:
+        if path.is_dir():
+            raise InputError(f"{path}: is a folder; name the mesh files in it")
+        size = os.stat(path).st_size
+        if not path.is_file():
+            raise InputError(f"{path}: is no regular file; name a mesh file")
+        if size == 0:
+            raise InputError(f"{path}: the file is empty; export it again")
+        return path.read_bytes()
+    except InputError:
+        raise
+    except FileNotFoundError:
+        raise InputError(f"{path}: there is no such file; check the name and the folder") from None
+    except OSError as error:
+        raise InputError(f"{path}: cannot be read ({error.strerror or error}); mend that") from None
+    except ValueError as error:  # a NUL character in the name
+        raise InputError(f"{str(path)!r}: is no usable file name ({error})") from None
+
+
+def looks_like_text(data: bytes) -> bool:
+    """Whether the first kilobyte holds nothing but text."""
+    head = data[:1024]
+    return b"\0" not in head and sum(byte < 32 and byte not in (9, 10, 12, 13) for byte in head) == 0
+
+
+def normalised_text(data: bytes) -> bytes:
+    """The same text without byte order mark, with line feeds only."""
+    return data.removeprefix(b"\xef\xbb\xbf").replace(b"\r\n", b"\n").replace(b"\r", b"\n")
+
+
+def decimal_comma_line(text: bytes) -> int | None:
+    """Number of the first line that holds a decimal comma, counted from 1, or None."""
+    found = re.search(rb"\d,\d", text)
+    return None if found is None else text.count(b"\n", 0, found.start()) + 1
+
+
+def single_spacing(vertices: FloatArray) -> float:
+    """Rounding of single-precision coordinates of this size."""
+    return _SINGLE * float(np.abs(vertices).max(initial=0.0))
+
+
+def text_spacing(vertices: FloatArray) -> float:
+    """Rounding of coordinates read from text.
+
+    Numbers that all fit into eight decimal digits were most likely single precision before they were
+    printed; more digits mean double precision, whose rounding does not matter here.
+
+    Parameters
+    ----------
+    vertices : (nv, 3) float
+    """
+    values = vertices[np.abs(vertices) > 1e-290]
+    digits = 10.0 ** (7 - np.floor(np.log10(np.abs(values))))
+    scaled = values * digits
+    if (np.abs(scaled - np.round(scaled)) < 1e-4).all():
+        return single_spacing(vertices)
+    return 2.0**-29 * single_spacing(vertices)
+
+
+def check_part(path: Path, part: RawPart, what: str = "part") -> RawPart:
+    """Refuse a part that no later step could use.
+
+    Raises
+    ------
+    InputError
+        If it has no triangle, a vertex that is not finite, or an index out of range.
+    """
+    label = f"{what} {part.name!r}" if part.name else "the mesh"
+    if len(part.triangles) == 0:
+        raise InputError(f"{path}: {label} holds no triangle; export it again as a surface mesh")
+    if part.triangles.min() < 0 or part.triangles.max() >= len(part.vertices):
+        outside = (part.triangles < 0) | (part.triangles >= len(part.vertices))
+        bad = int(np.flatnonzero(outside.any(axis=1))[0])
+        raise InputError(
+            f"{path}: {label}, face {bad + 1} names a vertex that does not exist "
+            f"(there are {len(part.vertices)}); the file is damaged, export it again"
+        )
+    finite = np.isfinite(part.vertices).all(axis=1)
+    if not finite.all():
+        bad = int(np.flatnonzero(~finite)[0])
+        face = np.flatnonzero((part.triangles == bad).any(axis=1))
+        place = f"face {int(face[0]) + 1}" if len(face) else f"vertex {bad + 1}"
+        raise InputError(
+            f"{path}: {label}, {place}: {int((~finite).sum())} vertices are not finite (NaN or infinite); "
+            "mend the part in CAD and export it again"
+        )
+    return part
