@@ -1,0 +1,56 @@
+"""Everything of daraf that faces the outside: files, command line, tables.
+
+The names below load on first use, so that ``import daraf.io`` costs nothing.
+"""
+
+from importlib import import_module
+from typing import TYPE_CHECKING, Any
+
+if TYPE_CHECKING:
+    from .bodies import Body, read_bodies
+    from .case import Case, load_case, make_case
+    from .inspection import inspect_files
+    from .mending import fit_bodies
+    from .outcome import Outcome, solve_case
+    from .problem import bodies_to_surface
+    from .result import Result, read_result
+
+__all__ = [
+    "Body",
+    "Case",
+    "Outcome",
+    "Result",
+    "bodies_to_surface",
+    "fit_bodies",
+    "inspect_files",
+    "load_case",
+    "make_case",
+    "read_bodies",
+    "read_result",
+    "solve_case",
+]
+
+_HOMES = {
+    "Body": "bodies",
+    "Case": "case",
+    "Outcome": "outcome",
+    "Result": "result",
+    "bodies_to_surface": "problem",
+    "fit_bodies": "mending",
+    "inspect_files": "inspection",
+    "load_case": "case",
+    "make_case": "case",
+    "read_bodies": "bodies",
+    "read_result": "result",
+    "solve_case": "outcome",
+}
+
+
+def __getattr__(name: str) -> Any:
+    if name not in _HOMES:
+        raise AttributeError(f"module {__name__!r} has no attribute {name!r}")
+    return getattr(import_module(f".{_HOMES[name]}", __name__), name)
+
+
+def __dir__() -> list[str]:
+    return sorted(__all__)

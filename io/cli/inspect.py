@@ -1,0 +1,34 @@
+"""`daraf inspect`: what is in these files, is it fit to solve, what to mend."""
+
+import argparse
+import json
+import sys
+
+__all__ = ["DESCRIPTION", "HELP", "NAME", "add_arguments", "run"]
+
+NAME = "inspect"
+HELP = "what is in these files, is it fit, what to mend"
+DESCRIPTION = """\
+Lists the bodies of surface files (STL, OBJ, PLY, OFF, GLB, 3MF): name, panels, open
+or closed, size, edges, smallest gap, faults and what to do about each.
+"""
+
+
+def add_arguments(parser: argparse.ArgumentParser) -> None:
+    """Declare the arguments."""
+    parser.add_argument("files", nargs="+", metavar="FILE", help="surface file")
+    parser.add_argument("--unit", metavar="UNIT", help="length unit of the files, such as mm")
+    parser.add_argument("--json", action="store_true", help="print JSON instead of text")
+
+
+def run(args: argparse.Namespace) -> int:
+    """Inspect and print."""
+    from daraf.io.inspection import inspect_files, inspection_to_dict, inspection_to_text
+
+    inspection = inspect_files(args.files, args.unit)
+    if args.json:
+        text = json.dumps(inspection_to_dict(inspection), indent=2, ensure_ascii=False)
+    else:
+        text = inspection_to_text(inspection, args.unit)
+    sys.stdout.write(text.rstrip("\n") + "\n")
+    return 0

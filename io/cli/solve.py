@@ -1,0 +1,132 @@
+"""`daraf solve`: the main job."""
+
+import argparse
+import json
+import os
+import sys
+from pathlib import Path
+from typing import TYPE_CHECKING, Any
+
+from .parser import UsageError, positive_whole_number
+
+if TYPE_CHECKING:
+    from daraf.io.outcome import Outcome
+    from daraf.io.problem import Problem
+
+__all__ = ["DESCRIPTION", "HELP", "NAME", "add_arguments", "run"]
+
+NAME = "solve"
+HELP = "capacitances, charges and potentials of a case"
+DESCRIPTION = """\
+Solves a case file, or surface files with every body a conductor:
+
+  daraf solve CASE.toml
+  daraf solve FILE... --unit mm
+
+Prints the Maxwell and the mutual capacitances with their uncertainty and writes the
+result folder.
+"""
+
+
+def add_arguments(parser: argparse.ArgumentParser) -> None:
+    """Declare the arguments."""
+    parser.add_argument("files", nargs="*", metavar="FILE", help="one case file (.toml), or surface files")
+    parser.add_argument("--unit", metavar="UNIT", help="length unit of the surface files, such as mm")
+    parser.add_argument("--accuracy", metavar="X", help="relative, such as '0.5 %%'; overrides the case (default 1 %%)")
+    parser.add_argument("--out", metavar="DIR", help="result folder (default: NAME.daraf beside the first file)")
+    parser.add_argument("--json", action="store_true", help="print result.json instead of tables")
+    parser.add_argument("-q", "--quiet", action="store_true", help="no progress and no messages")
+    parser.add_argument("--threads", type=positive_whole_number, metavar="N", help="number of threads")
+    parser.add_argument("--schema", action="store_true", help="print the JSON Schema of the case file")
+
+
+def run(args: argparse.Namespace) -> int:
+    """Solve, write, print."""
+    if args.schema:
+        from daraf.io.schema import json_schema
+
+        sys.stdout.write(json.dumps(json_schema(), indent=2, ensure_ascii=False) + "\n")
+        return 0
+    case_file = _case_file(args)
+    if args.threads is not None:
+        _limit_threads(args.threads)
+    from daraf.io.progress import progress_for
+    from daraf.io.result import check_destination
+
+    out = args.out or str(Path(args.files[0]).with_suffix(".daraf"))
+    problem, seconds, accuracy = _read(args, case_file)
+    # Before the solve: an hour's work must not end at a folder that cannot be written.
+    check_destination(out)
+    with progress_for(quiet=args.quiet) as progress:
+        outcome = _solve(problem, accuracy, progress, seconds)
+        progress("writing", 0, 1)
+        outcome.write(out)
+    _show(outcome, out, args)
+    if outcome.solution.interrupted:
+        return 130
+    return 0 if outcome.solution.reached else 3
+
+
+def _case_file(args: argparse.Namespace) -> str | None:
+    """Return the case file, or None if the files are surfaces."""
+    cases = [name for name in args.files if name.lower().endswith(".toml")]
+    if not args.files:
+        raise UsageError("name a case file or surface files; see `daraf solve --help`")
+    if not cases:
+        return None
+    if len(args.files) > 1:
+        raise UsageError(f"{cases[0]}: a case file stands alone; name one case, or surface files only")
+    if args.unit is not None:
+        raise UsageError(f"--unit is for surface files; {cases[0]} states its unit itself, change it there")
+    return str(cases[0])
+
+
+def _limit_threads(n: int) -> None:
+    """Limit the threads of BLAS and numba; before they are loaded where possible.
+
+    Both read their environment variable once, when they are loaded. Loaded earlier (in a process that
+    calls `main` itself), only numba can still be told, and only to use fewer.
+    """
+    if "numpy" not in sys.modules:
+        for name in ("OMP_NUM_THREADS", "OPENBLAS_NUM_THREADS", "MKL_NUM_THREADS"):
+            os.environ[name] = str(n)
+    if "numba" not in sys.modules:
+        os.environ["NUMBA_NUM_THREADS"] = str(n)
+        return
+    from daraf.bem import set_threads
+
+    set_threads(n)
+
+
+def _read(args: argparse.Namespace, case_file: str | None) -> tuple["Problem", float, float | None]:
+    """Read case and surfaces: the problem, the seconds it took, the accuracy that overrides the case."""
+    import time
+
+    from daraf.io.case import load_case
+    from daraf.io.problem import build_problem, problem_from_files
+    from daraf.io.schema import parse_accuracy
+
+    started = time.perf_counter()
+    accuracy = None if args.accuracy is None else parse_accuracy(args.accuracy)
+    if case_file is None:
+        problem = problem_from_files(args.files, args.unit, accuracy=accuracy)
+    else:
+        problem = build_problem(load_case(case_file))
+    return problem, time.perf_counter() - started, accuracy
+
+
+def _solve(problem: "Problem", accuracy: float | None, progress: Any, seconds: float) -> "Outcome":
+    from daraf.io.outcome import solve_problem
+
+    return solve_problem(problem, accuracy=accuracy, progress=progress, reading=seconds)
+
+
+def _show(outcome: "Outcome", out: str, args: argparse.Namespace) -> None:
+    from daraf.io.result import document_text
+
+    if not args.json:
+        sys.stdout.write(f"{outcome.text()}\nresult: {out}\n")
+        return
+    sys.stdout.write(document_text(outcome.document))
+    if not args.quiet:
+        sys.stderr.write(f"result: {out}\n")

@@ -1,0 +1,191 @@
+"""The main job in one call: case in, `Outcome` out, which prints itself and writes its folder."""
+
+import time
+from dataclasses import dataclass
+from pathlib import Path
+from typing import Any
+
+from daraf.bem.network import Excitation, MutualCapacitance, excite, mutual_capacitance
+from daraf.bem.solution import CapacitanceSolution
+
+from .case import Case
+from .document import daraf_version, result_document
+from .problem import Problem, build_problem
+from .progress import Log, ProgressCallback
+from .result import write_result
+from .surface_file import SolvedSurface, surface_bytes
+from .tables import result_text
+
+__all__ = ["Outcome", "solve_case", "solve_problem"]
+
+
+@dataclass(frozen=True, eq=False)
+class Outcome:
+    """A solved case.
+
+    Attributes
+    ----------
+    problem : Problem
+    solution : daraf.bem CapacitanceSolution
+    mutual : daraf.bem MutualCapacitance
+    state : daraf.bem Excitation or None
+        Potentials, charges and energy; None if nothing was stated.
+    document : dict
+        Content of `result.json`.
+    log_lines : list of str
+    """
+
+    problem: Problem
+    solution: CapacitanceSolution
+    mutual: MutualCapacitance
+    state: Excitation | None
+    document: dict[str, Any]
+    log_lines: list[str]
+
+    def text(self) -> str:
+        """Return the tables, as `daraf solve` prints them."""
+        return result_text(self.document)
+
+    def write(self, folder: str | Path) -> Path:
+        """Write the result folder.
+
+        Parameters
+        ----------
+        folder : str or Path
+            Replaced as a whole if it holds an older result.
+
+        Returns
+        -------
+        Path
+
+        Raises
+        ------
+        InputError
+            If it cannot be written; nothing is left behind.
+        """
+        log = "\n".join([f"daraf {daraf_version()}", *self.log_lines, "", self.text()])
+        surface = surface_bytes(self._solved_surface(), title=self.document["title"])
+        return write_result(folder, self.document, surface, log)
+
+    def _solved_surface(self) -> SolvedSurface:
+        panels, densities = self.solution.panels, self.solution.densities
+        return SolvedSurface(
+            corners=panels.corners,
+            n_corners=panels.n_corners,
+            conductor=panels.conductor,
+            body=panels.body,
+            conductor_names=self.solution.conductor_names,
+            body_names=self.problem.surface.body_names,
+            densities=densities,
+            density=None if self.state is None else self.state.potential @ densities,
+        )
+
+
+def solve_case(
+    case: Case,
+    *,
+    accuracy: float | None = None,
+    memory_limit: int | None = None,
+    progress: ProgressCallback | None = None,
+) -> Outcome:
+    """Solve a case.
+
+    Parameters
+    ----------
+    case : Case
+        From `load_case` or `make_case`.
+    accuracy : float, optional
+        Relative, overrides the case.
+    memory_limit : int, bytes, optional
+    progress : callable, optional
+        ``progress(stage, done, total, note)``.
+
+    Returns
+    -------
+    Outcome
+
+    Raises
+    ------
+    InputError
+        If a file, a body, a placement or the size of the job cannot be used.
+    """
+    started = time.perf_counter()
+    problem = build_problem(case)
+    return solve_problem(
+        problem,
+        accuracy=accuracy,
+        memory_limit=memory_limit,
+        progress=progress,
+        reading=time.perf_counter() - started,
+    )
+
+
+def solve_problem(
+    problem: Problem,
+    *,
+    accuracy: float | None = None,
+    memory_limit: int | None = None,
+    progress: ProgressCallback | None = None,
+    reading: float = 0.0,
+) -> Outcome:
+    """Solve a problem that was built before; arguments as in `solve_case`.
+
+    Parameters
+    ----------
+    problem : Problem
+    accuracy : float, optional
+    memory_limit : int, bytes, optional
+    progress : callable, optional
+    reading : float, s
+        Time spent on building the problem, for the record.
+
+    Returns
+    -------
+    Outcome
+
+    Raises
+    ------
+    InputError
+        If the job does not fit into memory.
+    """
+    # Here, not above: the solver brings numba, which `daraf inspect` need not wait for.
+    from daraf.bem import solve_capacitance
+
+    started = time.perf_counter()
+    log = Log(progress)
+    content = problem.case.content
+    surface = problem.surface
+    log.add(f"{len(surface.triangles)} triangles, {surface.n_bodies} bodies, {surface.n_conductors} conductors")
+    solution = solve_capacitance(
+        surface,
+        relative_permittivity=content.medium.relative_permittivity,
+        accuracy=content.accuracy if accuracy is None else accuracy,
+        memory_limit=memory_limit,
+        facets=content.facets,
+        progress=log,
+    )
+    log.add("done" if solution.reached else "stopped before the accuracy asked was reached")
+    mutual = mutual_capacitance(
+        solution.maxwell,
+        solution.maxwell_uncertainty,
+        to_infinity=solution.to_infinity,
+        to_infinity_uncertainty=solution.to_infinity_uncertainty,
+    )
+    state = _state(problem, solution)
+    document = result_document(problem, solution, mutual, state)
+    seconds = document["solution"]["seconds"]
+    total = reading + time.perf_counter() - started
+    document["solution"]["seconds"] = {"reading": reading, **seconds, "total": total}
+    return Outcome(problem, solution, mutual, state, document, log.lines)
+
+
+def _state(problem: Problem, solution: CapacitanceSolution) -> Excitation | None:
+    if problem.held is None or problem.values is None:
+        return None
+    return excite(
+        solution.maxwell,
+        solution.maxwell_uncertainty,
+        problem.held,
+        problem.values,
+        to_infinity_uncertainty=solution.to_infinity_uncertainty,
+    )
