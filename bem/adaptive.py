@@ -7,6 +7,7 @@ from dataclasses import dataclass, field, replace
 import numpy as np
 from numpy.typing import NDArray
 from scipy.linalg import lapack
+from threadpoolctl import threadpool_limits
 
 from .bisection import SPLIT_U, SPLIT_V, split_panels
 from .errors import NumericalError
@@ -14,7 +15,7 @@ from .extrapolation import SMOOTH_DECAY, decay_of_parts, extrapolate, realised_s
 from .galerkin import galerkin_matrix
 from .indicator import two_level_indicator
 from .panels import Panels
-from .refinement import choose_splits, gain_worth
+from .refinement import choose_splits, gain_worth, unhide_symmetric
 from .solution import Notice
 
 __all__ = ["PassResult", "Plan", "plan_next", "run_pass"]
@@ -26,6 +27,8 @@ Progress = Callable[..., None]
 
 #: The factorisation is repeated with this share added to the diagonal if it fails: two panels coincide.
 COINCIDENT = 1e-10
+#: Below this many panels LAPACK runs on one thread.
+SERIAL = 3000
 
 
 @dataclass(frozen=True, eq=False)
@@ -43,10 +46,16 @@ class PassResult:
         Galerkin value of the capacitance matrix.
     gains : (n_panels, 2, n_conductors) float
         Two-level gains.
+    feared : (n_panels, 2, n_conductors) float
+        The same, or what a panel may hide by symmetry where that is more: what is refined and doubted.
+    symmetric : (n_panels, 2) bool
+        Directions in which panels may hide a gain: see :func:`daraf.bem.refinement.unhide_symmetric`.
     decay : (n_panels, 2) float
         How much less each further split gains.
     realised : float
         What the splits before this pass gained over what was promised.
+    drift : float
+        Change of that share since the pass before.
     limit : (n_conductors, n_conductors) float, m
         Extrapolated value.
     change : (n_conductors, n_conductors) float or None
@@ -60,8 +69,11 @@ class PassResult:
     density: FloatArray
     value: FloatArray
     gains: FloatArray
+    feared: FloatArray
+    symmetric: BoolArray
     decay: FloatArray
     realised: float
+    drift: float
     limit: FloatArray
     change: FloatArray | None
     seconds: dict[str, float]
@@ -80,7 +92,12 @@ class Plan:
         Galerkin matrix of the first m panels.
     parent : (n_panels,) int
         Panel of the pass before.
+    symmetric : (n_panels, 2) bool
+        Directions in which halves may be equal by symmetry.
+    decay : (n_panels, 2) float or None
+        For the first pass: what the edges say.
     was_split : (n_before, 2) bool
+        Directions of the splits whose gain had been measured.
     worth : (n_before, 2) float
         Of the gains before the split.
     weights : (n_conductors, n_conductors) float
@@ -90,6 +107,8 @@ class Plan:
     """
 
     panels: Panels
+    symmetric: BoolArray
+    decay: FloatArray | None = None
     known: FloatArray | None = None
     parent: IntArray | None = None
     was_split: BoolArray | None = None
@@ -132,47 +151,69 @@ def run_pass(plan: Plan, report: Callable[[str, float, float], None]) -> PassRes
     value = 0.5 * (value + value.T)
     seconds["factorisation"] = time.perf_counter() - start
     start = time.perf_counter()
+    self_terms = np.diag(matrix).copy()
     gains = two_level_indicator(
-        panels,
-        density,
-        np.diag(matrix).copy(),
-        potentials,
-        progress=lambda done, total: report("estimate", done, total),
+        panels, density, self_terms, potentials, progress=lambda done, total: report("estimate", done, total)
     )
+    feared = unhide_symmetric(gains, density, self_terms, plan.symmetric)
     decay, realised = _history(plan, value, gains)
     limit = extrapolate(value, gains, decay, realised)
     change = None if plan.before is None else limit - plan.before.limit
+    drift = 0.0 if plan.before is None else realised - plan.before.realised
     seconds["estimate"] = time.perf_counter() - start
-    return PassResult(panels, matrix, density, value, gains, decay, realised, limit, change, seconds, notices)
+    return PassResult(
+        panels,
+        matrix,
+        density,
+        value,
+        gains,
+        feared,
+        plan.symmetric,
+        decay,
+        realised,
+        drift,
+        limit,
+        change,
+        seconds,
+        notices,
+    )
 
 
 def _solve(matrix: FloatArray, charges: FloatArray) -> tuple[FloatArray, list[Notice]]:
     """Bare densities by Cholesky factorisation of the lower triangle."""
     notices = []
-    # the transpose of the lower triangle in C order is the upper one in Fortran order: no copy but this one
-    factor, info = lapack.dpotrf(np.array(matrix.T, order="F"), lower=0, clean=0, overwrite_a=1)
-    if info != 0:
-        shifted = np.array(matrix.T, order="F")
-        shifted[np.diag_indices_from(shifted)] *= 1.0 + COINCIDENT
-        factor, info = lapack.dpotrf(shifted, lower=0, clean=0, overwrite_a=1)
+    # a small factorisation gains nothing from threads and waits long for them where the machine is busy
+    with threadpool_limits(1 if len(matrix) < SERIAL else None):
+        factor, info = _cholesky(matrix, 1.0)
+        if info != 0:
+            factor, info = _cholesky(matrix, 1.0 + COINCIDENT)
+            text = (
+                "panels coincide: bodies of one conductor overlap or touch along a face; the capacitances hold, "
+                "but how the charge is shared there is arbitrary"
+            )
+            notices.append(Notice("coincident-panels", text))
         if info != 0:
             raise NumericalError(
                 f"the matrix of {len(matrix)} panels is not positive definite: panels coincide or cross"
             )
-        text = (
-            "panels coincide: bodies of one conductor overlap or touch along a face; the capacitances hold, "
-            "but how the charge is shared there is arbitrary"
-        )
-        notices.append(Notice("coincident-panels", text))
-    density, _ = lapack.dpotrs(factor, charges, lower=0)
+        density, _ = lapack.dpotrs(factor, charges, lower=0)
     return np.ascontiguousarray(density), notices
+
+
+def _cholesky(matrix: FloatArray, diagonal: float) -> tuple[FloatArray, int]:
+    # the transpose of the lower triangle in C order is the upper one in Fortran order: no copy but this one
+    copy = np.array(matrix.T, order="F")
+    copy[np.diag_indices_from(copy)] *= diagonal
+    factor, info = lapack.dpotrf(copy, lower=0, clean=0, overwrite_a=1)
+    return factor, int(info)
 
 
 def _history(plan: Plan, value: FloatArray, gains: FloatArray) -> tuple[FloatArray, float]:
     """Decay of each panel's gains and the realised share of what was promised."""
     before = plan.before
     if before is None or plan.parent is None or plan.was_split is None or plan.worth is None or plan.weights is None:
-        return np.full((len(plan.panels), 2), SMOOTH_DECAY), 1.0
+        start = np.full((len(plan.panels), 2), SMOOTH_DECAY) if plan.decay is None else plan.decay
+        return start, 1.0
     promised = np.einsum("pdi,pd->i", before.gains**2, plan.was_split) / np.diag(value)
     gained = (np.diag(value) - np.diag(before.value)) / np.diag(value)
     decay = decay_of_parts(plan.parent, plan.was_split, plan.worth, gain_worth(gains, plan.weights), before.decay)
@@ -192,14 +233,16 @@ def plan_next(result: PassResult, weights: FloatArray) -> Plan:
     -------
     Plan
     """
-    worth = gain_worth(result.gains, weights)
+    worth = gain_worth(result.feared, weights)
     split = choose_splits(worth)
     panels, parent = split_panels(result.panels, split)
     kept = parent[: int(np.count_nonzero(split == 0))]
     was_split = np.stack([(split & SPLIT_U) > 0, (split & SPLIT_V) > 0], axis=1)
     was_split[result.panels.n_corners == 3] = (split > 0)[result.panels.n_corners == 3, None]
     known = result.matrix[np.ix_(kept, kept)]
-    return Plan(panels, known, parent, was_split, worth, weights, _without_matrix(result))
+    symmetric = (result.symmetric & ~was_split)[parent]
+    measured = was_split & ~result.symmetric
+    return Plan(panels, symmetric, None, known, parent, measured, worth, weights, _without_matrix(result))
 
 
 def _without_matrix(result: PassResult) -> PassResult:

@@ -12,13 +12,13 @@ from .constants import FOUR_PI_EPSILON_0
 from .creases import find_creases
 from .errors import InputError
 from .extrapolation import extrapolation_uncertainty
-from .facets import Facets, facet_shift, find_facets
+from .facets import Facets, facet_shift, find_facets, move_facets
 from .flats import panel_regions
 from .memory import dense_bytes, free_memory, panels_that_fit, peak_memory, refuse_if_too_large
-from .panels import Panels
-from .refinement import accuracy_targets, sharp_sides, starting_panels
+from .refinement import accuracy_targets
 from .regions import find_regions
 from .solution import CapacitanceSolution, Notice, Pass
+from .start import side_decays, starting_panels
 from .surface import Surface
 
 __all__ = ["solve_capacitance"]
@@ -120,12 +120,13 @@ def solve_capacitance(
     start, round_parts, notices, most = _prepare(surface, facets, limit)
     seconds = {"panels": time.perf_counter() - begin}
     passes: list[Pass] = []
-    plan: Plan | None = Plan(start)
-    result = judgement = None
+    plan: Plan | None = start
+    result = judgement = previous = None
     interrupted = False
     try:
         while plan is not None:
             result, judgement = _pass(plan, round_parts, accuracy, passes, report)
+            previous = plan.before
             for stage, time_spent in result.seconds.items():
                 seconds[stage] = seconds.get(stage, 0.0) + time_spent
             notices += [notice for notice in result.notices if notice not in notices]
@@ -156,6 +157,7 @@ def solve_capacitance(
         seconds=seconds,
         peak_memory_bytes=peak_memory(),
         warnings=notices + _guards(surface, judgement, value, total),
+        previous=None if previous is None else (previous.panels, farads * previous.density.T),
         interrupted=interrupted,
     )
 
@@ -164,7 +166,7 @@ def _silent(stage: str, done: float, total: float, note: str = "") -> None:
     return None
 
 
-def _prepare(surface: Surface, facets: str, limit: int) -> tuple[Panels, Facets | None, list[Notice], int]:
+def _prepare(surface: Surface, facets: str, limit: int) -> tuple[Plan, Facets | None, list[Notice], int]:
     """Panels to start from, the round parts, notices, and the most panels that there is room for."""
     regions, notices = find_regions(surface)
     creases = find_creases(surface, regions)
@@ -172,8 +174,11 @@ def _prepare(surface: Surface, facets: str, limit: int) -> tuple[Panels, Facets 
     refuse_if_too_large(len(panels), limit)
     most = max(len(panels), min(MOST_PANELS, panels_that_fit(limit)))
     round_parts = find_facets(surface, regions, creases) if facets == "auto" else None
-    sharp = sharp_sides(surface, creases, panels)
-    return starting_panels(panels, sharp, max(len(panels), most // 4)), round_parts, notices + more, most
+    decays = side_decays(surface, creases, panels)
+    if round_parts is not None:
+        panels = move_facets(round_parts, panels)
+    start = starting_panels(panels, decays, max(len(panels), most // 4))
+    return Plan(start.panels, start.symmetric, start.decay), round_parts, notices + more, most
 
 
 def _pass(
@@ -197,13 +202,20 @@ def _judge(result: PassResult, round_parts: Facets | None, accuracy: float, n_pa
     scale = np.sqrt(np.outer(np.diag(result.limit), np.diag(result.limit)))
     lines = {
         "discretisation": extrapolation_uncertainty(
-            result.gains, result.decay, result.realised, result.change, sums, n_passes
+            result.feared,
+            result.decay,
+            result.realised,
+            result.drift,
+            result.panels.body,
+            result.change,
+            sums,
+            n_passes,
         ),
         "facets": np.zeros_like(value),
         "integration": INTEGRATION * np.hstack([scale, scale.max(axis=1, keepdims=True)]),
     }
     if round_parts is not None and round_parts.any:
-        shift, lines["facets"] = facet_shift(round_parts, result.panels, result.density, sums)
+        shift, lines["facets"] = facet_shift(round_parts, result.panels, result.density, sums, np.diag(result.value))
         value = value + shift
     total = np.sqrt(sum(line**2 for line in lines.values()))
     return _Judgement(value, lines, total, accuracy_targets(value[:, :n], accuracy))

@@ -25,11 +25,14 @@ IntArray = NDArray[np.int64]
 SMOOTH_DECAY = 0.25
 #: Decays are kept between those of smooth charge and of a rim, with room for what neighbours do.
 LEAST_DECAY, GREATEST_DECAY = 0.15, 0.55
+#: A decay measured beyond that says that the mesh does not see a gap or an edge yet: it is not extrapolated, but
+#: counts in the uncertainty up to this value.
+DOUBTFUL_DECAY = 0.8
 #: Bounds of the realised share of promised gains.
-LEAST_REALISED, GREATEST_REALISED = 0.5, 1.2
+LEAST_REALISED, GREATEST_REALISED = 0.4, 1.3
 #: Expanded uncertainty (k = 2) of the extrapolated part as a share of it: after one pass, two, three, and more.
 #: Measured with ``scripts/coverage`` on the exact set.
-SHARES = (2.0, 1.0, 0.5, 0.3)
+SHARES = (1.5, 0.8, 0.5, 0.3)
 #: Share of the change since the pass before that counts as uncertain.
 CHANGE_SHARE = 1.0
 
@@ -64,7 +67,7 @@ def decay_of_parts(
         np.maximum.at(largest, parent, gain)
         known = was_split[:, direction] & (before[:, direction] > 0) & (total > 0)
         ratio = total / np.where(known, before[:, direction], 1.0)
-        measured = np.clip(ratio, LEAST_DECAY, GREATEST_DECAY)[parent]
+        measured = np.clip(ratio, LEAST_DECAY, DOUBTFUL_DECAY)[parent]
         # the part that holds the gain holds the singular edge too; the others are as smooth as any
         near_edge = gain / np.where(known, largest, 1.0)[parent]
         blended = SMOOTH_DECAY + (measured - SMOOTH_DECAY) * near_edge
@@ -111,7 +114,7 @@ def extrapolate(value: FloatArray, gains: FloatArray, decay: FloatArray, realise
     -------
     (n, n) float
     """
-    weighted = _series(gains, decay, realised)
+    weighted = _series(gains, np.minimum(decay, GREATEST_DECAY), realised)
     return value + weighted.T @ weighted
 
 
@@ -119,19 +122,25 @@ def extrapolation_uncertainty(
     gains: FloatArray,
     decay: FloatArray,
     realised: float,
+    drift: float,
+    body: IntArray,
     change: FloatArray | None,
     sums: FloatArray,
     n_passes: int,
 ) -> FloatArray:
     """Expanded uncertainty (k = 2) of the extrapolated value.
 
-    A share of the extrapolated gains, each taken without its sign, and the change of the extrapolated value
-    since the pass before: it is large while the mesh does not see a narrow gap yet.
+    A share of the extrapolated gains, and the change of the extrapolated value since the pass before, which is
+    large while the mesh does not see a narrow gap yet. Gains of one body are taken to err together, since the
+    same edges decide them; those of different bodies add without regard to sign.
 
     Parameters
     ----------
     gains, decay, realised
         As for :func:`extrapolate`.
+    drift : float
+        Change of the realised share since the pass before: while it moves it will move on.
+    body : (n_panels,) int
     change : (n, n) float or None
         Extrapolated value now less that of the pass before.
     sums : (n, m) float
@@ -142,9 +151,12 @@ def extrapolation_uncertainty(
     -------
     (n, m) float
     """
-    weighted = _series(gains, decay, realised)
-    share = SHARES[min(n_passes, len(SHARES)) - 1]
-    spread = share * (np.abs(weighted).T @ np.abs(weighted @ sums))
+    spread = np.zeros_like(sums)
+    for number in np.unique(body):
+        own = body == number
+        weighted = _series(gains[own], decay[own], realised)
+        spread += np.abs(weighted.T @ (weighted @ sums))
+    spread *= SHARES[min(n_passes, len(SHARES)) - 1] + abs(drift) / realised
     return spread if change is None else np.hypot(spread, CHANGE_SHARE * change @ sums)
 
 

@@ -1,29 +1,25 @@
-"""What the facets of round parts cost: the shift of the capacitances from flat to smooth surface.
+"""Round parts: what their facets stand for, and what is not known about it.
 
 A drawing's round part arrives as a polyhedron inscribed in the true surface. Where the edges say "meant smooth"
-(:mod:`daraf.bem.creases`) the true surface lies a known small distance delta outside each facet, and Hadamard's
-variational formula gives, to first order,
+(:mod:`daraf.bem.creases`) the true surface lies a known small distance delta outside each facet. The panels are
+moved onto its mean before the solve. Hadamard's variational formula gives, to first order, what that changes,
 
-    dC_ij = (1/eps) int (sigma_i+ sigma_j+ - sigma_i- sigma_j-) delta dS
+    dC_ij = (1/eps) int sigma_i sigma_j delta dS
 
-with the densities on the outer and the inner side; inside a solid conductor the latter vanish. On sheets, and on
-closed surfaces that hold other bodies or are turned inside out, the two sides follow from the total density and
-the normal field (J. Hadamard, Mem. Acad. Sci. Paris 33 (1908) no. 4, from memory). At the rim of a sheet, where
-sigma = K / sqrt(d) at the distance d, moving the rim outward by delta in the plane gives
+(J. Hadamard, Mem. Acad. Sci. Paris 33 (1908) no. 4, from memory); a share of it is the uncertainty. At the rim of
+a sheet, where sigma = K / sqrt(d) at the distance d, moving the rim outward by delta in the plane gives
 
     dC_ij = (pi / (2 eps)) oint K_i K_j delta ds,
 
-which on the disc (K^2 = 8 eps^2 / (pi^2 a)) returns dC/da = 8 eps.
+which on the disc (K^2 = 8 eps^2 / (pi^2 a)) returns dC/da = 8 eps. This is added after the solve.
 """
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 from numpy.typing import NDArray
 
 from .creases import Creases, corner_normals, facet_offsets
-from .field import normal_field
-from .frames import panel_frames
 from .panels import Panels
 from .regions import Regions
 from .surface import Surface
@@ -34,10 +30,10 @@ FloatArray = NDArray[np.float64]
 IntArray = NDArray[np.int64]
 BoolArray = NDArray[np.bool_]
 
-#: Expanded uncertainty (k = 2) of the shift as a share of it: solid bodies, sheets and enclosures (whose sides
-#: are told apart by the field at the centroids only), rims (whose coefficient is read off one panel).
-#: Measured with ``scripts/coverage`` on the exact set.
-SOLID_SHARE, SHEET_SHARE, RIM_SHARE = 0.1, 0.3, 0.3
+#: Expanded uncertainty (k = 2) as a share of the first-order change: of facets, where the relative change itself
+#: is added for what is of second order, and of rims, whose coefficient is read off one panel. Measured with
+#: ``scripts/coverage`` on the exact set.
+FACET_SHARE, RIM_SHARE = 0.015, 0.15
 #: Rim corners that turn by more than this are corners of the drawing, rad.
 _RIM_TURN = np.radians(35.0)
 #: Neighbouring turns of one round rim differ at most by this factor.
@@ -52,8 +48,6 @@ class Facets:
     ----------
     offset : (n_regions,) float, m
         Mean outward distance of the smooth surface from each flat region; zero where nothing is round.
-    two_sided : (n_bodies,) bool
-        Whether both sides of the surface of a body may carry charge: sheets, enclosures, cavities.
     rim_ends : (n_rim, 2, 3) float, m
         Straight rim edges that stand for a round rim.
     rim_offset : (n_rim,) float, m
@@ -62,7 +56,6 @@ class Facets:
     """
 
     offset: FloatArray
-    two_sided: BoolArray
     rim_ends: FloatArray
     rim_offset: FloatArray
     rim_region: IntArray
@@ -101,41 +94,7 @@ def find_facets(surface: Surface, regions: Regions, creases: Creases) -> Facets:
     offset[np.abs(offset) < 1e-9 * size] = 0.0
     rims = np.flatnonzero(creases.rim)
     ends, rim_offset, rim_region = _round_rims(surface, regions, creases, rims)
-    return Facets(offset, _two_sided(surface, creases, rims), ends, rim_offset, rim_region)
-
-
-def _two_sided(surface: Surface, creases: Creases, rims: IntArray) -> BoolArray:
-    """Bodies with a rim, turned inside out, or with another body inside."""
-    two_sided = np.zeros(surface.n_bodies, bool)
-    two_sided[surface.triangle_body[creases.edges.triangles[rims].max(axis=1)]] = True
-    corners = surface.vertices[surface.triangles]
-    first = np.array(
-        [surface.vertices[surface.triangles[surface.triangle_body == b][0, 0]] for b in range(surface.n_bodies)]
-    )
-    for body in np.flatnonzero(~two_sided):
-        own = corners[surface.triangle_body == body]
-        own = own - own.reshape(-1, 3).mean(axis=0)
-        volume = np.einsum("ij,ij->", own[:, 0], np.cross(own[:, 1], own[:, 2]))
-        others = np.flatnonzero(np.arange(surface.n_bodies) != body)
-        low, high = (
-            corners[surface.triangle_body == body].min(axis=(0, 1)),
-            corners[surface.triangle_body == body].max(axis=(0, 1)),
-        )
-        near = others[((first[others] > low) & (first[others] < high)).all(axis=1)]
-        two_sided[body] = volume < 0 or any(
-            abs(_turns(corners[surface.triangle_body == body] - first[other])) > 0.5 for other in near
-        )
-    return two_sided
-
-
-def _turns(corners: FloatArray) -> float:
-    """How often a closed mesh wraps around the origin (van Oosterom and Strackee 1983, summed over 4 pi)."""
-    a, b, c = corners[:, 0], corners[:, 1], corners[:, 2]
-    ra, rb, rc = (np.linalg.norm(v, axis=1) for v in (a, b, c))
-    numerator = np.einsum("ij,ij->i", a, np.cross(b, c))
-    dot = (np.einsum("ij,ij->i", p, q) for p, q in ((a, b), (b, c), (c, a)))
-    ab, bc, ca = dot
-    return float(np.sum(2.0 * np.arctan2(numerator, ra * rb * rc + ab * rc + bc * ra + ca * rb)) / (4.0 * np.pi))
+    return Facets(offset, ends, rim_offset, rim_region)
 
 
 def _round_rims(
@@ -202,47 +161,57 @@ def rim_factors(facets: Facets, panels: Panels) -> FloatArray:
     return factor
 
 
-def facet_shift(
-    facets: Facets, panels: Panels, density: FloatArray, weights: FloatArray
-) -> tuple[FloatArray, FloatArray]:
-    """First-order shift of the capacitance matrix from the facets to the smooth surface, bare.
+def move_facets(facets: Facets, panels: Panels) -> Panels:
+    """Move every facet outward onto the mean of the smooth surface over it.
+
+    Neighbouring facets then part by hairs, or cross by as much where the surface is hollow; constant charges do
+    not mind.
 
     Parameters
     ----------
     facets : Facets
     panels : Panels
+
+    Returns
+    -------
+    Panels
+    """
+    move = facets.offset[panels.region][:, None] * panels.normals
+    return replace(panels, corners=panels.corners + move[:, None, :])
+
+
+def facet_shift(
+    facets: Facets, panels: Panels, density: FloatArray, weights: FloatArray, capacitance: FloatArray
+) -> tuple[FloatArray, FloatArray]:
+    """What the rims of round sheets still add, and the uncertainty of all round parts, bare.
+
+    Parameters
+    ----------
+    facets : Facets
+    panels : Panels
+        Moved by :func:`move_facets`.
     density : (n_panels, n_conductors) float
         Bare densities, the solution of ``A density = areas``: sigma = 4 pi eps density.
     weights : (n_conductors, m) float
         Combinations of conductors of which the second index is wanted.
+    capacitance : (n_conductors,) float, m
+        Self entries.
 
     Returns
     -------
     shift : (n_conductors, m) float, m
-        Multiply by 4 pi eps for farads.
+        Of the rims; multiply by 4 pi eps for farads.
     uncertainty : (n_conductors, m) float, m
-        Expanded, k = 2: a share of each panel's part without regard to its sign.
+        Expanded, k = 2: a share of the first-order change, without regard to sign; the share grows with the
+        change, since what is left is of second order.
     """
-    each = 4.0 * np.pi * facets.offset[panels.region] * panels.areas
-    # sigma_i+ sigma_j+ - sigma_i- sigma_j- = sigma_i mean_j + mean_i sigma_j; a solid body has mean = sigma / 2
-    mean = 0.5 * density
-    rows = np.flatnonzero((each != 0) & facets.two_sided[panels.body])
-    if len(rows):
-        centre = panels.corners.reshape(-1, 3).mean(axis=0)
-        found = np.empty((len(rows), density.shape[1]))
-        frames = panel_frames(panels.corners - centre)
-        normal_field(panels.centroids[rows] - centre, panels.normals[rows], frames, density, found)
-        mean[rows] = found / (4.0 * np.pi)
+    moved = 4.0 * np.pi * np.abs(facets.offset[panels.region]) * panels.areas
     rim = 2.0 * np.pi**2 * rim_factors(facets, panels)
-    shift = np.zeros((density.shape[1], weights.shape[1]))
-    uncertainty = np.zeros_like(shift)
-    solid = ~facets.two_sided[panels.body]
-    for factor, share, one, two in (
-        (np.where(solid, each, 0.0), SOLID_SHARE, density, mean),
-        (np.where(solid, 0.0, each), SHEET_SHARE, density, mean),
-        (rim, RIM_SHARE, density, 0.5 * density),
-    ):
-        for left, right in ((one, two), (two, one)):
-            shift += np.einsum("p,pi,pj->ij", factor, left, right @ weights)
-            uncertainty += share * np.einsum("p,pi,pj->ij", np.abs(factor), np.abs(left), np.abs(right @ weights))
-    return shift, uncertainty
+    combined = density @ weights
+    size, combined_size = np.abs(density), np.abs(combined)
+    change = np.einsum("p,pi,pj->ij", moved, size, combined_size)
+    relative = np.diag(np.einsum("p,pi,pj->ij", moved, size, size)) / capacitance
+    share = FACET_SHARE + np.sqrt(relative[:, None] * np.max(relative * (weights.T != 0), axis=1)[None, :])
+    rim_change = np.einsum("p,pi,pj->ij", np.abs(rim), size, combined_size)
+    shift = np.einsum("p,pi,pj->ij", rim, density, combined)
+    return shift, share * change + RIM_SHARE * rim_change

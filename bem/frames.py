@@ -7,6 +7,7 @@ repeats its third corner; the edge between the two copies has length zero and co
 import numpy as np
 from numpy.typing import NDArray
 
+from .gauss import GAUSS_NODES, GAUSS_WEIGHTS
 from .panels import polygon_geometry
 
 __all__ = [
@@ -18,6 +19,7 @@ __all__ = [
     "LENGTH",
     "NORMAL",
     "OUTWARD",
+    "POINTS",
     "RADIUS",
     "TWICE_AREA_1",
     "TWICE_AREA_2",
@@ -34,7 +36,8 @@ RADIUS = 46  # largest distance of a corner from the centroid
 AREA = 47
 TWICE_AREA_1 = 48  # of triangle 0 1 2
 TWICE_AREA_2 = 49  # of triangle 0 2 3
-FRAME_SIZE = 50
+POINTS = (0, 0, 50, 66, 102, 166)  # start of the n x n Gauss points, n = 2 to 5: all x, y, z, then weights
+FRAME_SIZE = 266
 
 
 def panel_frames(corners: NDArray[np.float64]) -> NDArray[np.float64]:
@@ -67,4 +70,22 @@ def panel_frames(corners: NDArray[np.float64]) -> NDArray[np.float64]:
     frames[:, AREA] = areas
     frames[:, TWICE_AREA_1] = np.linalg.norm(np.cross(b - a, c - a), axis=1)
     frames[:, TWICE_AREA_2] = np.linalg.norm(np.cross(c - a, d - a), axis=1)
+    for n_side in (2, 3, 4, 5):
+        _put_points(frames, corners, n_side)
     return frames
+
+
+def _put_points(frames: NDArray[np.float64], corners: NDArray[np.float64], n_side: int) -> None:
+    """Product Gauss rule on the bilinear image of the unit square; weights hold the area."""
+    node, weight = GAUSS_NODES[n_side, :n_side], GAUSS_WEIGHTS[n_side, :n_side]
+    u, v = (grid.ravel() for grid in np.meshgrid(node, node, indexing="ij"))
+    a, b, c, d = (corners[:, None, k] for k in range(4))
+    u, v = u[None, :, None], v[None, :, None]
+    points = (1 - u) * (1 - v) * a + u * (1 - v) * b + u * v * c + (1 - u) * v * d
+    along_u = (1 - v) * (b - a) + v * (c - d)
+    along_v = (1 - u) * (d - a) + u * (c - b)
+    weights = np.outer(weight, weight).ravel() * np.linalg.norm(np.cross(along_u, along_v), axis=2)
+    start, count = POINTS[n_side], n_side * n_side
+    for axis in range(3):
+        frames[:, start + axis * count : start + (axis + 1) * count] = points[:, :, axis]
+    frames[:, start + 3 * count : start + 4 * count] = weights

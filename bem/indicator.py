@@ -7,26 +7,27 @@ over all panels estimates exact minus Galerkin value, signed, and its diagonal i
 (Mund, Stephan and Weisse, Computing 60 (1998) 243, for the energy norm; the product form is its polarisation).
 """
 
+import math
 from collections.abc import Callable
 
 import numpy as np
 from numpy.typing import NDArray
 
 from .bisection import SPLIT_U, SPLIT_V, children, halves
-from .frames import AREA, CENTROID, FRAME_SIZE, RADIUS, panel_frames
+from .frames import AREA, CENTROID, FRAME_SIZE, POINTS, RADIUS, panel_frames
 from .jit import kernel, parallel_kernel, prange
 from .near import close_pair_integral, self_integral
-from .pairs import far_integral, middle_integral
+from .pairs import middle_integral
 from .panels import Panels
-from .polygon import polygon_distance
+from .polygon import polygon_distance, polygon_potential
 
 __all__ = ["child_potentials", "two_level_indicator"]
 
 FloatArray = NDArray[np.float64]
 
-#: Centre distance over the sum of the radii of panel and source, beyond which one point on the part and on the
-#: source, or two by two, are enough.
-_PART_FAR, _PART_FAR_2 = 10.0, 2.5
+#: Centre distance over the sum of the radii of panel and source, beyond which one point on the part and one on
+#: the source, or two by two on the source, are enough.
+_PART_FAR, _PART_FAR_2 = 6.0, 1.5
 
 
 @parallel_kernel
@@ -45,38 +46,57 @@ def child_potentials(parts, frames, density, moments, first, last):
 
     Notes
     -----
-    The rules are coarser than in the matrix: 1e-3 of a moment's *variation* over the panel is enough.
+    The rules are coarser than in the matrix: 1e-2 of a moment's *variation* over the panel is enough.
     """
     n_columns = density.shape[1]
     for p in prange(first, last):
-        for c in range(4):
-            for k in range(n_columns):
-                moments[p, c, k] = 0.0
+        sums = np.zeros((4, n_columns))
+        values = np.empty(4)
         for j in range(len(frames)):
             x = frames[p, CENTROID] - frames[j, CENTROID]
             y = frames[p, CENTROID + 1] - frames[j, CENTROID + 1]
             z = frames[p, CENTROID + 2] - frames[j, CENTROID + 2]
-            ratio = np.sqrt(x * x + y * y + z * z) / (frames[p, RADIUS] + frames[j, RADIUS])
+            radii = frames[p, RADIUS] + frames[j, RADIUS]
+            ratio2 = (x * x + y * y + z * z) / (radii * radii)
             for c in range(4):
-                if parts[p, c, AREA] == 0.0:
-                    continue
-                value = _part_integral(parts[p, c], frames[j], ratio)
+                values[c] = _part_integral(parts[p, c], frames[j], ratio2)
+            for c in range(4):
                 for k in range(n_columns):
-                    moments[p, c, k] += value * density[j, k]
+                    sums[c, k] += values[c] * density[j, k]
+        for c in range(4):
+            for k in range(n_columns):
+                moments[p, c, k] = sums[c, k]
 
 
 @kernel
-def _part_integral(part, source, ratio):
-    """Integral of 1/r over a part of a panel and a source panel, to about 1e-3 of its variation."""
-    if ratio > _PART_FAR:
-        return far_integral(part, source, 1)
-    if ratio > _PART_FAR_2:
-        return far_integral(part, source, 2)
+def _part_integral(part, source, ratio2):
+    """Integral of 1/r over a part of a panel and a source panel, to about 1e-2 of its variation.
+
+    `ratio2` is the square of the distance of panel and source over the sum of their radii.
+    """
+    if part[AREA] == 0.0:
+        return 0.0
+    px, py, pz = part[CENTROID], part[CENTROID + 1], part[CENTROID + 2]
+    if ratio2 > _PART_FAR * _PART_FAR:
+        x, y, z = px - source[CENTROID], py - source[CENTROID + 1], pz - source[CENTROID + 2]
+        return part[AREA] * source[AREA] / math.sqrt(x * x + y * y + z * z)
+    if ratio2 > _PART_FAR_2 * _PART_FAR_2:
+        total = 0.0
+        s = POINTS[2]
+        for i in range(4):
+            x, y, z = px - source[s + i], py - source[s + 4 + i], pz - source[s + 8 + i]
+            total += source[s + 12 + i] / math.sqrt(x * x + y * y + z * z)
+        return part[AREA] * total
     outer, inner = (part, source) if part[RADIUS] <= source[RADIUS] else (source, part)
     distance = polygon_distance(inner, outer[CENTROID], outer[CENTROID + 1], outer[CENTROID + 2])
-    if distance > 1.5 * outer[RADIUS]:
+    if distance > 3.0 * outer[RADIUS]:
+        x, y, z = outer[CENTROID], outer[CENTROID + 1], outer[CENTROID + 2]
+        return outer[AREA] * polygon_potential(inner, x, y, z)
+    if distance > 1.2 * outer[RADIUS]:
         return middle_integral(outer, inner, 2)
-    return close_pair_integral(outer, inner)
+    if distance > 0.6 * outer[RADIUS]:
+        return middle_integral(outer, inner, 3)
+    return middle_integral(outer, inner, 4)
 
 
 @parallel_kernel

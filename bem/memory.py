@@ -12,7 +12,7 @@ __all__ = ["dense_bytes", "free_memory", "panels_that_fit", "peak_memory", "refu
 #: Dense matrices of the current pass held at once: the matrix and its factor.
 _MATRICES = 2
 #: Bytes a panel costs apart from the matrices: packed geometry of itself, its parts and halves.
-_BYTES_PER_PANEL = 6_000
+_BYTES_PER_PANEL = 13_000
 #: What the libraries and compiled kernels take, bytes.
 _BASE = 300 * 2**20
 

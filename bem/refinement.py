@@ -1,92 +1,49 @@
-"""Which panels to split, and the panels to start from."""
+"""Which panels to split."""
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy.spatial import cKDTree
 
-from .bisection import SPLIT_BOTH, SPLIT_U, SPLIT_V, split_panels
-from .creases import Creases
-from .panels import Panels
-from .surface import Surface
+from .bisection import SPLIT_U, SPLIT_V
 
-__all__ = ["accuracy_targets", "choose_splits", "gain_worth", "sharp_sides", "starting_panels"]
+__all__ = ["accuracy_targets", "choose_splits", "gain_worth", "unhide_symmetric"]
 
 FloatArray = NDArray[np.float64]
 IntArray = NDArray[np.int64]
 BoolArray = NDArray[np.bool_]
 
-#: Starting panels are no longer than this share of their body's diagonal.
-START_LENGTH = 0.35
-#: Panels longer than this share are split once even so: a start as symmetric as the answer hides its error.
-SYMMETRIC_LENGTH = 0.15
+#: Share of its self energy that a panel may hide by symmetry: see :func:`unhide_symmetric`.
+SYMMETRIC_GAIN = 0.05
 #: Share of the weighted estimate that the panels split in one pass must hold (Doerfler's marking).
-MARKED_SHARE = 0.6
+MARKED_SHARE = 0.7
 #: A quadrilateral is split in its weaker direction too if that holds this share of the stronger one.
 SECOND_DIRECTION = 0.3
 #: Couplings below this share of sqrt(C_ii C_jj) must meet the accuracy of this share only.
 COUPLING_FLOOR = 1e-3
 
 
-def sharp_sides(surface: Surface, creases: Creases, panels: Panels) -> BoolArray:
-    """Sides of panels that span from corner to corner of the drawing along an edge not meant smooth.
+def unhide_symmetric(
+    gains: FloatArray, density: FloatArray, self_terms: FloatArray, symmetric: BoolArray
+) -> FloatArray:
+    """Give panels whose halves are equal by symmetry the gain that they may hide.
+
+    Charge that crowds toward both edges of a strip lowers its self energy by up to SYMMETRIC_GAIN of it
+    against uniform charge: in two dimensions by 3/2 - ln 4 = 0.11 of about ln(2 l / w) + 1/2 for the length l
+    and width w of the strip.
 
     Parameters
     ----------
-    surface : Surface
-    creases : Creases
-    panels : Panels
-        As they cover the flat regions, not split yet.
+    gains : (n_panels, 2, n_conductors) float
+    density : (n_panels, n_conductors) float
+    self_terms : (n_panels,) float
+    symmetric : (n_panels, 2) bool
 
     Returns
     -------
-    (n_panels, 4) bool
-        Side k runs from corner k to corner k + 1.
+    (n_panels, 2, n_conductors) float
     """
-    edges = creases.edges
-    distance, vertex = cKDTree(surface.vertices).query(panels.corners.reshape(-1, 3))
-    size = np.linalg.norm(np.roll(panels.corners, -1, axis=1) - panels.corners, axis=2)
-    at_vertex = (distance.reshape(-1, 4) < 1e-4 * size.max(axis=1)[:, None]) & (size > 0)
-    start = vertex.reshape(-1, 4)
-    end = np.roll(start, -1, axis=1)
-    base = np.int64(len(surface.vertices))
-    key = np.minimum(start, end) * base + np.maximum(start, end)
-    smooth = edges.vertices[creases.smooth]
-    smooth_key = smooth.min(axis=1) * base + smooth.max(axis=1)
-    return np.asarray(at_vertex & np.roll(at_vertex, -1, axis=1) & ~np.isin(key, smooth_key))
-
-
-def starting_panels(panels: Panels, sharp: BoolArray, most: int) -> Panels:
-    """Split panels that are long, or as symmetric as the charge on them, as far as `most` panels allow.
-
-    Parameters
-    ----------
-    panels : Panels
-    sharp : (n_panels, 4) bool
-        From :func:`sharp_sides`. A quadrilateral between two such sides is split, since charge that crowds
-        alike toward both would leave its halves equal and hide the error.
-    most : int
-    """
-    diagonal = np.array(
-        [
-            np.linalg.norm(np.ptp(panels.corners[panels.body == body].reshape(-1, 3), axis=0))
-            for body in range(int(panels.body.max()) + 1)
-        ]
-    )
-    quads = panels.n_corners == 4
-    across_u, across_v = sharp[:, 1] & sharp[:, 3] & quads, sharp[:, 0] & sharp[:, 2] & quads
-    share = SYMMETRIC_LENGTH
-    while True:
-        corners = panels.corners
-        sides = np.linalg.norm(np.roll(corners, -1, axis=1) - corners, axis=2)
-        longest = share * diagonal[panels.body]
-        split = np.where((np.maximum(sides[:, 0], sides[:, 2]) > longest) | across_u, SPLIT_U, 0)
-        split += np.where((np.maximum(sides[:, 1], sides[:, 3]) > longest) | across_v, SPLIT_V, 0)
-        split[panels.n_corners == 3] = np.where(sides.max(axis=1) > longest, SPLIT_BOTH, 0)[panels.n_corners == 3]
-        if not split.any() or len(panels) + 3 * np.count_nonzero(split) > most:
-            return panels
-        panels, _ = split_panels(panels, split)
-        across_u = across_v = np.zeros(len(panels), bool)
-        share = START_LENGTH
+    hidden = np.sqrt(SYMMETRIC_GAIN * self_terms)[:, None] * density
+    larger = np.abs(hidden)[:, None, :] > np.abs(gains)
+    return np.where(symmetric[:, :, None] & larger, hidden[:, None, :], gains)
 
 
 def accuracy_targets(capacitance: FloatArray, accuracy: float) -> FloatArray:
