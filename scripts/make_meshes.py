@@ -63,40 +63,31 @@ def fillet(centre: tuple[float, float], radius: float, start: float, sides: int)
 
 
 def sense() -> Manifold:
-    """Disc with a rounded front rim, a solder stud behind it and an eye drilled across the stud."""
+    """Disc with a rounded front rim and a solder stud behind it."""
     rim = fillet((7.5, 1.0), 0.5, 0.0, 2)
     disc = turned([(0.0, 0.0), (8.0, 0.0), *rim, (0.0, 1.5)], 8.0)
     stud = turned([(0.0, -4.5), (0.95, -4.5), (1.25, -4.2), (1.25, 0.5), (0.0, 0.5)], 1.25)
-    eye = Manifold.cylinder(4.0, 0.45, circular_segments=facets(0.45), center=True).rotate((90.0, 0.0, 0.0))
-    return disc + stud - eye.translate((0.0, 0.0, -3.3))
+    return disc + stud
 
 
 def guard_ring() -> Manifold:
-    """Ring round the sense disc, chamfered outside, with a notch for the adhesive."""
-    ring = turned([(8.8, 0.0), (11.5, 0.0), (11.5, 1.1), (11.1, 1.5), (8.8, 1.5)], 11.5)
-    notch = Manifold.cube((1.2, 1.6, 0.8), center=True).rotate((0.0, 0.0, 20.0))
-    return ring - notch.translate((11.4 * cos(pi / 9), 11.4 * sin(pi / 9), 0.0))
+    """Ring round the sense disc, chamfered outside."""
+    return turned([(8.8, 0.0), (11.5, 0.0), (11.5, 1.1), (11.1, 1.5), (8.8, 1.5)], 11.5)
 
 
 def guard_plate() -> Manifold:
-    """Plate behind the sense disc: clearance for the stud, fixing holes, an ear with the wire's hole."""
+    """Plate behind the sense disc: clearance for the stud and an ear for the wire."""
     plate = drum(11.0, -2.2, -1.2)
     ear = Manifold.cube((5.0, 4.0, 0.6)).translate((-14.0, -2.0, -2.2)) + drum(2.0, -2.2, -1.6, (-14.0, 0.0))
-    holes = [drum(2.25, -3.0, 0.0), drum(0.7, -3.0, 0.0, (-14.0, 0.0))]
-    for k in range(3):
-        angle = pi / 2 + 2 * pi * k / 3
-        holes.append(drum(0.9, -3.0, 0.0, (6.5 * cos(angle), 6.5 * sin(angle))))
-    return plate + ear - Manifold.compose(holes)
+    return plate + ear - drum(2.25, -3.0, 0.0)
 
 
 def drive() -> Manifold:
-    """Plate with round corners opposite the sense disc: a boss with a blind hole, a vent, two clearances."""
+    """Plate with round corners opposite the sense disc: a boss and a clearance for the screw."""
     outline = CrossSection.square((18.0, 14.0), center=True).offset(4.0, JoinType.Round, 2.0, facets(4.0))
     plate = outline.extrude(1.2).translate((0.0, 0.0, 7.0))
     boss = drum(3.0, 7.5, 10.2, (-6.5, -3.0))
-    blind = drum(1.3, 8.6, 11.0, (-6.5, -3.0))
-    holes = [drum(1.7, 6.0, 9.0, (9.0, 6.0)), drum(1.7, 6.0, 9.0, (9.0, -6.0)), drum(1.0, 6.0, 9.0)]
-    return plate + boss - Manifold.compose([blind, *holes])
+    return plate + boss - drum(1.7, 6.0, 9.0, (9.0, 6.0))
 
 
 def screw() -> Manifold:
@@ -104,8 +95,7 @@ def screw() -> Manifold:
     across_corners = 2.2
     head = Manifold.cylinder(1.4, across_corners, circular_segments=6).translate((0.0, 0.0, 9.0))
     shank = turned([(0.0, 3.0), (0.7, 3.0), (1.0, 3.3), (1.0, 9.5), (0.0, 9.5)], 1.0)
-    socket = Manifold.cylinder(1.0, 0.9, circular_segments=6).rotate((0.0, 0.0, 30.0))
-    return (head + shank - socket.translate((0.0, 0.0, 9.8))).translate((9.0, 6.0, 0.0))
+    return (head + shank).translate((9.0, 6.0, 0.0))
 
 
 def flat_mesh(section: CrossSection) -> tuple[FloatArray, IntArray]:
