@@ -1,7 +1,7 @@
 """The main job: Maxwell capacitance matrix of conductors in one medium, with its uncertainty."""
 
 import time
-from collections.abc import Callable
+from collections.abc import Callable, Sequence
 from dataclasses import dataclass
 
 import numpy as np
@@ -42,7 +42,7 @@ class _Judgement:
     value: FloatArray
     lines: dict[str, FloatArray]
     total: FloatArray
-    targets: FloatArray
+    targets: FloatArray  # infinite where the accuracy of an entry is not asked
 
     @property
     def reached(self) -> bool:
@@ -71,6 +71,7 @@ def solve_capacitance(
     accuracy: float = 0.01,
     memory_limit: int | None = None,
     facets: str = "auto",
+    want: Sequence[tuple[int, int]] | None = None,
     progress: Progress | None = None,
 ) -> CapacitanceSolution:
     """Maxwell capacitance matrix of conductors in one homogeneous medium.
@@ -92,6 +93,9 @@ def solve_capacitance(
     facets : {"auto", "true"}
         "auto": edges that turn gently in rows stand for a smooth surface, whose capacitance is wanted;
         "true": the facets are the part.
+    want : sequence of (int, int), optional
+        Entries of the matrix that must meet the accuracy; all by default. Panels are spent on these alone, and
+        the uncertainty of the others is still given.
     progress : callable, optional
         Called with (stage, done, total, note). It may raise KeyboardInterrupt: what the finished passes
         gave is then returned, marked ``interrupted``.
@@ -113,6 +117,7 @@ def solve_capacitance(
         raise InputError(f"relative permittivity must be at least 1, got {relative_permittivity:g}")
     if facets not in ("auto", "true"):
         raise InputError(f"facets must be 'auto' or 'true', got {facets!r}")
+    accuracies = _accuracies(accuracy, want, surface.n_conductors)
     begin = time.perf_counter()
     limit = memory_limit if memory_limit is not None else int(0.9 * free_memory())
     report = progress or _silent
@@ -125,7 +130,7 @@ def solve_capacitance(
     interrupted = False
     try:
         while plan is not None:
-            result, judgement = _pass(plan, round_parts, accuracy, passes, report)
+            result, judgement = _pass(plan, round_parts, accuracies, passes, report)
             previous = plan.before
             for stage, time_spent in result.seconds.items():
                 seconds[stage] = seconds.get(stage, 0.0) + time_spent
@@ -162,6 +167,20 @@ def solve_capacitance(
     )
 
 
+def _accuracies(accuracy: float, want: Sequence[tuple[int, int]] | None, n: int) -> FloatArray:
+    """Relative uncertainty allowed of each entry: any where it is not asked."""
+    if want is None:
+        return np.full((n, n), accuracy)
+    allowed = np.full((n, n), np.inf)
+    for i, j in want:
+        if not (0 <= i < n and 0 <= j < n):
+            raise InputError(f"want: ({i}, {j}) names a conductor that does not exist; there are {n}, from 0")
+        allowed[i, j] = allowed[j, i] = accuracy
+    if not np.isfinite(allowed).any():
+        raise InputError("want: an empty list asks for nothing; leave it out for all entries")
+    return allowed
+
+
 def _silent(stage: str, done: float, total: float, note: str = "") -> None:
     return None
 
@@ -182,7 +201,7 @@ def _prepare(surface: Surface, facets: str, limit: int) -> tuple[Plan, Facets | 
 
 
 def _pass(
-    plan: Plan, round_parts: Facets | None, accuracy: float, passes: list[Pass], report: Progress
+    plan: Plan, round_parts: Facets | None, accuracy: FloatArray, passes: list[Pass], report: Progress
 ) -> tuple[PassResult, _Judgement]:
     start = time.perf_counter()
     note = f"pass {len(passes) + 1}, {len(plan.panels)} panels"
@@ -194,7 +213,7 @@ def _pass(
     return result, judgement
 
 
-def _judge(result: PassResult, round_parts: Facets | None, accuracy: float, n_passes: int) -> _Judgement:
+def _judge(result: PassResult, round_parts: Facets | None, accuracy: FloatArray, n_passes: int) -> _Judgement:
     """Extrapolated value with the lines of its budget, one column more for the sum over all conductors."""
     n = len(result.value)
     sums = np.hstack([np.eye(n), np.ones((n, 1))])

@@ -40,20 +40,23 @@ POINTS = (0, 0, 50, 66, 102, 166)  # start of the n x n Gauss points, n = 2 to 5
 FRAME_SIZE = 266
 
 
-def panel_frames(corners: NDArray[np.float64]) -> NDArray[np.float64]:
+def panel_frames(corners: NDArray[np.float64], *, largest_rule: int = 5) -> NDArray[np.float64]:
     """Pack the geometry of flat panels.
 
     Parameters
     ----------
     corners : (n, 4, 3) float, m
         Counter-clockwise; a triangle repeats its third corner.
+    largest_rule : int
+        Largest n of the n x n Gauss rules that will be asked of these rows; below 2 none are stored.
 
     Returns
     -------
     frames : (n, FRAME_SIZE) float
+        Shorter rows for smaller rules.
     """
     n = len(corners)
-    frames = np.zeros((n, FRAME_SIZE))
+    frames = np.zeros((n, POINTS[largest_rule] + 4 * largest_rule**2 if largest_rule > 1 else POINTS[2]))
     areas, centroids, normals = polygon_geometry(corners)
     edges = np.roll(corners, -1, axis=1) - corners
     lengths = np.linalg.norm(edges, axis=2)
@@ -70,7 +73,7 @@ def panel_frames(corners: NDArray[np.float64]) -> NDArray[np.float64]:
     frames[:, AREA] = areas
     frames[:, TWICE_AREA_1] = np.linalg.norm(np.cross(b - a, c - a), axis=1)
     frames[:, TWICE_AREA_2] = np.linalg.norm(np.cross(c - a, d - a), axis=1)
-    for n_side in (2, 3, 4, 5):
+    for n_side in range(2, largest_rule + 1):
         _put_points(frames, corners, n_side)
     return frames
 

@@ -14,7 +14,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from .bisection import SPLIT_U, SPLIT_V, children, halves
-from .frames import AREA, CENTROID, FRAME_SIZE, POINTS, RADIUS, panel_frames
+from .frames import AREA, CENTROID, POINTS, RADIUS, panel_frames
 from .jit import kernel, parallel_kernel, prange
 from .near import close_pair_integral, self_integral
 from .pairs import middle_integral
@@ -148,8 +148,8 @@ def two_level_indicator(
     centre = panels.corners.reshape(-1, 3).mean(axis=0)
     parts_corners = children(panels.corners - centre, panels.n_corners)
     n = len(panels)
-    parts = panel_frames(parts_corners.reshape(-1, 4, 3)).reshape(n, 4, FRAME_SIZE)
-    frames = panel_frames(panels.corners - centre)
+    parts = panel_frames(parts_corners.reshape(-1, 4, 3), largest_rule=4).reshape(n, 4, -1)
+    frames = panel_frames(panels.corners - centre, largest_rule=4)
     moments = np.empty((n, 4, density.shape[1]))
     block = max(8, 400_000 // n)
     for first in range(0, n, block):
@@ -174,8 +174,8 @@ def _quad_gains(
     for slot, direction in enumerate((SPLIT_U, SPLIT_V)):
         pair = halves(corners, direction)
         first, second = np.empty(len(chosen)), np.empty(len(chosen))
-        _self_integrals(panel_frames(pair[:, 0]), first)
-        _self_integrals(panel_frames(pair[:, 1]), second)
+        _self_integrals(panel_frames(pair[:, 0], largest_rule=0), first)
+        _self_integrals(panel_frames(pair[:, 1], largest_rule=0), second)
         # a(first, whole) from a(whole, whole) = a(1, 1) + a(2, 2) + 2 a(1, 2)
         share = 0.5 * (first + whole - second) / whole
         norm2 = first - share**2 * whole

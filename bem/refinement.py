@@ -46,14 +46,14 @@ def unhide_symmetric(
     return np.where(symmetric[:, :, None] & larger, hidden[:, None, :], gains)
 
 
-def accuracy_targets(capacitance: FloatArray, accuracy: float) -> FloatArray:
+def accuracy_targets(capacitance: FloatArray, accuracy: FloatArray) -> FloatArray:
     """Largest uncertainty allowed of every entry: relative, with a floor for weak couplings.
 
     Parameters
     ----------
     capacitance : (n, n) float
-    accuracy : float
-        Relative expanded uncertainty asked.
+    accuracy : (n, n) float
+        Relative expanded uncertainty allowed.
     """
     diagonal = np.sqrt(np.outer(np.diag(capacitance), np.diag(capacitance)))
     return accuracy * np.maximum(np.abs(capacitance), COUPLING_FLOOR * diagonal)
