@@ -32,7 +32,7 @@ from .polygon import polygon_potential
 
 __all__ = ["close_pair_integral", "self_integral"]
 
-N_POINTS = 16
+N_POINTS = 20
 _U, _WU = np.polynomial.legendre.leggauss(N_POINTS)
 _U = 0.5 * (_U + 1.0)
 _WU = 0.5 * _WU
@@ -41,15 +41,23 @@ _S = _U**3 * (10.0 - 15.0 * _U + 6.0 * _U**2)
 _WS = _WU * 30.0 * (_U * (1.0 - _U)) ** 2
 
 #: Most corners and closest points that can make the integrand steep along one edge, its two ends included.
-_MAX_STEEP = 10
+_MAX_STEEP = 12
 #: Most pieces of one edge.
 _MAX_PIECES = 64
 #: Pieces grow by this factor away from a steep point, the first one being as long as _FIRST gaps.
-_GROWTH, _FIRST = 24.0, 4.0
+_GROWTH, _FIRST = 12.0, 2.0
+#: Steep points closer together than this share of their distance from the other panel count as one.
+_MERGED = 0.25
+#: A piece is cut where the next step is shorter than this share of it.
+_CUT = 0.8
 #: A panel further off than this many half-widths is integrated by lines along the narrow one.
 _NARROW = 2.0
+#: Parallel planes no higher apart than this share of the smaller radius are one.
+_COPLANAR = 1e-10
+#: An origin further off than this many radii wants a finer rule.
+_FAR_ORIGIN = 30.0
 #: Planes that meet at a smaller sine than this are taken as parallel.
-_PARALLEL = 1e-8
+_PARALLEL = 1e-7
 
 
 @kernel
@@ -58,7 +66,7 @@ def _note_steep(at, gap, n, s, distance, length):
     if distance > 0.5 * length:
         return n
     for k in range(n):
-        if abs(at[k] - s) <= max(0.5 * distance, 1e-13 * length):
+        if abs(at[k] - s) <= max(_MERGED * distance, 1e-13 * length):
             if distance > 1e-13 * length:
                 gap[k] = min(gap[k], distance)
             return n
@@ -102,6 +110,12 @@ def _steep_points(at, gap, line, other):
         uv = ux * vx + uy * vy + uz * vz
         sin2 = 1.0 - uv * uv
         if sin2 < 1e-6:
+            # parallel edges: nothing is steep between the corners, but their distance counts
+            for m in range(2):
+                s = m * length
+                t = min(max(s * uv - (rx * vx + ry * vy + rz * vz), 0.0), other[LENGTH + j])
+                gx, gy, gz = rx + t * vx - s * ux, ry + t * vy - s * uy, rz + t * vz - s * uz
+                nearest = min(nearest, math.sqrt(gx * gx + gy * gy + gz * gz))
             continue
         rv = rx * vx + ry * vy + rz * vz
         t = min(max((along * uv - rv) / sin2, 0.0), other[LENGTH + j])
@@ -110,7 +124,28 @@ def _steep_points(at, gap, line, other):
         distance = math.sqrt(gx * gx + gy * gy + gz * gz)
         nearest = min(nearest, distance)
         n = _note_steep(at, gap, n, s, distance, length)
+    s = _pierced_at(line, other)
+    if s > 0.0:
+        n, nearest = _note_steep(at, gap, n, s, 0.0, length), 0.0
     return n, nearest
+
+
+@kernel
+def _pierced_at(line, panel):
+    """Arc length at which a segment goes through a panel, where the potential has a kink; 0 if it does not."""
+    low = (line[0] - panel[CORNER]) * panel[NORMAL] + (line[1] - panel[CORNER + 1]) * panel[NORMAL + 1]
+    low += (line[2] - panel[CORNER + 2]) * panel[NORMAL + 2]
+    rise = line[3] * panel[NORMAL] + line[4] * panel[NORMAL + 1] + line[5] * panel[NORMAL + 2]
+    if low * (low + line[6] * rise) >= 0.0:
+        return 0.0
+    s = -low / rise
+    x, y, z = line[0] + s * line[3], line[1] + s * line[4], line[2] + s * line[5]
+    for k in range(4):
+        c, o = CORNER + 3 * k, OUTWARD + 3 * k
+        out = (x - panel[c]) * panel[o] + (y - panel[c + 1]) * panel[o + 1] + (z - panel[c + 2]) * panel[o + 2]
+        if panel[LENGTH + k] > 0.0 and out > 0.0:
+            return 0.0
+    return s
 
 
 @kernel
@@ -127,14 +162,14 @@ def _pieces(breaks, line, other):
         breaks[n] = at[m]
         n += 1
         step = _FIRST * gap[m]
-        while step < 0.4 * piece and n < _MAX_PIECES - 10:
+        while step < _CUT * piece and n < _MAX_PIECES - 10:
             breaks[n] = at[m] + step
             n += 1
             step *= _GROWTH
         step = _FIRST * gap[m + 1]
-        while step * _GROWTH < 0.4 * piece:
+        while step * _GROWTH < _CUT * piece:
             step *= _GROWTH
-        while step >= 0.999 * _FIRST * gap[m + 1] and step < 0.4 * piece and n < _MAX_PIECES - 2:
+        while step >= 0.999 * _FIRST * gap[m + 1] and step < _CUT * piece and n < _MAX_PIECES - 2:
             breaks[n] = at[m + 1] - step
             n += 1
             step /= _GROWTH
@@ -152,17 +187,22 @@ def _edge_line(line, panel, k):
 
 
 @kernel
-def _potential_along(line, other, w0, w1):
-    """Integral of (potential of panel `other`) x (weight, linear from w0 to w1) along a segment."""
+def _potential_along(line, other, w0, w1, parts):
+    """Integral of (potential of panel `other`) x (weight, linear from w0 to w1) along a segment.
+
+    Each of its pieces is cut into `parts` equal ones.
+    """
     breaks = np.empty(_MAX_PIECES)
     n = _pieces(breaks, line, other)
     slope = (w1 - w0) / line[6]
     total = 0.0
-    for b in range(n - 1):
-        piece = breaks[b + 1] - breaks[b]
+    for b in range((n - 1) * parts):
+        k = b // parts
+        piece = (breaks[k + 1] - breaks[k]) / parts
+        start = breaks[k] + (b - k * parts) * piece
         part = 0.0
         for q in range(N_POINTS):
-            s = breaks[b] + piece * _S[q]
+            s = start + piece * _S[q]
             value = polygon_potential(other, line[0] + s * line[3], line[1] + s * line[4], line[2] + s * line[5])
             part += _WS[q] * (w0 + slope * s) * value
         total += part * piece
@@ -170,7 +210,7 @@ def _potential_along(line, other, w0, w1):
 
 
 @kernel
-def _edges_about(panel, other, ox, oy, oz):
+def _edges_about(panel, other, ox, oy, oz, parts):
     """Sum over the edges of `panel` of (distance from the origin) times (potential along the edge), m3."""
     line = np.empty(7)
     total = 0.0
@@ -181,14 +221,14 @@ def _edges_about(panel, other, ox, oy, oz):
         distance = (panel[c] - ox) * panel[o] + (panel[c + 1] - oy) * panel[o + 1] + (panel[c + 2] - oz) * panel[o + 2]
         if abs(distance) > 1e-14 * panel[RADIUS]:
             _edge_line(line, panel, k)
-            total += distance * _potential_along(line, other, 1.0, 1.0)
+            total += distance * _potential_along(line, other, 1.0, 1.0, parts)
     return total
 
 
 @kernel
 def self_integral(frame):
     """Integral of 1/r over a panel with itself, m3: all terms are positive, slivers lose nothing."""
-    return 2.0 / 3.0 * _edges_about(frame, frame, frame[CENTROID], frame[CENTROID + 1], frame[CENTROID + 2])
+    return 2.0 / 3.0 * _edges_about(frame, frame, frame[CENTROID], frame[CENTROID + 1], frame[CENTROID + 2], 1)
 
 
 @kernel
@@ -312,7 +352,7 @@ def _narrow_integral(narrow, other, side, n):
     for q in range(n):
         w0, w1 = _across(narrow, side, GAUSS_NODES[n, q], line)
         if line[6] > 0.0:
-            total += GAUSS_WEIGHTS[n, q] * _potential_along(line, other, w0, w1)
+            total += GAUSS_WEIGHTS[n, q] * _potential_along(line, other, w0, w1, 1)
     return total
 
 
@@ -334,6 +374,7 @@ def close_pair_integral(source, target):
     nx, ny, nz = source[NORMAL], source[NORMAL + 1], source[NORMAL + 2]
     mx, my, mz = target[NORMAL], target[NORMAL + 1], target[NORMAL + 2]
     ox, oy, oz, touching = _common_corner(source, target, 1e-12 * min(source[RADIUS], target[RADIUS]))
+    parts = 1
     if not touching:
         line = np.empty(7)
         ratio, side = _narrowness(source, target, line)
@@ -345,21 +386,30 @@ def close_pair_integral(source, target):
         # cross product of the normals: direction of the line where the planes meet, length the sine
         lx, ly, lz = ny * mz - nz * my, nz * mx - nx * mz, nx * my - ny * mx
         sin2 = lx * lx + ly * ly + lz * lz
-        height = _height(source, target)
-        # the tilt that is left out here changes the height over the panels by less than 1e-4 of itself
-        if sin2 < _PARALLEL**2 or sin2 * max(source[RADIUS], target[RADIUS]) ** 2 < (1e-4 * height) ** 2:
+        share = source[RADIUS] ** 2 / (source[RADIUS] ** 2 + target[RADIUS] ** 2)
+        height = share * _height(source, target) + (1.0 - share) * _height(target, source)
+        if sin2 < _PARALLEL**2 and height > _COPLANAR * min(source[RADIUS], target[RADIUS]):
             return _parallel_integral(source, target, height)
         # the origin starts half-way between the panels and is moved onto both planes
         ox = 0.5 * (source[CENTROID] + target[CENTROID])
         oy = 0.5 * (source[CENTROID + 1] + target[CENTROID + 1])
         oz = 0.5 * (source[CENTROID + 2] + target[CENTROID + 2])
+        if sin2 < _PARALLEL**2:
+            # in one plane any origin will do
+            return (_edges_about(source, target, ox, oy, oz, 1) + _edges_about(target, source, ox, oy, oz, 1)) / 3.0
         g = nx * (source[CENTROID] - ox) + ny * (source[CENTROID + 1] - oy) + nz * (source[CENTROID + 2] - oz)
         f = mx * (target[CENTROID] - ox) + my * (target[CENTROID + 1] - oy) + mz * (target[CENTROID + 2] - oz)
         cosine = nx * mx + ny * my + nz * mz
         a = (g - cosine * f) / sin2
         b = (f - cosine * g) / sin2
         ox, oy, oz = ox + a * nx + b * mx, oy + a * ny + b * my, oz + a * nz + b * mz
-    return (_edges_about(source, target, ox, oy, oz) + _edges_about(target, source, ox, oy, oz)) / 3.0
+        # an origin far away makes large terms that cancel: they need a rule finer by as much
+        far = math.sqrt(
+            (ox - source[CENTROID]) ** 2 + (oy - source[CENTROID + 1]) ** 2 + (oz - source[CENTROID + 2]) ** 2
+        )
+        if far > _FAR_ORIGIN * max(source[RADIUS], target[RADIUS]):
+            parts = 2
+    return (_edges_about(source, target, ox, oy, oz, parts) + _edges_about(target, source, ox, oy, oz, parts)) / 3.0
 
 
 @kernel

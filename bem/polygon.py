@@ -2,10 +2,13 @@
 
 import math
 
-from .frames import CORNER, LENGTH, NORMAL, OUTWARD, TWICE_AREA_1, TWICE_AREA_2
+from .frames import CORNER, DIRECTION, LENGTH, NORMAL, OUTWARD, TWICE_AREA_1, TWICE_AREA_2
 from .jit import kernel
 
 __all__ = ["polygon_distance", "polygon_potential"]
+
+#: Keeps the logarithm finite at a corner, where its factor is rounding.
+_TINY = 1e-300
 
 
 @kernel
@@ -13,8 +16,8 @@ def polygon_potential(frame, x, y, z):
     """Integral of 1/r over a flat panel, seen from any point: on, off or in the plane of the panel.
 
     ``V = sum_e t_e ln((R_a + R_b + L)/(R_a + R_b - L)) - |h| |Omega|`` with the signed in-plane distance
-    ``t_e`` from the point to edge e, the height h over the plane, and the solid angle Omega. The difference
-    in the logarithm is kept away from zero by ``1e-15 (R_a + R_b)``: on an edge its factor ``t_e`` vanishes.
+    ``t_e`` from the point to edge e, the height h over the plane, and the solid angle Omega. Close to the line of
+    an edge the ratio in the logarithm is formed from the distances along the edge: R_a + R_b - L cancels there.
 
     Parameters
     ----------
@@ -25,7 +28,7 @@ def polygon_potential(frame, x, y, z):
     Returns
     -------
     float, m
-        About 1e-15 (distance / panel size)^2 relative: meant for near points.
+        About 1e-15 (distance / panel size)^2 relative: meant for near points. On a sliver nothing is lost.
 
     References
     ----------
@@ -40,15 +43,11 @@ def polygon_potential(frame, x, y, z):
     rb = math.sqrt(bx * bx + by * by + bz * bz)
     rc = math.sqrt(cx * cx + cy * cy + cz * cz)
     rd = math.sqrt(dx * dx + dy * dy + dz * dz)
-    o = OUTWARD
-    total = _edge_term(ax * frame[o] + ay * frame[o + 1] + az * frame[o + 2], ra + rb, frame[LENGTH])
-    o = OUTWARD + 3
-    total += _edge_term(bx * frame[o] + by * frame[o + 1] + bz * frame[o + 2], rb + rc, frame[LENGTH + 1])
-    o = OUTWARD + 6
-    total += _edge_term(cx * frame[o] + cy * frame[o + 1] + cz * frame[o + 2], rc + rd, frame[LENGTH + 2])
-    o = OUTWARD + 9
-    total += _edge_term(dx * frame[o] + dy * frame[o + 1] + dz * frame[o + 2], rd + ra, frame[LENGTH + 3])
     h = abs(ax * frame[NORMAL] + ay * frame[NORMAL + 1] + az * frame[NORMAL + 2])
+    total = _edge_term(frame, 0, ax, ay, az, ra, rb, h)
+    total += _edge_term(frame, 1, bx, by, bz, rb, rc, h)
+    total += _edge_term(frame, 2, cx, cy, cz, rc, rd, h)
+    total += _edge_term(frame, 3, dx, dy, dz, rd, ra, h)
     if h > 0.0:
         ac = ax * cx + ay * cy + az * cz
         den1 = ra * rb * rc + (ax * bx + ay * by + az * bz) * rc + (bx * cx + by * cy + bz * cz) * ra + ac * rb
@@ -62,11 +61,25 @@ def polygon_potential(frame, x, y, z):
 
 
 @kernel
-def _edge_term(t, s, length):
-    """One edge of the potential: ``t ln((s + L)/(s - L))``, safe on the edge, its ends and its extension."""
+def _edge_term(frame, k, x, y, z, r0, r1, h):
+    """One edge of the potential: ``t ln((R_a + R_b + L)/(R_a + R_b - L))``, without cancellation near the edge."""
+    length = frame[LENGTH + k]
+    o = OUTWARD + 3 * k
+    t = x * frame[o] + y * frame[o + 1] + z * frame[o + 2]
     if length == 0.0 or t == 0.0:
         return 0.0
-    return t * math.log((s + length) / max(s - length, 1e-15 * s))
+    s = r0 + r1
+    if s - length > 1e-3 * s:
+        return t * math.log((s + length) / (s - length))
+    # close to the edge's line: the same ratio from the distances along the edge
+    d = DIRECTION + 3 * k
+    l0 = x * frame[d] + y * frame[d + 1] + z * frame[d + 2]
+    l1 = l0 + length
+    if l0 >= 0.0:
+        return t * math.log((l1 + r1) / max(l0 + r0, _TINY))
+    if l1 <= 0.0:
+        return t * math.log((r0 - l0) / max(r1 - l1, _TINY))
+    return t * math.log((l1 + r1) * (r0 - l0) / max(t * t + h * h, _TINY))
 
 
 @kernel

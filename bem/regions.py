@@ -12,6 +12,7 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
+from .errors import InputError
 from .solution import Notice
 from .surface import Surface
 
@@ -23,6 +24,8 @@ BoolArray = NDArray[np.bool_]
 
 #: Rounding of a coordinate stored in single precision (binary STL), per unit of the largest coordinate.
 SINGLE_PRECISION = 1.2e-7
+#: The rounding is taken to be no larger than this share of a body's extent.
+LARGEST_NOISE = 2e-5
 #: Two well shaped triangles are coplanar only if their normals agree to this angle, rad.
 SAME_NORMAL = 1e-3
 #: A triangle whose normal is uncertain by more than this angle (rad) is a sliver: its normal is ignored.
@@ -160,7 +163,8 @@ def position_noise(surface: Surface) -> tuple[FloatArray, FloatArray]:
     Returns
     -------
     noise : (n_bodies,) float, m
-        Single-precision rounding of the largest coordinate.
+        Single-precision rounding of the largest coordinate, but no more than a small share of the extent: a body
+        so far off that its rounding is larger did not come from a single-precision file.
     extent : (n_bodies,) float, m
         Diagonal of the bounding box.
     """
@@ -169,8 +173,9 @@ def position_noise(surface: Surface) -> tuple[FloatArray, FloatArray]:
     high = -low
     np.minimum.at(low, surface.triangle_body, points.min(axis=1))
     np.maximum.at(high, surface.triangle_body, points.max(axis=1))
+    extent = np.linalg.norm(high - low, axis=1)
     noise = SINGLE_PRECISION * np.maximum(np.abs(low), np.abs(high)).max(axis=1)
-    return noise, np.linalg.norm(high - low, axis=1)
+    return np.minimum(noise, LARGEST_NOISE * extent), extent
 
 
 def _shapes(surface: Surface, flat_tolerance: float) -> _Shapes:
@@ -205,10 +210,17 @@ def find_regions(
     -------
     regions : Regions
     notices : list of Notice
+
+    Raises
+    ------
+    InputError
+        If no triangle is left.
     """
     edges = mesh_edges(surface.triangles) if edges is None else edges
     shapes = _shapes(surface, flat_tolerance)
     degenerate = (shapes.heights < 2 * shapes.noise) | (edges.of_triangle < 0).any(axis=1)
+    if degenerate.all():
+        raise InputError("surface: no triangle has an area that stands out of the rounding of its coordinates")
     joined = _joinable(surface, edges, shapes)
     region = np.full(len(surface.triangles), -1, np.int64)
     for attempt in range(REGROW_LIMIT):
