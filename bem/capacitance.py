@@ -12,7 +12,7 @@ from .constants import FOUR_PI_EPSILON_0
 from .creases import find_creases
 from .errors import InputError
 from .extrapolation import extrapolation_uncertainty
-from .facets import Facets, facet_shift, find_facets, move_facets
+from .facets import Facets, facet_uncertainty, find_facets, move_facets
 from .flats import panel_regions
 from .memory import dense_bytes, free_memory, panels_that_fit, peak_memory, refuse_if_too_large
 from .refinement import accuracy_targets
@@ -31,6 +31,8 @@ MOST_PANELS = 15_000
 #: Relative error of the matrix entries, and with it of the energies, that the rules of
 #: :mod:`daraf.bem.pairs` leave at worst; expanded uncertainty of the line "integration".
 INTEGRATION = 1e-6
+#: After one pass the discretisation must be below this share of what is asked: panels wider than a gap show no error.
+FIRST_PASS = 0.2
 #: Splitting panels is pointless once it can lower the uncertainty of no entry by more than this share.
 POINTLESS = 0.3
 
@@ -43,11 +45,14 @@ class _Judgement:
     lines: dict[str, FloatArray]
     total: FloatArray
     targets: FloatArray  # infinite where the accuracy of an entry is not asked
+    n_passes: int
 
     @property
     def reached(self) -> bool:
+        """Whether every entry is accurate enough; one pass alone must be so by far to be believed."""
         n = len(self.value)
-        return bool((self.total[:, :n] <= self.targets).all())
+        first = self.n_passes == 1 and (self.lines["discretisation"][:, :n] > FIRST_PASS * self.targets).any()
+        return not first and bool((self.total[:, :n] <= self.targets).all())
 
     @property
     def pointless(self) -> bool:
@@ -137,9 +142,11 @@ def solve_capacitance(
             notices += [notice for notice in result.notices if notice not in notices]
             plan = None if judgement.reached or judgement.pointless else _next(result, judgement, most, limit)
     except KeyboardInterrupt:
-        if result is None or judgement is None:
+        if result is None:
             raise
         interrupted = True
+    assert result is not None
+    assert judgement is not None
     seconds["total"] = time.perf_counter() - begin
     n = surface.n_conductors
     farads = FOUR_PI_EPSILON_0 * relative_permittivity
@@ -234,10 +241,9 @@ def _judge(result: PassResult, round_parts: Facets | None, accuracy: FloatArray,
         "integration": INTEGRATION * np.hstack([scale, scale.max(axis=1, keepdims=True)]),
     }
     if round_parts is not None and round_parts.any:
-        shift, lines["facets"] = facet_shift(round_parts, result.panels, result.density, sums, np.diag(result.value))
-        value = value + shift
+        lines["facets"] = facet_uncertainty(round_parts, result.panels, result.density, sums, np.diag(result.value))
     total = np.sqrt(sum(line**2 for line in lines.values()))
-    return _Judgement(value, lines, total, accuracy_targets(value[:, :n], accuracy))
+    return _Judgement(value, lines, total, accuracy_targets(value[:, :n], accuracy), n_passes)
 
 
 def _next(result: PassResult, judgement: _Judgement, most: int, limit: int) -> Plan | None:

@@ -32,7 +32,7 @@ DOUBTFUL_DECAY = 0.8
 LEAST_REALISED, GREATEST_REALISED = 0.4, 1.3
 #: Expanded uncertainty (k = 2) of the extrapolated part as a share of it: after one pass, two, three, and more.
 #: Measured with ``scripts/coverage`` on the exact set.
-SHARES = (1.5, 0.8, 0.5, 0.3)
+SHARES = (1.5, 0.8, 0.5, 0.4)
 #: Share of the change since the pass before that counts as uncertain.
 CHANGE_SHARE = 1.0
 
@@ -156,9 +156,12 @@ def extrapolation_uncertainty(
         own = body == number
         weighted = _series(gains[own], decay[own], realised)
         spread += np.abs(weighted.T @ (weighted @ sums))
-    spread *= SHARES[min(n_passes, len(SHARES)) - 1] + abs(drift) / realised
+    spread *= SHARES[min(n_passes, len(SHARES)) - 1] + max(abs(drift) / realised, 0.5 * abs(1.0 - realised))
     return spread if change is None else np.hypot(spread, CHANGE_SHARE * change @ sums)
 
 
 def _series(gains: FloatArray, decay: FloatArray, realised: float) -> FloatArray:
-    return np.asarray((gains * np.sqrt(realised * series_factor(decay))[:, :, None]).reshape(-1, gains.shape[2]))
+    # The share moves toward 1 as panels get finer than what lies around them: half-way, in the logarithm, to it.
+    return np.asarray(
+        (gains * np.sqrt(np.sqrt(realised) * series_factor(decay))[:, :, None]).reshape(-1, gains.shape[2])
+    )

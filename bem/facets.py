@@ -6,12 +6,13 @@ moved onto its mean before the solve. Hadamard's variational formula gives, to f
 
     dC_ij = (1/eps) int sigma_i sigma_j delta dS
 
-(J. Hadamard, Mem. Acad. Sci. Paris 33 (1908) no. 4, from memory); a share of it is the uncertainty. At the rim of
-a sheet, where sigma = K / sqrt(d) at the distance d, moving the rim outward by delta in the plane gives
+(J. Hadamard, Mem. Acad. Sci. Paris 33 (1908) no. 4, from memory); a share of it is the uncertainty. Rims and sharp
+edges that stand for round ones are moved likewise, in the planes of their facets. At the rim of a sheet, where
+sigma = K / sqrt(d) at the distance d, moving it outward by delta gives
 
     dC_ij = (pi / (2 eps)) oint K_i K_j delta ds,
 
-which on the disc (K^2 = 8 eps^2 / (pi^2 a)) returns dC/da = 8 eps. This is added after the solve.
+which on the disc (K^2 = 8 eps^2 / (pi^2 a)) returns dC/da = 8 eps.
 """
 
 from dataclasses import dataclass, replace
@@ -24,7 +25,7 @@ from .panels import Panels
 from .regions import Regions
 from .surface import Surface
 
-__all__ = ["Facets", "facet_shift", "find_facets", "rim_factors"]
+__all__ = ["Facets", "facet_uncertainty", "find_facets", "move_facets"]
 
 FloatArray = NDArray[np.float64]
 IntArray = NDArray[np.int64]
@@ -33,10 +34,10 @@ BoolArray = NDArray[np.bool_]
 #: Expanded uncertainty (k = 2) as a share of the first-order change: of facets, where the relative change itself
 #: is added for what is of second order, and of rims, whose coefficient is read off one panel. Measured with
 #: ``scripts/coverage`` on the exact set.
-FACET_SHARE, RIM_SHARE = 0.015, 0.15
-#: Rim corners that turn by more than this are corners of the drawing, rad.
+FACET_SHARE, RIM_SHARE = 0.01, 0.1
+#: Corners of rims and sharp edges that turn by more than this are corners of the drawing, rad.
 _RIM_TURN = np.radians(35.0)
-#: Neighbouring turns of one round rim differ at most by this factor.
+#: Neighbouring turns of one round edge differ at most by this factor.
 _RIM_SIMILAR = 2.5
 
 
@@ -48,22 +49,28 @@ class Facets:
     ----------
     offset : (n_regions,) float, m
         Mean outward distance of the smooth surface from each flat region; zero where nothing is round.
-    rim_ends : (n_rim, 2, 3) float, m
-        Straight rim edges that stand for a round rim.
-    rim_offset : (n_rim,) float, m
-        Mean outward distance, in the plane of the sheet, of the round rim from each.
-    rim_region : (n_rim,) int
+    edge_ends : (n_edges, 2, 3) float, m
+        Straight edges, at rims or sharp, that stand for round ones; once for each region at the edge.
+    edge_region : (n_edges,) int
+    edge_out : (n_edges, 3) float
+        Unit vector in the plane of the region, across the edge, out of the region.
+    edge_offset : (n_edges,) float, m
+        Mean distance of the round edge along that vector.
+    edge_rim : (n_edges,) bool
+        Whether the edge is the rim of a sheet.
     """
 
     offset: FloatArray
-    rim_ends: FloatArray
-    rim_offset: FloatArray
-    rim_region: IntArray
+    edge_ends: FloatArray
+    edge_region: IntArray
+    edge_out: FloatArray
+    edge_offset: FloatArray
+    edge_rim: BoolArray
 
     @property
     def any(self) -> bool:
         """Whether anything is round."""
-        return bool(np.any(self.offset)) or len(self.rim_offset) > 0
+        return bool(np.any(self.offset)) or len(self.edge_offset) > 0
 
 
 def find_facets(surface: Surface, regions: Regions, creases: Creases) -> Facets:
@@ -92,77 +99,84 @@ def find_facets(surface: Surface, regions: Regions, creases: Creases) -> Facets:
     # rounding of the normals is no roundness
     size = np.sqrt(total)
     offset[np.abs(offset) < 1e-9 * size] = 0.0
-    rims = np.flatnonzero(creases.rim)
-    ends, rim_offset, rim_region = _round_rims(surface, regions, creases, rims)
-    return Facets(offset, ends, rim_offset, rim_region)
+    return Facets(offset, *_round_edges(surface, regions, creases))
 
 
-def _round_rims(
-    surface: Surface, regions: Regions, creases: Creases, rims: IntArray
-) -> tuple[FloatArray, FloatArray, IntArray]:
-    """Rim edges between two corners that turn gently, the same way and alike, within one flat region."""
-    triangle = creases.edges.triangles[rims].max(axis=1)
-    region = regions.triangle_region[triangle]
-    keep = region >= 0
-    rims, region = rims[keep], region[keep]
-    start, end = creases.edges.vertices[rims].T
-    leaving = {(int(r), int(v)): k for k, (r, v) in enumerate(zip(region, start, strict=True))}
-    after = np.array([leaving.get((int(r), int(v)), -1) for r, v in zip(region, end, strict=True)], dtype=np.int64)
-    direction = surface.vertices[end] - surface.vertices[start]
-    length = np.linalg.norm(direction, axis=1)
-    direction /= np.where(length > 0, length, 1.0)[:, None]
-    normals = regions.normals[region]
-    # turn at the end corner of each rim edge, positive where the outline is convex
-    turn = np.zeros(len(rims))
-    linked = after >= 0
-    nxt = after[linked]
-    cross = np.cross(direction[linked], direction[nxt])
-    turn[linked] = np.arctan2(
-        np.einsum("ij,ij->i", cross, normals[linked]),
-        np.einsum("ij,ij->i", direction[linked], direction[nxt]),
-    )
-    before_turn = np.zeros(len(rims))
-    before_turn[nxt] = turn[linked]
-    similar = (turn * before_turn > 0) & (np.abs(turn) < _RIM_TURN) & (np.abs(before_turn) < _RIM_TURN)
-    ratio = np.abs(turn) / np.where(before_turn != 0, np.abs(before_turn), 1.0)
-    similar &= (ratio < _RIM_SIMILAR) & (ratio > 1.0 / _RIM_SIMILAR)
-    # an arc that turns by t over its chord bulges by 2/3 of the sagitta, chord x t / 8, on average
-    bulge = length * 0.5 * (turn + before_turn) / 12.0
-    ends = np.stack([surface.vertices[start], surface.vertices[end]], axis=1)
-    return ends[similar], bulge[similar], region[similar]
+def _round_edges(
+    surface: Surface, regions: Regions, creases: Creases
+) -> tuple[FloatArray, IntArray, FloatArray, FloatArray, BoolArray]:
+    """Edges not meant smooth in chains that turn gently, steadily and alike, with the bulge of the round one."""
+    edges = creases.edges
+    sharp = np.flatnonzero(creases.rim | (creases.between & ~creases.smooth))
+    ends = edges.vertices[sharp]
+    before, after = _neighbours(ends)
+    points = surface.vertices
+    chord = points[ends[:, 1]] - points[ends[:, 0]]
+    length = np.linalg.norm(chord, axis=1)
+    into = _unit(points[ends[:, 0]] - points[before])
+    along = _unit(chord)
+    onward = _unit(points[after] - points[ends[:, 1]])
+    first, second = along - into, onward - along
+    size = np.linalg.norm(first, axis=1), np.linalg.norm(second, axis=1)
+    gentle = 2.0 * np.sin(0.5 * _RIM_TURN)
+    alike = np.einsum("ij,ij->i", first, second) > 0.7 * size[0] * size[1]
+    alike &= (size[0] < gentle) & (size[1] < gentle) & (size[0] > 1e-6) & (before >= 0) & (after >= 0)
+    alike &= (size[0] < _RIM_SIMILAR * size[1]) & (size[1] < _RIM_SIMILAR * size[0])
+    # an arc of curvature k over a chord c bulges by 2/3 of its sagitta k c^2 / 8 on average
+    turn = np.arcsin(np.minimum(0.5 * size[0], 1.0)) + np.arcsin(np.minimum(0.5 * size[1], 1.0))
+    bulge = -0.5 * (first + second) * (length / 12.0 / np.sinc(turn / np.pi))[:, None]
+    found = []
+    for slot, sign in ((0, 1.0), (1, -1.0)):
+        triangle = edges.triangles[sharp, slot]
+        region = np.where(triangle >= 0, regions.triangle_region[triangle], -1)
+        rows = np.flatnonzero(alike & (region >= 0))
+        out = sign * np.cross(along[rows], regions.normals[region[rows]])
+        distance = np.einsum("ij,ij->i", out, bulge[rows])
+        found.append((points[ends[rows]], region[rows], out, distance, creases.rim[sharp[rows]]))
+    return tuple(np.concatenate(column) for column in zip(*found, strict=True))  # type: ignore[return-value]
 
 
-def rim_factors(facets: Facets, panels: Panels) -> FloatArray:
-    """Factor by which ``sigma_i sigma_j`` of each panel enters the rim term: ``w/4 x length x offset``.
+def _neighbours(ends: IntArray) -> tuple[IntArray, IntArray]:
+    """Far vertex of the one other edge at the start and at the end of each edge; -1 unless there is just one."""
+    n = len(ends)
+    vertex = ends.T.reshape(-1)
+    far = ends[:, ::-1].T.reshape(-1)
+    order = np.argsort(vertex, kind="stable")
+    count = np.bincount(vertex)[vertex[order]] if n else np.zeros(0, np.int64)
+    paired = order[count == 2]
+    other = np.full(2 * n, -1, dtype=np.int64)
+    other[paired[0::2]], other[paired[1::2]] = far[paired[1::2]], far[paired[0::2]]
+    return other[:n], other[n:]
 
-    A panel of width w along the rim with the mean density of K / sqrt(d) has K = sigma sqrt(w) / 2.
 
-    Returns
-    -------
-    (n_panels,) float, m3
-    """
-    factor = np.zeros(len(panels))
-    for region in np.unique(facets.rim_region):
+def _unit(vectors: FloatArray) -> FloatArray:
+    length = np.linalg.norm(vectors, axis=1)
+    return np.asarray(vectors / np.where(length > 0, length, 1.0)[:, None])
+
+
+def _sides_on_edges(facets: Facets, panels: Panels, ends: FloatArray) -> tuple[IntArray, IntArray, IntArray]:
+    """Edges, panels and sides of panels that lie on them: three arrays of one length."""
+    found: list[tuple[IntArray, IntArray, IntArray]] = []
+    for region in np.unique(facets.edge_region):
         rows = np.flatnonzero(panels.region == region)
         corners = panels.corners[rows]
         sides = np.roll(corners, -1, axis=1) - corners
-        lengths = np.linalg.norm(sides, axis=2)
         middles = corners + 0.5 * sides
-        for k in np.flatnonzero(facets.rim_region == region):
-            a, b = facets.rim_ends[k]
-            chord = b - a
+        exists = np.linalg.norm(sides, axis=2) > 0
+        for k in np.flatnonzero(facets.edge_region == region):
+            a, chord = ends[k, 0], ends[k, 1] - ends[k, 0]
             along = np.clip((middles - a) @ chord / (chord @ chord), 0.0, 1.0)
             gap = np.linalg.norm(middles - (a + along[..., None] * chord), axis=2)
-            on_rim = (gap < 1e-6 * np.linalg.norm(chord)) & (lengths > 0)
-            row, side = np.nonzero(on_rim)
-            length = lengths[row, side]
-            width = panels.areas[rows[row]] / length
-            np.add.at(factor, rows[row], 0.25 * width * length * facets.rim_offset[k])
-    return factor
+            row, side = np.nonzero((gap < 1e-5 * np.linalg.norm(chord)) & exists)
+            found.append((np.full(len(row), k), rows[row], side))
+    if not found:
+        return (np.zeros(0, np.int64),) * 3
+    edge, panel, side = (np.concatenate(column) for column in zip(*found, strict=True))
+    return edge, panel, side
 
 
 def move_facets(facets: Facets, panels: Panels) -> Panels:
-    """Move every facet outward onto the mean of the smooth surface over it.
+    """Move every facet outward onto the mean of the smooth surface over it, and its round edges likewise.
 
     Neighbouring facets then part by hairs, or cross by as much where the surface is hollow; constant charges do
     not mind.
@@ -171,25 +185,38 @@ def move_facets(facets: Facets, panels: Panels) -> Panels:
     ----------
     facets : Facets
     panels : Panels
+        As they cover the flat regions.
 
     Returns
     -------
     Panels
     """
-    move = facets.offset[panels.region][:, None] * panels.normals
-    return replace(panels, corners=panels.corners + move[:, None, :])
+    corners = panels.corners.copy()
+    edge, panel, side = _sides_on_edges(facets, panels, facets.edge_ends)
+    step = facets.edge_offset[edge, None] * facets.edge_out[edge]
+    end = (side + 1) % 4
+    # a side between the two copies of a triangle's third corner has no length and is never met: move both copies
+    for corner in (side, end):
+        np.add.at(corners, (panel, corner), step)
+    triangles = panels.n_corners == 3
+    last = np.isin(np.arange(len(panels)), panel) & triangles
+    moved_2 = corners[last, 2] - panels.corners[last, 2]
+    moved_3 = corners[last, 3] - panels.corners[last, 3]
+    corners[last, 2] = corners[last, 3] = panels.corners[last, 2] + moved_2 + moved_3
+    corners += (facets.offset[panels.region][:, None] * panels.normals)[:, None, :]
+    return replace(panels, corners=corners)
 
 
-def facet_shift(
+def facet_uncertainty(
     facets: Facets, panels: Panels, density: FloatArray, weights: FloatArray, capacitance: FloatArray
-) -> tuple[FloatArray, FloatArray]:
-    """What the rims of round sheets still add, and the uncertainty of all round parts, bare.
+) -> FloatArray:
+    """Uncertainty that the round parts leave, bare.
 
     Parameters
     ----------
     facets : Facets
     panels : Panels
-        Moved by :func:`move_facets`.
+        Moved by :func:`move_facets`, refined or not.
     density : (n_panels, n_conductors) float
         Bare densities, the solution of ``A density = areas``: sigma = 4 pi eps density.
     weights : (n_conductors, m) float
@@ -199,19 +226,31 @@ def facet_shift(
 
     Returns
     -------
-    shift : (n_conductors, m) float, m
-        Of the rims; multiply by 4 pi eps for farads.
-    uncertainty : (n_conductors, m) float, m
+    (n_conductors, m) float, m
         Expanded, k = 2: a share of the first-order change, without regard to sign; the share grows with the
-        change, since what is left is of second order.
+        change, since what is left is of second order. Multiply by 4 pi eps for farads.
     """
     moved = 4.0 * np.pi * np.abs(facets.offset[panels.region]) * panels.areas
-    rim = 2.0 * np.pi**2 * rim_factors(facets, panels)
     combined = density @ weights
     size, combined_size = np.abs(density), np.abs(combined)
     change = np.einsum("p,pi,pj->ij", moved, size, combined_size)
     relative = np.diag(np.einsum("p,pi,pj->ij", moved, size, size)) / capacitance
     share = FACET_SHARE + np.sqrt(relative[:, None] * np.max(relative * (weights.T != 0), axis=1)[None, :])
-    rim_change = np.einsum("p,pi,pj->ij", np.abs(rim), size, combined_size)
-    shift = np.einsum("p,pi,pj->ij", rim, density, combined)
-    return shift, share * change + RIM_SHARE * rim_change
+    rim_change = np.einsum("p,pi,pj->ij", _rim_factors(facets, panels), size, combined_size)
+    return np.asarray(share * change + RIM_SHARE * rim_change)
+
+
+def _rim_factors(facets: Facets, panels: Panels) -> FloatArray:
+    """Factor by which ``density_i density_j`` of each panel enters the first-order change by the rims, m3.
+
+    A panel of width w along the rim with the mean density of K / sqrt(d) has K = sigma sqrt(w) / 2.
+    """
+    shift = facets.edge_offset[:, None] * facets.edge_out
+    edge, panel, side = _sides_on_edges(facets, panels, facets.edge_ends + shift[:, None, :])
+    factor = np.zeros(len(panels))
+    rim = facets.edge_rim[edge]
+    edge, panel, side = edge[rim], panel[rim], side[rim]
+    length = np.linalg.norm(panels.corners[panel, (side + 1) % 4] - panels.corners[panel, side], axis=1)
+    width = panels.areas[panel] / length
+    np.add.at(factor, panel, 0.5 * np.pi**2 * width * length * np.abs(facets.edge_offset[edge]))
+    return factor
