@@ -17,7 +17,8 @@ __all__ = ["daraf_version", "result_document", "voltage_caution"]
 #: (120 V for direct current; IEC 61140 and IEC 60364, common practice, from memory).
 EXTRA_LOW_VOLTAGE = 50.0
 
-_LATER = {
+#: Only known where potentials or charges are stated, and missing if the solve was interrupted.
+_LOADS = {
     "force": "forces",
     "torque": "torques",
     "surface_field": "peak surface fields",
@@ -62,9 +63,9 @@ def result_document(
     caution = voltage_caution(state)
     if caution:
         notices.append(caution)
-    absent = [words for key, words in _LATER.items() if more.get(key) is None]
-    if absent:
-        notices.append(Notice("not-computed", f"this version does not compute {', '.join(absent)}"))
+    absent = [words for key, words in _LOADS.items() if more.get(key) is None]
+    if absent and state is not None:
+        notices.append(Notice("not-computed", f"not computed: {', '.join(absent)}"))
     warnings = [{"code": one.code, "text": one.text} for one in notices] + list(more.pop("warnings", []))
     document: dict[str, Any] = {
         "daraf": daraf_version(),

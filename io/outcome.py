@@ -1,7 +1,7 @@
 """The main job in one call: case in, `Outcome` out, which prints itself and writes its folder."""
 
 import time
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from pathlib import Path
 from typing import Any
 
@@ -10,6 +10,7 @@ from daraf.bem.solution import CapacitanceSolution
 
 from .case import Case
 from .document import daraf_version, result_document
+from .loads import loads
 from .problem import Problem, build_problem
 from .progress import Log, ProgressCallback
 from .result import write_result
@@ -172,10 +173,18 @@ def solve_problem(
         to_infinity_uncertainty=solution.to_infinity_uncertainty,
     )
     state = _state(problem, solution)
-    document = result_document(problem, solution, mutual, state)
+    extras: dict[str, Any] = {}
+    further: dict[str, float] = {}
+    if state is not None and not solution.interrupted:
+        try:
+            extras, further = loads(problem, solution, state, progress=log)
+        except KeyboardInterrupt:
+            # The capacitances are there and paid for: give them, and the exit code of an interruption.
+            solution = replace(solution, interrupted=True)
+    document = result_document(problem, solution, mutual, state, extras=extras)
     seconds = document["solution"]["seconds"]
     total = reading + time.perf_counter() - started
-    document["solution"]["seconds"] = {"reading": reading, **seconds, "total": total}
+    document["solution"]["seconds"] = {"reading": reading, **seconds, **further, "total": total}
     return Outcome(problem, solution, mutual, state, document, log.lines)
 
 

@@ -6,9 +6,10 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
+from .mesh_units import METRES_PER_UNIT
 from .units import engineering, prefix_for, rounded, with_uncertainty
 
-__all__ = ["WIDTH", "budget_line", "couplings", "matrix_table", "result_text"]
+__all__ = ["WIDTH", "budget_line", "couplings", "force_table", "matrix_table", "peak_table", "result_text"]
 
 FloatArray = NDArray[np.float64]
 
@@ -37,6 +38,8 @@ def result_text(document: dict[str, Any]) -> str:
         _heading(document),
         *_capacitances(document),
         _state(document),
+        force_table(document),
+        peak_table(document),
         _accuracy(document),
         _effort(document),
     ]
@@ -188,6 +191,76 @@ def _state(document: dict[str, Any]) -> list[str]:
     rows = zip(labels, volts, coulombs, strict=True)
     lines += [f"{label.ljust(left)}  {one.ljust(width)}  {two}" for label, one, two in rows]
     return [*lines, f"energy {with_uncertainty(energy['value'], energy['uncertainty'], 'J')}"]
+
+
+def force_table(document: dict[str, Any]) -> list[str]:
+    """Lines of the forces on all conductors, with one prefix.
+
+    Parameters
+    ----------
+    document : dict
+        Content of `result.json`.
+
+    Returns
+    -------
+    list of str
+        None where no force was computed or there is only one conductor.
+    """
+    force, names = document.get("force"), document["conductors"]
+    if not force or len(names) < 2:
+        return []
+    values = np.array(force["value"])
+    spreads = np.array(force["uncertainty"])
+    exponent, prefix = prefix_for(float(np.max(np.linalg.norm(values, axis=1))))
+    rows = [
+        [rounded(float(value), float(spread), exponent) for value in row]
+        for row, spread in zip(values, spreads, strict=True)
+    ]
+    columns = [_aligned([row[k][0] for row in rows]) for k in range(3)]
+    columns.append(_aligned([row[0][1] for row in rows]))
+    labels = [_label(name, k) for k, name in enumerate(names)]
+    left = max(map(len, labels))
+    widths = [max(len(column[0]), 1) for column in columns]
+    lines = [f"Forces as stated, {prefix}N; ± holds for the length of the error"]
+    heads = zip("xyz±", widths, strict=True)
+    lines.append(" " * left + "".join("  " + head.rjust(width) for head, width in heads))
+    for k, label in enumerate(labels):
+        cells = "".join("  " + column[k].rjust(width) for column, width in zip(columns, widths, strict=True))
+        lines.append((label.ljust(left) + cells).rstrip())
+    return lines
+
+
+def peak_table(document: dict[str, Any]) -> list[str]:
+    """Lines of the peak surface fields.
+
+    Parameters
+    ----------
+    document : dict
+        Content of `result.json`.
+
+    Returns
+    -------
+    list of str
+        None where no field was computed.
+    """
+    peaks = document.get("surface_field")
+    if not peaks:
+        return []
+    unit = document["case"].get("unit") or "m"
+    labels = [_label(one["conductor"], k) for k, one in enumerate(peaks)]
+    left = max(map(len, labels))
+    lines = ["Peak field on the surface as stated"]
+    for label, one in zip(labels, peaks, strict=True):
+        if one["bounded"]:
+            text = with_uncertainty(one["peak"], one["uncertainty"], "V/m")
+        else:
+            text = "unbounded" if one["exponent"] is None else f"unbounded (E ~ r^-{one['exponent']:.2f})"
+        place = ", ".join(f"{value / METRES_PER_UNIT.get(unit, 1.0) + 0.0:.4g}" for value in one["at"])
+        line = f"{label.ljust(left)}  {text} at ({place}) {unit if unit in METRES_PER_UNIT else 'm'}"
+        lines += [line] if len(line) <= WIDTH else _wrapped(line)
+    if not all(one["bounded"] for one in peaks):
+        lines += _wrapped("unbounded: at sharp convex edges; result.json names the radius to state")
+    return lines
 
 
 def _accuracy(document: dict[str, Any]) -> list[str]:

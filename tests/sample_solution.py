@@ -4,6 +4,7 @@ import numpy as np
 
 from daraf.bem.constants import FOUR_PI_EPSILON_0
 from daraf.bem.panels import Panels
+from daraf.bem.regions import find_regions
 from daraf.bem.solution import CapacitanceSolution, Notice, Pass
 from daraf.bem.surface import Surface
 
@@ -26,7 +27,7 @@ def sample_solution(surface, *, relative_permittivity=1.0, accuracy=0.01, reache
         n_corners=np.full(len(corners), 3),
         body=surface.triangle_body,
         conductor=panel_conductor,
-        region=np.arange(len(corners)),
+        region=find_regions(surface)[0].triangle_region,
     )
     area = np.array([panels.areas[panel_conductor == j].sum() for j in range(n)])
     return CapacitanceSolution(

@@ -58,7 +58,7 @@ def test_solve_a_case(folder, solver, capsys):
     assert out.startswith("Two boxes\n2 conductors")
     assert out.endswith(f"\nresult: {folder / 'probe.daraf'}\n")
     assert "1 drive  20 kV" in out
-    assert err == "assembling\nwriting\n"
+    assert err == "assembling\nforces\nwriting\n"
     result = read_result(folder / "probe.daraf")
     assert result.document["conductors"] == ["drive", "sense"]
     assert result.document["inputs"][0]["file"] == "head.stl"

@@ -8,7 +8,7 @@ from daraf.bem.network import excite, mutual_capacitance
 from daraf.io.case import make_case
 from daraf.io.document import result_document
 from daraf.io.problem import Problem
-from daraf.io.tables import WIDTH, budget_line, couplings, matrix_table, result_text
+from daraf.io.tables import WIDTH, budget_line, couplings, force_table, matrix_table, peak_table, result_text
 
 
 def document(n, volts=20e3, **options):
@@ -110,3 +110,53 @@ def test_keys_of_the_document_in_order():
     mutual, maxwell = made["capacitance"]["mutual"], made["capacitance"]["maxwell"]
     assert mutual[0][1] == -maxwell[0][1]
     assert mutual[0][0] == pytest.approx(sum(maxwell[0]))
+
+
+def loaded(n):
+    """A document with made-up forces and fields."""
+    made = document(n)
+    names = made["conductors"]
+    made["force"] = {
+        "unit": "N",
+        "value": [[1.2345e-6, -0.5e-9 * k, -3.0e-6] for k in range(n)],
+        "uncertainty": [4.0e-9] * n,
+    }
+    made["surface_field"] = [
+        {
+            "conductor": name,
+            "peak": 12.3456e3,
+            "uncertainty": 150.0 if k == 0 else None,
+            "at": [0.001, -123.4e-3, 0.0],
+            "bounded": k == 0,
+            "exponent": None if k < 2 else 1 / 3,
+            "edge_radius_needed": None if k == 0 else "radius of the edge",
+        }
+        for k, name in enumerate(names)
+    ]
+    return made
+
+
+def test_forces_and_peak_fields_by_hand():
+    made = loaded(3)
+    assert force_table(made) == [
+        "Forces as stated, µN; ± holds for the length of the error",
+        "                x        y        z       ±",
+        "1 plate 1  1.2345   0.0000  -3.0000  0.0040",
+        "2 plate 2  1.2345  -0.0005  -3.0000  0.0040",
+        "3 plate 3  1.2345  -0.0010  -3.0000  0.0040",
+    ]
+    assert peak_table(made) == [
+        "Peak field on the surface as stated",
+        "1 plate 1  12.35 ± 0.15 kV/m at (1, -123.4, 0) mm",
+        "2 plate 2  unbounded at (1, -123.4, 0) mm",
+        "3 plate 3  unbounded (E ~ r^-0.33) at (1, -123.4, 0) mm",
+        "unbounded: at sharp convex edges; result.json names the radius to state",
+    ]
+    assert max(map(len, result_text(loaded(30)).splitlines())) <= WIDTH
+
+
+def test_forces_and_fields_that_are_not_there():
+    assert force_table(document(2)) == []
+    assert peak_table(document(2)) == []
+    assert force_table(loaded(1)) == []
+    assert "not-computed" not in [one["code"] for one in document(2, volts=None)["warnings"]]
