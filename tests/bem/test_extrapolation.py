@@ -1,0 +1,74 @@
+import numpy as np
+import pytest
+
+from daraf.bem.extrapolation import (
+    GREATEST_DECAY,
+    GREATEST_REALISED,
+    LEAST_REALISED,
+    SMOOTH_DECAY,
+    decay_of_parts,
+    extrapolate,
+    realised_share,
+    series_factor,
+)
+
+
+def test_series_factor_is_the_sum_of_the_series():
+    decay = np.array([0.25, 0.5])
+    # forty terms of 0.5^k leave 1e-12
+    np.testing.assert_allclose(series_factor(decay), [np.sum(q ** np.arange(40)) for q in decay], rtol=2e-12)
+
+
+def test_geometric_gains_are_extrapolated_exactly():
+    """One conductor whose two panels gain a and b, decaying by q: the limit adds a/(1 - q) + b/(1 - q)."""
+    gains = np.zeros((2, 2, 1))
+    gains[:, 0, 0] = np.sqrt([0.1, 0.02])
+    decay = np.full((2, 2), 0.5)
+    limit = extrapolate(np.array([[1.0]]), gains, decay, 1.0)
+    # a sum of four numbers
+    assert limit[0, 0] == pytest.approx(1.0 + 2.0 * 0.12, rel=1e-14)
+
+
+def test_sign_of_a_coupling_gain_is_kept():
+    gains = np.zeros((1, 2, 2))
+    gains[0, 0] = [0.3, -0.2]
+    added = extrapolate(np.zeros((2, 2)), gains, np.full((1, 2), 0.25), 1.0)
+    # products of the gains over 1 - 1/4
+    np.testing.assert_allclose(added, np.array([(0.09, -0.06), (-0.06, 0.04)]) / 0.75, rtol=1e-14)
+
+
+def test_realised_share_is_gained_over_promised_within_bounds():
+    assert realised_share(np.array([0.08]), np.array([0.1])) == pytest.approx(0.8, rel=1e-14)
+    assert realised_share(np.array([0.0]), np.array([0.1])) == LEAST_REALISED
+    assert realised_share(np.array([9.0]), np.array([0.1])) == GREATEST_REALISED
+    assert realised_share(np.array([0.0]), np.array([0.0])) == 1.0
+
+
+def test_decay_is_read_off_the_parts():
+    """A panel split along u: its halves gain 0.04 and 0 after 0.1, so the edge half decays by 0.4."""
+    parent = np.array([0, 0])
+    split = np.array([(True, False)])
+    before, after = np.array([(0.1, 0.02)]), np.array([(0.04, 0.01), (0.0, 0.01)])
+    decay = decay_of_parts(parent, split, before, after, np.full((1, 2), SMOOTH_DECAY))
+    # the half without gain is taken as smooth; v was not split and keeps what was known
+    np.testing.assert_allclose(decay, [(0.4, SMOOTH_DECAY), (SMOOTH_DECAY, SMOOTH_DECAY)], rtol=1e-14)
+
+
+def test_panels_that_were_not_split_keep_their_decay():
+    known = np.array([(0.5, 0.3)])
+    decay = decay_of_parts(np.array([0]), np.zeros((1, 2), bool), np.ones((1, 2)), np.ones((1, 2)), known)
+    np.testing.assert_array_equal(decay, known)
+
+
+def test_no_gain_before_gives_no_decay_and_no_warning():
+    known = np.full((1, 2), SMOOTH_DECAY)
+    decay = decay_of_parts(np.array([0, 0]), np.ones((1, 2), bool), np.zeros((1, 2)), np.zeros((2, 2)), known)
+    np.testing.assert_array_equal(decay, np.full((2, 2), SMOOTH_DECAY))
+
+
+def test_series_never_diverges():
+    """However large the measured decay, what is extrapolated stays bounded."""
+    gains = np.ones((1, 2, 1))
+    added = extrapolate(np.zeros((1, 1)), gains, np.full((1, 2), 0.99), 1.0)
+    # two gains of one at the greatest decay that is believed
+    assert added[0, 0] <= 2.0 / (1.0 - GREATEST_DECAY) * (1.0 + 1e-12)

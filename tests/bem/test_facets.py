@@ -1,0 +1,114 @@
+import numpy as np
+import pytest
+
+from daraf.bem import solve_capacitance
+from daraf.bem.constants import FOUR_PI_EPSILON_0
+from daraf.bem.creases import find_creases
+from daraf.bem.facets import find_facets
+from daraf.bem.regions import find_regions
+from published import shapes
+
+
+def facets_of(*conductors):
+    surface = shapes.surface(conductors)
+    regions = find_regions(surface)[0]
+    return surface, find_facets(surface, regions, find_creases(surface, regions))
+
+
+def in_metres(solution):
+    return solution.maxwell[0, 0] / FOUR_PI_EPSILON_0, solution.maxwell_uncertainty[0, 0] / FOUR_PI_EPSILON_0
+
+
+@pytest.mark.parametrize("radius", [1.0, 1e-4])
+def test_offsets_of_a_sphere_are_the_mean_depth_of_its_facets(radius):
+    """Area times mean depth, summed, is the volume that is missing."""
+    mesh = shapes.icosphere(radius, 2)
+    surface, facets = facets_of(mesh)
+    regions = find_regions(surface)[0]
+    areas = np.zeros(len(regions))
+    corners = surface.vertices[surface.triangles]
+    each = 0.5 * np.linalg.norm(np.cross(corners[:, 1] - corners[:, 0], corners[:, 2] - corners[:, 0]), axis=1)
+    np.add.at(areas, regions.triangle_region, each)
+    missing = 4.0 / 3.0 * np.pi * radius**3 - shapes.volume(mesh)
+    assert np.all(facets.offset > 0)
+    # normals averaged at the vertices, the depth to second order: a few per cent at this fineness
+    assert areas @ facets.offset == pytest.approx(missing, rel=0.06)
+
+
+def test_hollow_facets_move_the_other_way():
+    """The inner face of a shell: its true surface lies inside the metal's polyhedron, outward of the normals."""
+    _, solid = facets_of(shapes.icosphere(1.0, 2))
+    _, hollow = facets_of(shapes.flipped(shapes.icosphere(1.0, 2)))
+    # the same numbers with the other sign, rounding of normals apart
+    np.testing.assert_allclose(hollow.offset, -solid.offset, rtol=1e-9)
+
+
+def test_flat_bodies_have_nothing_round():
+    for mesh in (shapes.cube(), shapes.plate(), shapes.l_plate(), shapes.regular_solid("octahedron")):
+        _, facets = facets_of(mesh)
+        assert not facets.any
+
+
+@pytest.mark.parametrize("sides", [16, 32])
+def test_rim_of_a_disc(sides):
+    """Mean distance from chord to arc: the area of the segment over the chord."""
+    _, facets = facets_of(shapes.disc(1.0, sides))
+    turn = 2.0 * np.pi / sides
+    segment = 0.5 * (turn - np.sin(turn))
+    assert len(facets.edge_offset) == sides
+    assert facets.edge_rim.all()
+    # the sine of the turn for the turn, and a chord for an arc: turn^2 / 6 + turn^2 / 24
+    np.testing.assert_allclose(facets.edge_offset, segment / (2.0 * np.sin(0.5 * turn)), rtol=turn**2 / 4)
+
+
+def test_hole_of_a_plate_moves_into_the_plate():
+    """The true round hole is larger than its polygon with corners on the circle: the sheet loses area."""
+    _, facets = facets_of(shapes.drilled_plate(1.0, 0.25, 32))
+    assert len(facets.edge_offset) == 32
+    assert np.all(facets.edge_offset < 0)
+
+
+@pytest.mark.slow
+@pytest.mark.parametrize("levels", [1, 2])
+def test_sphere_is_met_from_its_facets(levels):
+    mesh = shapes.icosphere(1.0, levels)
+    flat, _ = in_metres(solve_capacitance(shapes.surface([mesh]), accuracy=0.005, facets="true"))
+    smooth, uncertainty = in_metres(solve_capacitance(shapes.surface([mesh]), accuracy=0.005))
+    assert abs(smooth - 1.0) < uncertainty
+    assert flat < smooth
+    # an inscribed polyhedron is too small by -3.6 per facet; the correction leaves a tenth of it
+    assert abs(smooth - 1.0) < 0.1 * (1.0 - flat)
+
+
+@pytest.mark.slow
+@pytest.mark.parametrize("sides", [16, 32])
+def test_disc_is_met_from_its_rim(sides):
+    exact = 2.0 / np.pi
+    mesh = shapes.disc(1.0, sides)
+    flat, _ = in_metres(solve_capacitance(shapes.surface([mesh]), accuracy=0.003, facets="true"))
+    smooth, uncertainty = in_metres(solve_capacitance(shapes.surface([mesh]), accuracy=0.003))
+    assert abs(smooth - exact) < uncertainty
+    # dC/da = 8 eps, in metres 2/pi, times the mean bulge; the rim coefficient is read off one panel
+    turn = 2.0 * np.pi / sides
+    bulge = 0.5 * (turn - np.sin(turn)) / (2.0 * np.sin(0.5 * turn))
+    assert smooth - flat == pytest.approx(2.0 / np.pi * bulge, rel=0.2)
+
+
+@pytest.mark.slow
+def test_shell_gives_the_same_with_either_orientation_of_its_outer_sphere():
+    """A closed thin shell round a ball carries charge on both sides, whichever way its normals point."""
+    ball, shell = shapes.icosphere(1.0, 1), shapes.icosphere(2.0, 1)
+    outward = solve_capacitance(shapes.surface([ball, shell]), accuracy=0.02)
+    inward = solve_capacitance(shapes.surface([ball, shapes.flipped(shell)]), accuracy=0.02)
+    exact = FOUR_PI_EPSILON_0 * np.array([(2.0, -2.0), (-2.0, 4.0)])
+    for solution in (outward, inward):
+        assert np.all(np.abs(solution.maxwell - exact) < solution.maxwell_uncertainty)
+
+
+@pytest.mark.slow
+def test_open_bowl_is_met():
+    half_angle = np.pi / 2
+    exact = (half_angle + np.sin(half_angle)) / np.pi
+    solution = solve_capacitance(shapes.surface([shapes.bowl(1.0, half_angle, 24, 6)]), accuracy=0.01)
+    value, uncertainty = in_metres(solution)
+    assert abs(value - exact) < uncertainty
