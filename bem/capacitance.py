@@ -24,6 +24,7 @@ from .surface import Surface
 __all__ = ["solve_capacitance"]
 
 FloatArray = NDArray[np.float64]
+BoolArray = NDArray[np.bool_]
 Progress = Callable[..., None]
 
 #: Most panels of a dense solve; beyond, factorisation takes minutes a pass.
@@ -48,19 +49,25 @@ class _Judgement:
     n_passes: int
 
     @property
-    def reached(self) -> bool:
-        """Whether every entry is accurate enough; one pass alone must be so by far to be believed."""
+    def missed(self) -> BoolArray:
+        """Entries that are not accurate enough yet; after one pass alone they must be so by far to be believed."""
         n = len(self.value)
-        first = self.n_passes == 1 and (self.lines["discretisation"][:, :n] > FIRST_PASS * self.targets).any()
-        return not first and bool((self.total[:, :n] <= self.targets).all())
+        missed = self.total[:, :n] > self.targets
+        if self.n_passes == 1:
+            missed |= self.lines["discretisation"][:, :n] > FIRST_PASS * self.targets
+        return np.asarray(missed)
+
+    @property
+    def reached(self) -> bool:
+        """Whether every entry is accurate enough."""
+        return not self.missed.any()
 
     @property
     def pointless(self) -> bool:
         """Whether no entry that misses its target would gain from smaller panels."""
         n = len(self.value)
         fixed = np.hypot(self.lines["facets"], self.lines["integration"])[:, :n]
-        missed = self.total[:, :n] > self.targets
-        return bool((~missed | (self.lines["discretisation"][:, :n] < POINTLESS * fixed)).all())
+        return bool((~self.missed | (self.lines["discretisation"][:, :n] < POINTLESS * fixed)).all())
 
     @property
     def excess(self) -> float:

@@ -32,7 +32,7 @@ from .polygon import polygon_potential
 
 __all__ = ["close_pair_integral", "self_integral"]
 
-N_POINTS = 20
+N_POINTS = 16
 _U, _WU = np.polynomial.legendre.leggauss(N_POINTS)
 _U = 0.5 * (_U + 1.0)
 _WU = 0.5 * _WU

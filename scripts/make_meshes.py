@@ -27,7 +27,7 @@ IntArray = NDArray[np.int64]
 Mesh = tuple[FloatArray, IntArray]
 
 #: Largest distance between an arc and its chord, mm: a coarse but common export setting.
-CHORD_TOLERANCE = 0.1
+CHORD_TOLERANCE = 0.2
 
 
 def facets(radius: float) -> int:
@@ -66,13 +66,13 @@ def sense() -> Manifold:
     """Disc with a rounded front rim and a solder stud behind it."""
     rim = fillet((7.5, 1.0), 0.5, 0.0, 2)
     disc = turned([(0.0, 0.0), (8.0, 0.0), *rim, (0.0, 1.5)], 8.0)
-    stud = turned([(0.0, -4.5), (0.95, -4.5), (1.25, -4.2), (1.25, 0.5), (0.0, 0.5)], 1.25)
+    stud = turned([(0.0, -4.5), (1.25, -4.5), (1.25, 0.5), (0.0, 0.5)], 1.25)
     return disc + stud
 
 
 def guard_ring() -> Manifold:
     """Ring round the sense disc, chamfered outside."""
-    return turned([(8.8, 0.0), (11.5, 0.0), (11.5, 1.1), (11.1, 1.5), (8.8, 1.5)], 11.5)
+    return turned([(8.8, 0.0), (11.5, 0.0), (11.5, 1.5), (8.8, 1.5)], 11.5)
 
 
 def guard_plate() -> Manifold:
@@ -87,14 +87,14 @@ def drive() -> Manifold:
     outline = CrossSection.square((18.0, 14.0), center=True).offset(4.0, JoinType.Round, 2.0, facets(4.0))
     plate = outline.extrude(1.2).translate((0.0, 0.0, 7.0))
     boss = drum(3.0, 7.5, 10.2, (-6.5, -3.0))
-    return plate + boss - drum(1.7, 6.0, 9.0, (9.0, 6.0))
+    return plate + boss - drum(2.4, 6.0, 9.0, (9.0, 6.0))
 
 
 def screw() -> Manifold:
     """Hexagon screw through one clearance hole of the drive plate; insulated, hence floating."""
     across_corners = 2.2
     head = Manifold.cylinder(1.4, across_corners, circular_segments=6).translate((0.0, 0.0, 9.0))
-    shank = turned([(0.0, 3.0), (0.7, 3.0), (1.0, 3.3), (1.0, 9.5), (0.0, 9.5)], 1.0)
+    shank = turned([(0.0, 3.0), (1.0, 3.0), (1.0, 9.5), (0.0, 9.5)], 1.0)
     return (head + shank).translate((9.0, 6.0, 0.0))
 
 

@@ -1,5 +1,5 @@
-"""The command line: `main`, and one module per sub-command beside it."""
+"""The command line: `main` and `program`, and one module per sub-command beside it."""
 
-from .main import main
+from .main import main, program
 
-__all__ = ["main"]
+__all__ = ["main", "program"]

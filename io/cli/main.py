@@ -1,6 +1,7 @@
 """Entry point `daraf`: hands over to the sub-commands and turns every end into an exit code."""
 
 import argparse
+import atexit
 import contextlib
 import os
 import sys
@@ -11,7 +12,7 @@ from collections.abc import Sequence
 from . import inspect, solve
 from .parser import Parser, UsageError
 
-__all__ = ["main"]
+__all__ = ["main", "program"]
 
 #: Registry of sub-commands: each module has NAME, HELP, ``add_arguments(parser)`` and ``run(args)``.
 _COMMANDS = (inspect, solve)
@@ -56,6 +57,20 @@ def main(argv: Sequence[str] | None = None) -> int:
         return 0
     except Exception as error:
         return _failure(error, "--debug" in words)
+
+
+def program() -> None:
+    """Entry of the installed command: `main`, then leave at once.
+
+    Taking the interpreter and the libraries apart would cost a third of a second for nothing; what was
+    registered for the end (temporary folders) is still done.
+    """
+    code = main()
+    atexit._run_exitfuncs()
+    with contextlib.suppress(OSError, ValueError):
+        sys.stdout.flush()
+        sys.stderr.flush()
+    os._exit(code)
 
 
 def _run(words: list[str]) -> int:
