@@ -9,13 +9,14 @@ from numpy.typing import NDArray
 from scipy.linalg import lapack
 from threadpoolctl import threadpool_limits
 
-from .bisection import SPLIT_U, SPLIT_V, split_panels
+from .bisection import SPLIT_U, SPLIT_V, split_panels, split_sides
 from .errors import NumericalError
 from .extrapolation import SMOOTH_DECAY, decay_of_parts, extrapolate, realised_share
 from .galerkin import galerkin_matrix
+from .hidden import feared_gains
 from .indicator import two_level_indicator
 from .panels import Panels
-from .refinement import choose_splits, gain_worth, unhide_symmetric
+from .refinement import choose_splits, gain_worth
 from .solution import Notice
 
 __all__ = ["PassResult", "Plan", "plan_next", "run_pass"]
@@ -49,7 +50,9 @@ class PassResult:
     feared : (n_panels, 2, n_conductors) float
         The same, or what a panel may hide by symmetry where that is more: what is refined and doubted.
     symmetric : (n_panels, 2) bool
-        Directions in which panels may hide a gain: see :func:`daraf.bem.refinement.unhide_symmetric`.
+        Directions in which panels may hide a gain: see :mod:`daraf.bem.hidden`.
+    sides : (n_panels, 4) float
+        Decay of splits toward each side, from the edge it lies on.
     decay : (n_panels, 2) float
         How much less each further split gains.
     realised : float
@@ -71,6 +74,7 @@ class PassResult:
     gains: FloatArray
     feared: FloatArray
     symmetric: BoolArray
+    sides: FloatArray
     decay: FloatArray
     realised: float
     drift: float
@@ -94,8 +98,8 @@ class Plan:
         Panel of the pass before.
     symmetric : (n_panels, 2) bool
         Directions in which halves may be equal by symmetry.
-    decay : (n_panels, 2) float or None
-        For the first pass: what the edges say.
+    sides : (n_panels, 4) float
+        Decay of splits toward each side, from the edge it lies on.
     was_split : (n_before, 2) bool
         Directions of the splits whose gain had been measured.
     worth : (n_before, 2) float
@@ -108,7 +112,7 @@ class Plan:
 
     panels: Panels
     symmetric: BoolArray
-    decay: FloatArray | None = None
+    sides: FloatArray
     known: FloatArray | None = None
     parent: IntArray | None = None
     was_split: BoolArray | None = None
@@ -155,7 +159,7 @@ def run_pass(plan: Plan, report: Callable[[str, float, float], None]) -> PassRes
     gains = two_level_indicator(
         panels, density, self_terms, potentials, progress=lambda done, total: report("estimate", done, total)
     )
-    feared = unhide_symmetric(gains, density, self_terms, plan.symmetric)
+    feared = feared_gains(panels, gains, density, self_terms, plan.symmetric, plan.sides)
     decay, realised = _history(plan, value, gains)
     limit = extrapolate(value, gains, decay, realised)
     change = None if plan.before is None else limit - plan.before.limit
@@ -169,6 +173,7 @@ def run_pass(plan: Plan, report: Callable[[str, float, float], None]) -> PassRes
         gains,
         feared,
         plan.symmetric,
+        plan.sides,
         decay,
         realised,
         drift,
@@ -212,7 +217,8 @@ def _history(plan: Plan, value: FloatArray, gains: FloatArray) -> tuple[FloatArr
     """Decay of each panel's gains and the realised share of what was promised."""
     before = plan.before
     if before is None or plan.parent is None or plan.was_split is None or plan.worth is None or plan.weights is None:
-        start = np.full((len(plan.panels), 2), SMOOTH_DECAY) if plan.decay is None else plan.decay
+        start = np.stack([plan.sides[:, [1, 3]].max(axis=1), plan.sides[:, [0, 2]].max(axis=1)], axis=1)
+        start[plan.panels.n_corners == 3] = SMOOTH_DECAY
         return start, 1.0
     promised = np.einsum("pdi,pd->i", before.gains**2, plan.was_split) / np.diag(value)
     gained = (np.diag(value) - np.diag(before.value)) / np.diag(value)
@@ -233,16 +239,17 @@ def plan_next(result: PassResult, weights: FloatArray) -> Plan:
     -------
     Plan
     """
-    worth = gain_worth(result.feared, weights)
-    split = choose_splits(worth)
+    worth = gain_worth(result.gains, weights)
+    split = choose_splits(gain_worth(result.feared, weights))
     panels, parent = split_panels(result.panels, split)
+    sides = split_sides(result.panels, split, result.sides, SMOOTH_DECAY)
     kept = parent[: int(np.count_nonzero(split == 0))]
     was_split = np.stack([(split & SPLIT_U) > 0, (split & SPLIT_V) > 0], axis=1)
     was_split[result.panels.n_corners == 3] = (split > 0)[result.panels.n_corners == 3, None]
     known = result.matrix[np.ix_(kept, kept)]
     symmetric = (result.symmetric & ~was_split)[parent]
     measured = was_split & ~result.symmetric
-    return Plan(panels, symmetric, None, known, parent, measured, worth, weights, _without_matrix(result))
+    return Plan(panels, symmetric, sides, known, parent, measured, worth, weights, _without_matrix(result))
 
 
 def _without_matrix(result: PassResult) -> PassResult:

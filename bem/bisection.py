@@ -11,7 +11,7 @@ from numpy.typing import NDArray
 
 from .panels import Panels
 
-__all__ = ["SPLIT_BOTH", "SPLIT_NONE", "SPLIT_U", "SPLIT_V", "children", "halves", "split_panels"]
+__all__ = ["SPLIT_BOTH", "SPLIT_NONE", "SPLIT_U", "SPLIT_V", "children", "halves", "split_panels", "split_sides"]
 
 FloatArray = NDArray[np.float64]
 IntArray = NDArray[np.int64]
@@ -89,36 +89,72 @@ def split_panels(panels: Panels, split: IntArray) -> tuple[Panels, IntArray]:
     parent : (n_new,) int
         The panel that each one is or comes from.
     """
-    quads = panels.n_corners == 4
-    stay = np.flatnonzero(split == SPLIT_NONE)
-    corners, n_corners, parents = [panels.corners[stay]], [panels.n_corners[stay]], [stay]
-    for mark in (SPLIT_U, SPLIT_V, SPLIT_BOTH):
-        chosen = np.flatnonzero(quads & (split == mark))
-        if mark == SPLIT_BOTH:
-            parts = children(panels.corners[chosen], panels.n_corners[chosen])
-        else:
-            parts = halves(panels.corners[chosen], mark)
-        _collect(parts, chosen, corners, n_corners, parents)
-    chosen = np.flatnonzero(~quads & (split != SPLIT_NONE))
-    _collect(_thirds(panels.corners[chosen]), chosen, corners, n_corners, parents)
-    parent = np.concatenate(parents)
-    new = Panels(
-        np.concatenate(corners),
-        np.concatenate(n_corners),
-        panels.body[parent],
-        panels.conductor[parent],
-        panels.region[parent],
+    groups = _groups(panels, split)
+    parent = np.concatenate([np.repeat(chosen, _PARTS[mark]) for mark, chosen in groups])
+    corners = [_split_corners(panels.corners[chosen], mark).reshape(-1, 4, 3) for mark, chosen in groups]
+    n_corners = panels.n_corners[parent]
+    n_corners[len(groups[0][1]) :] = 4
+    return (
+        Panels(
+            np.concatenate(corners), n_corners, panels.body[parent], panels.conductor[parent], panels.region[parent]
+        ),
+        parent,
     )
-    return new, parent
 
 
-def _collect(
-    parts: FloatArray,
-    chosen: IntArray,
-    corners: list[FloatArray],
-    n_corners: list[IntArray],
-    parents: list[IntArray],
-) -> None:
-    corners.append(parts.reshape(-1, 4, 3))
-    n_corners.append(np.full(parts.shape[0] * parts.shape[1], 4, dtype=np.int64))
-    parents.append(np.repeat(chosen, parts.shape[1]))
+def split_sides(panels: Panels, split: IntArray, sides: FloatArray, inner: float) -> FloatArray:
+    """What is known of the sides of panels, after a split.
+
+    Parameters
+    ----------
+    panels : Panels
+        Before the split.
+    split : (n,) int
+        As for :func:`split_panels`.
+    sides : (n, 4) float
+        Of side k, from corner k to corner k + 1.
+    inner : float
+        For sides that a split makes.
+
+    Returns
+    -------
+    (n_new, 4) float
+        In the order of :func:`split_panels`.
+    """
+    parts = []
+    for mark, chosen in _groups(panels, split):
+        padded = np.append(sides[chosen], np.full((len(chosen), 1), inner), axis=1)
+        parts.append(padded[:, _SIDES[mark]].reshape(-1, 4))
+    return np.concatenate(parts)
+
+
+#: Parts of a split, and for each part the side of the whole that its sides lie on; 4 stands for none.
+_THIRDS = 4
+_PARTS = {SPLIT_NONE: 1, SPLIT_U: 2, SPLIT_V: 2, SPLIT_BOTH: 4, _THIRDS: 3}
+_SIDES = {
+    SPLIT_NONE: [[0, 1, 2, 3]],
+    SPLIT_U: [[0, 4, 2, 3], [0, 1, 2, 4]],
+    SPLIT_V: [[0, 1, 4, 3], [4, 1, 2, 3]],
+    SPLIT_BOTH: [[0, 4, 4, 3], [4, 4, 2, 3], [0, 1, 4, 4], [4, 1, 2, 4]],
+    _THIRDS: [[0, 4, 4, 3], [1, 4, 4, 0], [3, 4, 4, 1]],
+}
+
+
+def _groups(panels: Panels, split: IntArray) -> list[tuple[int, IntArray]]:
+    """Panels by the kind of their split, those that stay first."""
+    quads = panels.n_corners == 4
+    groups = [(SPLIT_NONE, np.flatnonzero(split == SPLIT_NONE))]
+    groups += [(mark, np.flatnonzero(quads & (split == mark))) for mark in (SPLIT_U, SPLIT_V, SPLIT_BOTH)]
+    groups.append((_THIRDS, np.flatnonzero(~quads & (split != SPLIT_NONE))))
+    return groups
+
+
+def _split_corners(corners: FloatArray, mark: int) -> FloatArray:
+    """Parts of panels of one kind of split, (n, parts, 4, 3)."""
+    if mark == SPLIT_NONE:
+        return corners[:, None]
+    if mark == _THIRDS:
+        return _thirds(corners)
+    if mark == SPLIT_BOTH:
+        return children(corners, np.full(len(corners), 4, dtype=np.int64))
+    return halves(corners, mark)

@@ -211,7 +211,7 @@ def _prepare(surface: Surface, facets: str, limit: int) -> tuple[Plan, Facets | 
     if round_parts is not None:
         panels = move_facets(round_parts, panels)
     start = starting_panels(panels, decays, max(len(panels), most // 4))
-    return Plan(start.panels, start.symmetric, start.decay), round_parts, notices + more, most
+    return Plan(start.panels, start.symmetric, start.sides), round_parts, notices + more, most
 
 
 def _pass(

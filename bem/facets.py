@@ -31,10 +31,10 @@ FloatArray = NDArray[np.float64]
 IntArray = NDArray[np.int64]
 BoolArray = NDArray[np.bool_]
 
-#: Expanded uncertainty (k = 2) as a share of the first-order change: of facets, where the relative change itself
-#: is added for what is of second order, and of rims, whose coefficient is read off one panel. Measured with
-#: ``scripts/coverage`` on the exact set.
-FACET_SHARE, RIM_SHARE = 0.01, 0.1
+#: Expanded uncertainty (k = 2) as a share of the first-order change by facets; to it this multiple of the relative
+#: change is added for what is of second order. Rims: likewise a share, their coefficient is read off one panel.
+#: Measured with ``scripts/coverage`` on the exact set.
+FACET_SHARE, SECOND_ORDER, RIM_SHARE = 0.01, 0.6, 0.1
 #: Corners of rims and sharp edges that turn by more than this are corners of the drawing, rad.
 _RIM_TURN = np.radians(35.0)
 #: Neighbouring turns of one round edge differ at most by this factor.
@@ -235,7 +235,9 @@ def facet_uncertainty(
     size, combined_size = np.abs(density), np.abs(combined)
     change = np.einsum("p,pi,pj->ij", moved, size, combined_size)
     relative = np.diag(np.einsum("p,pi,pj->ij", moved, size, size)) / capacitance
-    share = FACET_SHARE + np.sqrt(relative[:, None] * np.max(relative * (weights.T != 0), axis=1)[None, :])
+    share = FACET_SHARE + SECOND_ORDER * np.sqrt(
+        relative[:, None] * np.max(relative * (weights.T != 0), axis=1)[None, :]
+    )
     rim_change = np.einsum("p,pi,pj->ij", _rim_factors(facets, panels), size, combined_size)
     return np.asarray(share * change + RIM_SHARE * rim_change)
 

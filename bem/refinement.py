@@ -5,45 +5,17 @@ from numpy.typing import NDArray
 
 from .bisection import SPLIT_U, SPLIT_V
 
-__all__ = ["accuracy_targets", "choose_splits", "gain_worth", "unhide_symmetric"]
+__all__ = ["accuracy_targets", "choose_splits", "gain_worth"]
 
 FloatArray = NDArray[np.float64]
 IntArray = NDArray[np.int64]
-BoolArray = NDArray[np.bool_]
 
-#: Share of its self energy that a panel may hide by symmetry: see :func:`unhide_symmetric`.
-SYMMETRIC_GAIN = 0.05
 #: Share of the weighted estimate that the panels split in one pass must hold (Doerfler's marking).
 MARKED_SHARE = 0.7
 #: A quadrilateral is split in its weaker direction too if that holds this share of the stronger one.
 SECOND_DIRECTION = 0.3
 #: Couplings below this share of sqrt(C_ii C_jj) must meet the accuracy of this share only.
 COUPLING_FLOOR = 1e-3
-
-
-def unhide_symmetric(
-    gains: FloatArray, density: FloatArray, self_terms: FloatArray, symmetric: BoolArray
-) -> FloatArray:
-    """Give panels whose halves are equal by symmetry the gain that they may hide.
-
-    Charge that crowds toward both edges of a strip lowers its self energy by up to SYMMETRIC_GAIN of it
-    against uniform charge: in two dimensions by 3/2 - ln 4 = 0.11 of about ln(2 l / w) + 1/2 for the length l
-    and width w of the strip.
-
-    Parameters
-    ----------
-    gains : (n_panels, 2, n_conductors) float
-    density : (n_panels, n_conductors) float
-    self_terms : (n_panels,) float
-    symmetric : (n_panels, 2) bool
-
-    Returns
-    -------
-    (n_panels, 2, n_conductors) float
-    """
-    hidden = np.sqrt(SYMMETRIC_GAIN * self_terms)[:, None] * density
-    larger = np.abs(hidden)[:, None, :] > np.abs(gains)
-    return np.where(symmetric[:, :, None] & larger, hidden[:, None, :], gains)
 
 
 def accuracy_targets(capacitance: FloatArray, accuracy: FloatArray) -> FloatArray:

@@ -6,7 +6,7 @@ import numpy as np
 from numpy.typing import NDArray
 from scipy.spatial import cKDTree
 
-from .bisection import SPLIT_BOTH, SPLIT_U, SPLIT_V, split_panels
+from .bisection import SPLIT_BOTH, SPLIT_U, SPLIT_V, split_panels, split_sides
 from .creases import Creases
 from .extrapolation import SMOOTH_DECAY
 from .panels import Panels
@@ -33,13 +33,13 @@ class Start:
     symmetric : (n_panels, 2) bool
         Directions in which charge may crowd alike toward both ends, so that the halves of the panel stay
         equal and their difference hides the error: between two sharp sides, and long panels.
-    decay : (n_panels, 2) float
-        How much less each further split gains, from the edges that the panel lies on.
+    sides : (n_panels, 4) float
+        Decay of the gain of splits toward each side.
     """
 
     panels: Panels
     symmetric: BoolArray
-    decay: FloatArray
+    sides: FloatArray
 
 
 def side_decays(surface: Surface, creases: Creases, panels: Panels) -> FloatArray:
@@ -99,17 +99,17 @@ def starting_panels(panels: Panels, side_decay: FloatArray, most: int) -> Start:
     crowded = side_decay > SMOOTH_DECAY
     between = np.stack([crowded[:, 1] & crowded[:, 3], crowded[:, 0] & crowded[:, 2]], axis=1)
     symmetric = (between | (_lengths(panels) > SYMMETRIC_LENGTH)) & quads[:, None]
-    decay = np.stack([side_decay[:, [1, 3]].max(axis=1), side_decay[:, [0, 2]].max(axis=1)], axis=1)
-    decay[~quads] = SMOOTH_DECAY
+    sides = side_decay
     while True:
         long = _lengths(panels) > START_LENGTH
         split = SPLIT_U * long[:, 0] + SPLIT_V * long[:, 1]
         triangles = panels.n_corners == 3
         split[triangles] = np.where(long[triangles].any(axis=1), SPLIT_BOTH, 0)
         if not split.any() or len(panels) + 3 * np.count_nonzero(split) > most:
-            return Start(panels, symmetric, decay)
+            return Start(panels, symmetric, sides)
+        sides = split_sides(panels, split, sides, SMOOTH_DECAY)
         panels, parent = split_panels(panels, split)
-        symmetric, decay = (symmetric & ~long)[parent], decay[parent]
+        symmetric = (symmetric & ~long)[parent]
 
 
 def _lengths(panels: Panels) -> FloatArray:
