@@ -83,6 +83,11 @@ class PassResult:
     seconds: dict[str, float]
     notices: list[Notice] = field(default_factory=list)
 
+    @property
+    def feared_decay(self) -> FloatArray:
+        """Decay of the feared gains, (n_panels, 2): none where a gain is feared only, since that is all of it."""
+        return np.where((self.feared != self.gains).any(axis=2), 0.0, self.decay)
+
 
 @dataclass(frozen=True, eq=False)
 class Plan:

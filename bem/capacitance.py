@@ -236,7 +236,7 @@ def _judge(result: PassResult, round_parts: Facets | None, accuracy: FloatArray,
     lines = {
         "discretisation": extrapolation_uncertainty(
             result.feared,
-            result.decay,
+            result.feared_decay,
             result.realised,
             result.drift,
             result.panels.body,

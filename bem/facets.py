@@ -34,7 +34,7 @@ BoolArray = NDArray[np.bool_]
 #: Expanded uncertainty (k = 2) as a share of the first-order change by facets; to it this multiple of the relative
 #: change is added for what is of second order. Rims: likewise a share, their coefficient is read off one panel.
 #: Measured with ``scripts/coverage`` on the exact set.
-FACET_SHARE, SECOND_ORDER, RIM_SHARE = 0.01, 0.6, 0.1
+FACET_SHARE, SECOND_ORDER, RIM_SHARE = 0.0075, 0.45, 0.08
 #: Corners of rims and sharp edges that turn by more than this are corners of the drawing, rad.
 _RIM_TURN = np.radians(35.0)
 #: Neighbouring turns of one round edge differ at most by this factor.

@@ -26,7 +26,7 @@ BoolArray = NDArray[np.bool_]
 #: length l and width w of the strip.
 SYMMETRIC_GAIN = 0.05
 #: Capacitance that the fringe along an edge may hide, per eps and length of the edge. Measured on close discs.
-FRINGE_GAIN = 0.1
+FRINGE_GAIN = 0.12
 
 
 @parallel_kernel
