@@ -248,7 +248,7 @@ def _judge(result: PassResult, round_parts: Facets | None, accuracy: FloatArray,
         "integration": INTEGRATION * np.hstack([scale, scale.max(axis=1, keepdims=True)]),
     }
     if round_parts is not None and round_parts.any:
-        lines["facets"] = facet_uncertainty(round_parts, result.panels, result.density, sums, np.diag(result.value))
+        lines["facets"] = facet_uncertainty(round_parts, result.panels, result.density, sums)
     total = np.sqrt(sum(line**2 for line in lines.values()))
     return _Judgement(value, lines, total, accuracy_targets(value[:, :n], accuracy), n_passes)
 

@@ -31,10 +31,10 @@ FloatArray = NDArray[np.float64]
 IntArray = NDArray[np.int64]
 BoolArray = NDArray[np.bool_]
 
-#: Expanded uncertainty (k = 2) as a share of the first-order change by facets; to it this multiple of the relative
-#: change is added for what is of second order. Rims: likewise a share, their coefficient is read off one panel.
-#: Measured with ``scripts/coverage`` on the exact set.
-FACET_SHARE, SECOND_ORDER, RIM_SHARE = 0.0075, 0.45, 0.08
+#: Expanded uncertainty (k = 2) as a share of the first-order change by a facet; to it is added this multiple of the
+#: square of the facet's depth per width, for what is of second order. Rims: likewise a share, their coefficient is
+#: read off one panel. Measured with ``scripts/coverage`` on the exact set.
+FACET_SHARE, DEPTH_SHARE, RIM_SHARE = 0.006, 0.65, 0.08
 #: Corners of rims and sharp edges that turn by more than this are corners of the drawing, rad.
 _RIM_TURN = np.radians(35.0)
 #: Neighbouring turns of one round edge differ at most by this factor.
@@ -49,6 +49,8 @@ class Facets:
     ----------
     offset : (n_regions,) float, m
         Mean outward distance of the smooth surface from each flat region; zero where nothing is round.
+    share : (n_regions,) float
+        Share of what the offset changes that is not known.
     edge_ends : (n_edges, 2, 3) float, m
         Straight edges, at rims or sharp, that stand for round ones; once for each region at the edge.
     edge_region : (n_edges,) int
@@ -61,6 +63,7 @@ class Facets:
     """
 
     offset: FloatArray
+    share: FloatArray
     edge_ends: FloatArray
     edge_region: IntArray
     edge_out: FloatArray
@@ -99,7 +102,13 @@ def find_facets(surface: Surface, regions: Regions, creases: Creases) -> Facets:
     # rounding of the normals is no roundness
     size = np.sqrt(total)
     offset[np.abs(offset) < 1e-9 * size] = 0.0
-    return Facets(offset, *_round_edges(surface, regions, creases))
+    low, high = np.full((len(regions), 3), np.inf), np.full((len(regions), 3), -np.inf)
+    of, corners = regions.triangle_region[used], points[used]
+    np.minimum.at(low, of, corners.min(axis=1))
+    np.maximum.at(high, of, corners.max(axis=1))
+    # how deep the true surface lies over the narrow way across the facet
+    depth = offset * np.linalg.norm(high - low, axis=1) / np.where(total > 0, total, 1.0)
+    return Facets(offset, FACET_SHARE + DEPTH_SHARE * depth**2, *_round_edges(surface, regions, creases))
 
 
 def _round_edges(
@@ -207,9 +216,7 @@ def move_facets(facets: Facets, panels: Panels) -> Panels:
     return replace(panels, corners=corners)
 
 
-def facet_uncertainty(
-    facets: Facets, panels: Panels, density: FloatArray, weights: FloatArray, capacitance: FloatArray
-) -> FloatArray:
+def facet_uncertainty(facets: Facets, panels: Panels, density: FloatArray, weights: FloatArray) -> FloatArray:
     """Uncertainty that the round parts leave, bare.
 
     Parameters
@@ -221,25 +228,19 @@ def facet_uncertainty(
         Bare densities, the solution of ``A density = areas``: sigma = 4 pi eps density.
     weights : (n_conductors, m) float
         Combinations of conductors of which the second index is wanted.
-    capacitance : (n_conductors,) float, m
-        Self entries.
 
     Returns
     -------
     (n_conductors, m) float, m
-        Expanded, k = 2: a share of the first-order change, without regard to sign; the share grows with the
-        change, since what is left is of second order. Multiply by 4 pi eps for farads.
+        Expanded, k = 2: a share of the first-order change, without regard to sign; the share grows with the depth
+        of the facets, since what is left is of second order. Multiply by 4 pi eps for farads.
     """
-    moved = 4.0 * np.pi * np.abs(facets.offset[panels.region]) * panels.areas
+    moved = 4.0 * np.pi * (facets.share * np.abs(facets.offset))[panels.region] * panels.areas
     combined = density @ weights
     size, combined_size = np.abs(density), np.abs(combined)
     change = np.einsum("p,pi,pj->ij", moved, size, combined_size)
-    relative = np.diag(np.einsum("p,pi,pj->ij", moved, size, size)) / capacitance
-    share = FACET_SHARE + SECOND_ORDER * np.sqrt(
-        relative[:, None] * np.max(relative * (weights.T != 0), axis=1)[None, :]
-    )
     rim_change = np.einsum("p,pi,pj->ij", _rim_factors(facets, panels), size, combined_size)
-    return np.asarray(share * change + RIM_SHARE * rim_change)
+    return np.asarray(change + RIM_SHARE * rim_change)
 
 
 def _rim_factors(facets: Facets, panels: Panels) -> FloatArray:
