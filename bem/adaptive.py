@@ -53,6 +53,8 @@ class PassResult:
         Directions in which panels may hide a gain: see :mod:`daraf.bem.hidden`.
     sides : (n_panels, 4) float
         Decay of splits toward each side, from the edge it lies on.
+    refined : (n_bodies,) int
+        How often each body has been refined.
     decay : (n_panels, 2) float
         How much less each further split gains.
     realised : float
@@ -75,6 +77,7 @@ class PassResult:
     feared: FloatArray
     symmetric: BoolArray
     sides: FloatArray
+    refined: IntArray
     decay: FloatArray
     realised: float
     drift: float
@@ -118,6 +121,7 @@ class Plan:
     panels: Panels
     symmetric: BoolArray
     sides: FloatArray
+    refined: IntArray
     known: FloatArray | None = None
     parent: IntArray | None = None
     was_split: BoolArray | None = None
@@ -179,6 +183,7 @@ def run_pass(plan: Plan, report: Callable[[str, float, float], None]) -> PassRes
         feared,
         plan.symmetric,
         plan.sides,
+        plan.refined,
         decay,
         realised,
         drift,
@@ -254,7 +259,9 @@ def plan_next(result: PassResult, weights: FloatArray) -> Plan:
     known = result.matrix[np.ix_(kept, kept)]
     symmetric = (result.symmetric & ~was_split)[parent]
     measured = was_split & ~result.symmetric
-    return Plan(panels, symmetric, sides, known, parent, measured, worth, weights, _without_matrix(result))
+    refined = result.refined.copy()
+    refined[np.unique(result.panels.body[split > 0])] += 1
+    return Plan(panels, symmetric, sides, refined, known, parent, measured, worth, weights, _without_matrix(result))
 
 
 def _without_matrix(result: PassResult) -> PassResult:

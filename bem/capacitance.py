@@ -211,7 +211,12 @@ def _prepare(surface: Surface, facets: str, limit: int) -> tuple[Plan, Facets | 
     if round_parts is not None:
         panels = move_facets(round_parts, panels)
     start = starting_panels(panels, decays, max(len(panels), most // 4))
-    return Plan(start.panels, start.symmetric, start.sides), round_parts, notices + more, most
+    return (
+        Plan(start.panels, start.symmetric, start.sides, np.zeros(surface.n_bodies, dtype=np.int64)),
+        round_parts,
+        notices + more,
+        most,
+    )
 
 
 def _pass(
@@ -242,7 +247,7 @@ def _judge(result: PassResult, round_parts: Facets | None, accuracy: FloatArray,
             result.panels.body,
             result.change,
             sums,
-            n_passes,
+            result.refined,
         ),
         "facets": np.zeros_like(value),
         "integration": INTEGRATION * np.hstack([scale, scale.max(axis=1, keepdims=True)]),

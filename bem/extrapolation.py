@@ -30,7 +30,8 @@ LEAST_DECAY, GREATEST_DECAY = 0.15, 0.55
 DOUBTFUL_DECAY = 0.8
 #: Bounds of the realised share of promised gains.
 LEAST_REALISED, GREATEST_REALISED = 0.4, 1.3
-#: Expanded uncertainty (k = 2) of the extrapolated part as a share of it: after one pass, two, three, and more.
+#: Expanded uncertainty (k = 2) of the extrapolated part as a share of it: of a body not refined yet, refined once,
+#: twice, and more.
 #: Measured with ``scripts/coverage`` on the exact set.
 SHARES = (1.0, 0.5, 0.35, 0.25)
 #: Share of the change since the pass before that counts as uncertain.
@@ -126,7 +127,7 @@ def extrapolation_uncertainty(
     body: IntArray,
     change: FloatArray | None,
     sums: FloatArray,
-    n_passes: int,
+    refined: IntArray,
 ) -> FloatArray:
     """Expanded uncertainty (k = 2) of the extrapolated value.
 
@@ -145,7 +146,8 @@ def extrapolation_uncertainty(
         Extrapolated value now less that of the pass before.
     sums : (n, m) float
         Combinations of conductors that the second index stands for.
-    n_passes : int
+    refined : (n_bodies,) int
+        How often each body has been refined.
 
     Returns
     -------
@@ -155,8 +157,9 @@ def extrapolation_uncertainty(
     for number in np.unique(body):
         own = body == number
         weighted = _series(gains[own], decay[own], realised)
-        spread += np.abs(weighted.T @ (weighted @ sums))
-    spread *= SHARES[min(n_passes, len(SHARES)) - 1] + max(abs(drift) / realised, 0.5 * abs(1.0 - realised))
+        share = SHARES[min(refined[number], len(SHARES) - 1)]
+        share += max(abs(drift) / realised, 0.5 * abs(1.0 - realised))
+        spread += share * np.abs(weighted.T @ (weighted @ sums))
     return spread if change is None else np.hypot(spread, CHANGE_SHARE * change @ sums)
 
 

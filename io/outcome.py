@@ -163,6 +163,7 @@ def solve_problem(
         accuracy=content.accuracy if accuracy is None else accuracy,
         memory_limit=memory_limit,
         facets=content.facets,
+        want=_wanted(problem),
         progress=log,
     )
     log.add("done" if solution.reached else "stopped before the accuracy asked was reached")
@@ -186,6 +187,12 @@ def solve_problem(
     total = reading + time.perf_counter() - started
     document["solution"]["seconds"] = {"reading": reading, **seconds, **further, "total": total}
     return Outcome(problem, solution, mutual, state, document, log.lines)
+
+
+def _wanted(problem: Problem) -> list[tuple[int, int]] | None:
+    """Return the couplings that must meet the accuracy, by number; None for all."""
+    place = {name: k for k, name in enumerate(problem.surface.conductor_names)}
+    return [(place[one], place[two]) for one, two in problem.case.content.want] or None
 
 
 def _state(problem: Problem, solution: CapacitanceSolution) -> Excitation | None:

@@ -262,6 +262,9 @@ class CaseContent(_Table):
     unit: Unit | None = Field(None, description="length unit of the surface files")
     accuracy: Accuracy = 0.01
     facets: Facets = "auto"
+    want: tuple[tuple[str, str], ...] = Field(
+        (), description="couplings that must meet the accuracy, as pairs of conductors; all if left out"
+    )
     medium: Medium = Medium(relative_permittivity=1.0)
     conductor: tuple[ConductorEntry, ...] = Field(min_length=1)
 
@@ -272,6 +275,10 @@ class CaseContent(_Table):
             if entry.name in seen:
                 raise InputError(f"two conductors are named {entry.name!r}; give each its own name")
             seen.add(entry.name)
+        for name in (name for pair in self.want for name in pair):
+            if name not in seen:
+                known = ", ".join(repr(entry.name) for entry in self.conductor)
+                raise InputError(f"want: no conductor is named {name!r}; there are {known}")
         silent = [entry.name for entry in self.conductor if not entry.stated]
         if silent and len(silent) < len(self.conductor):
             raise InputError(

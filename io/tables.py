@@ -265,7 +265,9 @@ def peak_table(document: dict[str, Any]) -> list[str]:
 
 def _accuracy(document: dict[str, Any]) -> list[str]:
     solution = document["solution"]
-    asked = f"accuracy asked {_percent(solution['accuracy'])}: " + (
+    pairs = ", ".join(" - ".join(pair) for pair in document["case"].get("want", []))
+    wanted = f" for {pairs}" if pairs else ""
+    asked = f"accuracy asked {_percent(solution['accuracy'])}{wanted}: " + (
         "reached" if solution["reached"] else "NOT reached; the uncertainties above are what was reached"
     )
     if solution["interrupted"]:

@@ -203,3 +203,20 @@ def test_memory_limit_ends_the_refinement_honestly():
     assert not solution.reached
     assert any(notice.code == "accuracy-not-reached" for notice in solution.warnings)
     assert abs(solution.maxwell[0, 0] - FOUR_PI_EPSILON_0 * CUBE) < solution.maxwell_uncertainty[0, 0]
+
+
+def test_wanted_entries_alone_are_refined():
+    """Only the coupling asked must be accurate: fewer panels, and the other entries say what they are worth."""
+    surface = shapes.surface(
+        [shapes.plate(), shapes.moved(shapes.plate(), 0.0, 0.0, 0.5), shapes.moved(shapes.cube(), 9.0)]
+    )
+    everything = solve_capacitance(surface, accuracy=0.003)
+    one = solve_capacitance(surface, accuracy=0.003, want=[(0, 1)])
+    assert one.reached
+    assert one.maxwell_uncertainty[0, 1] <= 0.003 * abs(one.maxwell[0, 1])
+    assert len(one.panels) < len(everything.panels)
+    assert (
+        abs(one.maxwell - everything.maxwell).max() <= (one.maxwell_uncertainty + everything.maxwell_uncertainty).max()
+    )
+    with pytest.raises(InputError, match="want"):
+        solve_capacitance(surface, want=[(0, 3)])

@@ -165,6 +165,21 @@ def test_json_schema_names_every_key():
     text = json.dumps(schema)
     assert schema["$schema"].endswith("2020-12/schema")
     assert schema["additionalProperties"] is False
-    assert set(schema["properties"]) == {"title", "unit", "accuracy", "facets", "medium", "conductor"}
+    assert set(schema["properties"]) == {"title", "unit", "accuracy", "facets", "want", "medium", "conductor"}
     for key in ("potential", "charge", "ground", "rotation", "shift", "about", "relative_permittivity"):
         assert f'"{key}"' in text
+
+
+def test_wanted_couplings_name_conductors(load):
+    plain = """unit = "mm"
+want = [["a", "b"], ["a", "a"]]
+[[conductor]]
+name = "a"
+surface = "a.stl"
+[[conductor]]
+name = "b"
+surface = "b.stl"
+"""
+    assert load(plain).content.want == (("a", "b"), ("a", "a"))
+    with pytest.raises(InputError, match="want: no conductor is named 'c'; there are 'a', 'b'"):
+        load(plain.replace('["a", "b"]', '["a", "c"]'))
