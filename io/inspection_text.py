@@ -1,6 +1,7 @@
 """An inspection as text, 80 columns wide."""
 
 import textwrap
+from math import ceil, log10
 from pathlib import Path
 from typing import TYPE_CHECKING
 
@@ -33,7 +34,8 @@ def inspection_to_text(inspection: "Inspection", unit: str | None = None) -> str
     str
     """
     shown = inspection.unit if unit is None or inspection.unit is None else length_unit(unit)
-    ruler = _Ruler(shown)
+    low, high = inspection.box
+    ruler = _Ruler(shown, float(((high - low) ** 2).sum() ** 0.5))
     count = sum(body.panels for body in inspection.bodies)
     names = ", ".join(Path(file).name for file in inspection.files)
     bodies = _many(len(inspection.bodies), "body", "bodies")
@@ -49,16 +51,21 @@ def inspection_to_text(inspection: "Inspection", unit: str | None = None) -> str
 class _Ruler:
     """Lengths as text in one unit."""
 
-    def __init__(self, unit: str | None) -> None:
+    def __init__(self, unit: str | None, size: float) -> None:
         self.factor = 1.0 if unit is None else 1.0 / METRES_PER_UNIT[unit]
         self.unit = "" if unit is None else f" {unit}"
         self.said = "unit unknown" if unit is None else f"lengths in {unit}"
+        self.size = size
 
     def length(self, metres: float) -> str:
         return f"{metres * self.factor:.4g}{self.unit}"
 
     def place(self, metres: tuple[float, float, float]) -> str:
-        return "(" + ", ".join(f"{round(x * self.factor, 9) + 0.0:.5g}" for x in metres) + ")"
+        """Five digits, more where the model lies far off; what is nothing beside the model is 0."""
+        far = max(abs(x) for x in metres) / self.size if self.size > 0.0 else 1.0
+        digits = 5 + ceil(log10(far)) if far > 1.0 else 5
+        kept = (x * self.factor if abs(x) > 1e-9 * self.size else 0.0 for x in metres)
+        return "(" + ", ".join(f"{x:.{digits}g}" for x in kept) + ")"
 
     def spread(self, spread: "Spread") -> str:
         values = " / ".join(f"{v * self.factor:.3g}" for v in (spread.smallest, spread.median, spread.largest))

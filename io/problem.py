@@ -273,7 +273,8 @@ def _body_notices(case: Case, body: Body, name: str) -> list[Notice]:
     """What was changed of a body, and what is still wrong with it."""
     told = [Notice("mended", f"{name}: {'; '.join(body.notes)}")] if body.notes else []
     for fault in faults_of(Shape(body)):
-        if fault.severity != "note":
+        # After mending only the wall of a cavity is wound inwards, as it should be.
+        if fault.severity != "note" and fault.code != "inside-out":
             place = "" if fault.place is None else f" at {_place_text(fault.place, case.content.unit)}"
             told.append(Notice(fault.code, f"{name}: {fault.text}{place}: {fault.remedy}"))
     return told

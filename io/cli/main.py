@@ -3,6 +3,7 @@
 import argparse
 import atexit
 import contextlib
+import errno
 import os
 import sys
 import tempfile
@@ -55,6 +56,10 @@ def main(argv: Sequence[str] | None = None) -> int:
         # The reader of our output left (as `| head` does): nothing is wrong with the result.
         os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
         return 0
+    except OSError as error:
+        if error.errno != errno.ENOSPC or error.filename is not None:
+            return _failure(error, "--debug" in words)
+        return _complain("the output cannot be printed, the disk is full; free space or send it elsewhere", 2)
     except Exception as error:
         return _failure(error, "--debug" in words)
 

@@ -53,8 +53,8 @@ def run(args: argparse.Namespace) -> int:
     from daraf.io.progress import progress_for
     from daraf.io.result import check_destination
 
-    out = args.out or str(Path(args.files[0]).with_suffix(".daraf"))
     problem, seconds, accuracy = _read(args, case_file)
+    out = args.out or str(Path(args.files[0]).with_suffix(".daraf"))
     # Before the solve: an hour's work must not end at a folder that cannot be written.
     check_destination(out)
     with progress_for(quiet=args.quiet) as progress:

@@ -4,13 +4,13 @@ Materials, normals, curves and texture coordinates carry no geometry of conducto
 Objects name the parts; where a file has none, its groups do.
 """
 
-from itertools import pairwise
 from pathlib import Path
 
 import numpy as np
 
 from daraf.bem.errors import InputError
 
+from .polygons import polygons_to_triangles
 from .raw import (
     RawFile,
     RawPart,
@@ -28,14 +28,14 @@ __all__ = ["read_obj"]
 
 @register(".obj")
 def read_obj(path: Path) -> RawFile:
-    """Read an OBJ file; polygons are cut into triangles as fans."""
+    """Read an OBJ file; polygons are cut into triangles."""
     data = read_bytes(path)
     if not looks_like_text(data):
         raise InputError(f"{path}: is not text, so no OBJ; export it again")
     lines = normalised_text(data).replace(b"\\\n", b" ").split(b"\n")
     by_object = any(line.lstrip()[:2] == b"o " for line in lines)
     vertices: list[list[float]] = []
-    faces: dict[str, list[tuple[int, int, int]]] = {}
+    faces: dict[str, list[list[int]]] = {}
     name = ""
     for number, line in enumerate(lines, start=1):
         words = line.split(b"#", 1)[0].split()
@@ -47,19 +47,18 @@ def read_obj(path: Path) -> RawFile:
             corners = [_index(path, number, word, len(vertices)) for word in words[1:]]
             if len(corners) < 3:
                 raise InputError(f"{path}: line {number}: a face needs three vertices; the file is damaged")
-            fan = faces.setdefault(name, [])
-            fan.extend((corners[0], b, c) for b, c in pairwise(corners[1:]))
+            faces.setdefault(name, []).append(corners)
         elif words[0] == (b"o" if by_object else b"g"):
             name = b" ".join(words[1:]).decode("utf-8", "replace")
     return RawFile(path, _parts(path, np.array(vertices, dtype=np.float64).reshape(-1, 3), faces))
 
 
-def _parts(path: Path, vertices: np.ndarray, faces: dict[str, list[tuple[int, int, int]]]) -> list[RawPart]:
+def _parts(path: Path, vertices: np.ndarray, faces: dict[str, list[list[int]]]) -> list[RawPart]:
     if not faces:
         raise InputError(f"{path}: holds no face ('f' line), so no surface; export it again as a surface mesh")
     parts = []
-    for name, fan in faces.items():
-        triangles = np.array(fan, dtype=np.int64)
+    for name, polygons in faces.items():
+        triangles = polygons_to_triangles(vertices, polygons)
         if triangles.max() >= len(vertices):
             bad = int(triangles.max())
             raise InputError(f"{path}: a face names vertex {bad + 1}, there are {len(vertices)}; export it again")

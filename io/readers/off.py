@@ -1,12 +1,12 @@
 """OFF: the Object File Format of Geomview, text form (geomview.org, OFF file format description)."""
 
-from itertools import pairwise
 from pathlib import Path
 
 import numpy as np
 
 from daraf.bem.errors import InputError
 
+from .polygons import polygons_to_triangles
 from .raw import (
     RawFile,
     RawPart,
@@ -24,7 +24,7 @@ __all__ = ["read_off"]
 
 @register(".off")
 def read_off(path: Path) -> RawFile:
-    """Read a text OFF file; polygons are cut into triangles as fans, colours are skipped."""
+    """Read a text OFF file; polygons are cut into triangles, colours are skipped."""
     data = read_bytes(path)
     text = normalised_text(data)
     if not looks_like_text(data) or b"OFF" not in text[:200].split(b"\n", 1)[0] + text[:8]:
@@ -45,7 +45,8 @@ def read_off(path: Path) -> RawFile:
             f"{len(lines) - 1} lines follow; it is truncated, export it again"
         )
     vertices = _vertices(path, lines[1 : 1 + n_vertices])
-    triangles = _triangles(path, lines[1 + n_vertices : 1 + n_vertices + n_faces])
+    polygons = _polygons(path, lines[1 + n_vertices : 1 + n_vertices + n_faces])
+    triangles = polygons_to_triangles(vertices, polygons)
     part = check_part(path, RawPart("", vertices, triangles, 0.0))
     return RawFile(path, [RawPart("", part.vertices, part.triangles, text_spacing(part.vertices))])
 
@@ -67,8 +68,8 @@ def _vertices(path: Path, lines: list[list[bytes]]) -> np.ndarray:
         raise InputError(f"{path}: a vertex is not three numbers; the file is damaged") from None
 
 
-def _triangles(path: Path, lines: list[list[bytes]]) -> np.ndarray:
-    fan: list[tuple[int, int, int]] = []
+def _polygons(path: Path, lines: list[list[bytes]]) -> list[list[int]]:
+    polygons: list[list[int]] = []
     for number, words in enumerate(lines, start=1):
         try:
             count = int(words[0])
@@ -77,5 +78,5 @@ def _triangles(path: Path, lines: list[list[bytes]]) -> np.ndarray:
             corners, count = [], 0
         if count < 3 or len(corners) != count:
             raise InputError(f"{path}: face {number} is incomplete; the file is truncated or damaged")
-        fan.extend((corners[0], b, c) for b, c in pairwise(corners[1:]))
-    return np.array(fan, dtype=np.int64).reshape(-1, 3)
+        polygons.append(corners)
+    return polygons

@@ -2,11 +2,13 @@
 
 from io import BytesIO
 from pathlib import Path
+from typing import Any
 
 import numpy as np
 
 from daraf.bem.errors import InputError
 
+from .polygons import polygons_to_triangles
 from .raw import (
     RawFile,
     RawPart,
@@ -40,7 +42,7 @@ def read_ply(path: Path) -> RawFile:
     if not isinstance(mesh, trimesh.Trimesh):
         raise InputError(f"{path}: holds points but no faces; export it again as a surface mesh")
     vertices = np.array(mesh.vertices, dtype=np.float64)
-    triangles = np.array(mesh.faces, dtype=np.int64)
+    triangles = _triangles(mesh, vertices)
     if len(vertices) != elements["vertex"] or len(triangles) < elements["face"]:
         raise InputError(
             f"{path}: its header promises {elements['vertex']} vertices and {elements['face']} faces, but "
@@ -49,6 +51,18 @@ def read_ply(path: Path) -> RawFile:
     part = check_part(path, RawPart("", vertices, triangles, 0.0))
     spacing = text_spacing(vertices) if text_form or double else single_spacing(vertices)
     return RawFile(path, [RawPart("", part.vertices, part.triangles, spacing)])
+
+
+def _triangles(mesh: Any, vertices: np.ndarray) -> np.ndarray:
+    """Faces of a mesh, cut anew where polygons were: the library makes fans of concave ones too."""
+    data = mesh.metadata.get("_ply_raw", {}).get("face", {}).get("data")
+    known = (data.dtype.names if isinstance(data, np.ndarray) else data) or ()
+    indices = next((data[key] for key in ("vertex_indices", "vertex_index") if key in known), None)
+    if indices is not None and indices.dtype.names:  # binary: the count, then the corners
+        indices = indices[indices.dtype.names[-1]]
+    if indices is None or (np.ndim(indices) == 2 and np.shape(indices)[1] == 3):
+        return np.array(mesh.faces, dtype=np.int64)
+    return polygons_to_triangles(vertices, [[int(k) for k in corners] for corners in indices if len(corners) >= 3])
 
 
 def _header(path: Path, data: bytes) -> tuple[dict[str, int], bool, bool]:

@@ -1,5 +1,6 @@
 """The command line in this process: output, exit codes, nothing written on failure."""
 
+import errno
 import json
 import os
 import subprocess
@@ -41,7 +42,7 @@ def solver(monkeypatch):
     """Stands for the real solver, which has its own tests; remembers how it was called."""
     calls = []
 
-    def solve(surface, *, relative_permittivity, accuracy, memory_limit, facets, progress):
+    def solve(surface, *, relative_permittivity, accuracy, memory_limit, facets, want, progress):
         calls.append({"accuracy": accuracy, "memory_limit": memory_limit, "facets": facets})
         progress("assembling", 0, 10)
         progress("assembling", 10, 10, "one pass")
@@ -126,6 +127,7 @@ BAD = [
     (["solve", "probe.toml", "--out", "head.stl"], "no result of daraf, so it is not replaced"),
     (["solve", "none.toml"], "none.toml: no such file"),
     (["solve", "none.stl", "--unit", "mm"], "none.stl"),
+    (["solve", ".", "--unit", "mm"], "is a folder"),
     (["solve", "head.stl"], "head.stl"),
     (["solve", "head.stl", "--unit", "parsec"], "parsec"),
     (["inspect"], "FILE"),
@@ -188,6 +190,17 @@ def test_out_of_memory(folder, capsys, monkeypatch):
     failing(monkeypatch, MemoryError())
     assert main(["solve", str(folder / "probe.toml")]) == 2
     assert "not enough memory" in capsys.readouterr().err
+
+
+def test_output_to_a_full_disk_is_one_line(folder, solver, capsys, monkeypatch):
+    def full(_text):
+        raise OSError(errno.ENOSPC, "No space left on device")
+
+    monkeypatch.setattr(sys.stdout, "write", full)
+    assert main(["solve", str(folder / "probe.toml"), "-q"]) == 2
+    assert capsys.readouterr().err == (
+        "daraf: the output cannot be printed, the disk is full; free space or send it elsewhere\n"
+    )
 
 
 def test_help_loads_nothing_heavy():

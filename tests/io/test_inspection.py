@@ -217,3 +217,15 @@ def test_files_with_and_without_unit_do_not_mix(files, tmp_path):
     with pytest.raises(InputError, match=r"plate\.stl: carries no unit while another file does"):
         inspect_files([*files, tmp_path / "other.glb"])
     assert inspect_files(tmp_path / "other.glb").unit == "m"
+
+
+@pytest.mark.parametrize(
+    ("scale", "shift", "place"),
+    [
+        (1e-9, 0.0, "from (-2e-09, -1e-09, -5e-10) to (2e-09, 1e-09, 5e-10)"),
+        (1.0, 1e7, "from (9999998, -1, -0.5) to (10000002, 1, 0.5)"),
+    ],
+)
+def test_places_of_tiny_and_far_off_models(scale, shift, place):
+    body = body_of(BOX.vertices * scale + [shift, 0.0, 0.0], BOX.faces)
+    assert place in " ".join(inspection_to_text(inspect_bodies([body])).split())

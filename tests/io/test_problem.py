@@ -4,6 +4,7 @@ import hashlib
 
 import numpy as np
 import pytest
+import trimesh
 from sample_solution import ascii_stl
 
 from daraf.bem.errors import InputError
@@ -159,3 +160,11 @@ def test_bodies_of_one_conductor_may_meet_and_it_is_told(folder):
     parts = [{"surface": "wall.stl"}, {"surface": "wall.stl", "shift": "0.5 0.5 0.25 mm"}]
     problem = build(folder, {"name": "both", "part": parts})
     assert [one.code for one in problem.notices] == ["bodies-meet"]
+
+
+def test_the_wall_of_a_cavity_is_not_called_inside_out(folder):
+    outer, inner = trimesh.creation.icosphere(1, radius=2.0), trimesh.creation.icosphere(1)
+    inner.invert()
+    trimesh.util.concatenate([outer, inner]).export(folder / "shell.stl")
+    problem = build(folder, {"name": "shell", "surface": "shell.stl"})
+    assert "inside-out" not in [one.code for one in problem.notices]

@@ -9,6 +9,7 @@ from hypothesis import strategies as st
 from daraf.bem.errors import InputError
 from daraf.io.bodies import pick_bodies, read_bodies
 from daraf.io.mesh_units import METRES_PER_UNIT, length_unit
+from daraf.io.readers.polygons import polygons_to_triangles
 
 
 def box(size=(40.0, 20.0, 8.0), at=(0.0, 0.0, 0.0)):
@@ -199,3 +200,52 @@ def test_input_files_are_left_alone(tmp_path):
     before = path.read_bytes()
     read_bodies(path, "mm")
     assert path.read_bytes() == before
+
+
+DENT = np.array([[0, 0, 0], [1, 0, 0], [1, 1, 0], [0.5, 0.2, 0], [0, 1, 0]], dtype=float)  # area 0.6; a fan covers 0.9
+
+
+def area_of(body):
+    a, b, c = (body.vertices[body.triangles[:, k]] for k in range(3))
+    return 0.5 * np.linalg.norm(np.cross(b - a, c - a), axis=1).sum()
+
+
+def dented(kind):
+    """One concave pentagon as a file."""
+    lines = "".join("{:g} {:g} {:g}\n".format(*corner) for corner in DENT)
+    header = (
+        "ply\nformat {} 1.0\nelement vertex 5\nproperty float x\nproperty float y\nproperty float z\n"
+        "element face 1\nproperty list uchar int vertex_indices\nend_header\n"
+    )
+    binary = DENT.astype("<f4").tobytes() + bytes([5]) + np.arange(5, dtype="<i4").tobytes()
+    return {
+        "obj": ("".join(f"v {line}\n" for line in lines.splitlines()) + "f 1 2 3 4 5\n").encode(),
+        "off": f"OFF\n5 1 0\n{lines}5 0 1 2 3 4\n".encode(),
+        "text.ply": f"{header.format('ascii')}{lines}5 0 1 2 3 4\n".encode(),
+        "binary.ply": header.format("binary_little_endian").encode() + binary,
+    }[kind]
+
+
+@pytest.mark.parametrize("kind", ["obj", "off", "text.ply", "binary.ply"])
+def test_concave_polygons_keep_their_area(tmp_path, kind):
+    (body,) = read_bodies(write(tmp_path / f"dent.{kind}", dented(kind)), "m")
+    assert body.triangles.shape == (3, 3)
+    assert area_of(body) == pytest.approx(0.6, rel=1e-6)
+
+
+@given(st.integers(3, 12), st.integers(0, 10_000))
+def test_star_shaped_polygons_are_cut_without_overlap(n, seed):
+    rng = np.random.default_rng(seed)
+    angle = (np.arange(n) + 0.8 * rng.random(n)) * 2 * np.pi / n
+    radius = 0.2 + rng.random(n)
+    flat = np.column_stack([radius * np.cos(angle), radius * np.sin(angle), 0 * angle])
+    turn = trimesh.transformations.random_rotation_matrix(rng.random(3))[:3, :3]
+    start = int(rng.integers(n))
+    triangles = polygons_to_triangles(flat @ turn.T, [np.roll(np.arange(n), start).tolist(), [0, 1, 2]])
+    assert triangles.shape == (n - 1, 3)
+    assert triangles[-1].tolist() == [0, 1, 2]  # the order of the faces stays
+    a, b, c = (flat[triangles[:-1, k]] for k in range(3))
+    doubled = np.cross(b - a, c - a)[:, 2]
+    x, y = flat[:, 0], flat[:, 1]
+    assert (doubled > -1e-12).all()
+    assert doubled.sum() == pytest.approx(np.dot(x, np.roll(y, -1)) - np.dot(y, np.roll(x, -1)))
