@@ -25,6 +25,9 @@ BoolArray = NDArray[np.bool_]
 #: the energy against uniform charge, in two dimensions, by 3/2 - ln 4 = 0.11 of about ln(2 l / w) + 1/2 for the
 #: length l and width w of the strip.
 SYMMETRIC_GAIN = 0.05
+#: Share of its self energy that a panel at an edge gains at least by a split across: its halves may be equal by chance,
+#: where the charge crowds at the edge and under another conductor's as well.
+EDGE_GAIN = 0.005
 #: Capacitance that the fringe along an edge may hide, per eps and length of the edge. Measured on close discs.
 FRINGE_GAIN = 0.12
 
@@ -81,9 +84,10 @@ def feared_gains(
     -------
     (n_panels, 2, n_conductors) float
     """
-    hidden = np.sqrt(SYMMETRIC_GAIN * self_terms)[:, None] * density
-    larger = np.abs(hidden)[:, None, :] > np.abs(gains)
-    feared = np.where(symmetric[:, :, None] & larger, hidden[:, None, :], gains)
+    at_edge = np.stack([sides[:, [1, 3]].max(axis=1), sides[:, [0, 2]].max(axis=1)], axis=1) > SMOOTH_DECAY
+    share = np.where(symmetric, SYMMETRIC_GAIN, np.where(at_edge, EDGE_GAIN, 0.0))
+    hidden = np.sqrt(share * self_terms[:, None])[:, :, None] * density[:, None, :]
+    feared = np.where(np.abs(hidden) > np.abs(gains), hidden, gains)
     if panels.n_conductors == 1:
         return feared
     lengths = np.linalg.norm(np.roll(panels.corners, -1, axis=1) - panels.corners, axis=2)

@@ -220,3 +220,22 @@ def test_wanted_entries_alone_are_refined():
     )
     with pytest.raises(InputError, match="want"):
         solve_capacitance(surface, want=[(0, 3)])
+
+
+def test_an_edge_over_a_panel_near_its_own_edge_is_not_missed():
+    """Three sheets, the middle one 1 mm wider all round: charge crowds under the outer rims and at its own rim alike.
+
+    The halves of a panel over both are equal by chance, and the estimate of the error vanishes there.
+    """
+
+    def sheet(side, height):
+        return shapes.moved(shapes.plate(side, side), 0.0, 0.0, height)
+
+    surface = shapes.surface([sheet(20e-3, 0.0), sheet(22e-3, 1e-3), sheet(20e-3, 2e-3)])
+    quick = solve_capacitance(surface, accuracy=0.01)
+    fine = solve_capacitance(surface, accuracy=0.001)
+    allowed = quick.maxwell_uncertainty + fine.maxwell_uncertainty
+    assert (np.abs(quick.maxwell - fine.maxwell) <= allowed).all()
+    # graded collocation of another code, extrapolated: 8.4548 and -0.0998 pF, good to about 3 in the last place
+    assert fine.maxwell[1, 1] == pytest.approx(8.4548e-12, rel=2e-3, abs=0.0)
+    assert fine.maxwell[0, 2] == pytest.approx(-0.0998e-12, rel=5e-3, abs=0.0)
