@@ -28,6 +28,8 @@ Progress = Callable[..., None]
 
 #: The factorisation is repeated with this share added to the diagonal if it fails: two panels coincide.
 COINCIDENT = 1e-10
+#: A body counts as refined once more if the panels split hold this share of its measured gains.
+REFINED_SHARE = 0.2
 #: Below this many panels LAPACK runs on one thread.
 SERIAL = 3000
 
@@ -259,8 +261,11 @@ def plan_next(result: PassResult, weights: FloatArray) -> Plan:
     known = result.matrix[np.ix_(kept, kept)]
     symmetric = (result.symmetric & ~was_split)[parent]
     measured = was_split & ~result.symmetric
-    refined = result.refined.copy()
-    refined[np.unique(result.panels.body[split > 0])] += 1
+    # splitting what is only feared says nothing about the gains that are measured
+    body, measured_worth = result.panels.body, worth.sum(axis=1)
+    of_body = np.bincount(body, measured_worth, len(result.refined))
+    was = np.bincount(body, np.where(split > 0, measured_worth, 0.0), len(result.refined))
+    refined = result.refined + (was > REFINED_SHARE * of_body)
     return Plan(panels, symmetric, sides, refined, known, parent, measured, worth, weights, _without_matrix(result))
 
 
