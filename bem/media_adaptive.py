@@ -1,0 +1,274 @@
+"""One pass with media: integrals, state and adjoint of every set of permittivities, estimate, and the next plan.
+
+As :mod:`daraf.bem.adaptive`, with two gains per function where the symmetric system has one: the extrapolated value
+adds ``left_i right_j`` and need not rise. All sets of permittivities (frequencies) share panels and integrals.
+"""
+
+import time
+from collections.abc import Callable
+from dataclasses import dataclass, field
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+from scipy.linalg import lu_factor, lu_solve
+
+from .adaptive import REFINED_SHARE
+from .bisection import SPLIT_U, SPLIT_V, split_panels, split_sides
+from .extrapolation import GREATEST_DECAY, SMOOTH_DECAY, decay_of_parts, realised_share, series_factor
+from .hidden import feared_gains
+from .media import Media, PanelMedia
+from .media_indicator import MediaGains, media_gains
+from .media_matrix import MediaIntegrals, media_integrals, system_matrix
+from .panels import Panels
+from .refinement import choose_splits
+from .solution import Notice
+
+__all__ = ["MediaPass", "MediaPlan", "media_pass", "media_worth", "plan_next_media", "weighted_gains"]
+
+FloatArray = NDArray[np.float64]
+IntArray = NDArray[np.int64]
+BoolArray = NDArray[np.bool_]
+Array = NDArray[Any]
+
+
+@dataclass(frozen=True, eq=False)
+class MediaPass:
+    """What one pass found; bare values, multiply by 4 pi epsilon_0 for farads. S states, n conductors.
+
+    Attributes
+    ----------
+    panels : Panels
+    integrals : MediaIntegrals or None
+    state, adjoint : (S, n_panels, n) float or complex
+        Total charge density of each conductor at 1 V, and the adjoint: on conductors the free charge density.
+    value, limit : (S, n, n) float or complex, m
+        Solved and extrapolated Maxwell matrix.
+    defect : (S, n, n) float, m
+        Half the difference between an entry and its mirror image.
+    gains, feared : list of MediaGains
+        One for each state; feared: or what a panel may hide by symmetry where that is more.
+    symmetric, sides, refined, decay, realised, drift
+        As in :class:`daraf.bem.adaptive.PassResult`.
+    change : (S, n, n) or None
+        ``limit`` less that of the pass before.
+    seconds : dict of str to float
+    notices : list of Notice
+    """
+
+    panels: Panels
+    integrals: MediaIntegrals | None
+    state: Array
+    adjoint: Array
+    value: Array
+    limit: Array
+    defect: FloatArray
+    gains: list[MediaGains]
+    feared: list[MediaGains]
+    symmetric: BoolArray
+    sides: FloatArray
+    refined: IntArray
+    decay: FloatArray
+    realised: float
+    drift: float
+    change: Array | None
+    seconds: dict[str, float]
+    notices: list[Notice] = field(default_factory=list)
+
+
+@dataclass(frozen=True, eq=False)
+class MediaPlan:
+    """Panels for the next pass; attributes as in :class:`daraf.bem.adaptive.Plan`."""
+
+    panels: Panels
+    symmetric: BoolArray
+    sides: FloatArray
+    refined: IntArray
+    kept: IntArray | None = None
+    parent: IntArray | None = None
+    was_split: BoolArray | None = None
+    worth: FloatArray | None = None
+    weights: FloatArray | None = None
+    before: MediaPass | None = None
+
+
+def media_pass(plan: MediaPlan, media: Media, report: Callable[[str, float, float], None]) -> MediaPass:
+    """Assemble, solve state and adjoint, and estimate.
+
+    Parameters
+    ----------
+    plan : MediaPlan
+    media : Media
+    report : callable
+        Told (stage, done, total).
+    """
+    panels, before = plan.panels, plan.before
+    seconds: dict[str, float] = {}
+    start = time.perf_counter()
+    filled = [media.at(panels, s) for s in range(media.n_states)]
+    integrals = media_integrals(
+        panels,
+        filled[0],
+        known=None if before is None else before.integrals,
+        kept=plan.kept,
+        progress=lambda done, total: report("matrix", done, total),
+    )
+    seconds["matrix"] = time.perf_counter() - start
+    start = time.perf_counter()
+    solved = []
+    for s, at in enumerate(filled):
+        report("factorisation", float(s), float(media.n_states))
+        solved.append(_solve(integrals, at, panels, media.n_conductors))
+    state, adjoint, value = (np.array(column) for column in zip(*solved, strict=True))
+    mirrored = value.transpose(0, 2, 1)
+    defect, value = 0.5 * np.abs(value - mirrored), 0.5 * (value + mirrored)
+    seconds["factorisation"] = time.perf_counter() - start
+    start = time.perf_counter()
+    self_terms = np.zeros(len(panels))
+    self_terms[integrals.metal] = integrals.potential[np.arange(len(integrals.metal)), integrals.metal]
+    gains = [
+        media_gains(
+            panels,
+            at,
+            state[s],
+            adjoint[s],
+            self_terms,
+            (at.jump[integrals.crossed] / (4.0 * np.pi)) @ integrals.flux,
+            progress=lambda done, total: report("estimate", done, total),
+        )
+        for s, at in enumerate(filled)
+    ]
+    feared = [_feared(plan, at, self_terms, state[s], adjoint[s], gains[s]) for s, at in enumerate(filled)]
+    decay, realised = _history(plan, value, gains)
+    weighted = [weighted_gains(g, np.minimum(decay, GREATEST_DECAY), realised) for g in gains]
+    limit = value + np.array([_symmetric(left.T @ right) for left, right in weighted])
+    seconds["estimate"] = time.perf_counter() - start
+    return MediaPass(
+        panels=panels,
+        integrals=integrals,
+        state=state,
+        adjoint=adjoint,
+        value=value,
+        limit=limit,
+        defect=defect,
+        gains=gains,
+        feared=feared,
+        symmetric=plan.symmetric,
+        sides=plan.sides,
+        refined=plan.refined,
+        decay=decay,
+        realised=realised,
+        drift=0.0 if before is None else realised - before.realised,
+        change=None if before is None else limit - before.limit,
+        seconds=seconds,
+    )
+
+
+def _symmetric(matrix: Array) -> Array:
+    return np.asarray(0.5 * (matrix + matrix.T))
+
+
+def _solve(integrals: MediaIntegrals, media: PanelMedia, panels: Panels, n_conductors: int) -> tuple[Array, ...]:
+    """State, adjoint and Maxwell matrix, by LU factorisation."""
+    matrix, scale, charge = system_matrix(integrals, media, panels)
+    held = (panels.conductor[:, None] == np.arange(n_conductors)) & ~media.interface[:, None]
+    factor = lu_factor(matrix, overwrite_a=True, check_finite=False)
+    state = lu_solve(factor, (scale * panels.areas)[:, None] * held, check_finite=False)
+    adjoint = scale[:, None] * lu_solve(factor, charge.T, trans=1, check_finite=False)
+    return np.ascontiguousarray(state), np.ascontiguousarray(adjoint), charge @ state
+
+
+def _feared(
+    plan: MediaPlan, media: PanelMedia, self_terms: FloatArray, state: Array, adjoint: Array, gains: MediaGains
+) -> MediaGains:
+    """Gains, or what conductor panels may hide where that is more."""
+    metal = np.flatnonzero(~media.interface)
+    panels = plan.panels
+    part = Panels(
+        panels.corners[metal],
+        panels.n_corners[metal],
+        panels.body[metal],
+        panels.conductor[metal],
+        panels.region[metal],
+    )
+    unit = np.abs(media.outside[metal])
+    left, right = gains.left.copy(), gains.right.copy()
+    for found, density, factor in ((left, adjoint, unit), (right, state, np.ones(len(metal)))):
+        found[metal] = factor[:, None, None] * feared_gains(
+            part,
+            found[metal] / factor[:, None, None],
+            density[metal] / factor[:, None],
+            self_terms[metal],
+            plan.symmetric[metal],
+            plan.sides[metal],
+        )
+    return MediaGains(left, right)
+
+
+def media_worth(gains: list[MediaGains], weights: FloatArray) -> FloatArray:
+    """Worth of each gain, (n_panels, 2): its products over all entries and states, weighted by `weights` (S, n, n)."""
+    worth = np.zeros(gains[0].left.shape[:2])
+    for g, weight in zip(gains, weights, strict=True):
+        worth += np.einsum("pdi,pdi->pd", np.abs(g.left) @ weight, np.abs(g.right))
+    return worth
+
+
+def weighted_gains(gains: MediaGains, decay: FloatArray, realised: float) -> tuple[Array, Array]:
+    """Gains with the root of what all further splits add to them, flattened: (2 n_panels, n_conductors)."""
+    factor = np.sqrt(np.sqrt(realised) * series_factor(decay))[:, :, None]
+    n = gains.left.shape[2]
+    return np.asarray((gains.left * factor).reshape(-1, n)), np.asarray((gains.right * factor).reshape(-1, n))
+
+
+def _history(plan: MediaPlan, value: Array, gains: list[MediaGains]) -> tuple[FloatArray, float]:
+    """Decay of each panel's gains and the realised share of what was promised."""
+    before = plan.before
+    if before is None or plan.parent is None or plan.was_split is None or plan.worth is None or plan.weights is None:
+        start = np.stack([plan.sides[:, [1, 3]].max(axis=1), plan.sides[:, [0, 2]].max(axis=1)], axis=1)
+        start[plan.panels.n_corners == 3] = SMOOTH_DECAY
+        return start, 1.0
+    decay = decay_of_parts(plan.parent, plan.was_split, plan.worth, media_worth(gains, plan.weights), before.decay)
+    promised, gained = [], []
+    for s, g in enumerate(before.gains):
+        diagonal = np.abs(np.diag(value[s]))
+        promised.append(np.einsum("pdi,pdi,pd->i", g.left, g.right, plan.was_split).real / diagonal)
+        gained.append((np.diag(value[s]) - np.diag(before.value[s])).real / diagonal)
+    return decay, realised_share(np.concatenate(gained), np.concatenate(promised))
+
+
+def plan_next_media(result: MediaPass, weights: FloatArray) -> MediaPlan:
+    """Split the panels that hold most of what is missing.
+
+    Parameters
+    ----------
+    result : MediaPass
+    weights : (S, n, n) float
+        How much each entry matters.
+
+    Returns
+    -------
+    MediaPlan
+    """
+    worth = media_worth(result.gains, weights)
+    split = choose_splits(media_worth(result.feared, weights))
+    panels, parent = split_panels(result.panels, split)
+    sides = split_sides(result.panels, split, result.sides, SMOOTH_DECAY)
+    kept = parent[: int(np.count_nonzero(split == 0))]
+    was_split = np.stack([(split & SPLIT_U) > 0, (split & SPLIT_V) > 0], axis=1)
+    was_split[result.panels.n_corners == 3] = (split > 0)[result.panels.n_corners == 3, None]
+    symmetric = (result.symmetric & ~was_split)[parent]
+    body, measured = result.panels.body, worth.sum(axis=1)
+    of_body = np.bincount(body, measured, len(result.refined))
+    was = np.bincount(body, np.where(split > 0, measured, 0.0), len(result.refined))
+    return MediaPlan(
+        panels,
+        symmetric,
+        sides,
+        result.refined + (was > REFINED_SHARE * of_body),
+        kept,
+        parent,
+        was_split & ~result.symmetric,
+        worth,
+        weights,
+        result,
+    )

@@ -1,0 +1,314 @@
+"""Maxwell capacitance matrix of conductors among dielectrics, lossy ones too, with its uncertainty."""
+
+import time
+from collections.abc import Callable, Sequence
+from dataclasses import dataclass
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+from .capacitance import FIRST_PASS, INTEGRATION, MOST_PANELS, POINTLESS, _accuracies, _prepare
+from .constants import FOUR_PI_EPSILON_0
+from .errors import InputError
+from .extrapolation import SHARES
+from .facets import Facets
+from .media import Media
+from .media_adaptive import MediaPass, MediaPlan, media_pass, plan_next_media, weighted_gains
+from .media_facets import media_facet_uncertainty
+from .memory import free_memory, peak_memory
+from .panels import Panels
+from .refinement import accuracy_targets
+from .solution import Notice
+from .surface import Surface
+
+__all__ = ["MediaSolution", "solve_media"]
+
+FloatArray = NDArray[np.float64]
+BoolArray = NDArray[np.bool_]
+Array = NDArray[Any]
+Progress = Callable[..., None]
+
+#: Share of the change since the pass before that counts as uncertain.
+CHANGE_SHARE = 1.0
+#: Gains of both signs add up to less than their size: this share of what cancels within a body counts as uncertain.
+CANCELLED_SHARE = 0.3
+#: Matrices of a pass held at once: the integrals, the system and its factor, and the integrals of the pass before.
+_MATRICES = 4
+
+
+@dataclass(frozen=True, eq=False)
+class MediaSolution:
+    """Complex Maxwell matrices with their uncertainties, S states (sets of permittivities) of n conductors.
+
+    Attributes
+    ----------
+    conductor_names : tuple of str
+    maxwell : (S, n, n) float or complex, F
+        Its negative imaginary part times the angular frequency is the conductance matrix.
+    maxwell_uncertainty : (S, n, n) float or complex, F
+        Expanded, k = 2: of the real part, and in the imaginary part that of the imaginary part.
+    to_infinity, to_infinity_uncertainty : (S, n) float or complex, F
+        Row sums.
+    budget : dict of str to (S, n, n) float or complex, F
+    accuracy : float
+    reached : bool
+    media : Media
+    panels : Panels
+    state : (S, n, n_panels) float or complex, C/m2 per V
+        Total charge density (free and bound) with conductor i at 1 V: its vacuum field is the field.
+    free : (S, n, n_panels) float or complex, C/m2 per V
+        Free charge density on conductors; on interfaces 0.
+    passes : list of int
+        Panels of each pass.
+    method : str
+    seconds : dict of str to float
+    peak_memory_bytes : int
+    warnings : list of Notice
+    interrupted : bool
+    """
+
+    conductor_names: tuple[str, ...]
+    maxwell: Array
+    maxwell_uncertainty: Array
+    to_infinity: Array
+    to_infinity_uncertainty: Array
+    budget: dict[str, Array]
+    accuracy: float
+    reached: bool
+    media: Media
+    panels: Panels
+    state: Array
+    free: Array
+    passes: list[int]
+    method: str
+    seconds: dict[str, float]
+    peak_memory_bytes: int
+    warnings: list[Notice]
+    interrupted: bool = False
+
+
+@dataclass(frozen=True, eq=False)
+class _Run:
+    """How the solve went."""
+
+    passes: list[int]
+    seconds: dict[str, float]
+    notices: list[Notice]
+    interrupted: bool
+
+
+@dataclass(frozen=True, eq=False)
+class _Judgement:
+    """Value and uncertainty, bare; the last column is the sum over all conductors."""
+
+    value: Array
+    lines: dict[str, Array]
+    total: Array
+    targets: FloatArray
+    n_passes: int
+
+    @property
+    def missed(self) -> BoolArray:
+        """Entries not accurate enough yet; after one pass alone they must be so by far to be believed."""
+        n = self.targets.shape[1]
+        missed = np.abs(self.total[:, :, :n]) > self.targets
+        if self.n_passes == 1:
+            missed |= np.abs(self.lines["discretisation"][:, :, :n]) > FIRST_PASS * self.targets
+        return np.asarray(missed)
+
+    @property
+    def pointless(self) -> bool:
+        """Whether no entry that misses its target would gain from smaller panels."""
+        n = self.targets.shape[1]
+        fixed = np.hypot(np.abs(self.lines["facets"]), np.abs(self.lines["integration"]))
+        return bool((~self.missed | (np.abs(self.lines["discretisation"]) < POINTLESS * fixed)[:, :, :n]).all())
+
+
+def solve_media(
+    surface: Surface,
+    media: Media,
+    *,
+    accuracy: float = 0.01,
+    memory_limit: int | None = None,
+    facets: str = "auto",
+    want: Sequence[tuple[int, int]] | None = None,
+    progress: Progress | None = None,
+) -> MediaSolution:
+    """Maxwell capacitance matrix of conductors among dielectrics.
+
+    Parameters
+    ----------
+    surface : Surface
+        Conductors first; groups of ``body_conductor`` from ``media.n_conductors`` on are interfaces.
+    media : Media
+    accuracy, memory_limit, facets, want, progress
+        As in :func:`daraf.bem.solve_capacitance`.
+
+    Returns
+    -------
+    MediaSolution
+
+    Raises
+    ------
+    InputError
+        If media and surface do not fit, or the boundary of a medium is not closed.
+    MemoryRefused
+        If the coarsest panels would not fit into memory.
+    """
+    media.check(surface)
+    if not 0.0 < accuracy < 1.0:
+        raise InputError(f"accuracy must lie between 0 and 1, got {accuracy:g}")
+    n = media.n_conductors
+    allowed = _accuracies(accuracy, want, n)
+    begin = time.perf_counter()
+    limit = memory_limit if memory_limit is not None else int(0.9 * free_memory())
+    report = progress or (lambda *_: None)
+    start, round_parts, notices, most = _prepare(surface, facets, limit)
+    most = max(len(start.panels), min(most, MOST_PANELS, int((limit / (_MATRICES * 8.0 * _cells(media))) ** 0.5)))
+    seconds = {"panels": time.perf_counter() - begin}
+    plan: MediaPlan | None = MediaPlan(start.panels, start.symmetric, start.sides, start.refined)
+    passes: list[int] = []
+    result = judgement = None
+    interrupted = False
+    try:
+        while plan is not None:
+            note = f"pass {len(passes) + 1}, {len(plan.panels)} panels"
+            result = media_pass(plan, media, _noted(report, note))
+            passes.append(len(plan.panels))
+            judgement = _judge(result, media, round_parts, allowed, len(passes))
+            excess = float((np.abs(judgement.total[:, :, :n]) / judgement.targets).max())
+            report("pass", float(len(passes)), 0.0, f"{note}, uncertainty {excess:.3g} x the one asked")
+            for stage, time_spent in result.seconds.items():
+                seconds[stage] = seconds.get(stage, 0.0) + time_spent
+            done = not judgement.missed.any() or judgement.pointless
+            plan = None if done else _next(result, judgement, most)
+    except KeyboardInterrupt:
+        if judgement is None:
+            raise
+        interrupted = True
+    assert result is not None
+    assert judgement is not None
+    seconds["total"] = time.perf_counter() - begin
+    return _solution(surface, media, result, judgement, _Run(passes, seconds, notices, interrupted), accuracy)
+
+
+def _noted(report: Progress, note: str) -> Callable[[str, float, float], None]:
+    return lambda stage, done, total: report(stage, done, total, note)
+
+
+def _cells(media: Media) -> float:
+    """Numbers per matrix entry: complex ones take two."""
+    return 1.5 if media.permittivity.imag.any() else 1.0
+
+
+def _judge(
+    result: MediaPass, media: Media, round_parts: Facets | None, accuracy: FloatArray, n_passes: int
+) -> _Judgement:
+    """Extrapolated value with the lines of its budget, one column more for the sum over all conductors."""
+    n = result.value.shape[1]
+    sums = np.hstack([np.eye(n), np.ones((n, 1))])
+    value = result.limit @ sums
+    diagonal = np.abs(np.einsum("sii->si", result.limit))
+    scale = np.sqrt(diagonal[:, :, None] * diagonal[:, None, :])
+    scale = np.concatenate([scale, scale.max(axis=2, keepdims=True)], axis=2)
+    lossy = np.iscomplexobj(value)
+    both = (1.0 + 1.0j) if lossy else 1.0
+    lines: dict[str, Array] = {
+        "discretisation": np.array([_spread(result, s, sums) for s in range(len(value))]),
+        "facets": np.zeros_like(value),
+        "integration": both * INTEGRATION * scale,
+        "reciprocity": both * np.concatenate([result.defect, result.defect.sum(axis=2, keepdims=True)], axis=2),
+    }
+    if round_parts is not None and round_parts.any:
+        lines["facets"] = both * np.array(
+            [
+                media_facet_uncertainty(
+                    round_parts, result.panels, media.at(result.panels, s), result.state[s], result.adjoint[s], sums
+                )
+                for s in range(len(value))
+            ]
+        )
+    total = _root_of_squares(list(lines.values()))
+    targets = np.array([accuracy_targets(np.abs(v[:, :n]), accuracy) for v in value])
+    return _Judgement(value, lines, total, targets, n_passes)
+
+
+def _root_of_squares(lines: list[Array]) -> Array:
+    real = np.sqrt(sum(line.real**2 for line in lines))
+    if not any(np.iscomplexobj(line) for line in lines):
+        return np.asarray(real)
+    return np.asarray(real + 1j * np.sqrt(sum(line.imag**2 for line in lines)))
+
+
+def _spread(result: MediaPass, state: int, sums: FloatArray) -> Array:
+    """Expanded uncertainty of the extrapolated value; the imaginary part holds that of the imaginary part."""
+    gains = result.feared[state]
+    plain = result.gains[state]
+    only_feared = (gains.left != plain.left).any(axis=2) | (gains.right != plain.right).any(axis=2)
+    left, right = weighted_gains(gains, np.where(only_feared, 0.0, result.decay), result.realised)
+    right = right @ sums
+    body = np.repeat(result.panels.body, 2)
+    parts = (np.real, np.imag) if np.iscomplexobj(left) else (np.real,)
+    found = []
+    for take in parts:
+        spread = np.zeros((left.shape[1], right.shape[1]))
+        for number in np.unique(body):
+            own = body == number
+            net = np.abs(take(left[own].T @ right[own]))
+            size = np.abs(left[own]).T @ np.abs(right[own])
+            share = SHARES[min(result.refined[number], len(SHARES) - 1)]
+            share += max(abs(result.drift) / result.realised, 0.5 * abs(1.0 - result.realised))
+            if len(parts) == 1:
+                net = net + CANCELLED_SHARE * (size - net)
+            spread += share * net
+        if result.change is not None:
+            spread = np.hypot(spread, CHANGE_SHARE * take(result.change[state] @ sums))
+        found.append(spread)
+    return np.asarray(found[0] if len(found) == 1 else found[0] + 1j * found[1])
+
+
+def _next(result: MediaPass, judgement: _Judgement, most: int) -> MediaPlan | None:
+    """Plan of the next pass, or None if there is no room for it."""
+    n = judgement.targets.shape[1]
+    plan = plan_next_media(result, np.abs(judgement.lines["discretisation"][:, :, :n]) / judgement.targets**2)
+    return None if len(plan.panels) > most else plan
+
+
+def _solution(
+    surface: Surface, media: Media, result: MediaPass, judgement: _Judgement, run: _Run, accuracy: float
+) -> MediaSolution:
+    """Farads, and what kept the accuracy from being reached."""
+    n = media.n_conductors
+    value, total = FOUR_PI_EPSILON_0 * judgement.value, FOUR_PI_EPSILON_0 * judgement.total
+    reached, notices = not judgement.missed.any(), run.notices
+    metal = np.flatnonzero(result.panels.conductor < n)
+    free = np.zeros_like(result.adjoint)
+    free[:, metal] = result.adjoint[:, metal]
+    if not reached:
+        ratio = np.abs(judgement.total[:, :, :n]) / judgement.targets
+        _, i, j = np.unravel_index(np.argmax(ratio), ratio.shape)
+        names = surface.conductor_names
+        cause = max(judgement.lines, key=lambda line: float(np.abs(judgement.lines[line][:, i, j]).max()))
+        text = f"the accuracy asked was not reached: {names[i]} - {names[j]} is driven by {cause}"
+        notices = [*notices, Notice("accuracy-not-reached", text)]
+    return MediaSolution(
+        conductor_names=surface.conductor_names[:n],
+        maxwell=value[:, :, :n],
+        maxwell_uncertainty=total[:, :, :n],
+        to_infinity=value[:, :, n],
+        to_infinity_uncertainty=total[:, :, n],
+        budget={cause: FOUR_PI_EPSILON_0 * line[:, :, :n] for cause, line in judgement.lines.items()},
+        accuracy=accuracy,
+        reached=reached,
+        media=media,
+        panels=result.panels,
+        state=FOUR_PI_EPSILON_0 * result.state.transpose(0, 2, 1),
+        free=FOUR_PI_EPSILON_0 * free.transpose(0, 2, 1),
+        passes=run.passes,
+        method="dense LU",
+        seconds=run.seconds,
+        peak_memory_bytes=peak_memory(),
+        warnings=notices,
+        interrupted=run.interrupted,
+    )
