@@ -304,14 +304,15 @@ def flux_rows(frames, rows, matrix, known, first, last):
     frames : (n, FRAME_SIZE) float
     rows : (m,) int
         Target panels.
-    matrix : (m, n) float, m2
+    matrix : (last - first, n) float, m2
         ``Phi(rows[r], j)``; zero where both are the same.
-    known : (2,) int
-        The first ``known[0]`` rows are known already in their first ``known[1]`` columns and left alone.
+    known : (3,) int
+        The first ``known[0]`` rows are known already for the first ``known[1]`` of each ``known[2]`` panels.
     first, last : int
     """
     for r in prange(first, last):
         i = rows[r]
-        start = known[1] if r < known[0] else 0
-        for j in range(start, len(frames)):
-            matrix[r, j] = 0.0 if i == j else flux_integral(frames[i], frames[j])
+        for j in range(len(frames)):
+            if r < known[0] and j % known[2] < known[1]:
+                continue
+            matrix[r - first, j] = 0.0 if i == j else flux_integral(frames[i], frames[j])

@@ -96,6 +96,8 @@ class Media:
         Medium in front of each body's surface and behind it; ``METAL`` behind a closed conductor.
     n_conductors : int
         Groups of ``surface.body_conductor`` from this number on are interfaces.
+    whole : (n_bodies,) int, optional
+        Bodies with equal numbers are pieces of one drawn surface, cut where media meet; by default each stands alone.
 
     Raises
     ------
@@ -107,6 +109,7 @@ class Media:
     outside: IntArray
     inside: IntArray
     n_conductors: int
+    whole: IntArray | None = None
 
     def __post_init__(self) -> None:
         put = object.__setattr__
@@ -114,6 +117,9 @@ class Media:
         put(self, "permittivity", value.reshape(len(value), -1))
         put(self, "outside", np.ascontiguousarray(self.outside, dtype=np.int64))
         put(self, "inside", np.ascontiguousarray(self.inside, dtype=np.int64))
+        if self.whole is None:
+            put(self, "whole", np.arange(len(self.outside)))
+        put(self, "whole", np.ascontiguousarray(self.whole, dtype=np.int64))
         if not np.isfinite(self.permittivity).all() or (self.permittivity.real < 1.0).any():
             raise InputError("media: every relative permittivity must be finite and at least 1")
         if (self.permittivity.imag > 0.0).any():
@@ -131,6 +137,8 @@ class Media:
         """Raise InputError if the media do not fit the surface."""
         if self.outside.shape != (surface.n_bodies,) or self.inside.shape != (surface.n_bodies,):
             raise InputError(f"media: outside and inside must name one medium for each of {surface.n_bodies} bodies")
+        if self.whole is None or self.whole.shape != (surface.n_bodies,):
+            raise InputError(f"media: whole must name one drawn surface for each of {surface.n_bodies} bodies")
         if not 1 <= self.n_conductors <= surface.n_conductors:
             raise InputError("media: at least one conductor is needed")
         interface = surface.body_conductor >= self.n_conductors

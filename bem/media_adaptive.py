@@ -17,9 +17,10 @@ from .adaptive import REFINED_SHARE
 from .bisection import SPLIT_U, SPLIT_V, split_panels, split_sides
 from .extrapolation import GREATEST_DECAY, SMOOTH_DECAY, decay_of_parts, realised_share, series_factor
 from .hidden import feared_gains
+from .images import Images
 from .media import Media, PanelMedia
 from .media_indicator import MediaGains, media_gains
-from .media_matrix import MediaIntegrals, media_integrals, system_matrix
+from .media_matrix import MediaIntegrals, media_integrals, self_terms, system_matrix
 from .panels import Panels
 from .refinement import choose_splits
 from .solution import Notice
@@ -92,23 +93,26 @@ class MediaPlan:
     before: MediaPass | None = None
 
 
-def media_pass(plan: MediaPlan, media: Media, report: Callable[[str, float, float], None]) -> MediaPass:
+def media_pass(plan: MediaPlan, media: Media, images: Images, report: Callable[[str, float, float], None]) -> MediaPass:
     """Assemble, solve state and adjoint, and estimate.
 
     Parameters
     ----------
     plan : MediaPlan
     media : Media
+    images : Images
     report : callable
         Told (stage, done, total).
     """
     panels, before = plan.panels, plan.before
     seconds: dict[str, float] = {}
     start = time.perf_counter()
+    placed = images.place(panels)
     filled = [media.at(panels, s) for s in range(media.n_states)]
     integrals = media_integrals(
         panels,
         filled[0],
+        placed=placed,
         known=None if before is None else before.integrals,
         kept=plan.kept,
         progress=lambda done, total: report("matrix", done, total),
@@ -124,21 +128,24 @@ def media_pass(plan: MediaPlan, media: Media, report: Callable[[str, float, floa
     defect, value = 0.5 * np.abs(value - mirrored), 0.5 * (value + mirrored)
     seconds["factorisation"] = time.perf_counter() - start
     start = time.perf_counter()
-    self_terms = np.zeros(len(panels))
-    self_terms[integrals.metal] = integrals.potential[np.arange(len(integrals.metal)), integrals.metal]
-    gains = [
-        media_gains(
-            panels,
-            at,
-            state[s],
-            adjoint[s],
-            self_terms,
-            (at.jump[integrals.crossed] / (4.0 * np.pi)) @ integrals.flux,
-            progress=lambda done, total: report("estimate", done, total),
+    gains, feared = [], []
+    own, direct = np.zeros(len(panels)), placed.direct
+    own[integrals.metal] = self_terms(panels.corners[integrals.metal])
+    for s, at in enumerate(filled):
+        received = (at.jump[integrals.crossed] / (4.0 * np.pi)) @ integrals.flux if integrals.closed else None
+        gains.append(
+            media_gains(
+                panels,
+                at,
+                state[s],
+                adjoint[s],
+                own,
+                received,
+                placed=placed,
+                progress=lambda done, total: report("estimate", done, total),
+            )
         )
-        for s, at in enumerate(filled)
-    ]
-    feared = [_feared(plan, at, self_terms, state[s], adjoint[s], gains[s]) for s, at in enumerate(filled)]
+        feared.append(_feared(plan, at, direct * own, state[s], adjoint[s], gains[s]))
     decay, realised = _history(plan, value, gains)
     weighted = [weighted_gains(g, np.minimum(decay, GREATEST_DECAY), realised) for g in gains]
     limit = value + np.array([_symmetric(left.T @ right) for left, right in weighted])

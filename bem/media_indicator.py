@@ -21,6 +21,7 @@ from .bisection import SPLIT_U, SPLIT_V, children
 from .field import polygon_field
 from .flux import middle_flux
 from .frames import AREA, CENTROID, NORMAL, RADIUS, panel_frames
+from .images import Images, PlacedImages
 from .indicator import _quad_gains, _triangle_gains, child_potentials
 from .jit import kernel, parallel_kernel, prange
 from .media import PanelMedia
@@ -122,8 +123,9 @@ def media_gains(
     state: Array,
     adjoint: Array,
     self_terms: FloatArray,
-    received: Array,
+    received: Array | None,
     *,
+    placed: PlacedImages | None = None,
     progress: Callable[[float, float], None] | None = None,
 ) -> MediaGains:
     """Two-level gains of every panel.
@@ -137,10 +139,12 @@ def media_gains(
     adjoint : (n_panels, n_conductors) float or complex
         Solution of the transposed system for the free charge of each conductor.
     self_terms : (n_panels,) float, m3
-        Integral of 1/r over each conductor panel with itself; not used on interfaces.
-    received : (n_panels,) float or complex, m2
+        Integral of 1/r over each conductor panel with itself, without images; not used on interfaces.
+    received : (n_panels,) float or complex, m2, or None
         ``sum_k jump_k Phi(k, p) / (4 pi)`` of each panel p. By Gauss's law it is the same all over the panel: the
-        rules here, which are coarse, are set right by it, since in the adjoint all but little cancels.
+        rules here, which are coarse, are set right by it, since in the adjoint all but little cancels. None where
+        a boundary is open toward an earthed plane.
+    placed : PlacedImages, optional
     progress : callable, optional
         Told (panels done, panels in all).
 
@@ -153,7 +157,8 @@ def media_gains(
     n = len(panels)
     parts = panel_frames(children(panels.corners - centre, panels.n_corners).reshape(-1, 4, 3), largest_rule=5)
     parts = parts.reshape(n, 4, -1)
-    frames = panel_frames(panels.corners - centre, largest_rule=5)
+    placed = placed or Images().place(panels)
+    frames = panel_frames(placed.corners - centre, largest_rule=5)
     metal = ~media.interface
     ones = (panels.conductor[:, None] == np.arange(state.shape[1])) & metal[:, None]
     free = np.where(metal[:, None], adjoint, 0.0)
@@ -161,9 +166,9 @@ def media_gains(
     opposed = np.where(metal[:, None], -1.0 * ones, adjoint)
     jump = (media.jump / (4.0 * np.pi))[:, None]
     weights = np.hstack([jump * opposed, jump])
-    through, onto, of_state, of_free = _moments(parts, frames, media.crossed, (state, weights, free), progress)
+    through, onto, of_state, of_free = _moments(parts, frames, media.crossed, (state, weights, free), placed, progress)
     areas = parts[:, :, AREA, None]
-    even = areas * (received / panels.areas)[:, None, None]
+    even = onto[:, :, -1:] if received is None else areas * (received / panels.areas)[:, None, None]
     onto = onto[:, :, :-1] - opposed[:, None, :] * (onto[:, :, -1:] - even)
     local = media.mean[:, None, None] * areas
     right = np.where(
@@ -172,9 +177,11 @@ def media_gains(
         -jump[:, None, :] * through - local * state[:, None, :],
     )
     left = -of_free - onto - local * opposed[:, None, :]
+    # the energy of a function is that of its own charge, as its medium weakens it
+    direct = np.sqrt(placed.direct)[:, None, None]
     return MediaGains(
-        _gains(panels, parts, left, media, self_terms, 1.0 / media.mean),
-        _gains(panels, parts, right, media, self_terms),
+        _gains(panels, parts, left, media, self_terms, 1.0 / media.mean) / direct,
+        _gains(panels, parts, right, media, self_terms) / direct,
     )
 
 
@@ -183,6 +190,7 @@ def _moments(
     frames: FloatArray,
     crossed: BoolArray,
     columns: tuple[Array, Array, Array],
+    placed: PlacedImages,
     progress: Callable[[float, float], None] | None,
 ) -> tuple[Array, Array, Array, Array]:
     """Fluxes through and of the parts, and potentials of state and free charge on them, (n, 4, n_conductors)."""
@@ -190,18 +198,24 @@ def _moments(
     state, weights, free = (_real_columns(column, lossy) for column in columns)
     n, m = state.shape
     through, onto = np.zeros((n, 4, m)), np.zeros((n, 4, weights.shape[1]))
-    potentials = np.empty((n, 4, 2 * m))
-    density = np.ascontiguousarray(np.hstack([state, free]))
-    pairs = np.ascontiguousarray(np.hstack([state, weights]))
-    block = max(8, 200_000 // n)
+    n_sides = placed.n_sides
+    potentials = np.empty((n, 4, 2 * m * n_sides))
+    of_side = [placed.of_source(side)[:, None] for side in range(n_sides)]
+    copies = placed.factors.shape[0]
+    both = np.tile(np.hstack([state, free]), (copies, 1))
+    density = np.ascontiguousarray(np.hstack([factor * both for factor in of_side]))
+    pairs = np.ascontiguousarray(of_side[0] * np.tile(np.hstack([state, weights]), (copies, 1)))
+    counted = np.tile(crossed, copies)
+    block = max(8, 200_000 // len(frames))
     for first in range(0, n, block):
         last = min(n, first + block)
         child_potentials(parts, frames, density, potentials, first, last)
         if crossed.any():
-            child_fluxes(parts, frames, pairs, crossed, through, onto, first, last)
+            child_fluxes(parts, frames, pairs, counted, through, onto, first, last)
         if progress is not None:
             progress(last, n)
-    found = (through, onto, potentials[:, :, :m], potentials[:, :, m:])
+    seen = potentials.reshape(n, 4, n_sides, 2 * m)[np.arange(n), :, placed.side]
+    found = (through, onto, seen[:, :, :m], seen[:, :, m:])
     return tuple(_joined(values, lossy) for values in found)  # type: ignore[return-value]
 
 

@@ -8,18 +8,24 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from .capacitance import FIRST_PASS, INTEGRATION, MOST_PANELS, POINTLESS, _accuracies, _prepare
+from .capacitance import FIRST_PASS, INTEGRATION, MOST_PANELS, POINTLESS, _accuracies
 from .constants import FOUR_PI_EPSILON_0
+from .creases import find_creases
+from .drawn import drawn_surface
 from .errors import InputError
 from .extrapolation import SHARES
-from .facets import Facets
-from .media import Media
+from .facets import Facets, move_facets
+from .flats import panel_regions
+from .images import Images
+from .media import METAL, Media
 from .media_adaptive import MediaPass, MediaPlan, media_pass, plan_next_media, weighted_gains
 from .media_facets import media_facet_uncertainty
-from .memory import free_memory, peak_memory
+from .memory import free_memory, panels_that_fit, peak_memory, refuse_if_too_large
 from .panels import Panels
 from .refinement import accuracy_targets
+from .regions import find_regions
 from .solution import Notice
+from .start import Start, starting_panels
 from .surface import Surface
 
 __all__ = ["MediaSolution", "solve_media"]
@@ -129,6 +135,7 @@ def solve_media(
     surface: Surface,
     media: Media,
     *,
+    images: Images | None = None,
     accuracy: float = 0.01,
     memory_limit: int | None = None,
     facets: str = "auto",
@@ -142,6 +149,9 @@ def solve_media(
     surface : Surface
         Conductors first; groups of ``body_conductor`` from ``media.n_conductors`` on are interfaces.
     media : Media
+    images : Images, optional
+        Mirror planes or a half-space. All charges are those of the modelled side. With a half-space the only medium
+        must be a single one of permittivity 1, since the half-space brings its own.
     accuracy, memory_limit, facets, want, progress
         As in :func:`daraf.bem.solve_capacitance`.
 
@@ -164,19 +174,23 @@ def solve_media(
     begin = time.perf_counter()
     limit = memory_limit if memory_limit is not None else int(0.9 * free_memory())
     report = progress or (lambda *_: None)
-    start, round_parts, notices, most = _prepare(surface, facets, limit)
+    images = images or Images()
+    _check_half_space(images, media)
+    start, round_parts, notices, most = _prepared(surface, media, images, facets, limit)
     most = max(len(start.panels), min(most, MOST_PANELS, int((limit / (_MATRICES * 8.0 * _cells(media))) ** 0.5)))
     seconds = {"panels": time.perf_counter() - begin}
-    plan: MediaPlan | None = MediaPlan(start.panels, start.symmetric, start.sides, start.refined)
+    images.place(start.panels, surface.body_names)
+    refined = np.zeros(surface.n_bodies, dtype=np.int64)
+    plan: MediaPlan | None = MediaPlan(start.panels, start.symmetric, start.sides, refined)
     passes: list[int] = []
     result = judgement = None
     interrupted = False
     try:
         while plan is not None:
             note = f"pass {len(passes) + 1}, {len(plan.panels)} panels"
-            result = media_pass(plan, media, _noted(report, note))
+            result = media_pass(plan, media, images, _noted(report, note))
             passes.append(len(plan.panels))
-            judgement = _judge(result, media, round_parts, allowed, len(passes))
+            judgement = _judge(result, media, images, round_parts, allowed, len(passes))
             excess = float((np.abs(judgement.total[:, :, :n]) / judgement.targets).max())
             report("pass", float(len(passes)), 0.0, f"{note}, uncertainty {excess:.3g} x the one asked")
             for stage, time_spent in result.seconds.items():
@@ -193,6 +207,33 @@ def solve_media(
     return _solution(surface, media, result, judgement, _Run(passes, seconds, notices, interrupted), accuracy)
 
 
+def _check_half_space(images: Images, media: Media) -> None:
+    if images.half_space is None:
+        return
+    if len(media.permittivity) != 1 or np.any(media.permittivity != 1.0) or np.any(media.inside != METAL):
+        raise InputError(
+            "half-space: images hold for conductors alone; leave out the dielectric bodies, or model the half-space as "
+            "a large dielectric body"
+        )
+
+
+def _prepared(
+    surface: Surface, media: Media, images: Images, facets: str, limit: int
+) -> tuple[Start, Facets | None, list[Notice], int]:
+    """Panels to start from, the round parts, notices, and the most panels that there is room for."""
+    regions, notices = find_regions(surface)
+    panels, more = panel_regions(surface, regions, creases=find_creases(surface, regions))
+    refuse_if_too_large(len(panels), limit)
+    most = max(len(panels), min(MOST_PANELS, panels_that_fit(limit)))
+    assert media.whole is not None
+    drawn = drawn_surface(surface, media.whole, images)
+    decays = drawn.side_decays(panels)
+    round_parts = drawn.facets_of(surface, regions) if facets == "auto" else None
+    if round_parts is not None:
+        panels = drawn.closed(panels, move_facets(round_parts, panels))
+    return starting_panels(panels, decays, max(len(panels), most // 4)), round_parts, notices + more, most
+
+
 def _noted(report: Progress, note: str) -> Callable[[str, float, float], None]:
     return lambda stage, done, total: report(stage, done, total, note)
 
@@ -203,7 +244,7 @@ def _cells(media: Media) -> float:
 
 
 def _judge(
-    result: MediaPass, media: Media, round_parts: Facets | None, accuracy: FloatArray, n_passes: int
+    result: MediaPass, media: Media, images: Images, round_parts: Facets | None, accuracy: FloatArray, n_passes: int
 ) -> _Judgement:
     """Extrapolated value with the lines of its budget, one column more for the sum over all conductors."""
     n = result.value.shape[1]
@@ -221,10 +262,16 @@ def _judge(
         "reciprocity": both * np.concatenate([result.defect, result.defect.sum(axis=2, keepdims=True)], axis=2),
     }
     if round_parts is not None and round_parts.any:
+        placed = images.place(result.panels)
         lines["facets"] = both * np.array(
             [
                 media_facet_uncertainty(
-                    round_parts, result.panels, media.at(result.panels, s), result.state[s], result.adjoint[s], sums
+                    round_parts,
+                    result.panels,
+                    media.at(result.panels, s),
+                    (result.state[s], result.adjoint[s]),
+                    placed,
+                    sums,
                 )
                 for s in range(len(value))
             ]

@@ -7,6 +7,7 @@ from numpy.testing import assert_allclose
 from daraf.bem import InputError
 from daraf.bem.bisection import split_panels
 from daraf.bem.flats import make_panels
+from daraf.bem.images import Images
 from daraf.bem.media import METAL, Media
 from daraf.bem.media_adaptive import MediaPlan, media_pass
 from daraf.bem.media_matrix import media_integrals, system_matrix
@@ -23,7 +24,7 @@ def solved(surface, media, splits=()):
         panels, _ = split_panels(panels, split(panels))
     n = len(panels)
     plan = MediaPlan(panels, np.zeros((n, 2), bool), np.full((n, 4), 0.25), np.zeros(surface.n_bodies, np.int64))
-    return media_pass(plan, media, quiet)
+    return media_pass(plan, media, Images(), quiet)
 
 
 def all_panels(panels):

@@ -12,7 +12,7 @@ from published import exact as X  # noqa: N812
 from published import shapes as S  # noqa: N812
 from published.shapes import Mesh
 
-__all__ = ["MEDIA_CASES", "MediaCase", "layered_spheres", "media_case_named"]
+__all__ = ["MEDIA_CASES", "MediaCase", "half_filled_spheres", "layered_spheres", "media_case_named", "split_faces"]
 
 
 @dataclass(frozen=True, eq=False)
@@ -70,6 +70,45 @@ def coated_ellipsoid(half_axes: tuple[float, float, float], growth: float, ratio
     return surface, Media(np.array([1.0, ratio]), np.array([1, 0]), np.array([METAL, 1]), 1)
 
 
+def split_faces(mesh: Mesh, chosen: Callable[[NDArray[np.float64]], bool]) -> tuple[Mesh, Mesh]:
+    """The triangles of a mesh whose unit normals or centroids `chosen` picks, and the others."""
+    vertices, triangles = mesh
+    a, b, c = (vertices[triangles[:, k]] for k in range(3))
+    normals = np.cross(b - a, c - a)
+    normals /= np.linalg.norm(normals, axis=1)[:, None]
+    pick = np.array([chosen(n) for n in np.hstack([normals, (a + b + c) / 3.0])])
+    return _part(vertices, triangles[pick]), _part(vertices, triangles[~pick])
+
+
+def _part(vertices: NDArray[np.float64], triangles: NDArray[np.int64]) -> Mesh:
+    used, place = np.unique(triangles, return_inverse=True)
+    return vertices[used], place.reshape(-1, 3).astype(np.int64)
+
+
+def half_filled_spheres(inner: float, outer: float, ratio: float, sides: int = 32) -> tuple[Surface, Media]:
+    """Spherical capacitor whose upper half is filled: the field is radial, as if both halves stood alone.
+
+    The interface is a flat ring that touches both conductors.
+    """
+    low_in, up_in = _halves(inner, sides)
+    low_out, up_out = _halves(outer, sides)
+    angle = 2.0 * np.pi * np.arange(sides) / sides
+    circle = np.column_stack([np.cos(angle), np.sin(angle), np.zeros(sides)])
+    k = np.arange(sides)
+    after = (k + 1) % sides
+    strip = np.concatenate([np.column_stack([k, sides + k, sides + after]), np.column_stack([k, sides + after, after])])
+    ring = (np.concatenate([inner * circle, outer * circle]), strip)
+    bodies: list[Mesh | list[Mesh]] = [[low_in, up_in], [S.flipped(low_out), S.flipped(up_out)], ring]
+    media = Media(
+        np.array([1.0, ratio]), np.array([0, 1, 0, 1, 1]), np.array([METAL] * 4 + [0]), 2, np.array([0, 0, 1, 1, 2])
+    )
+    return S.surface(bodies), media
+
+
+def _halves(radius: float, sides: int) -> tuple[Mesh, Mesh]:
+    return split_faces(S.uv_sphere(radius, sides, sides // 2), lambda n: bool(n[5] < 0.0))
+
+
 def _in_series(half_axes: tuple[float, float, float], growth: float, ratio: float) -> float:
     bare = 1.0 / X.ellipsoid(*half_axes)
     beyond = 1.0 / X.ellipsoid(*(float(np.sqrt(a * a + growth)) for a in half_axes))
@@ -108,6 +147,12 @@ MEDIA_CASES = [
         lambda: layered_spheres([1.0, 1.5, 2.0], [2.0, 5.0], 2, last=1),
         [[5.0, -5.0], [-5.0, np.nan]],
         _SERIES,
+    ),
+    MediaCase(
+        "half-filled",
+        lambda: half_filled_spheres(1.0, 2.0, 4.0),
+        [[5.0, -5.0], [-5.0, np.nan]],
+        "elementary: the radial field satisfies all conditions, C = (e1 + e2)/2 ab/(b - a)",
     ),
     MediaCase(
         "coated-ellipsoid",

@@ -7,7 +7,7 @@ from daraf.bem.constants import FOUR_PI_EPSILON_0
 from daraf.bem.media_solve import solve_media
 from published.media_cases import MEDIA_CASES, media_case_named
 
-QUICK = ("coated-coarse", "coated-80", "thin-coat-10000", "lossy-coat")
+QUICK = ("coated-coarse", "coated-80", "thin-coat-10000", "lossy-coat", "half-filled")
 
 
 def check(name, accuracy):
