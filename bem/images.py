@@ -155,12 +155,9 @@ class Images:
         InputError
             If a body crosses a plane, or touches an earthed one.
         """
-        copies, signs = [panels.corners], [1.0]
         for plane in self.planes:
             self._one_side(panels, plane, names)
-            sign = -1.0 if plane.electric else 1.0
-            copies += [_turned_round(mirrored(c, plane.point, plane.normal), panels.n_corners) for c in copies]
-            signs += [sign * s for s in signs]
+        copies, signs = self.copies(panels.corners, panels.n_corners)
         side = np.zeros(len(panels), dtype=np.int64)
         factors = np.array(signs)[:, None, None]
         if self.half_space is not None:
@@ -170,6 +167,15 @@ class Images:
             table = half.factors()
             factors = np.concatenate([factors * table[0], factors * table[1]])
         return PlacedImages(np.concatenate(copies), factors, side)
+
+    def copies(self, corners: FloatArray, n_corners: IntArray) -> tuple[list[FloatArray], list[float]]:
+        """Corners (n, 4, 3) of all mirror images, normals mirrored too, and the sign of each; the originals first."""
+        copies, signs = [corners], [1.0]
+        for plane in self.planes:
+            sign = -1.0 if plane.electric else 1.0
+            copies += [_turned_round(mirrored(c, plane.point, plane.normal), n_corners) for c in copies]
+            signs += [sign * s for s in signs]
+        return copies, signs
 
     def _one_side(self, panels: Panels, plane: MirrorPlane, names: tuple[str, ...]) -> None:
         height = (panels.corners - plane.point) @ plane.normal

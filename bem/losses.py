@@ -109,6 +109,8 @@ def conductance_by_duality(
     maxwell, uncertainty : (n, n) float, F
         Of the same electrodes in a medium of `relative_permittivity`.
     conductivity : float, S/m
+    relative_permittivity : float
+        Of the medium that `maxwell` was solved in.
 
     Returns
     -------

@@ -90,8 +90,8 @@ class Media:
     Parameters
     ----------
     permittivity : (n_media,) or (n_media, n_states) float or complex
-        Relative, for each medium; further columns are further states (frequencies), real or complex with a
-        negative imaginary part for losses.
+        Relative, for each medium, the first of which fills the space beyond everything; further columns are further
+        states (frequencies), real or complex with a negative imaginary part for losses.
     outside, inside : (n_bodies,) int
         Medium in front of each body's surface and behind it; ``METAL`` behind a closed conductor.
     n_conductors : int
@@ -139,8 +139,8 @@ class Media:
             raise InputError(f"media: outside and inside must name one medium for each of {surface.n_bodies} bodies")
         if self.whole is None or self.whole.shape != (surface.n_bodies,):
             raise InputError(f"media: whole must name one drawn surface for each of {surface.n_bodies} bodies")
-        if not 1 <= self.n_conductors <= surface.n_conductors:
-            raise InputError("media: at least one conductor is needed")
+        if not 0 <= self.n_conductors <= surface.n_conductors:
+            raise InputError(f"media: {self.n_conductors} conductors are named, the surface has {surface.n_conductors}")
         interface = surface.body_conductor >= self.n_conductors
         if (self.inside[interface] == METAL).any():
             raise InputError("media: an interface needs a medium on either side")

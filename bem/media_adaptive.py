@@ -5,7 +5,7 @@ adds ``left_i right_j`` and need not rise. All sets of permittivities (frequenci
 """
 
 import time
-from collections.abc import Callable
+from collections.abc import Callable, Sequence
 from dataclasses import dataclass, field
 from typing import Any
 
@@ -16,8 +16,10 @@ from scipy.linalg import lu_factor, lu_solve
 from .adaptive import REFINED_SHARE
 from .bisection import SPLIT_U, SPLIT_V, split_panels, split_sides
 from .extrapolation import GREATEST_DECAY, SMOOTH_DECAY, decay_of_parts, realised_share, series_factor
+from .given_charge import Load
 from .hidden import feared_gains
 from .images import Images
+from .load_columns import LoadColumns, load_columns
 from .media import Media, PanelMedia
 from .media_indicator import MediaGains, media_gains
 from .media_matrix import MediaIntegrals, media_integrals, self_terms, system_matrix
@@ -93,7 +95,13 @@ class MediaPlan:
     before: MediaPass | None = None
 
 
-def media_pass(plan: MediaPlan, media: Media, images: Images, report: Callable[[str, float, float], None]) -> MediaPass:
+def media_pass(
+    plan: MediaPlan,
+    media: Media,
+    images: Images,
+    report: Callable[[str, float, float], None],
+    loads: Sequence[Load] = (),
+) -> MediaPass:
     """Assemble, solve state and adjoint, and estimate.
 
     Parameters
@@ -103,6 +111,8 @@ def media_pass(plan: MediaPlan, media: Media, images: Images, report: Callable[[
     images : Images
     report : callable
         Told (stage, done, total).
+    loads : sequence of Load
+        They follow the conductors as rows and columns of the matrix.
     """
     panels, before = plan.panels, plan.before
     seconds: dict[str, float] = {}
@@ -119,10 +129,11 @@ def media_pass(plan: MediaPlan, media: Media, images: Images, report: Callable[[
     )
     seconds["matrix"] = time.perf_counter() - start
     start = time.perf_counter()
+    columns = load_columns(loads, panels, media, images) if loads else None
     solved = []
     for s, at in enumerate(filled):
         report("factorisation", float(s), float(media.n_states))
-        solved.append(_solve(integrals, at, panels, media.n_conductors))
+        solved.append(_solve(integrals, at, panels, media.n_conductors, columns[s] if columns else None))
     state, adjoint, value = (np.array(column) for column in zip(*solved, strict=True))
     mirrored = value.transpose(0, 2, 1)
     defect, value = 0.5 * np.abs(value - mirrored), 0.5 * (value + mirrored)
@@ -137,11 +148,11 @@ def media_pass(plan: MediaPlan, media: Media, images: Images, report: Callable[[
             media_gains(
                 panels,
                 at,
-                state[s],
-                adjoint[s],
+                (state[s], adjoint[s]),
                 own,
                 received,
                 placed=placed,
+                loads=columns[s] if columns else None,
                 progress=lambda done, total: report("estimate", done, total),
             )
         )
@@ -175,14 +186,25 @@ def _symmetric(matrix: Array) -> Array:
     return np.asarray(0.5 * (matrix + matrix.T))
 
 
-def _solve(integrals: MediaIntegrals, media: PanelMedia, panels: Panels, n_conductors: int) -> tuple[Array, ...]:
-    """State, adjoint and Maxwell matrix, by LU factorisation."""
+def _solve(
+    integrals: MediaIntegrals, media: PanelMedia, panels: Panels, n_conductors: int, loads: LoadColumns | None
+) -> tuple[Array, ...]:
+    """State, adjoint and extended Maxwell matrix, by LU factorisation."""
     matrix, scale, charge = system_matrix(integrals, media, panels)
     held = (panels.conductor[:, None] == np.arange(n_conductors)) & ~media.interface[:, None]
+    wanted = panels.areas[:, None] * held
+    direct = np.zeros((n_conductors, 0))
+    if loads is not None:
+        flux = (media.jump / (4.0 * np.pi))[:, None] * loads.flux.sum(axis=1)
+        wanted = np.hstack([wanted, np.where(media.interface[:, None], -flux, -loads.potential.sum(axis=1))])
+        charge = np.vstack([charge, -loads.weight.sum(axis=1).T])
+        direct = held.T @ flux
     factor = lu_factor(matrix, overwrite_a=True, check_finite=False)
-    state = lu_solve(factor, (scale * panels.areas)[:, None] * held, check_finite=False)
+    state = lu_solve(factor, scale[:, None] * wanted, check_finite=False)
     adjoint = scale[:, None] * lu_solve(factor, charge.T, trans=1, check_finite=False)
-    return np.ascontiguousarray(state), np.ascontiguousarray(adjoint), charge @ state
+    value = charge @ state
+    value[:n_conductors, n_conductors:] += direct
+    return np.ascontiguousarray(state), np.ascontiguousarray(adjoint), value
 
 
 def _feared(
@@ -190,6 +212,8 @@ def _feared(
 ) -> MediaGains:
     """Gains, or what conductor panels may hide where that is more."""
     metal = np.flatnonzero(~media.interface)
+    if len(metal) == 0:
+        return gains
     panels = plan.panels
     part = Panels(
         panels.corners[metal],
@@ -237,7 +261,7 @@ def _history(plan: MediaPlan, value: Array, gains: list[MediaGains]) -> tuple[Fl
     decay = decay_of_parts(plan.parent, plan.was_split, plan.worth, media_worth(gains, plan.weights), before.decay)
     promised, gained = [], []
     for s, g in enumerate(before.gains):
-        diagonal = np.abs(np.diag(value[s]))
+        diagonal = np.maximum(np.abs(np.diag(value[s])), np.finfo(float).tiny)
         promised.append(np.einsum("pdi,pdi,pd->i", g.left, g.right, plan.was_split).real / diagonal)
         gained.append((np.diag(value[s]) - np.diag(before.value[s])).real / diagonal)
     return decay, realised_share(np.concatenate(gained), np.concatenate(promised))

@@ -24,6 +24,7 @@ from .frames import AREA, CENTROID, NORMAL, RADIUS, panel_frames
 from .images import Images, PlacedImages
 from .indicator import _quad_gains, _triangle_gains, child_potentials
 from .jit import kernel, parallel_kernel, prange
+from .load_columns import LoadColumns
 from .media import PanelMedia
 from .panels import Panels
 from .polygon import polygon_distance
@@ -120,12 +121,12 @@ class MediaGains:
 def media_gains(
     panels: Panels,
     media: PanelMedia,
-    state: Array,
-    adjoint: Array,
+    solved: tuple[Array, Array],
     self_terms: FloatArray,
     received: Array | None,
     *,
     placed: PlacedImages | None = None,
+    loads: LoadColumns | None = None,
     progress: Callable[[float, float], None] | None = None,
 ) -> MediaGains:
     """Two-level gains of every panel.
@@ -134,10 +135,9 @@ def media_gains(
     ----------
     panels : Panels
     media : PanelMedia
-    state : (n_panels, n_conductors) float or complex
-        Bare total charge densities per volt.
-    adjoint : (n_panels, n_conductors) float or complex
-        Solution of the transposed system for the free charge of each conductor.
+    solved : two (n_panels, n_conductors) float or complex
+        Bare total charge densities per volt, and the solution of the transposed system for the free charge of each
+        conductor.
     self_terms : (n_panels,) float, m3
         Integral of 1/r over each conductor panel with itself, without images; not used on interfaces.
     received : (n_panels,) float or complex, m2, or None
@@ -145,6 +145,8 @@ def media_gains(
         rules here, which are coarse, are set right by it, since in the adjoint all but little cancels. None where
         a boundary is open toward an earthed plane.
     placed : PlacedImages, optional
+    loads : LoadColumns, optional
+        Of the last columns of state and adjoint.
     progress : callable, optional
         Told (panels done, panels in all).
 
@@ -153,6 +155,7 @@ def media_gains(
     MediaGains
         Bare: the sum over panels of ``left_i right_j`` estimates exact minus computed value of entry (i, j).
     """
+    state, adjoint = solved
     centre = panels.corners.reshape(-1, 3).mean(axis=0)
     n = len(panels)
     parts = panel_frames(children(panels.corners - centre, panels.n_corners).reshape(-1, 4, 3), largest_rule=5)
@@ -177,6 +180,10 @@ def media_gains(
         -jump[:, None, :] * through - local * state[:, None, :],
     )
     left = -of_free - onto - local * opposed[:, None, :]
+    if loads is not None:
+        first = state.shape[1] - loads.potential.shape[2]
+        right[:, :, first:] -= np.where(metal[:, None, None], loads.potential, jump[:, None, :] * loads.flux)
+        left[:, :, first:] -= loads.weight
     # the energy of a function is that of its own charge, as its medium weakens it
     direct = np.sqrt(placed.direct)[:, None, None]
     return MediaGains(

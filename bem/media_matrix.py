@@ -234,7 +234,7 @@ def system_matrix(
     matrix[integrals.metal] = integrals.potential
     between = media.interface[integrals.crossed]
     matrix[integrals.crossed[between]] = free[between]
-    n_conductors = int(panels.conductor[integrals.metal].max()) + 1
+    n_conductors = int(panels.conductor[integrals.metal].max(initial=-1)) + 1
     charge = np.zeros((n_conductors, n), dtype=free.dtype)
     plain = ~media.interface & ~media.crossed
     charge[panels.conductor[plain], np.flatnonzero(plain)] = (media.mean * panels.areas)[plain]

@@ -16,7 +16,9 @@ from .errors import InputError
 from .extrapolation import SHARES
 from .facets import Facets, move_facets
 from .flats import panel_regions
+from .given_charge import Load
 from .images import Images
+from .load_columns import check_loads
 from .media import METAL, Media
 from .media_adaptive import MediaPass, MediaPlan, media_pass, plan_next_media, weighted_gains
 from .media_facets import media_facet_uncertainty
@@ -39,6 +41,8 @@ Progress = Callable[..., None]
 CHANGE_SHARE = 1.0
 #: Gains of both signs add up to less than their size: this share of what cancels within a body counts as uncertain.
 CANCELLED_SHARE = 0.3
+#: Entries of a load below this share of sqrt(C_ii C_jj) must meet the accuracy of this share only.
+LOAD_FLOOR = 0.1
 #: Matrices of a pass held at once: the integrals, the system and its factor, and the integrals of the pass before.
 _MATRICES = 4
 
@@ -51,6 +55,9 @@ class MediaSolution:
     ----------
     conductor_names : tuple of str
     maxwell : (S, n, n) float or complex, F
+        n counts conductors, then loads. Entry (conductor, load) is the charge in C that the load induces on the
+        earthed conductor, (load, load) minus the energy in J of the one in the other's induced charges (minus
+        twice the energy for the same one), with all conductors earthed.
         Its negative imaginary part times the angular frequency is the conductance matrix.
     maxwell_uncertainty : (S, n, n) float or complex, F
         Expanded, k = 2: of the real part, and in the imaginary part that of the imaginary part.
@@ -131,11 +138,12 @@ class _Judgement:
         return bool((~self.missed | (np.abs(self.lines["discretisation"]) < POINTLESS * fixed)[:, :, :n]).all())
 
 
-def solve_media(
+def solve_media(  # noqa: PLR0913 (all but two are options by name)
     surface: Surface,
     media: Media,
     *,
     images: Images | None = None,
+    loads: Sequence[Load] = (),
     accuracy: float = 0.01,
     memory_limit: int | None = None,
     facets: str = "auto",
@@ -152,8 +160,16 @@ def solve_media(
     images : Images, optional
         Mirror planes or a half-space. All charges are those of the modelled side. With a half-space the only medium
         must be a single one of permittivity 1, since the half-space brings its own.
-    accuracy, memory_limit, facets, want, progress
-        As in :func:`daraf.bem.solve_capacitance`.
+    loads : sequence of Load
+        Given charge and external fields: further rows and columns of the matrix after the conductors.
+    accuracy : float
+        Relative expanded uncertainty asked; this and what follows as in :func:`daraf.bem.solve_capacitance`.
+    memory_limit : int, optional
+        Bytes.
+    facets : {"auto", "true"}
+    want : sequence of (int, int), optional
+        Entries of the matrix, loads counted after the conductors.
+    progress : callable, optional
 
     Returns
     -------
@@ -169,13 +185,16 @@ def solve_media(
     media.check(surface)
     if not 0.0 < accuracy < 1.0:
         raise InputError(f"accuracy must lie between 0 and 1, got {accuracy:g}")
-    n = media.n_conductors
+    n = media.n_conductors + len(loads)
     allowed = _accuracies(accuracy, want, n)
     begin = time.perf_counter()
     limit = memory_limit if memory_limit is not None else int(0.9 * free_memory())
     report = progress or (lambda *_: None)
     images = images or Images()
     _check_half_space(images, media)
+    check_loads(loads, media, images)
+    if media.n_conductors + len(loads) == 0:
+        raise InputError("nothing to solve: neither a conductor nor a load is given")
     start, round_parts, notices, most = _prepared(surface, media, images, facets, limit)
     most = max(len(start.panels), min(most, MOST_PANELS, int((limit / (_MATRICES * 8.0 * _cells(media))) ** 0.5)))
     seconds = {"panels": time.perf_counter() - begin}
@@ -188,7 +207,7 @@ def solve_media(
     try:
         while plan is not None:
             note = f"pass {len(passes) + 1}, {len(plan.panels)} panels"
-            result = media_pass(plan, media, images, _noted(report, note))
+            result = media_pass(plan, media, images, _noted(report, note), loads)
             passes.append(len(plan.panels))
             judgement = _judge(result, media, images, round_parts, allowed, len(passes))
             excess = float((np.abs(judgement.total[:, :, :n]) / judgement.targets).max())
@@ -248,7 +267,7 @@ def _judge(
 ) -> _Judgement:
     """Extrapolated value with the lines of its budget, one column more for the sum over all conductors."""
     n = result.value.shape[1]
-    sums = np.hstack([np.eye(n), np.ones((n, 1))])
+    sums = np.hstack([np.eye(n), (np.arange(n) < media.n_conductors).astype(np.float64)[:, None]])
     value = result.limit @ sums
     diagonal = np.abs(np.einsum("sii->si", result.limit))
     scale = np.sqrt(diagonal[:, :, None] * diagonal[:, None, :])
@@ -277,8 +296,16 @@ def _judge(
             ]
         )
     total = _root_of_squares(list(lines.values()))
-    targets = np.array([accuracy_targets(np.abs(v[:, :n]), accuracy) for v in value])
+    targets = np.array([_targets(np.abs(v[:, :n]), accuracy, media.n_conductors) for v in value])
     return _Judgement(value, lines, total, targets, n_passes)
+
+
+def _targets(size: FloatArray, accuracy: FloatArray, n_conductors: int) -> FloatArray:
+    """Largest uncertainty allowed of every entry; those of loads may cancel and are held to a share of the diagonal."""
+    targets = accuracy_targets(size, accuracy)
+    floor = accuracy * LOAD_FLOOR * np.sqrt(np.outer(np.diag(size), np.diag(size)))
+    load = np.arange(len(size)) >= n_conductors
+    return np.asarray(np.where(load[:, None] | load, np.maximum(targets, floor), targets))
 
 
 def _root_of_squares(lines: list[Array]) -> Array:
@@ -326,21 +353,21 @@ def _solution(
     surface: Surface, media: Media, result: MediaPass, judgement: _Judgement, run: _Run, accuracy: float
 ) -> MediaSolution:
     """Farads, and what kept the accuracy from being reached."""
-    n = media.n_conductors
+    n = result.value.shape[1]
     value, total = FOUR_PI_EPSILON_0 * judgement.value, FOUR_PI_EPSILON_0 * judgement.total
     reached, notices = not judgement.missed.any(), run.notices
-    metal = np.flatnonzero(result.panels.conductor < n)
+    metal = np.flatnonzero(result.panels.conductor < media.n_conductors)
     free = np.zeros_like(result.adjoint)
     free[:, metal] = result.adjoint[:, metal]
     if not reached:
         ratio = np.abs(judgement.total[:, :, :n]) / judgement.targets
         _, i, j = np.unravel_index(np.argmax(ratio), ratio.shape)
-        names = surface.conductor_names
+        names = surface.conductor_names[: media.n_conductors] + tuple(f"load {k + 1}" for k in range(n))
         cause = max(judgement.lines, key=lambda line: float(np.abs(judgement.lines[line][:, i, j]).max()))
         text = f"the accuracy asked was not reached: {names[i]} - {names[j]} is driven by {cause}"
         notices = [*notices, Notice("accuracy-not-reached", text)]
     return MediaSolution(
-        conductor_names=surface.conductor_names[:n],
+        conductor_names=surface.conductor_names[: media.n_conductors],
         maxwell=value[:, :, :n],
         maxwell_uncertainty=total[:, :, :n],
         to_infinity=value[:, :, n],
