@@ -25,7 +25,13 @@ OTHERS = ("floating", "earthed", "guarded")
 
 @dataclass(frozen=True)
 class Quantity:
-    """A capacitance with its expanded uncertainty (k = 2), F."""
+    """A capacitance.
+
+    Attributes
+    ----------
+    value, uncertainty : float, F
+        Expanded uncertainty, k = 2.
+    """
 
     value: float
     uncertainty: float
@@ -129,7 +135,7 @@ class Terminals:
         kept = [k for k in range(len(self.names)) if k not in gone]
         return self._with(tuple(self.names[k] for k in kept), self.states[:, kept])
 
-    def float(self, names: Sequence[str]) -> "Terminals":
+    def let_float(self, names: Sequence[str]) -> "Terminals":
         """Leave terminals uncharged and unconnected; they are no terminals any more.
 
         Raises
@@ -197,7 +203,7 @@ class Terminals:
         if others == "guarded":
             return Quantity(-float(self.maxwell[i, j]), self._worst(self.states[:, i], self.states[:, j]))
         rest = [name for name in self.names if name not in (one, other)]
-        pair = self.float(rest) if others == "floating" else self.earth(rest)
+        pair = self.let_float(rest) if others == "floating" else self.earth(rest)
         # One volt between them and no charge in all: the potentials divide as two capacitances in series through
         # infinity. A shielded pair has none (within its uncertainty), and then any division will do.
         first, second = (max(float(pair.maxwell[pair._index(name)].sum()), 0.0) for name in (one, other))
@@ -223,7 +229,7 @@ class Terminals:
         if self._index(positive) == self._index(negative):
             raise InputError(f"terminals: {positive} and {negative} are the same terminal; name two")
         rest = [name for name in self.names if name not in (positive, negative)]
-        pair = self.float(rest) if others == "floating" else self.earth(rest)
+        pair = self.let_float(rest) if others == "floating" else self.earth(rest)
         plus, minus = pair.states[:, pair._index(positive)], pair.states[:, pair._index(negative)]
         difference, both = 0.5 * (plus - minus), plus + minus
 

@@ -98,7 +98,7 @@ def _reduced(args: argparse.Namespace, network: "Terminals") -> "Terminals":
     if groups:
         network = network.join(groups)
     if args.float:
-        network = network.float(_names(args.float))
+        network = network.let_float(_names(args.float))
     if args.earth:
         network = network.earth(_names(args.earth))
     if args.reference:

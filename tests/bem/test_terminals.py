@@ -97,7 +97,7 @@ def test_floating_agrees_with_the_schur_complement(mutual_matrix):
     n = len(mutual_matrix)
     names = [f"k{i}" for i in range(n)]
     expected, _ = eliminate_floating(mutual_matrix, np.zeros((n, n)), np.arange(n) == n - 1)
-    found = terminals(names, mutual_matrix, np.zeros((n, n))).float([names[-1]])
+    found = terminals(names, mutual_matrix, np.zeros((n, n))).let_float([names[-1]])
     assert found.maxwell == pytest.approx(expected, rel=1e-9, abs=1e-9)
 
 
@@ -108,7 +108,12 @@ def quantities(net):
     yield net.between("a", "c", others="earthed")
     yield net.between("b", "c", others="guarded")
     yield from (modes.differential, modes.common, modes.conversion)
-    for reduced in (net.join({"ab": ["a", "b"]}), net.float(["b"]), net.refer_to("a"), net.float(["c"]).earth(["a"])):
+    for reduced in (
+        net.join({"ab": ["a", "b"]}),
+        net.let_float(["b"]),
+        net.refer_to("a"),
+        net.let_float(["c"]).earth(["a"]),
+    ):
         for value, spread in zip(reduced.maxwell.ravel(), reduced.uncertainty.ravel(), strict=True):
             yield type(modes.common)(value, spread)
         for value, spread in zip(reduced.to_infinity, reduced.to_infinity_uncertainty, strict=True):

@@ -15,6 +15,8 @@ from daraf.io.netlist import legal_names, netlist
 
 ngspice = pytest.mark.skipif(shutil.which("ngspice") is None, reason="needs ngspice, which .ci/run installs")
 
+#: omega = 1e9: femtofarads give currents far above what the simulator rounds off.
+HERTZ = 1e9 / (2.0 * np.pi)
 #: Names that no netlist may take over as they are.
 NAMES = ("drive pad", "sense", "3rd", "SENSE", "a\n.end", "gnd")
 
@@ -47,8 +49,7 @@ def measured_matrix(tmp_path, made, *, corner=0):
         prints = "\n".join(f"print imag(i(v{i}))" for i in range(n))
         deck = (
             f"matrix\n{made.text}\n{sources}\nX1 {nodes} {made.subcircuit} corner={corner}\n"
-            # omega = 1e9: femtofarads give currents far above what the simulator rounds off
-            f".control\nset numdgt=12\nac lin 1 {1e9 / (2 * np.pi):.15g} {1e9 / (2 * np.pi):.15g}\n{prints}\n.endc\n.end\n"
+            f".control\nset numdgt=12\nac lin 1 {HERTZ:.15g} {HERTZ:.15g}\n{prints}\n.endc\n.end\n"
         )
         text = simulate(tmp_path, deck)
         values = dict(re.findall(r"imag\(i\(v(\d+)\)\) = (\S+)", text))
