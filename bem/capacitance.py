@@ -304,7 +304,8 @@ def _guards(surface: Surface, judgement: _Judgement, value: FloatArray, total: F
             notices.append(Notice("maxwell-sign", text))
     if not judgement.reached:
         _, worst, cause = judgement.worst
-        text = f"the accuracy asked was not reached: {names[worst[0]]} - {names[worst[1]]} is driven by {cause}"
+        place = " - ".join(dict.fromkeys(names[k] for k in worst))
+        text = f"the accuracy asked was not reached: {place} is driven by {cause}"
         if cause == "coordinates":
             text += ", which the file rounds; move the part to the origin in CAD, or export more digits"
         if cause == "facets":

@@ -12,15 +12,17 @@ __all__ = ["Goal", "rough_duration", "time_to_goal"]
 _SLOWEST = 0.2
 #: Seconds of a pass grow with this power of the number of panels: between one new column and a factorisation.
 _LEAST_POWER, _MOST_POWER = 1.0, 3.0
-#: Passes looked back upon: earlier ones do not see the narrow gaps yet.
-_SEEN = 3
+#: How far back is looked, as a factor in panels: earlier passes do not see the narrow gaps yet, and from one pass to
+#: the next the uncertainty jumps.
+_SEEN = 2.0
 
 
 def time_to_goal(passes: Sequence[Pass], accuracy: float, most: int) -> float | None:
     """Seconds that the passes still to come will take.
 
     The uncertainty is taken to fall, and the seconds to rise, with the powers of the number of panels seen over the
-    last passes, and the panels to grow by the last factor from pass to pass.
+    last passes, and the panels to grow by the last factor from pass to pass. Nothing is foretold over more than the
+    panels have grown already.
 
     Parameters
     ----------
@@ -33,11 +35,13 @@ def time_to_goal(passes: Sequence[Pass], accuracy: float, most: int) -> float | 
     Returns
     -------
     float or None
-        None before two passes, where the uncertainty does not fall or there would be no room; infinity is never told.
+        None before two passes, where the uncertainty does not fall, the goal is too far off to tell, or there is no
+        room for so many panels.
     """
     if len(passes) < 2:
         return None
-    first, before, last = passes[-min(_SEEN, len(passes))], passes[-2], passes[-1]
+    before, last = passes[-2], passes[-1]
+    first = next((one for one in reversed(passes) if one.panels * _SEEN <= last.panels), passes[0])
     growth = last.panels / before.panels
     if growth <= 1.0 or not last.uncertainty > 0.0 or not first.uncertainty > 0.0:
         return None
@@ -48,7 +52,7 @@ def time_to_goal(passes: Sequence[Pass], accuracy: float, most: int) -> float | 
     if fall < _SLOWEST:
         return None
     needed = last.panels * (last.uncertainty / accuracy) ** (1.0 / fall)
-    if needed > most:
+    if needed > most or needed * passes[0].panels > last.panels**2:
         return None
     power = math.log(max(last.seconds, 1e-6) / max(first.seconds, 1e-6)) / grown
     power = min(max(power, _LEAST_POWER), _MOST_POWER)

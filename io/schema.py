@@ -126,7 +126,11 @@ def parse_accuracy(value: Any) -> float:
     """
     number = parse_quantity(value, "ratio")
     if not 1e-6 <= number <= 0.5:
-        raise InputError(f"accuracy {value!r} is outside 0.0001 % to 50 %; write text such as '1 %' (0.01 is the same)")
+        meant = f"{number:g} %" if 0.5 < number <= 50.0 else "1 %"
+        raise InputError(
+            f"accuracy {value!r} is outside 0.0001 % to 50 %; write text such as {meant!r} "
+            f"({parse_quantity(meant, 'ratio'):g} is the same)"
+        )
     return number
 
 

@@ -24,7 +24,7 @@ file (.toml) it lists the bodies that the case uses, where the case puts them.
 def add_arguments(parser: argparse.ArgumentParser) -> None:
     """Declare the arguments."""
     parser.add_argument("files", nargs="+", metavar="FILE", help="surface file, or one case file")
-    parser.add_argument("--unit", metavar="UNIT", help="length unit of the files, such as mm")
+    parser.add_argument("--unit", metavar="UNIT", help="length unit of the surface files, such as mm")
     parser.add_argument("--json", action="store_true", help="print JSON instead of text")
 
 
@@ -42,16 +42,15 @@ def run(args: argparse.Namespace) -> int:
 
 
 def _inspected(args: argparse.Namespace) -> "Inspection":
-    from daraf.io.inspection import inspect_bodies, inspect_files
-
     case_file = case_file_among(args.files, args.unit)
     if case_file is None:
+        from daraf.io.inspection import inspect_files
+
         return inspect_files(args.files, args.unit)
     from daraf.io.case import load_case
-    from daraf.io.problem import placed_bodies
+    from daraf.io.case_inspection import inspect_case
 
-    case = load_case(case_file)
-    placed = placed_bodies(case)
-    for notice in placed.notices:
+    inspection, notices = inspect_case(load_case(case_file))
+    for notice in notices:
         sys.stderr.write(f"note: {notice.text}\n")
-    return inspect_bodies(placed.bodies, case.content.unit)
+    return inspection
