@@ -13,13 +13,14 @@ from .constants import FOUR_PI_EPSILON_0
 from .creases import find_creases
 from .errors import InputError
 from .extrapolation import extrapolation_uncertainty
-from .facets import Facets, facet_meaning, facet_uncertainty, find_facets, greatest_turn, move_facets
+from .facets import Facets, facet_meaning, find_facets, greatest_turn, move_facets
 from .flats import panel_regions
 from .forecast import Goal
 from .memory import dense_bytes, free_memory, panels_that_fit, peak_memory, refuse_if_too_large
 from .refinement import accuracy_targets
 from .regions import find_regions
-from .rounding import checked_rounding, rounding_uncertainty
+from .rounding import checked_rounding
+from .shape_doubts import ShapeDoubts
 from .solution import BodyAccount, CapacitanceSolution, Notice, Pass
 from .start import side_decays, starting_panels
 from .surface import Surface
@@ -29,8 +30,6 @@ __all__ = ["solve_capacitance"]
 FloatArray = NDArray[np.float64]
 BoolArray = NDArray[np.bool_]
 Progress = Callable[..., None]
-#: Round parts and rounding of coordinates: what the surface leaves open.
-_Known = tuple[Facets | None, FloatArray | None]
 
 #: Most panels of a dense solve; beyond, factorisation takes minutes a pass.
 MOST_PANELS = 15_000
@@ -146,6 +145,7 @@ def solve_capacitance(
     report = progress or _silent
     report("panels", 0.0, 1.0, "")
     start, round_parts, notices, bodies, most = _prepare(surface, meaning, limit)
+    doubts = ShapeDoubts(round_parts, rounding)
     goal = Goal(accuracy, most, surface.conductor_names)
     seconds = {"panels": time.perf_counter() - begin}
     passes: list[Pass] = []
@@ -154,7 +154,7 @@ def solve_capacitance(
     interrupted = False
     try:
         while plan is not None:
-            result, judgement = _pass(plan, (round_parts, rounding), accuracies, goal, passes, report)
+            result, judgement = _pass(plan, doubts, accuracies, goal, passes, report)
             previous = plan.before
             for stage, time_spent in result.seconds.items():
                 seconds[stage] = seconds.get(stage, 0.0) + time_spent
@@ -234,12 +234,12 @@ def _prepare(
 
 
 def _pass(
-    plan: Plan, known: _Known, accuracies: FloatArray, goal: Goal, passes: list[Pass], report: Progress
+    plan: Plan, doubts: ShapeDoubts, accuracies: FloatArray, goal: Goal, passes: list[Pass], report: Progress
 ) -> tuple[PassResult, _Judgement]:
     start = time.perf_counter()
     note = f"pass {len(passes) + 1}, {len(plan.panels)} panels"
     result = run_pass(plan, lambda stage, done, total: report(stage, done, total, note))
-    judgement = _judge(result, known, accuracies, len(passes) + 1)
+    judgement = _judge(result, doubts, accuracies, len(passes) + 1)
     flat = result.gains.reshape(-1, result.gains.shape[2])
     excess, entry, cause = judgement.worst
     spent = time.perf_counter() - start
@@ -248,9 +248,8 @@ def _pass(
     return result, judgement
 
 
-def _judge(result: PassResult, known: _Known, accuracy: FloatArray, n_passes: int) -> _Judgement:
+def _judge(result: PassResult, doubts: ShapeDoubts, accuracy: FloatArray, n_passes: int) -> _Judgement:
     """Extrapolated value with the lines of its budget, one column more for the sum over all conductors."""
-    round_parts, rounding = known
     n = len(result.value)
     sums = np.hstack([np.eye(n), np.ones((n, 1))])
     value = result.limit @ sums
@@ -266,13 +265,9 @@ def _judge(result: PassResult, known: _Known, accuracy: FloatArray, n_passes: in
             sums,
             result.refined,
         ),
-        "facets": np.zeros_like(value),
         "integration": INTEGRATION * np.hstack([scale, scale.max(axis=1, keepdims=True)]),
+        **doubts.lines(result.panels, result.density, sums),
     }
-    if round_parts is not None and round_parts.any:
-        lines["facets"] = facet_uncertainty(round_parts, result.panels, result.density, sums)
-    if rounding is not None:
-        lines["coordinates"] = rounding_uncertainty(rounding, result.panels, result.density, sums)
     total = np.sqrt(sum(line**2 for line in lines.values()))
     return _Judgement(value, lines, total, accuracy_targets(value[:, :n], accuracy), n_passes)
 

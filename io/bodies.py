@@ -186,7 +186,7 @@ def _unit_of(path: Path, own: str | None, stated: str | None, needed: bool, part
         extents = np.ptp(corners, axis=0)
         raise InputError(
             f"{path}: the format carries no unit, and none is stated; its bounding box {size_text(extents)} "
-            f"would be {box_in_plausible_units(extents)}: state the unit (--unit, or unit in the case)"
+            f"would be {box_in_plausible_units(extents)}: state the unit"
         )
     return stated
 
