@@ -10,7 +10,7 @@ from .regions import Regions
 from .solution import BodyAccount, Notice
 from .surface import Surface
 
-__all__ = ["account_bodies", "facet_notices"]
+__all__ = ["account_bodies", "change_notices", "facet_notices"]
 
 FloatArray = NDArray[np.float64]
 IntArray = NDArray[np.int64]
@@ -18,6 +18,8 @@ BoolArray = NDArray[np.bool_]
 
 #: Triangles longer than so many of their heights are called slivers.
 SLIVER = 20.0
+#: Relative changes of area or volume beyond this are worth a warning: an accuracy of 1e-3 does not see smaller ones.
+WORTH_A_WARNING = 1e-4
 #: Round parts with fewer facets a turn than this ask for a word of the user.
 FEW_FACETS = 15
 
@@ -132,6 +134,21 @@ def _round_rims(
         np.bincount(body[inward], minlength=surface.n_bodies),
         turns,
     )
+
+
+def change_notices(accounts: tuple[BodyAccount, ...]) -> list[Notice]:
+    """Warn of bodies whose area or volume changed when their flat faces were covered anew."""
+    notices = []
+    for one in accounts:
+        changes = {"area": one.area_change, "volume": one.volume_change or 0.0}
+        told = [f"{what} by {change:+.1e}" for what, change in changes.items() if abs(change) > WORTH_A_WARNING]
+        if told:
+            text = (
+                f"{one.body}: covering its {one.faces} flat faces anew changed its {' and its '.join(told)} of itself; "
+                "look at its faults with inspect, and export it with more digits"
+            )
+            notices.append(Notice("area-changed", text))
+    return notices
 
 
 def facet_notices(

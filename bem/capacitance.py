@@ -7,7 +7,7 @@ from dataclasses import dataclass, replace
 import numpy as np
 from numpy.typing import NDArray
 
-from .account import account_bodies, facet_notices
+from .account import account_bodies, change_notices, facet_notices
 from .adaptive import PassResult, Plan, plan_next, run_pass
 from .constants import FOUR_PI_EPSILON_0
 from .creases import find_creases
@@ -224,7 +224,7 @@ def _prepare(
     most = max(len(panels), min(MOST_PANELS, panels_that_fit(limit)))
     round_parts = None if meaning == "as drawn" else find_facets(surface, regions, creases)
     bodies = account_bodies(surface, regions, creases, panels, round_parts)
-    notices += more + facet_notices(surface, regions, creases, bodies, meaning)
+    notices += more + change_notices(bodies) + facet_notices(surface, regions, creases, bodies, meaning)
     decays = side_decays(surface, creases, panels)
     if round_parts is not None:
         panels = move_facets(round_parts, panels)

@@ -1,10 +1,12 @@
 """What was made of the mesh, and which facets were taken as round."""
 
+from dataclasses import replace
+
 import numpy as np
 import pytest
 
 from daraf.bem import solve_capacitance
-from daraf.bem.account import account_bodies, facet_notices
+from daraf.bem.account import WORTH_A_WARNING, account_bodies, change_notices, facet_notices
 from daraf.bem.creases import find_creases
 from daraf.bem.facets import find_facets, greatest_turn
 from daraf.bem.flats import panel_regions
@@ -65,6 +67,16 @@ def test_what_was_assumed_is_told_where_it_is_a_matter_of_opinion(sides, meaning
     (one,), notices = account(shapes.cylinder(1.0, 2.0, sides), meaning=meaning)
     assert one.round_faces == round_faces
     assert [notice.code for notice in notices] == codes
+
+
+def test_only_changes_that_matter_are_warned_of():
+    accounts, _ = account(shapes.cube())
+    assert change_notices(accounts) == []
+    small = replace(accounts[0], area_change=0.5 * WORTH_A_WARNING)
+    large = replace(accounts[0], area_change=2e-3, volume_change=-3e-4)
+    (notice,) = change_notices((small, large))
+    assert notice.code == "area-changed"
+    assert "area by +2.0e-03 and its volume by -3.0e-04" in notice.text
 
 
 def test_solution_carries_the_account():
