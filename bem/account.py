@@ -51,7 +51,8 @@ def account_bodies(
     sides = np.linalg.norm(np.roll(corners, -1, axis=1) - corners, axis=2).max(axis=1)
     doubled = np.linalg.norm(np.cross(corners[:, 1] - corners[:, 0], corners[:, 2] - corners[:, 0]), axis=1)
     sliver = doubled * SLIVER < sides**2
-    closed = _closed(surface, creases)
+    # a closed body without thickness has no volume to compare
+    solid = _closed(surface, creases) & (np.abs(volume) > 1e-9 * area**1.5)
     is_round = np.zeros(len(regions), bool) if facets is None else facets.offset != 0.0
     turns = _smooth_turns(surface, regions, creases, is_round)
     outlines, holes, rim_turns = _round_rims(surface, regions, facets)
@@ -66,8 +67,8 @@ def account_bodies(
                 slivers=int(np.count_nonzero(own & sliver)),
                 faces=int(np.count_nonzero(faces)),
                 panels=int(np.count_nonzero(panels.body == body)),
-                area_change=float(area_now[body] / area[body] - 1.0),
-                volume_change=float(volume_now[body] / volume[body] - 1.0) if closed[body] else None,
+                area_change=float(area_now[body] / area[body] - 1.0) if area[body] > 0.0 else 0.0,
+                volume_change=float(volume_now[body] / volume[body] - 1.0) if solid[body] else None,
                 round_faces=int(np.count_nonzero(faces & is_round)),
                 turn=turns[body],
                 round_outline=int(outlines[body]),

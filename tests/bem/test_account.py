@@ -44,6 +44,13 @@ def test_a_sheet_has_no_volume_and_its_hole_is_round():
     assert np.degrees(one.rim_turn) == pytest.approx([11.25, 11.25], rel=0.02)
 
 
+def test_a_closed_body_without_thickness_has_no_volume_to_compare():
+    points, triangles = shapes.plate()
+    (one,), notices = account((points, np.concatenate([triangles, triangles[:, ::-1]])))
+    assert one.volume_change is None
+    assert notices == []
+
+
 def test_cylinder_and_box_are_told_apart():
     (tube, box), _ = account(shapes.cylinder(1.0, 2.0, 24), shapes.moved(shapes.cube(), 5.0))
     assert (tube.round_faces, tube.faces) == (24, 26)
