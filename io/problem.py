@@ -23,13 +23,25 @@ from .mending import fit_bodies
 from .mesh_units import METRES_PER_UNIT
 from .schema import ConductorEntry, Part
 
-__all__ = ["InputFile", "Problem", "bodies_to_surface", "build_problem", "place", "problem_from_files"]
+__all__ = [
+    "InputFile",
+    "PlacedBodies",
+    "Problem",
+    "bodies_to_surface",
+    "build_problem",
+    "place",
+    "placed_bodies",
+    "problem_from_files",
+]
 
 FloatArray = NDArray[np.float64]
 BoolArray = NDArray[np.bool_]
 _Source = tuple[str, str | None]
 
 _MEETS = {"touches": "touches", "crosses": "cuts through", "overlaps": "overlaps"}
+
+#: How the note of a body begins that is no change of it.
+_WALL = "is the wall of a cavity"
 
 #: A shift of more than so many times the size of what is shifted is worth a question.
 _FAR = 100.0
@@ -58,6 +70,8 @@ class Problem:
         Whether the potential is given (else the charge); None if nothing is stated.
     values : (n,) float, V or C, or None
     notices : tuple of Notice
+    rounding : (n_bodies,) float, m, or None
+        How far the coordinates of each body may be off by the rounding of its file; None if not known.
     """
 
     case: Case
@@ -66,6 +80,7 @@ class Problem:
     held: BoolArray | None
     values: FloatArray | None
     notices: tuple[Notice, ...]
+    rounding: FloatArray | None = None
 
 
 def problem_from_files(
@@ -124,6 +139,51 @@ def build_problem(case: Case, *, known: dict[_Source, list[Body]] | None = None)
     InputError
         If a file, a body or a placement cannot be used, or conductors touch or overlap.
     """
+    placed = placed_bodies(case, known=known)
+    bodies, owner = list(placed.bodies), list(placed.owner)
+    notices = placed.notices
+    surface, changes = _surface(case, bodies, owner)
+    held, values = _stated(case)
+    inputs = tuple(_input_file(case, entry) for entry in dict.fromkeys(_surfaces(case)))
+    rounding = np.array([body.spacing for body in bodies])
+    return Problem(case, surface, inputs, held, values, (*notices, *changes), rounding)
+
+
+@dataclass(frozen=True, eq=False)
+class PlacedBodies:
+    """Bodies of a case where it puts them, neither mended nor oriented.
+
+    Attributes
+    ----------
+    bodies : tuple of Body
+    owner : tuple of int
+        Conductor of each.
+    notices : tuple of Notice
+    """
+
+    bodies: tuple[Body, ...]
+    owner: tuple[int, ...]
+    notices: tuple[Notice, ...]
+
+
+def placed_bodies(case: Case, *, known: dict[_Source, list[Body]] | None = None) -> PlacedBodies:
+    """Read the surface files of a case, choose and place its bodies.
+
+    Parameters
+    ----------
+    case : Case
+    known : dict, optional
+        Bodies read before, by path and unit.
+
+    Returns
+    -------
+    PlacedBodies
+
+    Raises
+    ------
+    InputError
+        If a file, a body or a placement cannot be used.
+    """
     files = dict(known or {})
     used: dict[tuple[_Source, int], str] = {}
     bodies: list[Body] = []
@@ -137,11 +197,7 @@ def build_problem(case: Case, *, known: dict[_Source, list[Body]] | None = None)
                 notices += _placement_notice(part, body, entry)
                 bodies.append(place(body, part))
                 owner.append(index)
-    notices += _unused(files, used)
-    surface, changes = _surface(case, bodies, owner)
-    held, values = _stated(case)
-    inputs = tuple(_input_file(case, entry) for entry in dict.fromkeys(_surfaces(case)))
-    return Problem(case, surface, inputs, held, values, (*notices, *changes))
+    return PlacedBodies(tuple(bodies), tuple(owner), (*notices, *_unused(files, used)))
 
 
 def place(body: Body, part: Part) -> Body:
@@ -271,7 +327,11 @@ def _surface(case: Case, bodies: list[Body], owner: list[int]) -> tuple[Surface,
 
 def _body_notices(case: Case, body: Body, name: str) -> list[Notice]:
     """What was changed of a body, and what is still wrong with it."""
-    told = [Notice("mended", f"{name}: {'; '.join(body.notes)}")] if body.notes else []
+    walls = [note for note in body.notes if note.startswith(_WALL)]
+    changes = [note for note in body.notes if note not in walls]
+    told = [Notice("cavity-wall", f"{name} {note}") for note in walls]
+    if changes:
+        told.append(Notice("mended", f"{name}: {'; '.join(changes)}"))
     for fault in faults_of(Shape(body)):
         # After mending only the wall of a cavity is wound inwards, as it should be.
         if fault.severity != "note" and fault.code != "inside-out":

@@ -7,7 +7,7 @@ import sys
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
-from .parser import UsageError, positive_whole_number
+from .parser import UsageError, case_file_among, positive_whole_number
 
 if TYPE_CHECKING:
     from daraf.io.outcome import Outcome
@@ -47,7 +47,9 @@ def run(args: argparse.Namespace) -> int:
 
         sys.stdout.write(json.dumps(json_schema(), indent=2, ensure_ascii=False) + "\n")
         return 0
-    case_file = _case_file(args)
+    if not args.files:
+        raise UsageError("name a case file or surface files; see `daraf solve --help`")
+    case_file = case_file_among(args.files, args.unit)
     if args.threads is not None:
         _limit_threads(args.threads)
     from daraf.io.progress import progress_for
@@ -65,20 +67,6 @@ def run(args: argparse.Namespace) -> int:
     if outcome.solution.interrupted:
         return 130
     return 0 if outcome.solution.reached else 3
-
-
-def _case_file(args: argparse.Namespace) -> str | None:
-    """Return the case file, or None if the files are surfaces."""
-    cases = [name for name in args.files if name.lower().endswith(".toml")]
-    if not args.files:
-        raise UsageError("name a case file or surface files; see `daraf solve --help`")
-    if not cases:
-        return None
-    if len(args.files) > 1:
-        raise UsageError(f"{cases[0]}: a case file stands alone; name one case, or surface files only")
-    if args.unit is not None:
-        raise UsageError(f"--unit is for surface files; {cases[0]} states its unit itself, change it there")
-    return str(cases[0])
 
 
 def _limit_threads(n: int) -> None:
