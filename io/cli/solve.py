@@ -31,7 +31,12 @@ result folder.
 def add_arguments(parser: argparse.ArgumentParser) -> None:
     """Declare the arguments."""
     parser.add_argument("files", nargs="*", metavar="FILE", help="one case file (.toml), or surface files")
-    parser.add_argument("--unit", metavar="UNIT", help="length unit of the surface files, such as mm")
+    parser.add_argument("--unit", metavar="UNIT", help="length unit of the surface files that carry none")
+    parser.add_argument(
+        "--facet-tolerance",
+        metavar="X",
+        help="largest distance of facets from curved shapes (STEP), such as '0.02 mm' or '0.1 %%' of the size",
+    )
     parser.add_argument("--accuracy", metavar="X", help="relative, such as '0.5 %%'; overrides the case (default 1 %%)")
     parser.add_argument("--out", metavar="DIR", help="result folder (default: NAME.daraf beside the first file)")
     parser.add_argument("--json", action="store_true", help="print result.json instead of tables")
@@ -76,8 +81,10 @@ def _case_file(args: argparse.Namespace) -> str | None:
         return None
     if len(args.files) > 1:
         raise UsageError(f"{cases[0]}: a case file stands alone; name one case, or surface files only")
-    if args.unit is not None:
-        raise UsageError(f"--unit is for surface files; {cases[0]} states its unit itself, change it there")
+    for option in ("unit", "facet_tolerance"):
+        if getattr(args, option) is not None:
+            key = option.replace("_", "-")
+            raise UsageError(f"--{key} is for surface files; {cases[0]} states its {option} itself, change it there")
     return str(cases[0])
 
 
@@ -109,7 +116,7 @@ def _read(args: argparse.Namespace, case_file: str | None) -> tuple["Problem", f
     started = time.perf_counter()
     accuracy = None if args.accuracy is None else parse_accuracy(args.accuracy)
     if case_file is None:
-        problem = problem_from_files(args.files, args.unit, accuracy=accuracy)
+        problem = problem_from_files(args.files, args.unit, accuracy=accuracy, facet_tolerance=args.facet_tolerance)
     else:
         problem = build_problem(load_case(case_file))
     return problem, time.perf_counter() - started, accuracy
