@@ -15,7 +15,8 @@ from daraf.bem.errors import InputError
 from .file_units import units_of_files
 from .mesh_units import METRES_PER_UNIT, length_unit
 from .names import printable
-from .topology import connected_pieces
+from .topology import compacted, connected_pieces
+from .triangle_distance import sides_and_areas
 from .welding import weld
 
 if TYPE_CHECKING:
@@ -216,11 +217,11 @@ def _split(path: Path, parts: list["RawPart"], scale: float, unit: str) -> list[
         numbered = n_pieces > 1 or (not name and len(parts) > 1)
         order = np.argsort(piece, kind="stable")
         for k, rows in enumerate(np.split(order, np.cumsum(np.bincount(piece))[:-1]), start=1):
-            used, index = np.unique(triangles[rows], return_inverse=True)
+            used, index = compacted(triangles[rows], len(vertices))
             body = Body(
                 name=f"{named}-{k}" if numbered else named,
                 vertices=np.ascontiguousarray(vertices[used] * scale),
-                triangles=np.ascontiguousarray(index.reshape(-1, 3), dtype=np.int64),
+                triangles=index,
                 file=str(path),
                 index_in_file=len(bodies) + 1,
                 notes=list(notes),
@@ -234,10 +235,8 @@ def _split(path: Path, parts: list["RawPart"], scale: float, unit: str) -> list[
 def _check_shape(path: Path, name: str, vertices: FloatArray, triangles: IntArray, spacing: float) -> None:
     """Refuse a part that is a point or a line, or whose coordinates are too coarse to hold its shape."""
     label = f"solid {name!r}" if name else "the mesh"
-    corners = vertices[triangles]
-    sides = np.linalg.norm(np.roll(corners, -1, axis=1) - corners, axis=2)
+    sides, doubled = sides_and_areas(vertices[triangles])
     edge = float(np.median(sides[sides > 0.0])) if (sides > 0.0).any() else 0.0
-    doubled = np.linalg.norm(np.cross(corners[:, 1] - corners[:, 0], corners[:, 2] - corners[:, 0]), axis=1)
     flat = not (doubled > 1e-12 * sides.max(axis=1) ** 2).any()
     # a true edge rounds to nothing or to whole steps: a lost shape shows as edges of a few steps
     largest = float(np.abs(vertices).max())

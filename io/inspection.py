@@ -19,6 +19,7 @@ from .inspection_text import inspection_to_text
 from .mending import make_fit, orient
 from .progress import ProgressCallback, Silence
 from .topology import boundary_loops, edges_of
+from .triangle_distance import sides_and_areas
 
 __all__ = [
     "BodyReport",
@@ -209,9 +210,7 @@ def _as_solved(bodies: Sequence[Body]) -> list[Body]:
 
 
 def _report(k: int, body: Body, shape: Shape, gaps: list[Gap]) -> BodyReport:
-    sides = np.roll(shape.corners, -1, axis=1) - shape.corners
-    lengths = np.linalg.norm(sides, axis=2)
-    doubled = np.linalg.norm(np.cross(sides[:, 0], sides[:, 1]), axis=1)
+    lengths, doubled = sides_and_areas(shape.corners)
     longest = lengths.max(axis=1)
     sized = doubled > 1e-12 * longest**2
     solved = shape.body

@@ -1,8 +1,10 @@
 """From the extension of a file to its reader, and from whatever a reader raises to one line."""
 
+import numpy as np
+
 from daraf.bem.errors import InputError
 
-from .raw import READERS, RawFile, Source
+from .raw import READERS, RawFile, Source, check_extent
 
 __all__ = ["read_source"]
 
@@ -25,7 +27,11 @@ def read_source(source: Source) -> RawFile:
         known = ", ".join(sorted(READERS))
         raise InputError(f"{path}: the format {path.suffix or '(no extension)'!r} is unknown; known are {known}")
     try:
-        return reader(source)
+        with np.errstate(all="ignore"):  # numbers out of range are refused, not warned of
+            raw = reader(source)
+            for part in raw.parts:
+                check_extent(path, part)
+        return raw
     except InputError:
         raise
     except MemoryError:

@@ -23,6 +23,7 @@ __all__ = [
     "RawPart",
     "Remark",
     "Source",
+    "check_extent",
     "check_part",
     "check_side_file",
     "decimal_comma_line",
@@ -39,6 +40,10 @@ IntArray = NDArray[np.int64]
 
 #: Largest relative distance between a number and its nearest single-precision value.
 _SINGLE = 2.0**-24
+
+
+#: Coordinates beyond these, in the unit of the file, are no part: their sixth powers must stay in range.
+_FARTHEST, _SMALLEST = 1e15, 1e-15
 
 
 @dataclass(frozen=True, eq=False)
@@ -245,3 +250,27 @@ def check_part(path: Path, part: RawPart, what: str = "part") -> RawPart:
             "mend the part in CAD and export it again"
         )
     return part
+
+
+def check_extent(path: Path, part: RawPart) -> None:
+    """Refuse a part so large or small that areas and volumes would leave the range of numbers.
+
+    Raises
+    ------
+    InputError
+        If a coordinate in use exceeds `_FARTHEST`, or all of them lie within `_SMALLEST`.
+    """
+    label = f"part {part.name!r}" if part.name else "the mesh"
+    used = part.vertices
+    if not float(np.abs(used).max()) <= _FARTHEST:  # else vertices that no triangle uses do not matter
+        used = part.vertices[part.triangles.ravel()]
+    farthest = float(np.abs(used).max())
+    if not farthest <= _FARTHEST:
+        raise InputError(
+            f"{path}: {label} has a coordinate of {farthest:.3g}, beyond {_FARTHEST:g}; "
+            "the file is damaged, mend the part in CAD and export it again"
+        )
+    if float(np.ptp(part.vertices[part.triangles[0]], axis=0).max()) >= _SMALLEST:
+        return
+    if float(np.ptp(part.vertices[part.triangles.ravel()], axis=0).max()) < _SMALLEST:
+        raise InputError(f"{path}: {label} is smaller than {_SMALLEST:g} units; export it in a smaller unit")

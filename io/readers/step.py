@@ -33,6 +33,9 @@ _ANGLE = 0.35
 #: The first run guesses the size of the file from its points; a tolerance off by more than this is not kept.
 _OFF = 2.0
 
+#: Size of a file whose points say nothing, m.
+_SIZE = 0.01
+
 #: A kernel that takes longer than these seconds, and so many more for each megabyte, does not come back.
 _SECONDS, _SECONDS_PER_MB = 8.0, 100.0
 
@@ -54,7 +57,7 @@ def read_step(source: Source) -> RawFile:
         raise InputError(f"{path}: reading STEP needs one more package: pip install 'daraf[step]'")
     unit = step_unit(path, data)
     wanted = source.facet_tolerance or FacetTolerance(share=_SHARE)
-    metres = wanted.metres(point_span(data, unit.metres))
+    metres = wanted.metres(point_span(data, unit.own) or _SIZE)
     parts = _facets(path, data, metres)
     size = _diagonal(parts)
     right = wanted.metres(size)

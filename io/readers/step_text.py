@@ -44,12 +44,15 @@ class StepUnit:
         In one unit in which its geometry is handed on.
     name : str or None
         Of that unit; None if the file names none, and then the kernel takes millimetres.
+    own : float, m
+        In one unit of the file itself.
     said : str or None
         The file's own unit where that is another one.
     """
 
     metres: float
     name: str | None
+    own: float
     said: str | None = None
 
 
@@ -81,12 +84,12 @@ def step_unit(path: Path, data: bytes) -> StepUnit:
             if metres not in found:
                 found.append(metres)
     if not found:
-        return StepUnit(METRES_PER_UNIT["mm"], None)
+        return StepUnit(METRES_PER_UNIT["mm"], None, METRES_PER_UNIT["mm"])
     for name, metres in METRES_PER_UNIT.items():
         if abs(found[0] / metres - 1.0) < 1e-9:
             said = " and ".join(f"{one:.6g} m" for one in found) if len(found) > 1 else None
-            return StepUnit(metres, name, said)
-    return StepUnit(METRES_PER_UNIT["mm"], "mm", f"{found[0]:.6g} m")
+            return StepUnit(metres, name, metres, said)
+    return StepUnit(METRES_PER_UNIT["mm"], "mm", found[0], f"{found[0]:.6g} m")
 
 
 def _without_comments(data: bytes) -> bytes:
