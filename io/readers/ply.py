@@ -205,7 +205,8 @@ class _Cells:
         for one in element.properties:
             n = self._count(one, at) if one.count_kind else 1
             sizes.append(n)
-            at += self._kind(one.count_kind).itemsize * bool(one.count_kind) + n * self._kind(one.kind).itemsize
+            at += self._kind(one.count_kind).itemsize if one.count_kind else 0
+            at += n * self._kind(one.kind).itemsize
         fields = []
         for k, (one, n) in enumerate(zip(element.properties, sizes, strict=True)):
             fields += [(f"n{k}", self._kind(one.count_kind))] if one.count_kind else []

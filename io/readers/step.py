@@ -18,26 +18,31 @@ from daraf.bem.errors import InputError
 
 from ..facet_tolerance import FacetTolerance
 from ..mesh_units import METRES_PER_UNIT, metric_unit
+from ..topology import connected_pieces, edges_of
 from .gltf import glb_chunks, scene_parts
 from .raw import RawFile, RawPart, Remark, Source, register
 from .step_kernel import NOTHING_MADE
-from .step_text import StepUnit, point_span, step_unit
+from .step_text import StepUnit, count_faces, point_span, step_unit
 
 __all__ = ["read_step"]
 
 #: Facets follow a curved shape to this share of the diagonal of the file's box, and neighbours turn by this angle at
 #: most: gentle enough that edges between them are known as meant smooth.
-_SHARE = 1e-3
+_SHARE = 2e-3
 _ANGLE = 0.35
+#: The kernel oversteps its tolerance, on spheres up to 1.7 times: it is asked for this share.
+_KEPT = 0.5
 
-#: The first run guesses the size of the file from its points; a tolerance off by more than this is not kept.
-_OFF = 2.0
+#: The first run guesses the size of the file from its text, on the low side since round things are counted in full;
+#: a tolerance too fine by more than the factor is not kept.
+_GUESS, _OFF = 0.7, 2.5
 
 #: Size of a file whose points say nothing, m.
 _SIZE = 0.01
 
-#: A kernel that takes longer than these seconds, and so many more for each megabyte, does not come back.
-_SECONDS, _SECONDS_PER_MB = 8.0, 100.0
+#: A kernel that computes longer than these seconds, and so many more for each megabyte, does not come back. On a busy
+#: machine that takes so many times longer.
+_SECONDS, _SECONDS_PER_MB, _BUSY = 8.0, 100.0, 5.0
 
 #: Names that the kernel or careless writers invent.
 _NO_NAME = re.compile(r"(Open CASCADE STEP translator.*|NAUO\d*|=>\[.*\]|(SOLID|COMPOUND|SHELL|Part|Body)?\d*)", re.I)
@@ -57,7 +62,7 @@ def read_step(source: Source) -> RawFile:
         raise InputError(f"{path}: reading STEP needs one more package: pip install 'daraf[step]'")
     unit = step_unit(path, data)
     wanted = source.facet_tolerance or FacetTolerance(share=_SHARE)
-    metres = wanted.metres(point_span(data, unit.own) or _SIZE)
+    metres = wanted.metres(_GUESS * point_span(data, unit.own) or _SIZE)
     parts = _facets(path, data, metres)
     size = _diagonal(parts)
     right = wanted.metres(size)
@@ -103,13 +108,31 @@ def _facets(path: Path, data: bytes, tolerance: float) -> list[RawPart]:
     """Run the kernel: parts in metres, each welded and without the triangles that poles shrink to nothing."""
     if not 0.0 < tolerance < float("inf"):
         raise InputError(f"{path}: its size makes no sense (its points span nothing or too much); export it again")
-    glb = _kernel(path, data, tolerance * 1e3)  # the kernel takes millimetres
+    glb = _kernel(path, data, _KEPT * tolerance * 1e3)  # the kernel takes millimetres
     document, binary = glb_chunks(path, glb)
 
     def beside(name: str) -> bytes:
         raise InputError(f"{path}: the kernel handed back no geometry for {name!r}; export it again")
 
-    return [_welded(part) for part in scene_parts(path, document, binary, beside)]
+    parts = [_welded(part) for part in scene_parts(path, document, binary, beside)]
+    n_made = sum(len(mesh.get("primitives", ())) for mesh in document.get("meshes", ()))
+    _refuse_losses(path, data, parts, n_made)
+    return parts
+
+
+def _refuse_losses(path: Path, data: bytes, parts: list[RawPart], n_made: int) -> None:
+    """Refuse what the kernel left out without a word: faces of solids, or whole solids."""
+    n_faces, n_solids = count_faces(data)
+    if n_made >= n_faces:
+        return
+    pieces = sum(connected_pieces(part.triangles)[0] for part in parts)
+    gaping = [part.name for part in parts if n_solids and not edges_of(part.triangles).closed]
+    if gaping or pieces < n_solids:
+        where = f" of {gaping[0]!r}" if gaping and gaping[0] else ""
+        raise InputError(
+            f"{path}: only {n_made} of {n_faces} faces could be made into facets, and a solid{where} is not closed "
+            "without the others; the file is damaged, export it again"
+        )
 
 
 def _welded(part: RawPart) -> RawPart:
@@ -125,10 +148,11 @@ def _welded(part: RawPart) -> RawPart:
 def _kernel(path: Path, data: bytes, millimetres: float) -> bytes:
     """GLB made by the kernel in a process of its own."""
     megabytes = len(data) / 2**20
+    seconds = _SECONDS + _SECONDS_PER_MB * megabytes
     with tempfile.TemporaryDirectory(prefix="daraf-step-") as folder:
         given, made = Path(folder) / "in.step", Path(folder) / "out.glb"
         given.write_bytes(data)
-        words = [str(given), str(made), repr(millimetres), repr(_ANGLE), repr(_memory(megabytes))]
+        words = [str(given), str(made), repr(millimetres), repr(_ANGLE), repr(_memory(megabytes)), repr(round(seconds))]
         script = Path(__file__).with_name("step_kernel.py")
         try:
             done = subprocess.run(
@@ -136,16 +160,16 @@ def _kernel(path: Path, data: bytes, millimetres: float) -> bytes:
                 stdin=subprocess.DEVNULL,
                 stdout=subprocess.PIPE,
                 stderr=subprocess.STDOUT,
-                timeout=_SECONDS + _SECONDS_PER_MB * megabytes,
+                timeout=_BUSY * seconds,
                 check=False,
             )
         except subprocess.TimeoutExpired:
             raise InputError(
                 f"{path}: the kernel does not finish it; state a coarser facet tolerance or export a mesh"
             ) from None
-        if done.returncode == 0 and made.exists():
+        if done.returncode == 0 and made.exists() and b"ERR Step" not in done.stdout:
             return made.read_bytes()
-    raise InputError(f"{path}: {_complaint(done.returncode, done.stdout)}; export it again")
+    raise InputError(f"{path}: {_complaint(done.returncode, done.stdout)}")
 
 
 def _memory(megabytes: float) -> int:
@@ -155,9 +179,12 @@ def _memory(megabytes: float) -> int:
 
 def _complaint(code: int, said: bytes) -> str:
     text = re.sub(r"\x1b\[[0-9;]*m", "", said.decode("utf-8", "replace"))
-    found = re.search(r"ERR StepFile : (.*?)\s*\*{4}", text)
+    found = re.search(r"ERR Step\w* : (.*?)\s*\*{3}", text)
     if found:
-        return f"is damaged or no valid STEP file ({' '.join(found[1].split())[:100]})"
+        return f"is damaged or no valid STEP file ({' '.join(found[1].split())[:100]}); export it again"
     if code == NOTHING_MADE:
-        return "holds no solid or surface that could be made into facets"
-    return "the kernel could not cope with it (it crashed or ran out of memory)"
+        return "holds no solid or surface that could be made into facets; export it again"
+    return (
+        "the kernel could not cope with it (it crashed, or ran out of memory or time); "
+        "state a coarser facet tolerance, or export a mesh"
+    )

@@ -10,7 +10,7 @@ from daraf.bem.errors import InputError
 
 from ..mesh_units import METRES_PER_UNIT
 
-__all__ = ["StepUnit", "point_span", "step_unit"]
+__all__ = ["StepUnit", "count_faces", "point_span", "step_unit"]
 
 #: All patterns are bounded: what a damaged file repeats a million times must not be searched a million times.
 _STRING = re.compile(rb"'(?:[^']|'')*'")
@@ -19,6 +19,12 @@ _SI = re.compile(rb"SI_UNIT\s*\(\s*(?:\*\s*,\s*)?(\$|\.\w+\.)\s*,\s*\.METRE\.\s*
 _CONVERSION = re.compile(rb"CONVERSION_BASED_UNIT\s*\([^,]*,\s*#(\d{1,15})\s*\)")
 _MEASURE = re.compile(rb"MEASURE_WITH_UNIT\s*\(\s*(?:\w+\s*\(\s*)?([-+0-9.E]+)\s*\)?\s*,\s*#(\d{1,15})\s*\)")
 _POINT = re.compile(rb"CARTESIAN_POINT\s{0,9}\([^,]{0,999},\s{0,9}\(([-+0-9.E,\s]{1,199})\)")
+_ROUND = re.compile(
+    rb"(?:CIRCLE|SPHERICAL_SURFACE|CYLINDRICAL_SURFACE)\s{0,9}\([^,]{0,999},\s{0,9}#\d{1,15}\s{0,9},"
+    rb"\s{0,9}([-+0-9.E]{1,40})"
+)
+_FACE = re.compile(rb"\b(?:ADVANCED_FACE|FACE_SURFACE)\s{0,9}\(")
+_SOLID = re.compile(rb"\b(?:MANIFOLD_SOLID_BREP|BREP_WITH_VOIDS|FACETED_BREP)\s{0,9}\(")
 _ENTITY = re.compile(rb"\s*#(\d{1,15})\s*=(.*)", re.DOTALL)
 
 _PREFIXES = {
@@ -126,7 +132,7 @@ def _metres(path: Path, units: dict[int, bytes], number: int, depth: int = 0) ->
 
 
 def point_span(data: bytes, metres: float) -> float:
-    """Diagonal of the box about all points in the text: the order of magnitude of the size, m.
+    """Diagonal of the box about all points in the text and the round things at them: about the size, m.
 
     Parameters
     ----------
@@ -137,14 +143,38 @@ def point_span(data: bytes, metres: float) -> float:
     Returns
     -------
     float, m
+        0 if there are no points.
     """
-    points = []
-    for found in _POINT.finditer(data):
-        try:
-            numbers = [float(word) for word in found[1].split(b",")]
-        except ValueError:
-            continue
-        points.append([*numbers, 0.0, 0.0][:3])
+    points = [_three(found[1]) for found in _POINT.finditer(data)]
     if not points:
         return 0.0
-    return float(np.linalg.norm(np.ptp(np.array(points), axis=0))) * metres
+    spans = np.ptp(np.array(points), axis=0)
+    radii = [radius for found in _ROUND.finditer(data) if (radius := abs(_number(found[1]))) <= spans.max()]
+    return float(np.linalg.norm(spans + 2.0 * max(radii, default=0.0))) * metres
+
+
+def count_faces(data: bytes) -> tuple[int, int]:
+    """Faces and solids that the text describes.
+
+    Parameters
+    ----------
+    data : bytes
+
+    Returns
+    -------
+    n_faces, n_solids : int
+    """
+    return len(_FACE.findall(data)), len(_SOLID.findall(data))
+
+
+def _three(text: bytes) -> list[float]:
+    numbers = [_number(word) for word in text.split(b",")]
+    return [*numbers, 0.0, 0.0][:3]
+
+
+def _number(text: bytes) -> float:
+    try:
+        number = float(text)
+    except ValueError:
+        return 0.0
+    return number if abs(number) < 1e300 else 0.0
