@@ -6,6 +6,7 @@ Read without a mesh library: those seen take one size for all polygons or drop w
 import warnings
 from dataclasses import dataclass, field
 from pathlib import Path
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
@@ -207,7 +208,7 @@ class _Cells:
             sizes.append(n)
             at += self._kind(one.count_kind).itemsize if one.count_kind else 0
             at += n * self._kind(one.kind).itemsize
-        fields = []
+        fields: list[Any] = []
         for k, (one, n) in enumerate(zip(element.properties, sizes, strict=True)):
             fields += [(f"n{k}", self._kind(one.count_kind))] if one.count_kind else []
             fields.append((f"c{k}", self._kind(one.kind), (n,)))

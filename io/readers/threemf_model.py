@@ -197,8 +197,9 @@ class _Collector(_Events):
 def _parsed(path: Path, name: str, text: bytes, events: _E) -> _E:
     from lxml import etree
 
+    target: Any = events
     parser = etree.XMLParser(
-        target=events, resolve_entities=False, no_network=True, load_dtd=False, huge_tree=False, recover=False
+        target=target, resolve_entities=False, no_network=True, load_dtd=False, huge_tree=False, recover=False
     )
     try:
         etree.fromstring(text, parser)
