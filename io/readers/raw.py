@@ -258,7 +258,7 @@ def check_extent(path: Path, part: RawPart) -> None:
     Raises
     ------
     InputError
-        If a coordinate in use exceeds `_FARTHEST`, or all of them lie within `_SMALLEST`.
+        If a coordinate in use exceeds `_FARTHEST`, or all of them lie within `_SMALLEST`, but not in one point (told later).
     """
     label = f"part {part.name!r}" if part.name else "the mesh"
     used = part.vertices
@@ -272,5 +272,5 @@ def check_extent(path: Path, part: RawPart) -> None:
         )
     if float(np.ptp(part.vertices[part.triangles[0]], axis=0).max()) >= _SMALLEST:
         return
-    if float(np.ptp(part.vertices[part.triangles.ravel()], axis=0).max()) < _SMALLEST:
+    if 0.0 < float(np.ptp(part.vertices[part.triangles.ravel()], axis=0).max()) < _SMALLEST:
         raise InputError(f"{path}: {label} is smaller than {_SMALLEST:g} units; export it in a smaller unit")
