@@ -78,7 +78,9 @@ def _mesh(points: list[FloatArray], cells: IntArray) -> MeshTet:
     """Weld copies of one block."""
     stacked = np.concatenate(points)
     cells = np.concatenate([cells + k * len(points[0]) for k in range(len(points))])
-    _, first, place = np.unique(np.round(stacked / SAME).astype(np.int64), axis=0, return_index=True, return_inverse=True)
+    _, first, place = np.unique(
+        np.round(stacked / SAME).astype(np.int64), axis=0, return_index=True, return_inverse=True
+    )
     return MeshTet(np.ascontiguousarray(stacked[first].T), np.ascontiguousarray(place.ravel()[cells].T))
 
 
