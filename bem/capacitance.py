@@ -240,10 +240,9 @@ def _judge(result: PassResult, round_parts: Facets | None, accuracy: FloatArray,
     scale = np.sqrt(np.outer(np.diag(result.limit), np.diag(result.limit)))
     lines = {
         "discretisation": extrapolation_uncertainty(
-            result.feared,
-            result.feared_decay,
-            result.realised,
-            result.drift,
+            result.first,
+            result.second,
+            result.unseen,
             result.panels.body,
             result.change,
             sums,

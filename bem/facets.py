@@ -19,8 +19,11 @@ from dataclasses import dataclass, replace
 
 import numpy as np
 from numpy.typing import NDArray
+from scipy.spatial import cKDTree
 
-from .creases import Creases, corner_normals, facet_offsets
+from .creases import Creases, corner_normals, offsets_with_ends
+from .frames import panel_frames
+from .hidden import nearest_other
 from .panels import Panels
 from .regions import Regions
 from .surface import Surface
@@ -32,9 +35,14 @@ IntArray = NDArray[np.int64]
 BoolArray = NDArray[np.bool_]
 
 #: Expanded uncertainty (k = 2) as a share of the first-order change by a facet; to it is added this multiple of the
-#: square of the facet's depth per width, for what is of second order. Rims: likewise a share, their coefficient is
-#: read off one panel. Measured with ``scripts/coverage`` on the exact set.
-FACET_SHARE, DEPTH_SHARE, RIM_SHARE = 0.006, 0.65, 0.08
+#: square of the facet's depth per width, for what is of second order: 2.0 was the most that was seen, on tori of 8 to
+#: 16 sides, 1.5 on spheres of 6 rings. Rims: likewise a share, their coefficient is read off one panel.
+FACET_SHARE, DEPTH_SHARE, RIM_SHARE = 0.006, 1.5, 0.08
+#: Near another conductor the facet's hollow counts once more, in second order: this multiple of its depth per gap. The
+#: square of the depth varies over a triangle of a sphere by a tenth about its mean; both sides of the gap may be round.
+GAP_SHARE = 0.2
+#: Gaps beyond this multiple of the depth are wide: nothing is added.
+WIDE_GAP = 30.0
 #: Corners of rims and sharp edges that turn by more than this are corners of the drawing, rad.
 _RIM_TURN = np.radians(35.0)
 #: Neighbouring turns of one round edge differ at most by this factor.
@@ -91,13 +99,14 @@ def find_facets(surface: Surface, regions: Regions, creases: Creases) -> Facets:
     -------
     Facets
     """
-    offsets = facet_offsets(surface, corner_normals(surface, regions, creases))
+    offsets, ends = offsets_with_ends(surface, creases, corner_normals(surface, regions, creases))
     points = surface.vertices[surface.triangles]
     areas = 0.5 * np.linalg.norm(np.cross(points[:, 1] - points[:, 0], points[:, 2] - points[:, 0]), axis=1)
     used = regions.triangle_region >= 0
-    total, weighted = np.zeros(len(regions)), np.zeros(len(regions))
+    total, weighted, ending = (np.zeros(len(regions)) for _ in range(3))
     np.add.at(total, regions.triangle_region[used], areas[used])
     np.add.at(weighted, regions.triangle_region[used], (areas * offsets)[used])
+    np.add.at(ending, regions.triangle_region[used], (areas * ends)[used])
     offset = weighted / np.where(total > 0, total, 1.0)
     # rounding of the normals is no roundness
     size = np.sqrt(total)
@@ -108,7 +117,32 @@ def find_facets(surface: Surface, regions: Regions, creases: Creases) -> Facets:
     np.maximum.at(high, of, corners.max(axis=1))
     # how deep the true surface lies over the narrow way across the facet
     depth = offset * np.linalg.norm(high - low, axis=1) / np.where(total > 0, total, 1.0)
-    return Facets(offset, FACET_SHARE + DEPTH_SHARE * depth**2, *_round_edges(surface, regions, creases))
+    unsure = ending / np.maximum(np.abs(weighted), 1e-300)
+    share = FACET_SHARE + DEPTH_SHARE * depth**2 + np.minimum(unsure, 1.0)
+    share += GAP_SHARE * np.abs(offset) / _gaps(surface, regions, np.abs(offset))
+    return Facets(offset, share, *_round_edges(surface, regions, creases))
+
+
+def _gaps(surface: Surface, regions: Regions, depth: FloatArray) -> FloatArray:
+    """Distance of each region's middle from the nearest other conductor, infinite where it is wide, (n_regions,) m."""
+    gap = np.full(len(regions), np.inf)
+    points = surface.vertices[surface.triangles]
+    centres, conductor = points.mean(axis=1), surface.body_conductor[surface.triangle_body]
+    reach = np.linalg.norm(points - centres[:, None], axis=2).max()
+    hollow, of_region = np.flatnonzero(depth > 0), surface.body_conductor[regions.body]
+    for number in range(surface.n_conductors if surface.n_conductors > 1 else 0):
+        rows = hollow[of_region[hollow] == number]
+        others = np.flatnonzero(conductor != number)
+        if len(rows) == 0:
+            continue
+        nearest = cKDTree(centres[others]).query(regions.origins[rows])[0]
+        rows = rows[nearest - reach < WIDE_GAP * depth[rows]]
+        frames = panel_frames(points[others][:, [0, 1, 2, 2]], largest_rule=0)
+        distance, whose = np.empty(len(rows)), np.empty(len(rows), dtype=np.int64)
+        owner = np.full(len(rows), number)
+        nearest_other(np.ascontiguousarray(regions.origins[rows]), owner, frames, conductor[others], distance, whose)
+        gap[rows] = np.where(distance < WIDE_GAP * depth[rows], np.maximum(distance, depth[rows]), np.inf)
+    return gap
 
 
 def _round_edges(
@@ -249,6 +283,10 @@ def _rim_factors(facets: Facets, panels: Panels) -> FloatArray:
     A panel of width w along the rim with the mean density of K / sqrt(d) has K = sigma sqrt(w) / 2.
     """
     shift = facets.edge_offset[:, None] * facets.edge_out
+    # the facets have moved along their normals as well
+    normals = np.zeros((len(facets.offset), 3))
+    normals[panels.region] = panels.normals
+    shift += (facets.offset[:, None] * normals)[facets.edge_region]
     edge, panel, side = _sides_on_edges(facets, panels, facets.edge_ends + shift[:, None, :])
     factor = np.zeros(len(panels))
     rim = facets.edge_rim[edge]
