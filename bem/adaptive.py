@@ -19,6 +19,7 @@ from .extrapolation import (
     first_opinion,
     realised_share,
     second_opinion,
+    smooth_factor,
 )
 from .galerkin import galerkin_matrix
 from .hidden import unseen_fringe
@@ -190,7 +191,9 @@ def run_pass(plan: Plan, report: Callable[[str, float, float], None]) -> PassRes
     companion = companion_gains(panels, density, self_terms, potentials, judged)
     unseen = unseen_fringe(panels, _stronger(gains, companion), plan.sides)
     decay, realised = _history(plan, value, gains)
-    first, second = first_opinion(gains, decay, realised), second_opinion(gains, companion, judged, edge)
+    smooth = smooth_factor(panels.lengths, realised)
+    first = first_opinion(gains, decay, realised, judged, smooth)
+    second = second_opinion(gains, companion, edge, judged, smooth)
     limit = extrapolate(value, first, second)
     change = None if plan.before is None else limit - plan.before.limit
     seconds["estimate"] = time.perf_counter() - start

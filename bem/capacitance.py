@@ -170,7 +170,9 @@ def solve_capacitance(
         reached=judgement.reached,
         panels=result.panels,
         densities=np.ascontiguousarray(farads * result.density.T),
-        passes=[Pass(p.panels, farads * p.maxwell, farads * p.estimate, p.seconds) for p in passes],
+        passes=[
+            Pass(p.panels, farads * p.maxwell, farads * p.estimate, farads * p.uncertainty, p.seconds) for p in passes
+        ],
         method="dense Cholesky",
         iterations=0,
         seconds=seconds,
@@ -226,8 +228,9 @@ def _pass(
     note = f"pass {len(passes) + 1}, {len(plan.panels)} panels"
     result = run_pass(plan, lambda stage, done, total: report(stage, done, total, note))
     judgement = _judge(result, round_parts, accuracy, len(passes) + 1)
-    flat = result.gains.reshape(-1, result.gains.shape[2])
-    passes.append(Pass(len(result.panels), result.value, flat.T @ flat, time.perf_counter() - start))
+    estimate, n = result.limit - result.value, len(result.value)
+    seconds = time.perf_counter() - start
+    passes.append(Pass(len(result.panels), result.value, estimate, judgement.total[:, :n], seconds))
     report("pass", float(len(passes)), 0.0, f"{note}, uncertainty {judgement.excess:.3g} x the one asked")
     return result, judgement
 

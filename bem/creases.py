@@ -127,7 +127,9 @@ def _region_moments(surface: Surface, regions: Regions) -> FloatArray:
     return np.asarray(moments / np.maximum(weight, 1e-300)[:, None, None])
 
 
-def find_creases(surface: Surface, regions: Regions, *, edges: MeshEdges | None = None) -> Creases:
+def find_creases(
+    surface: Surface, regions: Regions, *, edges: MeshEdges | None = None, greatest_turn: float = GREATEST_TURN
+) -> Creases:
     """Classify all edges of a surface.
 
     Parameters
@@ -136,6 +138,8 @@ def find_creases(surface: Surface, regions: Regions, *, edges: MeshEdges | None 
     regions : Regions
     edges : MeshEdges, optional
         ``mesh_edges(surface.triangles)`` if known already.
+    greatest_turn : float, rad
+        Edges that turn by more are sharp.
 
     Returns
     -------
@@ -145,7 +149,7 @@ def find_creases(surface: Surface, regions: Regions, *, edges: MeshEdges | None 
     angles = edge_angles(surface, regions, edges=edges)
     sides = regions.triangle_region[edges.triangles]
     between = edges.consistent & (sides >= 0).all(axis=1) & (sides[:, 0] != sides[:, 1])
-    gentle = np.flatnonzero(between & (np.abs(angles) < GREATEST_TURN))
+    gentle = np.flatnonzero(between & (np.abs(angles) < greatest_turn))
     smooth = np.zeros(len(angles), bool)
     flat_end = np.zeros((len(angles), 2), bool)
     if len(gentle):

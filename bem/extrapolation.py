@@ -22,13 +22,21 @@ __all__ = [
     "realised_share",
     "second_opinion",
     "series_factor",
+    "smooth_factor",
 ]
 
 FloatArray = NDArray[np.float64]
 IntArray = NDArray[np.int64]
+BoolArray = NDArray[np.bool_]
 
 #: Decay where the charge is smooth; also taken for a direction in which a panel has not been split yet.
 SMOOTH_DECAY = 0.25
+#: Decay where the charge is smooth and the panel no longer than wide: a capacitance then converges as h^3. Splitting
+#: the long side of a longer one gains 1/4 (a row of dipoles on a strip), as SMOOTH_DECAY has it.
+COMPACT_DECAY = 0.125
+#: Share of promised gains that smooth regions realise at most, where many neighbours are split alike: 0.80 to 0.91
+#: measured on plate and cube once these regions rule.
+SMOOTH_REALISED = 0.85
 #: Decays are kept between those of smooth charge and of a rim, with room for what neighbours do.
 LEAST_DECAY, GREATEST_DECAY = 0.15, 0.55
 #: Bounds of the realised share of promised gains.
@@ -42,15 +50,18 @@ RIM_DECAY = 0.47
 #: Expanded uncertainty (k = 2) of the extrapolated part as a share of it: of a body never refined, and of others. The
 #: mean of the two opinions was off by 2 % of it on sheets and 8 % on solids once the panels were graded, by up to 25 %
 #: before; on smooth bodies never refined, by up to 80 %.
-UNREFINED_SHARE, SHARE = 1.0, 0.25
+UNREFINED_SHARE, SHARE = 1.0, 0.27
 #: Expanded uncertainty as a share of what the two opinions differ by.
 DISPUTED_SHARE = 0.5
+#: Expanded uncertainty as a share of the sum without regard to sign over the panels of a body: the parts of a weak
+#: coupling cancel, their errors need not. Seen on two plates with a sheet between that shields them.
+SINGLE_SHARE = 0.15
 #: Share of the change since the pass before that counts as uncertain.
 CHANGE_SHARE = 1.0
 
 
 def decay_of_parts(
-    parent: IntArray, was_split: NDArray[np.bool_], before: FloatArray, after: FloatArray, decay: FloatArray
+    parent: IntArray, was_split: BoolArray, before: FloatArray, after: FloatArray, decay: FloatArray
 ) -> FloatArray:
     """Decay of the gain at each split, for the panels after a pass.
 
@@ -109,7 +120,29 @@ def realised_share(gained: FloatArray, promised: FloatArray) -> float:
     return min(max(float(gained.sum()) / total, LEAST_REALISED), GREATEST_REALISED)
 
 
-def first_opinion(gains: FloatArray, decay: FloatArray, realised: float) -> FloatArray:
+def smooth_factor(lengths: FloatArray, realised: float) -> FloatArray:
+    """What a panel with smooth charge is off over its two-level gains, (n_panels, 2).
+
+    Parameters
+    ----------
+    lengths : (n_panels, 2) float, m
+        Of the panel along u and v.
+    realised : float
+        From :func:`realised_share`.
+
+    Returns
+    -------
+    (n_panels, 2) float
+    """
+    aspect = lengths / np.maximum(lengths[:, ::-1], 1e-300)
+    return min(realised, SMOOTH_REALISED) * series_factor(
+        COMPACT_DECAY * np.clip(aspect, 1.0, SMOOTH_DECAY / COMPACT_DECAY)
+    )
+
+
+def first_opinion(
+    gains: FloatArray, decay: FloatArray, realised: float, judged: BoolArray, smooth: FloatArray
+) -> FloatArray:
     """What each panel is off by the series of its two-level gains.
 
     Parameters
@@ -120,6 +153,10 @@ def first_opinion(gains: FloatArray, decay: FloatArray, realised: float) -> Floa
         How much less each further split gains.
     realised : float
         From :func:`realised_share`; 1 if there was no pass before.
+    judged : (n_panels, 2) bool
+        At an edge, or where halves may be equal by symmetry.
+    smooth : (n_panels, 2) float
+        From :func:`smooth_factor`, for the rest.
 
     Returns
     -------
@@ -127,12 +164,14 @@ def first_opinion(gains: FloatArray, decay: FloatArray, realised: float) -> Floa
         The sum of the products of their entries i and j over panels and directions is what entry (i, j) of the
         capacitance matrix is off.
     """
-    # The share moves toward 1 as panels get finer than what lies around them: half-way, in the logarithm, to it.
+    # At edges the share moves toward 1 as panels get finer than what lies around them: half-way, in the logarithm.
     factor = np.sqrt(realised) * series_factor(np.minimum(decay, GREATEST_DECAY))
-    return np.asarray(gains * np.sqrt(factor)[:, :, None])
+    return np.asarray(gains * np.sqrt(np.where(judged, factor, smooth))[:, :, None])
 
 
-def second_opinion(gains: FloatArray, companion: FloatArray, judged: NDArray[np.bool_], edge: FloatArray) -> FloatArray:
+def second_opinion(
+    gains: FloatArray, companion: FloatArray, edge: FloatArray, judged: BoolArray, smooth: FloatArray
+) -> FloatArray:
     """What each panel is off by its even companion, or, where it has none, by smooth charge.
 
     Parameters
@@ -141,10 +180,10 @@ def second_opinion(gains: FloatArray, companion: FloatArray, judged: NDArray[np.
         Two-level gains.
     companion : (n_panels, 2, n) float
         From :func:`daraf.bem.companion.companion_gains`.
-    judged : (n_panels, 2) bool
-        Where there is a companion.
     edge : (n_panels, 2) float
         Decay of splits toward the sharper side.
+    judged, smooth
+        As for :func:`first_opinion`; there is a companion where `judged`.
 
     Returns
     -------
@@ -152,8 +191,7 @@ def second_opinion(gains: FloatArray, companion: FloatArray, judged: NDArray[np.
         As :func:`first_opinion`.
     """
     shown = np.where(edge > RIM_DECAY, RIM_SHOWN, EDGE_SHOWN)[:, :, None]
-    smooth = np.sqrt(1.0 / (1.0 - SMOOTH_DECAY))
-    return np.where(judged[:, :, None], companion / np.sqrt(shown), smooth * gains)
+    return np.where(judged[:, :, None], companion / np.sqrt(shown), gains * np.sqrt(smooth)[:, :, None])
 
 
 def extrapolate(value: FloatArray, first: FloatArray, second: FloatArray) -> FloatArray:
@@ -213,7 +251,8 @@ def extrapolation_uncertainty(
         one, two = _products(first[own]) @ sums, _products(second[own]) @ sums
         share = UNREFINED_SHARE if refined[number] == 0 else SHARE
         known = np.hypot(share * 0.5 * (one + two), DISPUTED_SHARE * (one - two))
-        spread += known + np.abs(_products(unseen[own]) @ sums)
+        sizes = 0.5 * (_products(np.abs(first[own])) + _products(np.abs(second[own]))) @ sums
+        spread += np.hypot(known, SINGLE_SHARE * sizes) + np.abs(_products(unseen[own]) @ sums)
     return spread if change is None else np.hypot(spread, CHANGE_SHARE * change @ sums)
 
 

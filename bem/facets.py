@@ -21,7 +21,7 @@ import numpy as np
 from numpy.typing import NDArray
 from scipy.spatial import cKDTree
 
-from .creases import Creases, corner_normals, offsets_with_ends
+from .creases import LEAST_TURN, Creases, corner_normals, find_creases, offsets_with_ends
 from .frames import panel_frames
 from .hidden import nearest_other
 from .panels import Panels
@@ -43,6 +43,8 @@ FACET_SHARE, DEPTH_SHARE, RIM_SHARE = 0.006, 1.5, 0.08
 GAP_SHARE = 0.2
 #: Gaps beyond this multiple of the depth are wide: nothing is added.
 WIDE_GAP = 30.0
+#: Edges of partly round bodies that turn by less than this may stand for round ones, rad.
+DOUBTFUL_TURN = np.radians(75.0)
 #: Corners of rims and sharp edges that turn by more than this are corners of the drawing, rad.
 _RIM_TURN = np.radians(35.0)
 #: Neighbouring turns of one round edge differ at most by this factor.
@@ -57,8 +59,8 @@ class Facets:
     ----------
     offset : (n_regions,) float, m
         Mean outward distance of the smooth surface from each flat region; zero where nothing is round.
-    share : (n_regions,) float
-        Share of what the offset changes that is not known.
+    doubt : (n_regions,) float, m
+        Distance that is not known: a share of the offset, and all of it where it is not sure that anything is round.
     edge_ends : (n_edges, 2, 3) float, m
         Straight edges, at rims or sharp, that stand for round ones; once for each region at the edge.
     edge_region : (n_edges,) int
@@ -71,7 +73,7 @@ class Facets:
     """
 
     offset: FloatArray
-    share: FloatArray
+    doubt: FloatArray
     edge_ends: FloatArray
     edge_region: IntArray
     edge_out: FloatArray
@@ -81,7 +83,7 @@ class Facets:
     @property
     def any(self) -> bool:
         """Whether anything is round."""
-        return bool(np.any(self.offset)) or len(self.edge_offset) > 0
+        return bool(np.any(self.offset) or np.any(self.doubt)) or len(self.edge_offset) > 0
 
 
 def find_facets(surface: Surface, regions: Regions, creases: Creases) -> Facets:
@@ -99,28 +101,53 @@ def find_facets(surface: Surface, regions: Regions, creases: Creases) -> Facets:
     -------
     Facets
     """
-    offsets, ends = offsets_with_ends(surface, creases, corner_normals(surface, regions, creases))
-    points = surface.vertices[surface.triangles]
-    areas = 0.5 * np.linalg.norm(np.cross(points[:, 1] - points[:, 0], points[:, 2] - points[:, 0]), axis=1)
-    used = regions.triangle_region >= 0
-    total, weighted, ending = (np.zeros(len(regions)) for _ in range(3))
-    np.add.at(total, regions.triangle_region[used], areas[used])
-    np.add.at(weighted, regions.triangle_region[used], (areas * offsets)[used])
-    np.add.at(ending, regions.triangle_region[used], (areas * ends)[used])
-    offset = weighted / np.where(total > 0, total, 1.0)
+    offset, ending, total = _mean_offsets(surface, regions, creases)
     # rounding of the normals is no roundness
     size = np.sqrt(total)
     offset[np.abs(offset) < 1e-9 * size] = 0.0
+    used = regions.triangle_region >= 0
+    points = surface.vertices[surface.triangles]
     low, high = np.full((len(regions), 3), np.inf), np.full((len(regions), 3), -np.inf)
     of, corners = regions.triangle_region[used], points[used]
     np.minimum.at(low, of, corners.min(axis=1))
     np.maximum.at(high, of, corners.max(axis=1))
     # how deep the true surface lies over the narrow way across the facet
     depth = offset * np.linalg.norm(high - low, axis=1) / np.where(total > 0, total, 1.0)
-    unsure = ending / np.maximum(np.abs(weighted), 1e-300)
+    unsure = ending / np.maximum(np.abs(offset), 1e-300)
     share = FACET_SHARE + DEPTH_SHARE * depth**2 + np.minimum(unsure, 1.0)
     share += GAP_SHARE * np.abs(offset) / _gaps(surface, regions, np.abs(offset))
-    return Facets(offset, share, *_round_edges(surface, regions, creases))
+    doubt = share * np.abs(offset) + _if_rounder(surface, regions, creases, offset)
+    return Facets(offset, doubt, *_round_edges(surface, regions, creases))
+
+
+def _mean_offsets(surface: Surface, regions: Regions, creases: Creases) -> tuple[FloatArray, FloatArray, FloatArray]:
+    """Mean distance of the smooth surface from each region, what is not sure of it where it ends, and the area."""
+    found = offsets_with_ends(surface, creases, corner_normals(surface, regions, creases))
+    points = surface.vertices[surface.triangles]
+    areas = 0.5 * np.linalg.norm(np.cross(points[:, 1] - points[:, 0], points[:, 2] - points[:, 0]), axis=1)
+    used = regions.triangle_region >= 0
+    sums = np.zeros((3, len(regions)))
+    for row, values in zip(sums, (*found, np.ones(len(points))), strict=True):
+        np.add.at(row, regions.triangle_region[used], (areas * values)[used])
+    area = np.where(sums[2] > 0, sums[2], 1.0)
+    return sums[0] / area, sums[1] / area, sums[2]
+
+
+def _if_rounder(surface: Surface, regions: Regions, creases: Creases, offset: FloatArray) -> FloatArray:
+    """How far each region would move if steeper edges of the same bodies stood for round ones too, (n_regions,) m.
+
+    A body whose facets turn gently here and steeply there, as round the rim of a flat ellipsoid, may be round all
+    over; one without any smooth edge is taken as it is.
+    """
+    bent = creases.smooth & (np.abs(creases.angles) > LEAST_TURN)
+    owner = surface.triangle_body[creases.edges.triangles[bent, 0]]
+    partly = np.isin(regions.body, np.unique(owner))
+    steep = creases.between & ~creases.smooth & (np.abs(creases.angles) < DOUBTFUL_TURN)
+    if not steep.any() or not partly.any():
+        return np.zeros(len(regions))
+    rounder = find_creases(surface, regions, edges=creases.edges, greatest_turn=DOUBTFUL_TURN)
+    moved, _, _ = _mean_offsets(surface, regions, rounder)
+    return np.where(partly, np.abs(moved - offset), 0.0)
 
 
 def _gaps(surface: Surface, regions: Regions, depth: FloatArray) -> FloatArray:
@@ -269,7 +296,7 @@ def facet_uncertainty(facets: Facets, panels: Panels, density: FloatArray, weigh
         Expanded, k = 2: a share of the first-order change, without regard to sign; the share grows with the depth
         of the facets, since what is left is of second order. Multiply by 4 pi eps for farads.
     """
-    moved = 4.0 * np.pi * (facets.share * np.abs(facets.offset))[panels.region] * panels.areas
+    moved = 4.0 * np.pi * facets.doubt[panels.region] * panels.areas
     combined = density @ weights
     size, combined_size = np.abs(density), np.abs(combined)
     change = np.einsum("p,pi,pj->ij", moved, size, combined_size)

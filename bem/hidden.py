@@ -72,7 +72,7 @@ def unseen_fringe(panels: Panels, gains: FloatArray, sides: FloatArray) -> Float
     if panels.n_conductors == 1:
         return fringe
     lengths = np.linalg.norm(np.roll(panels.corners, -1, axis=1) - panels.corners, axis=2)
-    widths = np.stack([0.5 * (lengths[:, 0] + lengths[:, 2]), 0.5 * (lengths[:, 1] + lengths[:, 3])], axis=1)
+    widths = panels.lengths
     for direction, pair in ((0, (1, 3)), (1, (0, 2))):
         for side in pair:
             rows = np.flatnonzero((sides[:, side] > SMOOTH_DECAY) & (panels.n_corners == 4))

@@ -38,13 +38,16 @@ class Pass:
     maxwell : (n, n) float, F
         Raw Galerkin value; its diagonal converges from below.
     estimate : (n, n) float, F
-        Two-level estimate of exact minus raw, signed.
+        Estimate of exact minus raw, signed: the mean of two opinions on what the panels are off.
+    uncertainty : (n, n) float, F
+        Expanded, k = 2, of raw plus estimate.
     seconds : float
     """
 
     panels: int
     maxwell: FloatArray
     estimate: FloatArray
+    uncertainty: FloatArray
     seconds: float
 
 
