@@ -45,6 +45,9 @@ GAP_SHARE = 0.2
 WIDE_GAP = 30.0
 #: Edges of partly round bodies that turn by less than this may stand for round ones, rad.
 DOUBTFUL_TURN = np.radians(75.0)
+#: What rounding them would change counts this often: to first order it falls short where edges are steep. Measured on
+#: spheroids of 4 to 1 and 5 to 1, an ellipsoid and tori of 6 to 10 sides: true over first order 0.6 to 1.4.
+ROUNDER_SHARE = 1.5
 #: Corners of rims and sharp edges that turn by more than this are corners of the drawing, rad.
 _RIM_TURN = np.radians(35.0)
 #: Neighbouring turns of one round edge differ at most by this factor.
@@ -146,8 +149,11 @@ def _if_rounder(surface: Surface, regions: Regions, creases: Creases, offset: Fl
     if not steep.any() or not partly.any():
         return np.zeros(len(regions))
     rounder = find_creases(surface, regions, edges=creases.edges, greatest_turn=DOUBTFUL_TURN)
+    # triangles that lie singly, not in flat pairs, come from a doubly curved surface however unevenly they turn
+    single = (np.diff(regions.starts) == 1)[regions.triangle_region[creases.edges.triangles]].all(axis=1)
+    rounder = replace(rounder, smooth=rounder.smooth | (steep & single))
     moved, _, _ = _mean_offsets(surface, regions, rounder)
-    return np.where(partly, np.abs(moved - offset), 0.0)
+    return np.where(partly, ROUNDER_SHARE * np.abs(moved - offset), 0.0)
 
 
 def _gaps(surface: Surface, regions: Regions, depth: FloatArray) -> FloatArray:
