@@ -34,10 +34,14 @@ FloatArray = NDArray[np.float64]
 IntArray = NDArray[np.int64]
 BoolArray = NDArray[np.bool_]
 
-#: Expanded uncertainty (k = 2) as a share of the first-order change by a facet; to it is added this multiple of the
-#: square of the facet's depth per width, for what is of second order: 2.0 was the most that was seen, on tori of 8 to
-#: 16 sides, 1.5 on spheres of 6 rings. Rims: likewise a share, their coefficient is read off one panel.
-FACET_SHARE, DEPTH_SHARE, RIM_SHARE = 0.006, 1.5, 0.08
+#: Expanded uncertainty (k = 2) as a share of the first-order change by a facet.
+FACET_SHARE = 0.004
+#: To it is added this multiple of the square of the facet's depth per width, for what is of second order: of flat pairs
+#: of triangles, where 2.0 was seen on tori of 8 to 16 sides and 1.5 on spheres of 6 rings, and of single triangles,
+#: where it was 0.6 on spheres and spheroids.
+DEPTH_SHARE, SINGLE_DEPTH_SHARE = 1.5, 0.8
+#: Rims: likewise a share; their coefficient is read off one panel.
+RIM_SHARE = 0.08
 #: Near another conductor the facet's hollow counts once more, in second order: this multiple of its depth per gap. The
 #: square of the depth varies over a triangle of a sphere by a tenth about its mean; both sides of the gap may be round.
 GAP_SHARE = 0.2
@@ -117,7 +121,8 @@ def find_facets(surface: Surface, regions: Regions, creases: Creases) -> Facets:
     # how deep the true surface lies over the narrow way across the facet
     depth = offset * np.linalg.norm(high - low, axis=1) / np.where(total > 0, total, 1.0)
     unsure = ending / np.maximum(np.abs(offset), 1e-300)
-    share = FACET_SHARE + DEPTH_SHARE * depth**2 + np.minimum(unsure, 1.0)
+    second_order = np.where(np.diff(regions.starts) == 1, SINGLE_DEPTH_SHARE, DEPTH_SHARE)
+    share = FACET_SHARE + second_order * depth**2 + np.minimum(unsure, 1.0)
     share += GAP_SHARE * np.abs(offset) / _gaps(surface, regions, np.abs(offset))
     doubt = share * np.abs(offset) + _if_rounder(surface, regions, creases, offset)
     return Facets(offset, doubt, *_round_edges(surface, regions, creases))

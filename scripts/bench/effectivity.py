@@ -1,9 +1,10 @@
 """How well the estimates tell the true error, pass by pass, on bodies whose capacitance is known.
 
-Three ratios: the estimate over the true error of the Galerkin value (goal 0.5 to 2 from 100 panels on); what is left of
-that error once the estimate is added; and the stated uncertainty over it (below 1 the statement was false). The round
-bodies stand as polyhedra for themselves, ``facets="true"``: the exact value is then that of a run far finer, so named.
-What bounds it: the reference values, exact to 1e-8, to 1e-5 where a finer run stands for them.
+Three columns: the relative error of the Galerkin value; the estimate over that error (goal 0.5 to 2 from 100 panels
+on); and the stated uncertainty over the error that is left once the estimate is added (below 1 the statement was
+false). Round bodies stand as polyhedra for themselves, ``facets="true"``.
+What bounds it: the reference values, good to 1e-8, or, where none is known, the last pass of the same run: rows near
+it are left out.
 """
 
 import argparse

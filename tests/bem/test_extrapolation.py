@@ -11,6 +11,7 @@ from daraf.bem.extrapolation import (
     SINGLE_SHARE,
     SMOOTH_DECAY,
     UNREFINED_SHARE,
+    UNSEEN_SHARE,
     decay_of_parts,
     extrapolate,
     extrapolation_uncertainty,
@@ -107,20 +108,23 @@ def test_smooth_panels_decay_by_an_eighth_and_long_ones_by_a_quarter():
     np.testing.assert_allclose(factor, 0.8 * np.array([(8 / 7, 8 / 7), (4 / 3, 8 / 7), (16 / 13, 8 / 7)]), rtol=1e-14)
 
 
-def _uncertainty(first, second, refined, unseen=0.0):
+def _uncertainty(first, second, refined, unseen=0.0, realised=1.0):
     one, two = np.zeros((1, 2, 1)), np.zeros((1, 2, 1))
     one[0, 0], two[0, 0] = np.sqrt(first), np.sqrt(second)
     hidden = np.zeros((1, 2, 1))
     hidden[0, 0] = np.sqrt(unseen)
     body, refined = np.zeros(1, np.int64), np.array([refined])
-    return extrapolation_uncertainty(one, two, hidden, body, None, np.ones((1, 1)), refined)[0, 0]
+    return extrapolation_uncertainty(one, two, hidden, body, None, np.ones((1, 1)), refined, realised)[0, 0]
 
 
 def test_opinions_that_agree_leave_their_share_and_those_that_differ_leave_more():
     # squares of square roots
     assert _uncertainty(0.1, 0.1, 3) == pytest.approx(0.1 * np.hypot(SHARE, SINGLE_SHARE), rel=1e-14)
     assert _uncertainty(0.1, 0.1, 0) == pytest.approx(0.1 * np.hypot(UNREFINED_SHARE, SINGLE_SHARE), rel=1e-14)
-    # one that sees nothing must not pass for certainty: the truth may be either
-    assert _uncertainty(0.0, 0.1, 3) > 0.05
-    assert _uncertainty(0.1, 0.0, 3) > 0.05
-    assert _uncertainty(0.1, 0.1, 3, unseen=0.2) == pytest.approx(0.1 * np.hypot(SHARE, SINGLE_SHARE) + 0.2, rel=1e-14)
+    # one that sees nothing must not pass for certainty
+    assert _uncertainty(0.0, 0.1, 3) > 0.04
+    assert _uncertainty(0.1, 0.0, 3) > 0.04
+    assert _uncertainty(0.1, 0.1, 3, unseen=0.2) == pytest.approx(
+        0.1 * np.hypot(SHARE, SINGLE_SHARE) + 0.2 * UNSEEN_SHARE, rel=1e-14
+    )
+    assert _uncertainty(0.1, 0.1, 3, realised=0.5) > 3.0 * _uncertainty(0.1, 0.1, 3)
