@@ -255,6 +255,10 @@ def _judge(result: PassResult, round_parts: Facets | None, accuracy: FloatArray,
         "facets": np.zeros_like(value),
         "integration": INTEGRATION * np.hstack([scale, scale.max(axis=1, keepdims=True)]),
     }
+    # a weak coupling that the estimate moves by as much as is left of it is not known better than that
+    added = np.abs((result.limit - result.value) @ sums)
+    unsure = added * np.minimum(added / np.maximum(np.abs(value), 1e-300), 1.0)
+    lines["discretisation"] = np.maximum(lines["discretisation"], unsure)
     if round_parts is not None and round_parts.any:
         lines["facets"] = facet_uncertainty(round_parts, result.panels, result.density, sums)
     total = np.sqrt(sum(line**2 for line in lines.values()))
