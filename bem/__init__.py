@@ -23,6 +23,7 @@ from .network import Excitation, MutualCapacitance, eliminate_floating, excite, 
 from .panels import Panels
 from .solution import CapacitanceSolution, Notice, Pass
 from .surface import Surface
+from .terminals import Modes, Quantity, Terminals, terminals
 
 __all__ = [
     "EPSILON_0",
@@ -42,13 +43,16 @@ __all__ = [
     "MediaSolution",
     "MemoryRefused",
     "MirrorPlane",
+    "Modes",
     "MutualCapacitance",
     "Notice",
     "NumericalError",
     "Panels",
     "Pass",
     "PointCharges",
+    "Quantity",
     "Surface",
+    "Terminals",
     "UniformField",
     "admittance",
     "complex_permittivity",
@@ -61,4 +65,5 @@ __all__ = [
     "set_threads",
     "solve_capacitance",
     "solve_media",
+    "terminals",
 ]

@@ -16,7 +16,17 @@ from scipy.sparse.csgraph import connected_components
 from .regions import MeshEdges, Regions, mesh_edges
 from .surface import Surface
 
-__all__ = ["Creases", "corner_normals", "edge_angles", "facet_offsets", "find_creases", "smooth_edges"]
+__all__ = [
+    "GREATEST_TURN",
+    "WIDE_TURN",
+    "Creases",
+    "corner_normals",
+    "edge_angles",
+    "facet_offsets",
+    "find_creases",
+    "offsets_with_ends",
+    "smooth_edges",
+]
 
 FloatArray = NDArray[np.float64]
 IntArray = NDArray[np.int64]
@@ -24,6 +34,8 @@ BoolArray = NDArray[np.bool_]
 
 #: An edge that turns by more than this is sharp, rad.
 GREATEST_TURN = np.radians(35.0)
+#: The same where the user says that facets stand for round parts: down to eight facets a turn, rad.
+WIDE_TURN = np.radians(50.0)
 #: Edges that turn by less than this are flat, rad.
 LEAST_TURN = 1e-3
 #: Neighbouring turns of one smooth surface differ at most by this factor.
@@ -37,6 +49,10 @@ SAME_AXIS = 0.3
 #: Where the normal leaves a facet's by more than this many of its greatest turns, as at the tip of a cone,
 #: there is no smooth surface and the facet's normal is taken.
 TIP = 1.5
+#: Share of what a facet's distance owes to the edges that run inward from a sharp edge, or from a rim, which is not
+#: sure: the law of the charge is that of a straight edge with flat sides. Measured on lenses of 90 to 160 degrees,
+#: hemispheres and bowls: 0.17 and 0.01 at most.
+END_DOUBT, RIM_DOUBT = 0.2, 0.02
 #: Regions with more edges than this are no strips.
 MOST_SIDES = 64
 
@@ -61,6 +77,8 @@ class Creases:
         Meant smooth (or flat); never true on rims and branching edges.
     flat_end : (n_edges, 2) bool
         The first or second facet of the edge is a flat face into which the smooth surface runs.
+    greatest_turn : float, rad
+        Edges that turn by more were taken as sharp.
     """
 
     edges: MeshEdges
@@ -70,6 +88,7 @@ class Creases:
     branching: BoolArray
     smooth: BoolArray
     flat_end: BoolArray
+    greatest_turn: float = GREATEST_TURN
 
 
 def edge_angles(surface: Surface, regions: Regions, *, edges: MeshEdges | None = None) -> FloatArray:
@@ -115,7 +134,9 @@ def _region_moments(surface: Surface, regions: Regions) -> FloatArray:
     return np.asarray(moments / np.maximum(weight, 1e-300)[:, None, None])
 
 
-def find_creases(surface: Surface, regions: Regions, *, edges: MeshEdges | None = None) -> Creases:
+def find_creases(
+    surface: Surface, regions: Regions, *, edges: MeshEdges | None = None, greatest_turn: float = GREATEST_TURN
+) -> Creases:
     """Classify all edges of a surface.
 
     Parameters
@@ -124,6 +145,8 @@ def find_creases(surface: Surface, regions: Regions, *, edges: MeshEdges | None 
     regions : Regions
     edges : MeshEdges, optional
         ``mesh_edges(surface.triangles)`` if known already.
+    greatest_turn : float, rad
+        Edges that turn by more are sharp.
 
     Returns
     -------
@@ -133,7 +156,7 @@ def find_creases(surface: Surface, regions: Regions, *, edges: MeshEdges | None 
     angles = edge_angles(surface, regions, edges=edges)
     sides = regions.triangle_region[edges.triangles]
     between = edges.consistent & (sides >= 0).all(axis=1) & (sides[:, 0] != sides[:, 1])
-    gentle = np.flatnonzero(between & (np.abs(angles) < GREATEST_TURN))
+    gentle = np.flatnonzero(between & (np.abs(angles) < greatest_turn))
     smooth = np.zeros(len(angles), bool)
     flat_end = np.zeros((len(angles), 2), bool)
     if len(gentle):
@@ -142,7 +165,7 @@ def find_creases(surface: Surface, regions: Regions, *, edges: MeshEdges | None 
         flat_end[gentle] = flats
     smooth |= edges.consistent & (np.abs(angles) <= LEAST_TURN) & (sides >= 0).all(axis=1)
     rim = edges.count == 1
-    return Creases(edges, angles, between, rim, ~rim & ~edges.consistent, smooth, flat_end)
+    return Creases(edges, angles, between, rim, ~rim & ~edges.consistent, smooth, flat_end, greatest_turn)
 
 
 def _rows_of_edges(
@@ -329,7 +352,54 @@ def facet_offsets(surface: Surface, normals: FloatArray) -> FloatArray:
     (n_triangles,) float, m
         Negative where the surface is concave.
     """
+    first, second = _half_turns(surface, normals)
+    return np.asarray((first + second).sum(axis=1) / 24)
+
+
+def offsets_with_ends(surface: Surface, creases: Creases, normals: FloatArray) -> tuple[FloatArray, FloatArray]:
+    """Distance of the smooth surface from each flat triangle as far as the charge feels it.
+
+    As `facet_offsets`, but where the smooth surface ends, at a sharp edge or a rim, the normal at the end knows one
+    side only: along an edge that runs inward from there the other half of the turn is taken twice. Charge crowds at
+    the end, where the surface does not lie outside the facet. Its square goes as x^p with the distance x, with
+    p = -2 turn/(pi + turn) at a sharp edge; at a rim the difference of the squares on both sides goes as x^(-1/2).
+    The mean of x (1 - x) with that weight is 6 (1 + p)/((2 + p)(3 + p)) of the plain one.
+
+    Returns
+    -------
+    offset : (n_triangles,) float, m
+    doubt : (n_triangles,) float, m
+        What is not sure of it, for the edges that run inward from an end: `END_DOUBT` or `RIM_DOUBT` of their part.
+    """
+    turn = np.maximum(creases.angles, 0.0)
+    power = np.where(creases.rim, -0.5, -2.0 * turn / (np.pi + turn))
+    weight = 6.0 * (1.0 + power) / ((2.0 + power) * (3.0 + power))
+    sharp = creases.rim | (creases.between & ~creases.smooth)
+    of_vertex = np.full(len(surface.vertices), np.inf)
+    np.minimum.at(of_vertex, creases.edges.vertices[sharp].reshape(-1), np.repeat(weight[sharp], 2))
+    doubt = np.full(len(surface.vertices), END_DOUBT)
+    doubt[creases.edges.vertices[creases.rim]] = RIM_DOUBT
+    here = of_vertex[surface.triangles]
+    there = np.roll(here, -1, axis=1)
+    first, second = _half_turns(surface, normals)
+    leaves, arrives = np.isfinite(here) & ~np.isfinite(there), np.isfinite(there) & ~np.isfinite(here)
+    # the normal at the end turns with the surface along the end, not inward: that half is all that the other half has
+    # in excess of it
+    known, inward = np.where(arrives, second, first), np.where(arrives, first - second, second - first)
+    inward = 2.0 * np.where(leaves | arrives, inward * np.where(leaves, here, np.where(arrives, there, 0.0)), 0.0)
+    total = np.where(leaves | arrives, 2.0 * known + inward, first + second)
+    sure = doubt[surface.triangles]
+    unsure = np.abs(inward) * np.where(leaves, sure, np.roll(sure, -1, axis=1))
+    return total.sum(axis=1) / 24, unsure.sum(axis=1) / 24
+
+
+def _half_turns(surface: Surface, normals: FloatArray) -> tuple[FloatArray, FloatArray]:
+    """Edge times the turn of the normal from its first corner to the facet, and on to its second, (n_triangles, 3)."""
     points = surface.vertices[surface.triangles]
     along = np.roll(points, -1, axis=1) - points
-    turn = np.roll(normals, -1, axis=1) - normals
-    return np.asarray(np.einsum("tki,tki->t", along, turn) / 24)
+    own = np.cross(along[:, 0], along[:, 1])
+    length = np.linalg.norm(own, axis=1)
+    own = (own / np.where(length > 0, length, 1.0)[:, None])[:, None, :]
+    first = np.einsum("tki,tki->tk", along, own - normals)
+    second = np.einsum("tki,tki->tk", along, np.roll(normals, -1, axis=1) - own)
+    return first, second

@@ -11,7 +11,7 @@ import numpy as np
 from numpy.typing import NDArray
 from scipy.spatial import cKDTree
 
-from .creases import Creases, find_creases
+from .creases import GREATEST_TURN, Creases, find_creases
 from .facets import Facets, find_facets
 from .images import Images, mirrored
 from .panels import Panels, polygon_geometry
@@ -107,9 +107,9 @@ class Drawn:
         of_whole = self.regions.triangle_region[: len(pieces.triangles)]
         of_piece = regions.triangle_region
         used = (of_whole >= 0) & (of_piece >= 0)
-        offset, share = np.zeros(len(regions)), np.full(len(regions), whole.share.min(initial=0.0))
+        offset, doubt = np.zeros(len(regions)), np.zeros(len(regions))
         offset[of_piece[used]] = whole.offset[of_whole[used]]
-        share[of_piece[used]] = whole.share[of_whole[used]]
+        doubt[of_piece[used]] = whole.doubt[of_whole[used]]
         pairs = np.unique(np.column_stack([of_whole[used], of_piece[used]]), axis=0)
         start = np.searchsorted(pairs[:, 0], whole.edge_region, "left")
         count = np.searchsorted(pairs[:, 0], whole.edge_region, "right") - start
@@ -117,7 +117,7 @@ class Drawn:
         region = pairs[np.repeat(start, count) + np.arange(len(edge)) - np.repeat(np.cumsum(count) - count, count), 1]
         return Facets(
             offset,
-            share,
+            doubt,
             whole.edge_ends[edge],
             region,
             whole.edge_out[edge],
@@ -126,7 +126,9 @@ class Drawn:
         )
 
 
-def drawn_surface(surface: Surface, whole: IntArray, images: Images | None = None) -> Drawn:
+def drawn_surface(
+    surface: Surface, whole: IntArray, images: Images | None = None, *, greatest_turn: float = GREATEST_TURN
+) -> Drawn:
     """Join pieces and their mirror images to the surfaces that were drawn.
 
     Parameters
@@ -135,6 +137,8 @@ def drawn_surface(surface: Surface, whole: IntArray, images: Images | None = Non
     whole : (n_bodies,) int
         Bodies with equal numbers are pieces of one surface.
     images : Images, optional
+    greatest_turn : float, rad
+        Edges that turn by more are sharp.
 
     Returns
     -------
@@ -157,7 +161,7 @@ def drawn_surface(surface: Surface, whole: IntArray, images: Images | None = Non
         vertices[used[first, 0]], number[corner.reshape(-1)].reshape(-1, 3), group, np.arange(int(group.max()) + 1)
     )
     regions, _ = find_regions(joined)
-    return Drawn(joined, regions, find_creases(joined, regions), of_body)
+    return Drawn(joined, regions, find_creases(joined, regions, greatest_turn=greatest_turn), of_body)
 
 
 def _clusters(points: FloatArray, distance: float) -> IntArray:

@@ -25,29 +25,29 @@ from .field import polygon_field
 from .frames import CENTROID, CORNER, DIRECTION, LENGTH, NORMAL, OUTWARD, POINTS, RADIUS
 from .gauss import GAUSS_NODES, GAUSS_WEIGHTS
 from .jit import kernel, parallel_kernel, prange
-from .near import (
-    _MAX_PIECES,
-    _NARROW,
-    _PARALLEL,
-    _S,
-    _WS,
+from .near import common_corner
+from .pair_rule import pair_rule
+from .segments import (
+    CROWDED_NODES,
+    CROWDED_WEIGHTS,
+    MAX_PIECES,
     N_POINTS,
-    _across,
-    _common_corner,
-    _edge_line,
-    _height,
-    _narrow_rule,
-    _narrowness,
-    _pieces,
+    NARROW,
+    PARALLEL,
+    across,
+    edge_line,
+    height_over,
+    narrow_rule,
+    narrowness,
+    pieces,
 )
-from .polygon import polygon_distance
 
 __all__ = ["flux_integral", "flux_rows", "middle_flux"]
 
 _REORDER = {"reassoc", "contract", "arcp", "nsz"}
 #: As in :mod:`daraf.bem.pairs`; the integrand is steeper by one power of the distance.
-_FAR_2, _FAR_3, _FAR_4 = 30.0, 7.0, 3.2
-_MIDDLE_3, _MIDDLE_4, _MIDDLE_5 = 6.0, 3.2, 2.2
+_FAR = (30.0, 7.0, 3.2)
+_MIDDLE = (6.0, 3.2, 2.2)
 #: Panels whose corners all lie this close to the target's plane, per radius, send no flux through it.
 _IN_PLANE = 1e-13
 #: An origin further off than this many radii wants a finer rule.
@@ -97,8 +97,8 @@ def middle_flux(target, source, n):
 @kernel
 def _along(line, other, normal, w0, w1, parts):
     """Integral of (normal part of the field of panel `other`) x (weight, linear from w0 to w1) along a segment."""
-    breaks = np.empty(_MAX_PIECES)
-    n = _pieces(breaks, line, other)
+    breaks = np.empty(MAX_PIECES)
+    n = pieces(breaks, line, other)
     slope = (w1 - w0) / line[6]
     total = 0.0
     for b in range((n - 1) * parts):
@@ -107,9 +107,11 @@ def _along(line, other, normal, w0, w1, parts):
         start = breaks[k] + (b - k * parts) * piece
         part = 0.0
         for q in range(N_POINTS):
-            s = start + piece * _S[q]
+            s = start + piece * CROWDED_NODES[q]
             x, y, z = line[0] + s * line[3], line[1] + s * line[4], line[2] + s * line[5]
-            part += _WS[q] * (w0 + slope * s) * _normal_part(other, normal[0], normal[1], normal[2], x, y, z)
+            part += (
+                CROWDED_WEIGHTS[q] * (w0 + slope * s) * _normal_part(other, normal[0], normal[1], normal[2], x, y, z)
+            )
         total += part * piece
     return total
 
@@ -126,7 +128,7 @@ def _edges_about(panel, other, normal, origin, parts):
         distance = (panel[c] - origin[0]) * panel[o] + (panel[c + 1] - origin[1]) * panel[o + 1]
         distance += (panel[c + 2] - origin[2]) * panel[o + 2]
         if abs(distance) > 1e-13 * panel[RADIUS]:
-            _edge_line(line, panel, k)
+            edge_line(line, panel, k)
             total += distance * _along(line, other, normal, 1.0, 1.0, parts)
     return total
 
@@ -153,14 +155,14 @@ def _log_inner(q2, h, t0, t1):
 @kernel
 def _parallel_flux(target, source, h):
     """Flux through a panel of the charge of another in a parallel plane a height h > 0 behind it, m2."""
-    breaks = np.empty(_MAX_PIECES)
+    breaks = np.empty(MAX_PIECES)
     line = np.empty(7)
     total = 0.0
     for k in range(4):
         if source[LENGTH + k] == 0.0:
             continue
-        _edge_line(line, source, k)
-        n = _pieces(breaks, line, target)
+        edge_line(line, source, k)
+        n = pieces(breaks, line, target)
         c, d, o = CORNER + 3 * k, DIRECTION + 3 * k, OUTWARD + 3 * k
         for j in range(4):
             if target[LENGTH + j] == 0.0:
@@ -173,13 +175,13 @@ def _parallel_flux(target, source, h):
                 piece = breaks[b + 1] - breaks[b]
                 part = 0.0
                 for p in range(N_POINTS):
-                    s = breaks[b] + piece * _S[p]
+                    s = breaks[b] + piece * CROWDED_NODES[p]
                     rx = source[c] + s * source[d] - target[cj]
                     ry = source[c + 1] + s * source[d + 1] - target[cj + 1]
                     rz = source[c + 2] + s * source[d + 2] - target[cj + 2]
                     t = rx * target[dj] + ry * target[dj + 1] + rz * target[dj + 2]
                     q = rx * target[oj] + ry * target[oj + 1] + rz * target[oj + 2]
-                    part += _WS[p] * _log_inner(q * q, h, -t, target[LENGTH + j] - t)
+                    part += CROWDED_WEIGHTS[p] * _log_inner(q * q, h, -t, target[LENGTH + j] - t)
                 total -= weight * part * piece
     return total
 
@@ -190,7 +192,7 @@ def _narrow_flux(narrow, other, normal, side, n):
     line = np.empty(7)
     total = 0.0
     for q in range(n):
-        w0, w1 = _across(narrow, side, GAUSS_NODES[n, q], line)
+        w0, w1 = across(narrow, side, GAUSS_NODES[n, q], line)
         if line[6] > 0.0:
             total += GAUSS_WEIGHTS[n, q] * _along(line, other, normal, w0, w1, 1)
     return total
@@ -201,27 +203,27 @@ def _close_flux(target, source):
     """Flux of a panel through another that touches or nearly touches it, m2."""
     normal = target[NORMAL : NORMAL + 3]
     smaller = min(source[RADIUS], target[RADIUS])
-    ox, oy, oz, touching = _common_corner(source, target, 1e-12 * smaller)
+    ox, oy, oz, touching = common_corner(source, target, 1e-12 * smaller)
     nx, ny, nz = target[NORMAL], target[NORMAL + 1], target[NORMAL + 2]
     mx, my, mz = source[NORMAL], source[NORMAL + 1], source[NORMAL + 2]
     parts = 1
     if not touching:
         line = np.empty(7)
-        ratio, side = _narrowness(source, target, line)
-        if ratio > _NARROW:
-            return -_narrow_flux(source, target, normal, side, _narrow_rule(ratio) + 2)
-        ratio, side = _narrowness(target, source, line)
-        if ratio > _NARROW:
-            return _narrow_flux(target, source, normal, side, _narrow_rule(ratio) + 2)
+        ratio, side = narrowness(source, target, line)
+        if ratio > NARROW:
+            return -_narrow_flux(source, target, normal, side, narrow_rule(ratio) + 2)
+        ratio, side = narrowness(target, source, line)
+        if ratio > NARROW:
+            return _narrow_flux(target, source, normal, side, narrow_rule(ratio) + 2)
         lx, ly, lz = ny * mz - nz * my, nz * mx - nx * mz, nx * my - ny * mx
         sin2 = lx * lx + ly * ly + lz * lz
-        if sin2 < _PARALLEL**2:
+        if sin2 < PARALLEL**2:
             x = target[CENTROID] - source[CENTROID]
             y = target[CENTROID + 1] - source[CENTROID + 1]
             z = target[CENTROID + 2] - source[CENTROID + 2]
             sign = 1.0 if x * nx + y * ny + z * nz > 0.0 else -1.0
             share = source[RADIUS] ** 2 / (source[RADIUS] ** 2 + target[RADIUS] ** 2)
-            height = share * _height(source, target) + (1.0 - share) * _height(target, source)
+            height = share * height_over(source, target) + (1.0 - share) * height_over(target, source)
             return sign * _parallel_flux(target, source, height)
         ox = 0.5 * (source[CENTROID] + target[CENTROID])
         oy = 0.5 * (source[CENTROID + 1] + target[CENTROID + 1])
@@ -269,29 +271,13 @@ def flux_integral(target, source):
     float, m2
         Relative error about 1e-6 of the source's area at worst.
     """
-    x = source[CENTROID] - target[CENTROID]
-    y = source[CENTROID + 1] - target[CENTROID + 1]
-    z = source[CENTROID + 2] - target[CENTROID + 2]
-    ratio = math.sqrt(x * x + y * y + z * z) / (source[RADIUS] + target[RADIUS])
-    if ratio > _FAR_2:
-        return _far_flux(target, source, 2)
-    if ratio > _FAR_3:
-        return _far_flux(target, source, 3)
-    if ratio > _FAR_4:
-        return _far_flux(target, source, 4)
+    rule, _ = pair_rule(source, target, _FAR, _MIDDLE)
+    if rule > 0:
+        return _far_flux(target, source, rule)
     if _in_plane(target, source):
         return 0.0
-    if source[RADIUS] <= target[RADIUS]:
-        outer, inner = source, target
-    else:
-        outer, inner = target, source
-    ratio = polygon_distance(inner, outer[CENTROID], outer[CENTROID + 1], outer[CENTROID + 2]) / outer[RADIUS]
-    if ratio > _MIDDLE_3:
-        return middle_flux(target, source, 3)
-    if ratio > _MIDDLE_4:
-        return middle_flux(target, source, 4)
-    if ratio > _MIDDLE_5:
-        return middle_flux(target, source, 5)
+    if rule < 0:
+        return middle_flux(target, source, -rule)
     return _close_flux(target, source)
 
 

@@ -13,21 +13,21 @@ import numpy as np
 from numpy.typing import NDArray
 from scipy.linalg import lu_factor, lu_solve
 
-from .adaptive import REFINED_SHARE
+from .adaptive import REFINED_SHARE, sides_by_direction
 from .bisection import SPLIT_U, SPLIT_V, split_panels, split_sides
-from .extrapolation import GREATEST_DECAY, SMOOTH_DECAY, decay_of_parts, realised_share, series_factor
+from .extrapolation import GREATEST_DECAY, SMOOTH_DECAY, decay_of_parts, realised_share
 from .given_charge import Load
-from .hidden import feared_gains
 from .images import Images
 from .load_columns import LoadColumns, load_columns
 from .media import Media, PanelMedia
+from .media_extrapolation import DOUBTFUL_DECAY, feared_media_gains, weighted_gains
 from .media_indicator import MediaGains, media_gains
 from .media_matrix import MediaIntegrals, media_integrals, self_terms, system_matrix
 from .panels import Panels
 from .refinement import choose_splits
 from .solution import Notice
 
-__all__ = ["MediaPass", "MediaPlan", "media_pass", "media_worth", "plan_next_media", "weighted_gains"]
+__all__ = ["MediaPass", "MediaPlan", "media_pass", "media_worth", "plan_next_media"]
 
 FloatArray = NDArray[np.float64]
 IntArray = NDArray[np.int64]
@@ -156,7 +156,8 @@ def media_pass(
                 progress=lambda done, total: report("estimate", done, total),
             )
         )
-        feared.append(_feared(plan, at, direct * own, state[s], adjoint[s], gains[s]))
+        pair = (state[s], adjoint[s])
+        feared.append(feared_media_gains(panels, at, gains[s], pair, direct * own, plan.symmetric, plan.sides))
     decay, realised = _history(plan, value, gains)
     weighted = [weighted_gains(g, np.minimum(decay, GREATEST_DECAY), realised) for g in gains]
     limit = value + np.array([_symmetric(left.T @ right) for left, right in weighted])
@@ -207,35 +208,6 @@ def _solve(
     return np.ascontiguousarray(state), np.ascontiguousarray(adjoint), value
 
 
-def _feared(
-    plan: MediaPlan, media: PanelMedia, self_terms: FloatArray, state: Array, adjoint: Array, gains: MediaGains
-) -> MediaGains:
-    """Gains, or what conductor panels may hide where that is more."""
-    metal = np.flatnonzero(~media.interface)
-    if len(metal) == 0:
-        return gains
-    panels = plan.panels
-    part = Panels(
-        panels.corners[metal],
-        panels.n_corners[metal],
-        panels.body[metal],
-        panels.conductor[metal],
-        panels.region[metal],
-    )
-    unit = np.abs(media.outside[metal])
-    left, right = gains.left.copy(), gains.right.copy()
-    for found, density, factor in ((left, adjoint, unit), (right, state, np.ones(len(metal)))):
-        found[metal] = factor[:, None, None] * feared_gains(
-            part,
-            found[metal] / factor[:, None, None],
-            density[metal] / factor[:, None],
-            self_terms[metal],
-            plan.symmetric[metal],
-            plan.sides[metal],
-        )
-    return MediaGains(left, right)
-
-
 def media_worth(gains: list[MediaGains], weights: FloatArray) -> FloatArray:
     """Worth of each gain, (n_panels, 2): its products over all entries and states, weighted by `weights` (S, n, n)."""
     worth = np.zeros(gains[0].left.shape[:2])
@@ -244,21 +216,15 @@ def media_worth(gains: list[MediaGains], weights: FloatArray) -> FloatArray:
     return worth
 
 
-def weighted_gains(gains: MediaGains, decay: FloatArray, realised: float) -> tuple[Array, Array]:
-    """Gains with the root of what all further splits add to them, flattened: (2 n_panels, n_conductors)."""
-    factor = np.sqrt(np.sqrt(realised) * series_factor(decay))[:, :, None]
-    n = gains.left.shape[2]
-    return np.asarray((gains.left * factor).reshape(-1, n)), np.asarray((gains.right * factor).reshape(-1, n))
-
-
 def _history(plan: MediaPlan, value: Array, gains: list[MediaGains]) -> tuple[FloatArray, float]:
     """Decay of each panel's gains and the realised share of what was promised."""
     before = plan.before
     if before is None or plan.parent is None or plan.was_split is None or plan.worth is None or plan.weights is None:
-        start = np.stack([plan.sides[:, [1, 3]].max(axis=1), plan.sides[:, [0, 2]].max(axis=1)], axis=1)
+        start = sides_by_direction(plan.sides)
         start[plan.panels.n_corners == 3] = SMOOTH_DECAY
         return start, 1.0
-    decay = decay_of_parts(plan.parent, plan.was_split, plan.worth, media_worth(gains, plan.weights), before.decay)
+    now = media_worth(gains, plan.weights)
+    decay = decay_of_parts(plan.parent, plan.was_split, plan.worth, now, before.decay, greatest=DOUBTFUL_DECAY)
     promised, gained = [], []
     for s, g in enumerate(before.gains):
         diagonal = np.maximum(np.abs(np.diag(value[s])), np.finfo(float).tiny)

@@ -82,7 +82,7 @@ def media_facet_uncertainty(
         Expanded, k = 2: a share of the first-order change, without regard to sign.
     """
     state, adjoint = solved
-    moved = CLOSED_SHARE * (facets.share * np.abs(facets.offset))[panels.region] * panels.areas
+    moved = CLOSED_SHARE * facets.doubt[panels.region] * panels.areas
     metal = ~media.interface
     size = np.abs(adjoint[metal])
     combined = np.abs(adjoint[metal] @ sums)

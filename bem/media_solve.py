@@ -13,14 +13,14 @@ from .constants import FOUR_PI_EPSILON_0
 from .creases import find_creases
 from .drawn import drawn_surface
 from .errors import InputError
-from .extrapolation import SHARES
-from .facets import Facets, move_facets
+from .facets import Facets, facet_meaning, greatest_turn, move_facets
 from .flats import panel_regions
 from .given_charge import Load
 from .images import Images
 from .load_columns import check_loads
 from .media import METAL, Media
-from .media_adaptive import MediaPass, MediaPlan, media_pass, plan_next_media, weighted_gains
+from .media_adaptive import MediaPass, MediaPlan, media_pass, plan_next_media
+from .media_extrapolation import feared_decay, media_spread
 from .media_facets import media_facet_uncertainty
 from .memory import free_memory, panels_that_fit, peak_memory, refuse_if_too_large
 from .panels import Panels
@@ -37,10 +37,6 @@ BoolArray = NDArray[np.bool_]
 Array = NDArray[Any]
 Progress = Callable[..., None]
 
-#: Share of the change since the pass before that counts as uncertain.
-CHANGE_SHARE = 1.0
-#: Gains of both signs add up to less than their size: this share of what cancels within a body counts as uncertain.
-CANCELLED_SHARE = 0.3
 #: Entries of a load below this share of sqrt(C_ii C_jj) must meet the accuracy of this share only.
 LOAD_FLOOR = 0.1
 #: Matrices of a pass held at once: the integrals, the system and its factor, and the integrals of the pass before.
@@ -166,7 +162,7 @@ def solve_media(  # noqa: PLR0913 (all but two are options by name)
         Relative expanded uncertainty asked; this and what follows as in :func:`daraf.bem.solve_capacitance`.
     memory_limit : int, optional
         Bytes.
-    facets : {"auto", "true"}
+    facets : {"auto", "round", "as drawn"}
     want : sequence of (int, int), optional
         Entries of the matrix, loads counted after the conductors.
     progress : callable, optional
@@ -195,7 +191,7 @@ def solve_media(  # noqa: PLR0913 (all but two are options by name)
     check_loads(loads, media, images)
     if media.n_conductors + len(loads) == 0:
         raise InputError("nothing to solve: neither a conductor nor a load is given")
-    start, round_parts, notices, most = _prepared(surface, media, images, facets, limit)
+    start, round_parts, notices, most = _prepared(surface, media, images, facet_meaning(facets), limit)
     most = max(len(start.panels), min(most, MOST_PANELS, int((limit / (_MATRICES * 8.0 * _cells(media))) ** 0.5)))
     seconds = {"panels": time.perf_counter() - begin}
     images.place(start.panels, surface.body_names)
@@ -237,17 +233,18 @@ def _check_half_space(images: Images, media: Media) -> None:
 
 
 def _prepared(
-    surface: Surface, media: Media, images: Images, facets: str, limit: int
+    surface: Surface, media: Media, images: Images, meaning: str, limit: int
 ) -> tuple[Start, Facets | None, list[Notice], int]:
     """Panels to start from, the round parts, notices, and the most panels that there is room for."""
+    turn = greatest_turn(meaning)
     regions, notices = find_regions(surface)
-    panels, more = panel_regions(surface, regions, creases=find_creases(surface, regions))
+    panels, more = panel_regions(surface, regions, creases=find_creases(surface, regions, greatest_turn=turn))
     refuse_if_too_large(len(panels), limit)
     most = max(len(panels), min(MOST_PANELS, panels_that_fit(limit)))
     assert media.whole is not None
-    drawn = drawn_surface(surface, media.whole, images)
+    drawn = drawn_surface(surface, media.whole, images, greatest_turn=turn)
     decays = drawn.side_decays(panels)
-    round_parts = drawn.facets_of(surface, regions) if facets == "auto" else None
+    round_parts = None if meaning == "as drawn" else drawn.facets_of(surface, regions)
     if round_parts is not None:
         panels = drawn.closed(panels, move_facets(round_parts, panels))
     return starting_panels(panels, decays, max(len(panels), most // 4)), round_parts, notices + more, most
@@ -316,30 +313,16 @@ def _root_of_squares(lines: list[Array]) -> Array:
 
 
 def _spread(result: MediaPass, state: int, sums: FloatArray) -> Array:
-    """Expanded uncertainty of the extrapolated value; the imaginary part holds that of the imaginary part."""
-    gains = result.feared[state]
-    plain = result.gains[state]
-    only_feared = (gains.left != plain.left).any(axis=2) | (gains.right != plain.right).any(axis=2)
-    left, right = weighted_gains(gains, np.where(only_feared, 0.0, result.decay), result.realised)
-    right = right @ sums
-    body = np.repeat(result.panels.body, 2)
-    parts = (np.real, np.imag) if np.iscomplexobj(left) else (np.real,)
-    found = []
-    for take in parts:
-        spread = np.zeros((left.shape[1], right.shape[1]))
-        for number in np.unique(body):
-            own = body == number
-            net = np.abs(take(left[own].T @ right[own]))
-            size = np.abs(left[own]).T @ np.abs(right[own])
-            share = SHARES[min(result.refined[number], len(SHARES) - 1)]
-            share += max(abs(result.drift) / result.realised, 0.5 * abs(1.0 - result.realised))
-            if len(parts) == 1:
-                net = net + CANCELLED_SHARE * (size - net)
-            spread += share * net
-        if result.change is not None:
-            spread = np.hypot(spread, CHANGE_SHARE * take(result.change[state] @ sums))
-        found.append(spread)
-    return np.asarray(found[0] if len(found) == 1 else found[0] + 1j * found[1])
+    return media_spread(
+        result.feared[state],
+        feared_decay(result.gains[state], result.feared[state], result.decay),
+        result.realised,
+        result.drift,
+        result.panels.body,
+        None if result.change is None else result.change[state],
+        sums,
+        result.refined,
+    )
 
 
 def _next(result: MediaPass, judgement: _Judgement, most: int) -> MediaPlan | None:

@@ -9,6 +9,7 @@ from typing import TYPE_CHECKING, Any
 if TYPE_CHECKING:
     from .bodies import Body, read_bodies
     from .case import Case, load_case, make_case
+    from .case_inspection import inspect_case
     from .inspection import inspect_files
     from .mending import fit_bodies
     from .outcome import Outcome, solve_case
@@ -22,6 +23,7 @@ __all__ = [
     "Result",
     "bodies_to_surface",
     "fit_bodies",
+    "inspect_case",
     "inspect_files",
     "load_case",
     "make_case",
@@ -37,6 +39,7 @@ _HOMES = {
     "Result": "result",
     "bodies_to_surface": "problem",
     "fit_bodies": "mending",
+    "inspect_case": "case_inspection",
     "inspect_files": "inspection",
     "load_case": "case",
     "make_case": "case",

@@ -17,19 +17,35 @@ from daraf.bem.surface import Surface
 from .bodies import Body, pick_bodies, read_bodies
 from .case import Case, make_case
 from .contacts import contacts
+from .facet_tolerance import FacetTolerance, parse_facet_tolerance
 from .faults import faults_of
 from .gaps import Shape
 from .mending import fit_bodies
 from .mesh_units import METRES_PER_UNIT
+from .readers import may_be_curved
 from .schema import ConductorEntry, Part
 
-__all__ = ["InputFile", "Problem", "bodies_to_surface", "build_problem", "place", "problem_from_files"]
+__all__ = [
+    "InputFile",
+    "PlacedBodies",
+    "Problem",
+    "bodies_to_surface",
+    "build_problem",
+    "place",
+    "placed_bodies",
+    "problem_from_files",
+]
 
 FloatArray = NDArray[np.float64]
 BoolArray = NDArray[np.bool_]
-_Source = tuple[str, str | None]
+_Source = tuple[str, str | None, FacetTolerance | None]
 
 _MEETS = {"touches": "touches", "crosses": "cuts through", "overlaps": "overlaps"}
+
+#: How the note of a body begins that is no change of it.
+_WALL = "is the wall of a cavity"
+#: Remarks of readers that stand beside a result.
+_TOLD = ("facet-tolerance", "no-unit", "odd-unit")
 
 #: A shift of more than so many times the size of what is shifted is worth a question.
 _FAR = 100.0
@@ -58,6 +74,8 @@ class Problem:
         Whether the potential is given (else the charge); None if nothing is stated.
     values : (n,) float, V or C, or None
     notices : tuple of Notice
+    rounding : (n_bodies,) float, m, or None
+        How far the coordinates of each body may be off by the rounding of its file; None if not known.
     """
 
     case: Case
@@ -66,10 +84,15 @@ class Problem:
     held: BoolArray | None
     values: FloatArray | None
     notices: tuple[Notice, ...]
+    rounding: FloatArray | None = None
 
 
 def problem_from_files(
-    paths: Sequence[str | Path], unit: str | None, *, accuracy: float | str | None = None
+    paths: Sequence[str | Path],
+    unit: str | None,
+    *,
+    accuracy: float | str | None = None,
+    facet_tolerance: float | str | None = None,
 ) -> Problem:
     """Problem in which each body of the files is a conductor, without potentials or charges.
 
@@ -78,6 +101,8 @@ def problem_from_files(
     paths : sequence of str or Path
     unit : str or None
     accuracy : float or str, optional
+    facet_tolerance : float or str, optional
+        Of curved shapes, such as "0.02 mm" or "0.1 %"; a bare number is metres.
 
     Returns
     -------
@@ -88,20 +113,22 @@ def problem_from_files(
     InputError
         If a file cannot be used, the unit is missing, or bodies touch or overlap.
     """
-    bodies = read_bodies([str(path) for path in paths], unit)
+    tolerance = None if facet_tolerance is None else parse_facet_tolerance(facet_tolerance)
+    bodies = read_bodies([str(path) for path in paths], unit, facet_tolerance=tolerance)
     folder = Path(paths[0]).absolute().parent
     known: dict[_Source, list[Body]] = {}
     conductors = []
     for body in bodies:
         surface = os.path.relpath(body.file, folder)
-        known.setdefault((str(folder / surface), None), []).append(body)
+        known.setdefault((str(folder / surface), None, tolerance if may_be_curved(surface) else None), []).append(body)
         conductors.append({"name": body.name, "surface": surface, "body": body.index_in_file})
     stated: dict[str, Any] = {
-        "title": ", ".join(Path(file).name for file, _ in known)[:200],
+        "title": ", ".join(Path(file).name for file, _, _ in known)[:200],
         "conductor": conductors,
     }
     stated |= {} if unit is None else {"unit": unit}
     stated |= {} if accuracy is None else {"accuracy": accuracy}
+    stated |= {} if facet_tolerance is None else {"facet_tolerance": facet_tolerance}
     case = make_case(stated, folder=folder)
     return build_problem(case, known=known)
 
@@ -124,6 +151,51 @@ def build_problem(case: Case, *, known: dict[_Source, list[Body]] | None = None)
     InputError
         If a file, a body or a placement cannot be used, or conductors touch or overlap.
     """
+    placed = placed_bodies(case, known=known)
+    bodies, owner = list(placed.bodies), list(placed.owner)
+    notices = placed.notices
+    surface, changes = _surface(case, bodies, owner)
+    held, values = _stated(case)
+    inputs = tuple(_input_file(case, entry) for entry in dict.fromkeys(_surfaces(case)))
+    rounding = np.array([body.spacing for body in bodies])
+    return Problem(case, surface, inputs, held, values, (*notices, *changes), rounding)
+
+
+@dataclass(frozen=True, eq=False)
+class PlacedBodies:
+    """Bodies of a case where it puts them, neither mended nor oriented.
+
+    Attributes
+    ----------
+    bodies : tuple of Body
+    owner : tuple of int
+        Conductor of each.
+    notices : tuple of Notice
+    """
+
+    bodies: tuple[Body, ...]
+    owner: tuple[int, ...]
+    notices: tuple[Notice, ...]
+
+
+def placed_bodies(case: Case, *, known: dict[_Source, list[Body]] | None = None) -> PlacedBodies:
+    """Read the surface files of a case, choose and place its bodies.
+
+    Parameters
+    ----------
+    case : Case
+    known : dict, optional
+        Bodies read before, by path and unit.
+
+    Returns
+    -------
+    PlacedBodies
+
+    Raises
+    ------
+    InputError
+        If a file, a body or a placement cannot be used.
+    """
     files = dict(known or {})
     used: dict[tuple[_Source, int], str] = {}
     bodies: list[Body] = []
@@ -137,11 +209,8 @@ def build_problem(case: Case, *, known: dict[_Source, list[Body]] | None = None)
                 notices += _placement_notice(part, body, entry)
                 bodies.append(place(body, part))
                 owner.append(index)
-    notices += _unused(files, used)
-    surface, changes = _surface(case, bodies, owner)
-    held, values = _stated(case)
-    inputs = tuple(_input_file(case, entry) for entry in dict.fromkeys(_surfaces(case)))
-    return Problem(case, surface, inputs, held, values, (*notices, *changes))
+    notices += [*_told_by_files(case, files), *_unused(files, used)]
+    return PlacedBodies(tuple(bodies), tuple(owner), tuple(notices))
 
 
 def place(body: Body, part: Part) -> Body:
@@ -204,7 +273,10 @@ def bodies_to_surface(
 
 
 def _source(case: Case, part: Part) -> _Source:
-    return str(case.folder / part.surface), part.unit
+    tolerance = part.facet_tolerance
+    if tolerance is None and may_be_curved(part.surface):
+        tolerance = case.content.facet_tolerance
+    return str(case.folder / part.surface), part.unit, tolerance
 
 
 def _chosen(case: Case, part: Part, where: str, files: dict[_Source, list[Body]]) -> list[Body]:
@@ -212,7 +284,7 @@ def _chosen(case: Case, part: Part, where: str, files: dict[_Source, list[Body]]
     source = _source(case, part)
     try:
         if source not in files:
-            files[source] = read_bodies([source[0]], part.unit or case.content.unit)
+            files[source] = read_bodies([source[0]], part.unit, other_unit=case.content.unit, facet_tolerance=source[2])
         return pick_bodies(files[source], part.body) if part.body else files[source]
     except InputError as error:
         raise InputError(f"{where}: {error}") from None
@@ -247,6 +319,22 @@ def _placement_notice(part: Part, body: Body, entry: ConductorEntry) -> list[Not
     return [Notice("far-shift", text)]
 
 
+def _told_by_files(case: Case, files: dict[_Source, list[Body]]) -> list[Notice]:
+    """What each file says of itself that a reader of the result should know."""
+    if case.content.facet_tolerance is not None and not any(may_be_curved(surface) for surface in _surfaces(case)):
+        raise InputError(f"{case.label}: facet_tolerance: all surfaces are facets as drawn; take the key out")
+    notices = []
+    for (path, stated, _), bodies in files.items():
+        file, own, general = Path(path).name, bodies[0].unit, case.content.unit
+        if stated is None and None not in (own, general) and own != general:
+            text = f"{file}: is in {own}, as the file says; the case's {general} is for files that carry no unit"
+            notices.append(Notice("own-unit", text))
+        for fault in bodies[0].faults:
+            if fault.code in _TOLD:
+                notices.append(Notice(fault.code, f"{file}: {fault.text}"))
+    return notices
+
+
 def _unused(files: dict[_Source, list[Body]], used: dict[tuple[_Source, int], str]) -> list[Notice]:
     notices = []
     for source, bodies in files.items():
@@ -271,7 +359,11 @@ def _surface(case: Case, bodies: list[Body], owner: list[int]) -> tuple[Surface,
 
 def _body_notices(case: Case, body: Body, name: str) -> list[Notice]:
     """What was changed of a body, and what is still wrong with it."""
-    told = [Notice("mended", f"{name}: {'; '.join(body.notes)}")] if body.notes else []
+    walls = [note for note in body.notes if note.startswith(_WALL)]
+    changes = [note for note in body.notes if note not in walls]
+    told = [Notice("cavity-wall", f"{name} {note}") for note in walls]
+    if changes:
+        told.append(Notice("mended", f"{name}: {'; '.join(changes)}"))
     for fault in faults_of(Shape(body)):
         # After mending only the wall of a cavity is wound inwards, as it should be.
         if fault.severity != "note" and fault.code != "inside-out":

@@ -12,7 +12,9 @@ from pydantic import BaseModel, BeforeValidator, ConfigDict, Field, StrictBool, 
 from pydantic import model_validator as whole
 
 from daraf.bem.errors import InputError
+from daraf.bem.facets import FACETS, facet_meaning
 
+from .facet_tolerance import FacetTolerance, parse_facet_tolerance
 from .mesh_units import length_unit
 from .units import KINDS, parse_quantity
 
@@ -125,16 +127,20 @@ def parse_accuracy(value: Any) -> float:
     """
     number = parse_quantity(value, "ratio")
     if not 1e-6 <= number <= 0.5:
-        raise InputError(f"accuracy {value!r} is outside 0.0001 % to 50 %; write text such as '1 %' (0.01 is the same)")
+        meant = f"{number:g} %" if 0.5 < number <= 50.0 else "1 %"
+        raise InputError(
+            f"accuracy {value!r} is outside 0.0001 % to 50 %; write text such as {meant!r} "
+            f"({parse_quantity(meant, 'ratio'):g} is the same)"
+        )
     return number
 
 
 def _facets(value: Any) -> str:
-    if value is True or value == "true":
-        return "true"
-    if value == "auto":
-        return "auto"
-    raise InputError(f"{value!r} does not say what facets are; write 'auto' or 'true'")
+    if value is True:
+        return "as drawn"
+    if isinstance(value, str):
+        return facet_meaning(value)
+    raise InputError(f"{value!r} does not say what facets are; write one of {', '.join(map(repr, FACETS))}")
 
 
 _THREE_LENGTHS = {
@@ -169,8 +175,9 @@ Facets = Annotated[
     BeforeValidator(_facets),
     WithJsonSchema(
         {
-            "enum": ["auto", "true", True],
-            "description": "auto: facets that turn gently stand for a smooth surface; true: as drawn",
+            "enum": list(FACETS),
+            "description": "auto: facets in rows that turn by up to 35 degrees stand for a round surface, and what was "
+            "assumed is told; round: by up to 50 degrees; as drawn: the facets are the part",
         }
     ),
 ]
@@ -178,6 +185,18 @@ Accuracy = Annotated[
     float,
     BeforeValidator(parse_accuracy),
     WithJsonSchema({"type": ["number", "string"], "description": "relative, such as '1 %'"}),
+]
+
+
+Facetting = Annotated[
+    FacetTolerance,
+    BeforeValidator(parse_facet_tolerance),
+    WithJsonSchema(
+        {
+            "anyOf": [{"type": "number"}, {"type": "string"}],
+            "description": "largest distance of facets from curved shapes (STEP): '0.02 mm', or '0.1 %' of the size",
+        }
+    ),
 ]
 
 
@@ -198,6 +217,7 @@ class Part(_Table):
 
     surface: str = Field(min_length=1, description="surface file, relative to the case file")
     unit: Unit | None = Field(None, description="unit of this file if it differs from the case's")
+    facet_tolerance: Facetting | None = None
     body: BodyChoice = ()
     rotation: Rotation | None = None
     shift: Point = (0.0, 0.0, 0.0)
@@ -209,6 +229,7 @@ class ConductorEntry(_Table):
     name: Name
     surface: str | None = Field(None, min_length=1, description="surface file, relative to the case file")
     unit: Unit | None = Field(None, description="unit of this file if it differs from the case's")
+    facet_tolerance: Facetting | None = None
     body: BodyChoice = ()
     rotation: Rotation | None = None
     shift: Point = (0.0, 0.0, 0.0)
@@ -222,7 +243,7 @@ class ConductorEntry(_Table):
         stated = self.stated
         if len(stated) > 1:
             raise InputError(f"{' and '.join(stated)} are both given; keep one of potential, charge, ground")
-        placed = self.model_fields_set & {"unit", "body", "rotation", "shift"}
+        placed = self.model_fields_set & {"unit", "facet_tolerance", "body", "rotation", "shift"}
         if self.part and (self.surface or placed):
             extra = ", ".join(sorted(placed | ({"surface"} if self.surface else set())))
             raise InputError(f"{extra} given beside 'part'; move that into the parts")
@@ -244,7 +265,12 @@ class ConductorEntry(_Table):
         assert self.surface is not None
         return (
             Part.model_construct(
-                surface=self.surface, unit=self.unit, body=self.body, rotation=self.rotation, shift=self.shift
+                surface=self.surface,
+                unit=self.unit,
+                facet_tolerance=self.facet_tolerance,
+                body=self.body,
+                rotation=self.rotation,
+                shift=self.shift,
             ),
         )
 
@@ -259,7 +285,8 @@ class CaseContent(_Table):
     """A case: conductors in a medium and the accuracy asked."""
 
     title: str = Field("", max_length=200)
-    unit: Unit | None = Field(None, description="length unit of the surface files")
+    unit: Unit | None = Field(None, description="length unit of the surface files that carry none")
+    facet_tolerance: Facetting | None = None
     accuracy: Accuracy = 0.01
     facets: Facets = "auto"
     want: tuple[tuple[str, str], ...] = Field(

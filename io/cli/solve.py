@@ -7,7 +7,7 @@ import sys
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
-from .parser import UsageError, positive_whole_number
+from .parser import UsageError, case_file_among, positive_whole_number
 
 if TYPE_CHECKING:
     from daraf.io.outcome import Outcome
@@ -31,7 +31,12 @@ result folder.
 def add_arguments(parser: argparse.ArgumentParser) -> None:
     """Declare the arguments."""
     parser.add_argument("files", nargs="*", metavar="FILE", help="one case file (.toml), or surface files")
-    parser.add_argument("--unit", metavar="UNIT", help="length unit of the surface files, such as mm")
+    parser.add_argument("--unit", metavar="UNIT", help="length unit of the surface files that carry none")
+    parser.add_argument(
+        "--facet-tolerance",
+        metavar="X",
+        help="largest distance of facets from curved shapes (STEP), such as '0.02 mm' or '0.1 %%' of the size",
+    )
     parser.add_argument("--accuracy", metavar="X", help="relative, such as '0.5 %%'; overrides the case (default 1 %%)")
     parser.add_argument("--out", metavar="DIR", help="result folder (default: NAME.daraf beside the first file)")
     parser.add_argument("--json", action="store_true", help="print result.json instead of tables")
@@ -47,7 +52,9 @@ def run(args: argparse.Namespace) -> int:
 
         sys.stdout.write(json.dumps(json_schema(), indent=2, ensure_ascii=False) + "\n")
         return 0
-    case_file = _case_file(args)
+    if not args.files:
+        raise UsageError("name a case file or surface files; see `daraf solve --help`")
+    case_file = case_file_among(args.files, unit=args.unit, facet_tolerance=args.facet_tolerance)
     if args.threads is not None:
         _limit_threads(args.threads)
     from daraf.io.progress import progress_for
@@ -65,20 +72,6 @@ def run(args: argparse.Namespace) -> int:
     if outcome.solution.interrupted:
         return 130
     return 0 if outcome.solution.reached else 3
-
-
-def _case_file(args: argparse.Namespace) -> str | None:
-    """Return the case file, or None if the files are surfaces."""
-    cases = [name for name in args.files if name.lower().endswith(".toml")]
-    if not args.files:
-        raise UsageError("name a case file or surface files; see `daraf solve --help`")
-    if not cases:
-        return None
-    if len(args.files) > 1:
-        raise UsageError(f"{cases[0]}: a case file stands alone; name one case, or surface files only")
-    if args.unit is not None:
-        raise UsageError(f"--unit is for surface files; {cases[0]} states its unit itself, change it there")
-    return str(cases[0])
 
 
 def _limit_threads(n: int) -> None:
@@ -109,7 +102,7 @@ def _read(args: argparse.Namespace, case_file: str | None) -> tuple["Problem", f
     started = time.perf_counter()
     accuracy = None if args.accuracy is None else parse_accuracy(args.accuracy)
     if case_file is None:
-        problem = problem_from_files(args.files, args.unit, accuracy=accuracy)
+        problem = problem_from_files(args.files, args.unit, accuracy=accuracy, facet_tolerance=args.facet_tolerance)
     else:
         problem = build_problem(load_case(case_file))
     return problem, time.perf_counter() - started, accuracy
