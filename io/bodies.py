@@ -13,7 +13,9 @@ from numpy.typing import NDArray
 
 from daraf.bem.errors import InputError
 
+from .changes import Change, Mend
 from .mesh_units import METRES_PER_UNIT, box_in_plausible_units, length_unit, size_text
+from .stitching import stitch
 from .topology import connected_pieces
 from .welding import weld
 
@@ -74,7 +76,7 @@ class Body:
         From 1, in the order of the file.
     faults : list of Fault
         What reading alone showed; `inspect_bodies` finds the rest.
-    notes : list of str
+    notes : list of Change
         Every change made to the geometry.
     solid : int
         Which part (solid, object) of the file it came from, from 1.
@@ -88,7 +90,7 @@ class Body:
     file: str = ""
     index_in_file: int = 1
     faults: list[Fault] = field(default_factory=list)
-    notes: list[str] = field(default_factory=list)
+    notes: list[Change] = field(default_factory=list)
     solid: int = 1
     spacing: float = 0.0
 
@@ -113,10 +115,13 @@ class MeshSet:
     files: list[str]
 
 
-def read_bodies(paths: str | Path | Iterable[str | Path], unit: str | None, *, pick: Pick | None = None) -> list[Body]:
+def read_bodies(
+    paths: str | Path | Iterable[str | Path], unit: str | None, *, pick: Pick | None = None, mend: Mend | None = None
+) -> list[Body]:
     """Read mesh files and split them into named bodies.
 
-    Equal vertices are merged with a tolerance relative to the size of the part; nothing else is changed.
+    Equal vertices are merged with a tolerance relative to the size of the part, and cracks are sewn as far as
+    `mend` allows; nothing else is changed.
 
     Parameters
     ----------
@@ -126,6 +131,7 @@ def read_bodies(paths: str | Path | Iterable[str | Path], unit: str | None, *, p
         Unit of the files, one of ``m, cm, mm, um, in, mil, ft``. GLB and 3MF carry their own.
     pick : str, int or several, optional
         Names, or numbers from 1 in reading order, of the bodies wanted; all by default.
+    mend : Mend, optional
 
     Returns
     -------
@@ -136,11 +142,13 @@ def read_bodies(paths: str | Path | Iterable[str | Path], unit: str | None, *, p
     InputError
         If a file is unusable, the unit is missing or contradicts the file, or a picked body does not exist.
     """
-    bodies = read_mesh_set(paths, unit, unit_needed=True).bodies
+    bodies = read_mesh_set(paths, unit, unit_needed=True, mend=mend).bodies
     return bodies if pick is None else pick_bodies(bodies, pick)
 
 
-def read_mesh_set(paths: str | Path | Iterable[str | Path], unit: str | None, *, unit_needed: bool) -> MeshSet:
+def read_mesh_set(
+    paths: str | Path | Iterable[str | Path], unit: str | None, *, unit_needed: bool, mend: Mend | None = None
+) -> MeshSet:
     """As `read_bodies`, but a missing unit may stand: the vertices are then in the unit of the files.
 
     Parameters
@@ -148,6 +156,7 @@ def read_mesh_set(paths: str | Path | Iterable[str | Path], unit: str | None, *,
     paths : str, Path or several
     unit : str or None
     unit_needed : bool
+    mend : Mend, optional
 
     Returns
     -------
@@ -172,7 +181,7 @@ def read_mesh_set(paths: str | Path | Iterable[str | Path], unit: str | None, *,
     bodies: list[Body] = []
     for raw, file_unit in zip(raws, units, strict=True):
         scale = 1.0 if file_unit is None else METRES_PER_UNIT[file_unit]
-        bodies.extend(_split(raw.path, raw.parts, scale, file_unit or "file units"))
+        bodies.extend(_split(raw.path, raw.parts, scale, mend or Mend()))
     return MeshSet(_unique_names(bodies), stated or units[0], [str(name) for name in names])
 
 
@@ -191,16 +200,18 @@ def _unit_of(path: Path, own: str | None, stated: str | None, needed: bool, part
     return stated
 
 
-def _split(path: Path, parts: list["RawPart"], scale: float, unit: str) -> list[Body]:
-    """Weld every part, cut it into connected pieces, name them."""
+def _split(path: Path, parts: list["RawPart"], scale: float, mend: Mend) -> list[Body]:
+    """Weld every part, sew its cracks, cut it into connected pieces, name them."""
     bodies: list[Body] = []
     for number, part in enumerate(parts, start=1):
         vertices, triangles, n_moved, tolerance = weld(part.vertices, part.triangles)
         _check_shape(path, part.name, vertices, triangles, part.spacing)
-        n_pieces, piece = connected_pieces(triangles)
         notes = []
         if n_moved:
-            notes.append(f"merged {n_moved} vertices closer than {tolerance:.2g} {unit} to another one")
+            text = f"merged {n_moved} vertices beside another one"
+            notes.append(Change("merged-vertices", n_moved, None, text, tolerance * scale))
+        vertices, triangles, sewn, cracks = _sewn(vertices, triangles, part.spacing, scale, mend)
+        n_pieces, piece = connected_pieces(triangles)
         name = _clean(part.name)
         named = name or _clean(path.stem) or "file"
         numbered = n_pieces > 1 or (not name and len(parts) > 1)
@@ -213,12 +224,39 @@ def _split(path: Path, parts: list["RawPart"], scale: float, unit: str) -> list[
                 triangles=np.ascontiguousarray(index.reshape(-1, 3), dtype=np.int64),
                 file=str(path),
                 index_in_file=len(bodies) + 1,
-                notes=list(notes),
+                faults=list(cracks),
+                notes=[*notes, *sewn],
                 solid=number,
                 spacing=part.spacing * scale,
             )
             bodies.append(body)
     return bodies
+
+
+def _sewn(
+    vertices: FloatArray, triangles: IntArray, spacing: float, scale: float, mend: Mend
+) -> tuple[FloatArray, IntArray, list[Change], list[Fault]]:
+    """Sew the cracks of one part, or say where they are: its faces may not even hang together before."""
+    size = float(np.linalg.norm(np.ptp(vertices, axis=0)))
+    rounding = max(2.0 * spacing, 1e-9 * size) * scale
+    reach = mend.reach(rounding, size * scale)
+    found = stitch(vertices, triangles, reach / scale)
+    if found.changed and mend.changes:
+        change = Change("sewn", found.count, _place(found.place * scale), f"sewed {found.text}", found.moved * scale)
+        return found.vertices, found.triangles, [change], []
+    if not found.changed:  # what a bolder reach would sew is worth a word if it closes most of the rim
+        found = stitch(vertices, triangles, Mend("bold").reach(rounding, size * scale) / scale)
+        if not found.changed or 2 * found.n_open > found.n_open_before:
+            return vertices, triangles, [], []
+    remedy = "a solve sews them" if mend.reach(rounding, 0.0) > found.moved * scale else "bold mending sews them"
+    share = f"{found.text}, up to {found.moved / size:.2g} of the part apart"
+    fault = Fault("cracks", "warning", found.count, _place(found.place * scale), share, remedy)
+    return vertices, triangles, [], [fault]
+
+
+def _place(point: FloatArray) -> tuple[float, float, float]:
+    x, y, z = point
+    return float(x), float(y), float(z)
 
 
 def _check_shape(path: Path, name: str, vertices: FloatArray, triangles: IntArray, spacing: float) -> None:

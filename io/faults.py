@@ -7,7 +7,7 @@ from numpy.typing import NDArray
 
 from .bodies import Fault
 from .gaps import Shape
-from .mending import coincident_groups, flat_height, flat_triangles
+from .mending import HOLE_SHARE, coincident_groups, flat_height, flat_triangles
 from .self_contact import self_contacts
 from .topology import boundary_loops, edges_of, proper_rows, signed_volume, winding_flips
 
@@ -18,9 +18,6 @@ IntArray = NDArray[np.int64]
 
 #: Coordinates rounded to more than this share of the median edge are worth a word.
 _COARSE = 0.01
-
-#: A boundary loop whose cap would be a smaller share of the area looks like a hole, not like a rim.
-_HOLE = 0.02
 
 
 def faults_of(shape: Shape) -> list[Fault]:
@@ -159,14 +156,14 @@ def _holes(shape: Shape) -> Iterator[Fault]:
     vertex, areas = boundary_loops(body.vertices, proper, edges_of(proper))
     corners = body.vertices[proper]
     area = 0.5 * np.linalg.norm(np.cross(corners[:, 1] - corners[:, 0], corners[:, 2] - corners[:, 0]), axis=1).sum()
-    if len(vertex) and (areas < _HOLE * area).all():  # else a large rim says that this is a sheet
+    if len(vertex) and (areas < HOLE_SHARE * area).all():  # else a large rim says that this is a sheet
         yield Fault(
             "holes",
             "warning",
             len(vertex),
             _place(body.vertices[vertex[0]]),
             f"closed but for {_count(len(vertex), 'hole')}",
-            "close it in CAD if the body is meant as a solid; a solve takes the surface as an open sheet",
+            "a solve takes it as an open sheet unless bold mending closes it",
         )
 
 

@@ -2,7 +2,7 @@
 
 import hashlib
 import os
-from collections.abc import Sequence
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, replace
 from pathlib import Path
 from typing import Any
@@ -16,14 +16,16 @@ from daraf.bem.surface import Surface
 
 from .bodies import Body, pick_bodies, read_bodies
 from .case import Case, make_case
-from .contacts import contacts
+from .changes import Change, Mend, place_text
+from .contacts import cavity_walls, contacts, shapes_of
 from .faults import faults_of
 from .gaps import Shape
+from .markers import MeetingError, contact_mark
 from .mending import fit_bodies
-from .mesh_units import METRES_PER_UNIT
 from .schema import ConductorEntry, Part
+from .uniting import unite
 
-__all__ = ["InputFile", "Problem", "bodies_to_surface", "build_problem", "place", "problem_from_files"]
+__all__ = ["InputFile", "Problem", "bodies_to_surface", "build_problem", "mend_of", "place", "problem_from_files"]
 
 FloatArray = NDArray[np.float64]
 BoolArray = NDArray[np.bool_]
@@ -58,6 +60,8 @@ class Problem:
         Whether the potential is given (else the charge); None if nothing is stated.
     values : (n,) float, V or C, or None
     notices : tuple of Notice
+    changes : tuple of (conductor, body, Change)
+        Everything that was changed of the geometry, by name of conductor and body.
     """
 
     case: Case
@@ -66,10 +70,15 @@ class Problem:
     held: BoolArray | None
     values: FloatArray | None
     notices: tuple[Notice, ...]
+    changes: tuple[tuple[str, str, Change], ...] = ()
 
 
 def problem_from_files(
-    paths: Sequence[str | Path], unit: str | None, *, accuracy: float | str | None = None
+    paths: Sequence[str | Path],
+    unit: str | None,
+    *,
+    accuracy: float | str | None = None,
+    mending: Mapping[str, Any] | None = None,
 ) -> Problem:
     """Problem in which each body of the files is a conductor, without potentials or charges.
 
@@ -78,6 +87,8 @@ def problem_from_files(
     paths : sequence of str or Path
     unit : str or None
     accuracy : float or str, optional
+    mending : mapping, optional
+        Keys of the case that say how far mending goes: mend, mend_within, close_holes, coarsen.
 
     Returns
     -------
@@ -88,7 +99,10 @@ def problem_from_files(
     InputError
         If a file cannot be used, the unit is missing, or bodies touch or overlap.
     """
-    bodies = read_bodies([str(path) for path in paths], unit)
+    more = dict(mending or {})
+    # checked before any file is read
+    rule = mend_of(make_case({"conductor": [{"name": "any", "surface": "any"}], **more}, folder="."))
+    bodies = read_bodies([str(path) for path in paths], unit, mend=rule)
     folder = Path(paths[0]).absolute().parent
     known: dict[_Source, list[Body]] = {}
     conductors = []
@@ -99,6 +113,7 @@ def problem_from_files(
     stated: dict[str, Any] = {
         "title": ", ".join(Path(file).name for file, _ in known)[:200],
         "conductor": conductors,
+        **more,
     }
     stated |= {} if unit is None else {"unit": unit}
     stated |= {} if accuracy is None else {"accuracy": accuracy}
@@ -138,10 +153,16 @@ def build_problem(case: Case, *, known: dict[_Source, list[Body]] | None = None)
                 bodies.append(place(body, part))
                 owner.append(index)
     notices += _unused(files, used)
-    surface, changes = _surface(case, bodies, owner)
+    surface, told, changes = _surface(case, bodies, owner)
     held, values = _stated(case)
     inputs = tuple(_input_file(case, entry) for entry in dict.fromkeys(_surfaces(case)))
-    return Problem(case, surface, inputs, held, values, (*notices, *changes))
+    return Problem(case, surface, inputs, held, values, (*notices, *told), changes)
+
+
+def mend_of(case: Case) -> Mend:
+    """How far mending may go, as a case states it."""
+    content = case.content
+    return Mend(content.mend, content.mend_within, content.close_holes)
 
 
 def place(body: Body, part: Part) -> Body:
@@ -212,7 +233,7 @@ def _chosen(case: Case, part: Part, where: str, files: dict[_Source, list[Body]]
     source = _source(case, part)
     try:
         if source not in files:
-            files[source] = read_bodies([source[0]], part.unit or case.content.unit)
+            files[source] = read_bodies([source[0]], part.unit or case.content.unit, mend=mend_of(case))
         return pick_bodies(files[source], part.body) if part.body else files[source]
     except InputError as error:
         raise InputError(f"{where}: {error}") from None
@@ -258,53 +279,94 @@ def _unused(files: dict[_Source, list[Body]], used: dict[tuple[_Source, int], st
     return notices
 
 
-def _surface(case: Case, bodies: list[Body], owner: list[int]) -> tuple[Surface, list[Notice]]:
-    """Mend the placed bodies, look at each and at every pair, and join them."""
-    bodies = fit_bodies(bodies)
-    notices = []
+_Changes = tuple[tuple[str, str, Change], ...]
+
+
+def _surface(case: Case, bodies: list[Body], owner: list[int]) -> tuple[Surface, list[Notice], _Changes]:
+    """Mend the placed bodies, unite those of a conductor, look at each and at every pair, and join them."""
+    rule = mend_of(case)
+    if not rule.changes:
+        _refuse_unfit(case, bodies, owner)
+    united = unite(fit_bodies(bodies, rule), owner, rule)
+    bodies, owner = united.bodies, united.owner
+    conductors = case.content.conductor
+    changes = [
+        (conductors[c].name, body.name, note) for body, c in zip(bodies, owner, strict=True) for note in body.notes
+    ]
+    changes += [(conductors[c].name, "", note) for c, note in united.dropped]
+    unit = case.content.unit or "m"
+    notices = [
+        Notice("inner-surface", f"conductor {conductors[c].name!r}: {note.said(unit)}") for c, note in united.dropped
+    ]
     for body, conductor in zip(bodies, owner, strict=True):
         notices += _body_notices(case, body, _described(case, body, conductor))
     notices += _meeting(case, bodies, owner)
-    names = [entry.name for entry in case.content.conductor]
-    return bodies_to_surface(bodies, owner, names=names), notices
+    names = [entry.name for entry in conductors]
+    return bodies_to_surface(bodies, owner, names=names), notices, tuple(changes)
+
+
+def _refuse_unfit(case: Case, bodies: list[Body], owner: list[int]) -> None:
+    """Refuse a body that a solve would have to mend."""
+    cavities = cavity_walls(shapes_of(bodies))
+    for k, (body, conductor) in enumerate(zip(bodies, owner, strict=True)):
+        wrong = [
+            fault
+            for fault in faults_of(Shape(body))
+            if fault.severity != "note"
+            and fault.code not in ("coarse-coordinates", "self-touching")
+            and not (fault.code == "inside-out" and k in cavities)
+        ]
+        if wrong:
+            place = "" if wrong[0].place is None else f", at {place_text(wrong[0].place, case.content.unit or 'm')}"
+            more = f" (and {len(wrong) - 1} more to mend)" if len(wrong) > 1 else ""
+            raise InputError(
+                f"{case.label}: {_described(case, body, conductor)}: {wrong[0].text}{place}{more}; "
+                "mend = 'list' changes nothing: repair it in CAD, or allow mend = 'safe' or 'bold'"
+            )
 
 
 def _body_notices(case: Case, body: Body, name: str) -> list[Notice]:
     """What was changed of a body, and what is still wrong with it."""
-    told = [Notice("mended", f"{name}: {'; '.join(body.notes)}")] if body.notes else []
+    unit = case.content.unit or "m"
+    told = [Notice("mended", f"{name}: {'; '.join(note.said(unit) for note in body.notes)}")] if body.notes else []
     for fault in faults_of(Shape(body)):
         # After mending only the wall of a cavity is wound inwards, as it should be.
         if fault.severity != "note" and fault.code != "inside-out":
-            place = "" if fault.place is None else f" at {_place_text(fault.place, case.content.unit)}"
+            place = "" if fault.place is None else f" at {place_text(fault.place, unit)}"
             told.append(Notice(fault.code, f"{name}: {fault.text}{place}: {fault.remedy}"))
     return told
 
 
 def _meeting(case: Case, bodies: list[Body], owner: list[int]) -> list[Notice]:
-    """Refuse conductors that meet; tell of bodies of one conductor that do."""
-    notices = []
-    for contact in contacts(bodies, owner):
+    """Refuse conductors that meet; tell of bodies of one conductor that do and could not be united."""
+    notices, marks, texts = [], [], []
+    shapes = shapes_of(bodies)
+    unit = case.content.unit or "m"
+    for contact in contacts(bodies, owner, shapes=shapes):
+        a, b = shapes[contact.body_a], shapes[contact.body_b]
         if not contact.meets:
             continue
         one, other = (_described(case, bodies[k], owner[k]) for k in (contact.body_a, contact.body_b))
-        place = _place_text(contact.place, case.content.unit)
-        text = f"{one} {_MEETS[contact.kind]} {other} at {place}"
+        text = f"{one} {_MEETS[contact.kind]} {other} at {place_text(contact.place, unit)}"
         if not contact.same_conductor:
-            raise InputError(f"{case.label}: {text}; leave a gap between them, or make them one conductor")
-        notices.append(Notice("bodies-meet", f"{text}; better join them in CAD"))
+            texts.append(text)
+            marks.append(contact_mark(a, b, contact.kind, text))
+        elif a.volume is not None and b.volume is not None:
+            if case.content.mend == "list":
+                raise InputError(
+                    f"{case.label}: {text}; mend = 'list' changes nothing: unite them in CAD, or allow mend = 'safe'"
+                )
+            notices.append(Notice("bodies-meet", f"{text}; better join them in CAD"))
+    if texts:
+        more = f" (and {len(texts) - 1} more such places)" if len(texts) > 1 else ""
+        text = f"{case.label}: {texts[0]}{more}; leave a gap between them, or make them one conductor"
+        raise MeetingError(text, marks, unit)
     return notices
 
 
 def _described(case: Case, body: Body, conductor: int) -> str:
     name = case.content.conductor[conductor].name
     return f"conductor {name!r}" if body.name == name else f"conductor {name!r} (body {body.name!r})"
-
-
-def _place_text(place: tuple[float, float, float], unit: str | None) -> str:
-    """Place in the unit of the case, such as "(1, 0, 2.5) mm"."""
-    shown = unit or "m"
-    numbers = ", ".join(f"{value / METRES_PER_UNIT[shown] + 0.0:.5g}" for value in place)
-    return f"({numbers}) {shown}"
 
 
 def _stated(case: Case) -> tuple[BoolArray | None, FloatArray | None]:

@@ -6,9 +6,9 @@ reads the TOML file and turns the complaints of pydantic into one line each.
 
 import math
 import re
-from typing import Annotated, Any, Self
+from typing import Annotated, Any, Literal, Self
 
-from pydantic import BaseModel, BeforeValidator, ConfigDict, Field, StrictBool, WithJsonSchema
+from pydantic import AfterValidator, BaseModel, BeforeValidator, ConfigDict, Field, StrictBool, WithJsonSchema
 from pydantic import model_validator as whole
 
 from daraf.bem.errors import InputError
@@ -137,6 +137,23 @@ def _facets(value: Any) -> str:
     raise InputError(f"{value!r} does not say what facets are; write 'auto' or 'true'")
 
 
+def _positive(value: float) -> float:
+    if value <= 0.0:
+        raise InputError(f"{value:g} m is no size; write a length above 0 such as '0.01 mm'")
+    return value
+
+
+def _coarsening(value: Any) -> float | str:
+    if value in ("auto", "no"):
+        return str(value)
+    if value is False:
+        return "no"
+    try:
+        return _positive(parse_quantity(value, "length"))
+    except InputError:
+        raise InputError(f"{value!r} says no coarsening; write 'auto', 'no' or a length such as '5 um'") from None
+
+
 _THREE_LENGTHS = {
     "anyOf": [
         {"type": "string"},
@@ -178,6 +195,19 @@ Accuracy = Annotated[
     float,
     BeforeValidator(parse_accuracy),
     WithJsonSchema({"type": ["number", "string"], "description": "relative, such as '1 %'"}),
+]
+
+
+PositiveLength = Annotated[_quantity("length"), AfterValidator(_positive)]  # type: ignore[valid-type]
+Coarsening = Annotated[
+    float | str,
+    BeforeValidator(_coarsening),
+    WithJsonSchema(
+        {
+            "anyOf": [{"enum": ["auto", "no"]}, {"type": ["number", "string"]}],
+            "description": "auto: over-fine round parts of models too large otherwise; no: never; a length: within it",
+        }
+    ),
 ]
 
 
@@ -262,6 +292,14 @@ class CaseContent(_Table):
     unit: Unit | None = Field(None, description="length unit of the surface files")
     accuracy: Accuracy = 0.01
     facets: Facets = "auto"
+    mend: Literal["list", "safe", "bold"] = Field(
+        "safe",
+        description="list: change nothing, refuse what is not fit; safe: only what keeps the shape; "
+        "bold: also sew visible cracks and close small holes",
+    )
+    mend_within: PositiveLength | None = Field(None, description="nothing moves farther than this")
+    close_holes: PositiveLength | None = Field(None, description="largest hole that bold mending closes")
+    coarsen: Coarsening = "auto"
     want: tuple[tuple[str, str], ...] = Field(
         (), description="couplings that must meet the accuracy, as pairs of conductors; all if left out"
     )

@@ -7,9 +7,11 @@ import sys
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
+from .mending_options import add_mending, mending_keys
 from .parser import UsageError, positive_whole_number
 
 if TYPE_CHECKING:
+    from daraf.io.case import Case
     from daraf.io.outcome import Outcome
     from daraf.io.problem import Problem
 
@@ -33,6 +35,8 @@ def add_arguments(parser: argparse.ArgumentParser) -> None:
     parser.add_argument("files", nargs="*", metavar="FILE", help="one case file (.toml), or surface files")
     parser.add_argument("--unit", metavar="UNIT", help="length unit of the surface files, such as mm")
     parser.add_argument("--accuracy", metavar="X", help="relative, such as '0.5 %%'; overrides the case (default 1 %%)")
+    add_mending(parser)
+    parser.add_argument("--markers", metavar="FILE", help="where to draw places at which conductors meet (.vtp)")
     parser.add_argument("--out", metavar="DIR", help="result folder (default: NAME.daraf beside the first file)")
     parser.add_argument("--json", action="store_true", help="print result.json instead of tables")
     parser.add_argument("-q", "--quiet", action="store_true", help="no progress and no messages")
@@ -53,7 +57,7 @@ def run(args: argparse.Namespace) -> int:
     from daraf.io.progress import progress_for
     from daraf.io.result import check_destination
 
-    problem, seconds, accuracy = _read(args, case_file)
+    problem, seconds, accuracy = _marked(args, case_file)
     out = args.out or str(Path(args.files[0]).with_suffix(".daraf"))
     # Before the solve: an hour's work must not end at a folder that cannot be written.
     check_destination(out)
@@ -98,6 +102,17 @@ def _limit_threads(n: int) -> None:
     set_threads(n)
 
 
+def _marked(args: argparse.Namespace, case_file: str | None) -> tuple["Problem", float, float | None]:
+    """As `_read`; where conductors meet, the places are drawn beside the error."""
+    from daraf.io.markers import MeetingError, write_marks
+
+    try:
+        return _read(args, case_file)
+    except MeetingError as error:
+        file = write_marks(args.markers or Path(args.files[0]).with_suffix(".markers.vtp"), error.marks, error.unit)
+        raise type(error)(f"{error}; drawn in {file}", error.marks, error.unit) from None
+
+
 def _read(args: argparse.Namespace, case_file: str | None) -> tuple["Problem", float, float | None]:
     """Read case and surfaces: the problem, the seconds it took, the accuracy that overrides the case."""
     import time
@@ -109,10 +124,17 @@ def _read(args: argparse.Namespace, case_file: str | None) -> tuple["Problem", f
     started = time.perf_counter()
     accuracy = None if args.accuracy is None else parse_accuracy(args.accuracy)
     if case_file is None:
-        problem = problem_from_files(args.files, args.unit, accuracy=accuracy)
+        problem = problem_from_files(args.files, args.unit, accuracy=accuracy, mending=mending_keys(args))
     else:
-        problem = build_problem(load_case(case_file))
+        problem = build_problem(_with_mending(load_case(case_file), mending_keys(args)))
     return problem, time.perf_counter() - started, accuracy
+
+
+def _with_mending(case: "Case", keys: dict[str, str]) -> "Case":
+    """The case with what the command line says about mending."""
+    from daraf.io.case import make_case
+
+    return make_case({**case.stated, **keys}, folder=case.folder, file=case.file) if keys else case
 
 
 def _solve(problem: "Problem", accuracy: float | None, progress: Any, seconds: float) -> "Outcome":

@@ -156,10 +156,13 @@ def test_mended_and_doubtful_bodies_are_told(folder):
     assert told["mended"].startswith("conductor 'A'")
 
 
-def test_bodies_of_one_conductor_may_meet_and_it_is_told(folder):
+def test_bodies_of_one_conductor_that_meet_are_united_and_it_is_told(folder):
     parts = [{"surface": "wall.stl"}, {"surface": "wall.stl", "shift": "0.5 0.5 0.25 mm"}]
     problem = build(folder, {"name": "both", "part": parts})
-    assert [one.code for one in problem.notices] == ["bodies-meet"]
+    assert [one.code for one in problem.notices] == ["mended"]
+    assert problem.surface.n_bodies == 1
+    ((conductor, body, change),) = problem.changes
+    assert (conductor, body, change.code, change.count) == ("both", "wall+wall", "united", 2)
 
 
 def test_the_wall_of_a_cavity_is_not_called_inside_out(folder):
