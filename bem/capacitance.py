@@ -8,6 +8,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from .adaptive import PassResult, Plan, plan_next, run_pass
+from .coarse import coarsening_uncertainty, region_deviation
 from .constants import FOUR_PI_EPSILON_0
 from .creases import find_creases
 from .errors import InputError
@@ -67,6 +68,8 @@ class _Judgement:
         """Whether no entry that misses its target would gain from smaller panels."""
         n = len(self.value)
         fixed = np.hypot(self.lines["facets"], self.lines["integration"])[:, :n]
+        if "coarsening" in self.lines:
+            fixed = np.hypot(fixed, self.lines["coarsening"][:, :n])
         return bool((~self.missed | (self.lines["discretisation"][:, :n] < POINTLESS * fixed)).all())
 
     @property
@@ -134,7 +137,7 @@ def solve_capacitance(
     limit = memory_limit if memory_limit is not None else int(0.9 * free_memory())
     report = progress or _silent
     report("panels", 0.0, 1.0, "")
-    start, round_parts, notices, most = _prepare(surface, facets, limit)
+    start, round_parts, coarse, notices, most = _prepare(surface, facets, limit)
     seconds = {"panels": time.perf_counter() - begin}
     passes: list[Pass] = []
     plan: Plan | None = start
@@ -142,7 +145,7 @@ def solve_capacitance(
     interrupted = False
     try:
         while plan is not None:
-            result, judgement = _pass(plan, round_parts, accuracies, passes, report)
+            result, judgement = _pass(plan, round_parts, coarse, accuracies, passes, report)
             previous = plan.before
             for stage, time_spent in result.seconds.items():
                 seconds[stage] = seconds.get(stage, 0.0) + time_spent
@@ -199,8 +202,10 @@ def _silent(stage: str, done: float, total: float, note: str = "") -> None:
     return None
 
 
-def _prepare(surface: Surface, facets: str, limit: int) -> tuple[Plan, Facets | None, list[Notice], int]:
-    """Panels to start from, the round parts, notices, and the most panels that there is room for."""
+def _prepare(
+    surface: Surface, facets: str, limit: int
+) -> tuple[Plan, Facets | None, FloatArray | None, list[Notice], int]:
+    """Panels to start from, round parts, what coarsening moved, notices, and the most panels there is room for."""
     regions, notices = find_regions(surface)
     creases = find_creases(surface, regions)
     panels, more = panel_regions(surface, regions, creases=creases)
@@ -214,25 +219,37 @@ def _prepare(surface: Surface, facets: str, limit: int) -> tuple[Plan, Facets | 
     return (
         Plan(start.panels, start.symmetric, start.sides, np.zeros(surface.n_bodies, dtype=np.int64)),
         round_parts,
+        region_deviation(surface, regions),
         notices + more,
         most,
     )
 
 
 def _pass(
-    plan: Plan, round_parts: Facets | None, accuracy: FloatArray, passes: list[Pass], report: Progress
+    plan: Plan,
+    round_parts: Facets | None,
+    coarse: FloatArray | None,
+    accuracy: FloatArray,
+    passes: list[Pass],
+    report: Progress,
 ) -> tuple[PassResult, _Judgement]:
     start = time.perf_counter()
     note = f"pass {len(passes) + 1}, {len(plan.panels)} panels"
     result = run_pass(plan, lambda stage, done, total: report(stage, done, total, note))
-    judgement = _judge(result, round_parts, accuracy, len(passes) + 1)
+    judgement = _judge(result, round_parts, coarse, accuracy, len(passes) + 1)
     flat = result.gains.reshape(-1, result.gains.shape[2])
     passes.append(Pass(len(result.panels), result.value, flat.T @ flat, time.perf_counter() - start))
     report("pass", float(len(passes)), 0.0, f"{note}, uncertainty {judgement.excess:.3g} x the one asked")
     return result, judgement
 
 
-def _judge(result: PassResult, round_parts: Facets | None, accuracy: FloatArray, n_passes: int) -> _Judgement:
+def _judge(
+    result: PassResult,
+    round_parts: Facets | None,
+    coarse: FloatArray | None,
+    accuracy: FloatArray,
+    n_passes: int,
+) -> _Judgement:
     """Extrapolated value with the lines of its budget, one column more for the sum over all conductors."""
     n = len(result.value)
     sums = np.hstack([np.eye(n), np.ones((n, 1))])
@@ -254,6 +271,8 @@ def _judge(result: PassResult, round_parts: Facets | None, accuracy: FloatArray,
     }
     if round_parts is not None and round_parts.any:
         lines["facets"] = facet_uncertainty(round_parts, result.panels, result.density, sums)
+    if coarse is not None:
+        lines["coarsening"] = coarsening_uncertainty(coarse, result.panels, result.density, sums)
     total = np.sqrt(sum(line**2 for line in lines.values()))
     return _Judgement(value, lines, total, accuracy_targets(value[:, :n], accuracy), n_passes)
 
@@ -289,5 +308,7 @@ def _guards(surface: Surface, judgement: _Judgement, value: FloatArray, total: F
         text = f"the accuracy asked was not reached: {names[worst[0]]} - {names[worst[1]]} is driven by {cause}"
         if cause == "facets":
             text += "; export round parts with a finer tolerance, or declare the facets true"
+        if cause == "coarsening":
+            text += "; forbid it or state a smaller distance (coarsen)"
         notices.append(Notice("accuracy-not-reached", text))
     return notices

@@ -17,11 +17,13 @@ from daraf.bem.surface import Surface
 from .bodies import Body, pick_bodies, read_bodies
 from .case import Case, make_case
 from .changes import Change, Mend, place_text
+from .coarsening import coarsen_bodies
 from .contacts import cavity_walls, contacts, shapes_of
 from .faults import faults_of
 from .gaps import Shape
 from .markers import MeetingError, contact_mark
 from .mending import fit_bodies
+from .narrow import narrow_notices, narrowest_gaps
 from .schema import ConductorEntry, Part
 from .uniting import unite
 
@@ -186,7 +188,11 @@ def place(body: Body, part: Part) -> Body:
 
 
 def bodies_to_surface(
-    bodies: Sequence[Body], conductor: Sequence[int] | None = None, *, names: Sequence[str] = ()
+    bodies: Sequence[Body],
+    conductor: Sequence[int] | None = None,
+    *,
+    names: Sequence[str] = (),
+    deviation: Sequence[FloatArray] = (),
 ) -> Surface:
     """Join bodies into the surface that the solver takes.
 
@@ -199,6 +205,8 @@ def bodies_to_surface(
         Conductor of each body; each body is one by default.
     names : sequence of str, optional
         Of the conductors; those of the bodies if each is one.
+    deviation : sequence of (nt,) float, m
+        How far the triangles of each body may lie from the drawing, if that is not nothing.
 
     Returns
     -------
@@ -221,6 +229,7 @@ def bodies_to_surface(
         body_conductor=owner,
         conductor_names=tuple(names) or (tuple(body.name for body in bodies) if conductor is None else ()),
         body_names=tuple(body.name for body in bodies),
+        triangle_deviation=np.concatenate(deviation) if len(deviation) else None,
     )
 
 
@@ -289,6 +298,13 @@ def _surface(case: Case, bodies: list[Body], owner: list[int]) -> tuple[Surface,
         _refuse_unfit(case, bodies, owner)
     united = unite(fit_bodies(bodies, rule), owner, rule)
     bodies, owner = united.bodies, united.owner
+    told = _meeting(case, bodies, owner)
+    narrowest = narrowest_gaps(bodies, owner)
+    described = [_described(case, body, c) for body, c in zip(bodies, owner, strict=True)]
+    told += narrow_notices(bodies, described, narrowest, case.content.unit or "m")
+    bodies, deviation = coarsen_bodies(
+        bodies, [one[0] for one in narrowest], case.content.accuracy, case.content.coarsen
+    )
     conductors = case.content.conductor
     changes = [
         (conductors[c].name, body.name, note) for body, c in zip(bodies, owner, strict=True) for note in body.notes
@@ -300,9 +316,9 @@ def _surface(case: Case, bodies: list[Body], owner: list[int]) -> tuple[Surface,
     ]
     for body, conductor in zip(bodies, owner, strict=True):
         notices += _body_notices(case, body, _described(case, body, conductor))
-    notices += _meeting(case, bodies, owner)
+    notices += told
     names = [entry.name for entry in conductors]
-    return bodies_to_surface(bodies, owner, names=names), notices, tuple(changes)
+    return bodies_to_surface(bodies, owner, names=names, deviation=deviation), notices, tuple(changes)
 
 
 def _refuse_unfit(case: Case, bodies: list[Body], owner: list[int]) -> None:
