@@ -123,7 +123,9 @@ def problem_from_files(
     return build_problem(case, known=known)
 
 
-def build_problem(case: Case, *, known: dict[_Source, list[Body]] | None = None) -> Problem:
+def build_problem(
+    case: Case, *, known: dict[_Source, list[Body]] | None = None, accuracy: float | None = None
+) -> Problem:
     """Read the surface files of a case, choose and place its bodies.
 
     Parameters
@@ -131,6 +133,8 @@ def build_problem(case: Case, *, known: dict[_Source, list[Body]] | None = None)
     case : Case
     known : dict, optional
         Bodies read before, by path and unit.
+    accuracy : float, optional
+        Relative, overrides the case: how far round parts may be coarsened depends on it.
 
     Returns
     -------
@@ -155,7 +159,7 @@ def build_problem(case: Case, *, known: dict[_Source, list[Body]] | None = None)
                 bodies.append(place(body, part))
                 owner.append(index)
     notices += _unused(files, used)
-    surface, told, changes = _surface(case, bodies, owner)
+    surface, told, changes = _surface(case, bodies, owner, accuracy)
     held, values = _stated(case)
     inputs = tuple(_input_file(case, entry) for entry in dict.fromkeys(_surfaces(case)))
     return Problem(case, surface, inputs, held, values, (*notices, *told), changes)
@@ -291,7 +295,9 @@ def _unused(files: dict[_Source, list[Body]], used: dict[tuple[_Source, int], st
 _Changes = tuple[tuple[str, str, Change], ...]
 
 
-def _surface(case: Case, bodies: list[Body], owner: list[int]) -> tuple[Surface, list[Notice], _Changes]:
+def _surface(
+    case: Case, bodies: list[Body], owner: list[int], accuracy: float | None
+) -> tuple[Surface, list[Notice], _Changes]:
     """Mend the placed bodies, unite those of a conductor, look at each and at every pair, and join them."""
     rule = mend_of(case)
     if not rule.changes:
@@ -302,9 +308,8 @@ def _surface(case: Case, bodies: list[Body], owner: list[int]) -> tuple[Surface,
     narrowest = narrowest_gaps(bodies, owner)
     described = [_described(case, body, c) for body, c in zip(bodies, owner, strict=True)]
     told += narrow_notices(bodies, described, narrowest, case.content.unit or "m")
-    bodies, deviation = coarsen_bodies(
-        bodies, [one[0] for one in narrowest], case.content.accuracy, case.content.coarsen
-    )
+    gaps = [one[0] for one in narrowest]
+    bodies, deviation = coarsen_bodies(bodies, gaps, accuracy or case.content.accuracy, case.content.coarsen)
     conductors = case.content.conductor
     changes = [
         (conductors[c].name, body.name, note) for body, c in zip(bodies, owner, strict=True) for note in body.notes

@@ -22,8 +22,8 @@ def add_mending(parser: argparse.ArgumentParser) -> None:
 
 def mending_keys(args: argparse.Namespace) -> dict[str, str]:
     """The options given, as keys of a case."""
-    keys = {"mend": args.mend, "mend_within": args.mend_within, "close_holes": args.close_holes}
-    return {key: value for key, value in keys.items() if value is not None}
+    given = {key: getattr(args, key, None) for key in ("mend", "mend_within", "close_holes", "coarsen")}
+    return {key: value for key, value in given.items() if value is not None}
 
 
 def mend_from(args: argparse.Namespace) -> "Mend":

@@ -36,6 +36,7 @@ def add_arguments(parser: argparse.ArgumentParser) -> None:
     parser.add_argument("--unit", metavar="UNIT", help="length unit of the surface files, such as mm")
     parser.add_argument("--accuracy", metavar="X", help="relative, such as '0.5 %%'; overrides the case (default 1 %%)")
     add_mending(parser)
+    parser.add_argument("--coarsen", metavar="X", help="auto, no, or a length within which round parts are coarsened")
     parser.add_argument("--markers", metavar="FILE", help="where to draw places at which conductors meet (.vtp)")
     parser.add_argument("--out", metavar="DIR", help="result folder (default: NAME.daraf beside the first file)")
     parser.add_argument("--json", action="store_true", help="print result.json instead of tables")
@@ -126,7 +127,7 @@ def _read(args: argparse.Namespace, case_file: str | None) -> tuple["Problem", f
     if case_file is None:
         problem = problem_from_files(args.files, args.unit, accuracy=accuracy, mending=mending_keys(args))
     else:
-        problem = build_problem(_with_mending(load_case(case_file), mending_keys(args)))
+        problem = build_problem(_with_mending(load_case(case_file), mending_keys(args)), accuracy=accuracy)
     return problem, time.perf_counter() - started, accuracy
 
 
