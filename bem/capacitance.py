@@ -8,7 +8,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from .adaptive import PassResult, Plan, plan_next, run_pass
-from .coarse import coarsening_uncertainty, region_deviation
+from .coarse import coarsening_uncertainty, region_deviation, take_as_drawn
 from .constants import FOUR_PI_EPSILON_0
 from .creases import find_creases
 from .errors import InputError
@@ -212,6 +212,9 @@ def _prepare(
     refuse_if_too_large(len(panels), limit)
     most = max(len(panels), min(MOST_PANELS, panels_that_fit(limit)))
     round_parts = find_facets(surface, regions, creases) if facets == "auto" else None
+    coarse = region_deviation(surface, regions)
+    if coarse is not None and round_parts is not None:
+        round_parts = take_as_drawn(round_parts, regions, coarse)
     decays = side_decays(surface, creases, panels)
     if round_parts is not None:
         panels = move_facets(round_parts, panels)
@@ -219,7 +222,7 @@ def _prepare(
     return (
         Plan(start.panels, start.symmetric, start.sides, np.zeros(surface.n_bodies, dtype=np.int64)),
         round_parts,
-        region_deviation(surface, regions),
+        coarse,
         notices + more,
         most,
     )

@@ -12,6 +12,8 @@ from dataclasses import dataclass, replace
 import numpy as np
 from numpy.typing import NDArray
 
+from daraf.bem.creases import find_creases
+from daraf.bem.facets import find_facets
 from daraf.bem.regions import find_regions
 from daraf.bem.surface import Surface
 
@@ -46,11 +48,14 @@ class Coarsened:
     Attributes
     ----------
     body : Body
-    deviation : (nt,) float, m
+    moved : (nt,) float, m
         Largest distance found between each triangle and the drawing.
+    deviation : (nt,) float, m
+        The same, and how far the drawing's own facets may lie from the round surface they stand for.
     """
 
     body: Body
+    moved: FloatArray
     deviation: FloatArray
 
 
@@ -110,9 +115,9 @@ def coarsen_bodies(
         left = count_faces(found.body)
         text = (
             f"coarsened {faces[k]:,} flat faces to {left:,}, "
-            f"by {float(found.deviation.mean()) / body.diagonal:.1g} of the body on average"
+            f"by {float(found.moved.mean()) / body.diagonal:.1g} of the body on average"
         )
-        note = Change("coarsened", faces[k] - left, None, text, float(found.deviation.max()))
+        note = Change("coarsened", faces[k] - left, None, text, float(found.moved.max()))
         result[k] = replace(found.body, notes=[*body.notes, note])
         deviation[k] = found.deviation
     return result, deviation
@@ -156,6 +161,7 @@ class _Drawing:
         self.volume = signed_volume(body.vertices, body.triangles)
         self.points = _samples(body.vertices[body.triangles])
         self.surface = _Nearest(body.vertices, body.triangles)
+        self.depth = _facet_depths(body)
 
     def reduced(self, share: float, tolerance: float) -> Coarsened | None:
         """The body without a share of its triangles; None if it moves too far or is no proper body any more."""
@@ -171,15 +177,24 @@ class _Drawing:
         back, nearest = _Nearest(vertices, triangles)(self.points)
         if back.max() > tolerance:
             return None
-        there, _ = self.surface(_samples(vertices[triangles]))
+        there, under = self.surface(_samples(vertices[triangles]))
         if there.max() > tolerance or signed_volume(vertices, triangles) * self.volume <= 0.0:
             return None
         made = replace(body, vertices=vertices, triangles=triangles)
         if self_contacts(Shape(made), 2.0 * flat_height(made))[2].any():
             return None
-        deviation = there.reshape(-1, len(triangles)).max(axis=0)
-        np.maximum.at(deviation, nearest, back)
-        return Coarsened(made, deviation)
+        moved = there.reshape(-1, len(triangles)).max(axis=0)
+        np.maximum.at(moved, nearest, back)
+        return Coarsened(made, moved, moved + self.depth[under].reshape(-1, len(triangles)).max(axis=0))
+
+
+def _facet_depths(body: Body) -> FloatArray:
+    """How far the round surface that each triangle of a drawing stands for lies from it, (nt,) m."""
+    n = len(body.triangles)
+    surface = Surface(body.vertices, body.triangles, np.zeros(n), np.zeros(1))
+    regions, _ = find_regions(surface)
+    offset = find_facets(surface, regions, find_creases(surface, regions)).offset
+    return np.where(regions.triangle_region >= 0, np.abs(offset)[regions.triangle_region], 0.0)
 
 
 def _samples(corners: FloatArray) -> FloatArray:
