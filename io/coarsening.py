@@ -1,13 +1,14 @@
 """Round parts that are finer than the answer needs: fewer facets, within a distance that is told.
 
-The facets are merged by quadric error metrics (Garland and Heckbert, SIGGRAPH 1997, 209; library
-fast-simplification), which keep flat faces and sharp edges. The library knows no distance, so the strongest
-reduction that stays within the tolerance is searched, with the distance measured both ways. What is left of it on
+The facets are merged by quadric error metrics (Garland and Heckbert, SIGGRAPH 1997, 209; VTK), which keep flat
+faces and sharp edges. VTK knows no distance there, so the strongest reduction that stays within the tolerance is
+searched, with the distance measured both ways. What is left of it on
 each triangle enters the budget.
 """
 
 from collections.abc import Sequence
 from dataclasses import dataclass, replace
+from typing import TYPE_CHECKING
 
 import numpy as np
 from numpy.typing import NDArray
@@ -23,6 +24,9 @@ from .gaps import Shape
 from .mending import flat_height
 from .self_contact import self_contacts
 from .topology import edges_of, signed_volume
+
+if TYPE_CHECKING:
+    from vtkmodules.vtkCommonDataModel import vtkPolyData
 
 __all__ = ["MOST_FACES", "Coarsened", "coarsen", "coarsen_bodies", "count_faces", "wanted_tolerance"]
 
@@ -165,13 +169,9 @@ class _Drawing:
 
     def reduced(self, share: float, tolerance: float) -> Coarsened | None:
         """The body without a share of its triangles; None if it moves too far or is no proper body any more."""
-        import fast_simplification
-
         body = self.body
-        scaled = np.ascontiguousarray((body.vertices - self.middle) / self.size)
-        points, triangles = fast_simplification.simplify(scaled, body.triangles.astype(np.int32), share, agg=2.0)
-        vertices = np.asarray(points, dtype=np.float64) * self.size + self.middle
-        triangles = np.ascontiguousarray(triangles, dtype=np.int64)
+        vertices, triangles = _merged((body.vertices - self.middle) / self.size, body.triangles, share)
+        vertices = vertices * self.size + self.middle
         if len(triangles) < 4 or (edges_of(triangles).count != 2).any():
             return None
         back, nearest = _Nearest(vertices, triangles)(self.points)
@@ -186,6 +186,35 @@ class _Drawing:
         moved = there.reshape(-1, len(triangles)).max(axis=0)
         np.maximum.at(moved, nearest, back)
         return Coarsened(made, moved, moved + self.depth[under].reshape(-1, len(triangles)).max(axis=0))
+
+
+def _poly_data(vertices: FloatArray, triangles: IntArray) -> "vtkPolyData":
+    from vtkmodules.util.numpy_support import numpy_to_vtk, numpy_to_vtkIdTypeArray
+    from vtkmodules.vtkCommonCore import vtkPoints
+    from vtkmodules.vtkCommonDataModel import vtkCellArray, vtkPolyData
+
+    points, cells, data = vtkPoints(), vtkCellArray(), vtkPolyData()
+    points.SetData(numpy_to_vtk(np.ascontiguousarray(vertices), deep=True))
+    offsets = np.arange(0, triangles.size + 1, 3, dtype=np.int64)
+    index = np.ascontiguousarray(triangles.ravel())
+    cells.SetData(numpy_to_vtkIdTypeArray(offsets, deep=True), numpy_to_vtkIdTypeArray(index, deep=True))
+    data.SetPoints(points)
+    data.SetPolys(cells)
+    return data
+
+
+def _merged(vertices: FloatArray, triangles: IntArray, share: float) -> tuple[FloatArray, IntArray]:
+    """The surface without a share of its triangles, as near to the drawing as VTK can make it."""
+    from vtkmodules.util.numpy_support import vtk_to_numpy
+    from vtkmodules.vtkFiltersCore import vtkQuadricDecimation
+
+    merging = vtkQuadricDecimation()
+    merging.SetInputData(_poly_data(vertices, triangles))
+    merging.SetTargetReduction(share)
+    merging.Update()
+    data = merging.GetOutput()
+    points = vtk_to_numpy(data.GetPoints().GetData()).astype(np.float64)
+    return points, vtk_to_numpy(data.GetPolys().GetConnectivityArray()).reshape(-1, 3).astype(np.int64)
 
 
 def _facet_depths(body: Body) -> FloatArray:
@@ -207,18 +236,9 @@ class _Nearest:
     """Distance of points from a surface, and the triangle that is nearest."""
 
     def __init__(self, vertices: FloatArray, triangles: IntArray) -> None:
-        from vtkmodules.util.numpy_support import numpy_to_vtk, numpy_to_vtkIdTypeArray
-        from vtkmodules.vtkCommonCore import vtkPoints
-        from vtkmodules.vtkCommonDataModel import vtkCellArray, vtkPolyData, vtkStaticCellLocator
+        from vtkmodules.vtkCommonDataModel import vtkStaticCellLocator
 
-        points, cells = vtkPoints(), vtkCellArray()
-        points.SetData(numpy_to_vtk(np.ascontiguousarray(vertices), deep=True))
-        offsets = np.arange(0, triangles.size + 1, 3, dtype=np.int64)
-        index = np.ascontiguousarray(triangles.ravel())
-        cells.SetData(numpy_to_vtkIdTypeArray(offsets, deep=True), numpy_to_vtkIdTypeArray(index, deep=True))
-        self._data = vtkPolyData()
-        self._data.SetPoints(points)
-        self._data.SetPolys(cells)
+        self._data = _poly_data(vertices, triangles)
         self._locator = vtkStaticCellLocator()
         self._locator.SetDataSet(self._data)
         self._locator.BuildLocator()

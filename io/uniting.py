@@ -17,7 +17,7 @@ from .self_contact import self_contacts
 from .sheets import clip_sheet
 from .snapping import snap
 from .solids import Solids, pieces_of
-from .topology import signed_volume
+from .topology import edges_of, signed_volume
 
 __all__ = ["United", "unite", "untangle"]
 
@@ -154,7 +154,10 @@ def _union(group: list[Shape], linings: list[Shape], mend: Mend) -> list[Body] |
         made.append(solids.solid(vertices, triangles))
     if any(one is None for one in made):
         return None
-    vertices, triangles = solids.mesh(solids.united([one for one in made if one is not None]))
+    # cuts through faces that lie upon each other leave slivers no wider than the overlap: none of the user's shape
+    slivers = 2.0 * max(touch_tolerance(shape.body, shape.body) for shape in group)
+    whole = solids.united([one for one in made if one is not None]).simplify(slivers / solids.size)
+    vertices, triangles = solids.mesh(whole)
     before = sum(shape.volume or 0.0 for shape in [*group, *linings])
     text = (
         f"united {_names(group)} into one; the volume is {signed_volume(vertices, triangles) / before:.6g} "
@@ -181,9 +184,14 @@ def _bodies(group: list[Body], pieces: list[tuple[np.ndarray, IntArray]], note: 
             faults=[],
             notes=[],
         )
-        # cuts leave triangles without area: ours to clear away, nothing of the user's changes
-        made.append(replace(make_fit(piece), notes=[*dict.fromkeys(notes), note] if k == 1 else []))
+        made.append(replace(_clean(piece), notes=[*dict.fromkeys(notes), note] if k == 1 else []))
     return made
+
+
+def _clean(body: Body) -> Body:
+    """The body without triangles that have no area, unless that would open it."""
+    clean = make_fit(body)
+    return clean if edges_of(clean.triangles).closed else body
 
 
 def _names(group: list[Shape]) -> str:
@@ -235,7 +243,7 @@ def untangle(body: Body) -> Body:
     x, y, z = place[crossing][0]
     text = f"united the parts of the body that overlap; the volume is {share:.6g} of what it was"
     note = Change("untangled", int(crossing.sum()), (float(x), float(y), float(z)), text)
-    clean = make_fit(replace(body, vertices=vertices, triangles=triangles))
+    clean = _clean(replace(body, vertices=vertices, triangles=triangles))
     return replace(clean, notes=[*body.notes, note])
 
 
