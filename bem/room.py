@@ -3,14 +3,20 @@
 import math
 
 import numpy as np
+from numpy.typing import NDArray
 
 from .jit import kernel
 
 __all__ = ["circle_radii"]
 
+FloatArray = NDArray[np.float64]
+IntArray = NDArray[np.int64]
+
 
 @kernel
-def circle_radii(points, normals, edge, near, corners, ends):
+def circle_radii(
+    points: FloatArray, normals: FloatArray, edge: IntArray, near: IntArray, corners: FloatArray, ends: IntArray
+) -> FloatArray:
     """Radius of the largest circle inside an outline that touches it at each of some points.
 
     The circle through a point with normal n and through another point x of the outline has the radius
@@ -52,10 +58,11 @@ def circle_radii(points, normals, edge, near, corners, ends):
 
 
 @kernel
-def _circle(x, y, normal):
+def _circle(x: float, y: float, normal: FloatArray) -> float:
     """Radius of the circle that touches the origin with a normal and passes through (x, y); inf if that lies behind."""
     height = x * normal[0] + y * normal[1]
     square = x * x + y * y
     if height <= 1e-9 * math.sqrt(square):
         return math.inf
-    return square / (2.0 * height)
+    radius: float = square / (2.0 * height)
+    return radius

@@ -8,18 +8,17 @@ each triangle enters the budget.
 
 from collections.abc import Sequence
 from dataclasses import dataclass, replace
-from typing import TYPE_CHECKING
+from typing import TYPE_CHECKING, Any
 
 import numpy as np
 from numpy.typing import NDArray
 
 from daraf.bem.creases import find_creases
 from daraf.bem.facets import find_facets
-from daraf.bem.regions import find_regions
-from daraf.bem.surface import Surface
 
 from .bodies import Body
 from .changes import Change
+from .flat_faces import flat_faces, surface_of
 from .gaps import Shape
 from .mending import flat_height
 from .self_contact import self_contacts
@@ -65,8 +64,7 @@ class Coarsened:
 
 def count_faces(body: Body) -> int:
     """Number of flat faces of a body: the fewest panels that follow its drawing."""
-    n = len(body.triangles)
-    return len(find_regions(Surface(body.vertices, body.triangles, np.zeros(n), np.zeros(1)))[0])
+    return len(flat_faces(body))
 
 
 def wanted_tolerance(body: Body, gap: float, accuracy: float) -> float:
@@ -219,9 +217,7 @@ def _merged(vertices: FloatArray, triangles: IntArray, share: float) -> tuple[Fl
 
 def _facet_depths(body: Body) -> FloatArray:
     """How far the round surface that each triangle of a drawing stands for lies from it, (nt,) m."""
-    n = len(body.triangles)
-    surface = Surface(body.vertices, body.triangles, np.zeros(n), np.zeros(1))
-    regions, _ = find_regions(surface)
+    surface, regions = surface_of(body), flat_faces(body)
     offset = find_facets(surface, regions, find_creases(surface, regions)).offset
     return np.where(regions.triangle_region >= 0, np.abs(offset)[regions.triangle_region], 0.0)
 
@@ -247,8 +243,11 @@ class _Nearest:
         from vtkmodules.vtkCommonCore import reference
 
         distance, cell = np.empty(len(points)), np.empty(len(points), dtype=np.int64)
-        found, number, part, square = [0.0] * 3, reference(0), reference(0), reference(0.0)
+        find: Any = self._locator.FindClosestPoint  # answers through its arguments
+        found, part = [0.0] * 3, reference(0)
+        number: Any = reference(0)
+        square: Any = reference(0.0)
         for k, point in enumerate(points.tolist()):
-            self._locator.FindClosestPoint(point, found, number, part, square)
-            distance[k], cell[k] = float(square) ** 0.5, int(number)
+            find(point, found, number, part, square)
+            distance[k], cell[k] = square.get() ** 0.5, number.get()
         return distance, cell

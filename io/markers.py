@@ -126,7 +126,8 @@ def _crossing_lines(a: FloatArray, b: FloatArray, tolerance: float) -> FloatArra
     away = np.where(hit, np.linalg.norm(place - start[:, None], axis=2), -1.0)
     stop = place[row, away.argmax(axis=1)]
     long = (hit.sum(axis=1) > 1) & (away.max(axis=1) > tolerance)
-    return np.stack([start, stop], axis=1)[long]
+    lines: FloatArray = np.stack([start, stop], axis=1)[long]
+    return lines
 
 
 def fault_marks(bodies: Iterable[Body]) -> list[Mark]:
@@ -217,8 +218,8 @@ def marks_bytes(marks: Sequence[Mark], unit: str | None) -> bytes:
     writer.SetDataModeToBinary()
     writer.SetCompressorTypeToZLib()
     writer.Write()
-    text: str = writer.GetOutputString()
-    return text.encode()
+    written: str = writer.GetOutputString()
+    return written.encode()
 
 
 def write_marks(path: str | Path, marks: Sequence[Mark], unit: str | None) -> Path:

@@ -297,8 +297,8 @@ class CaseContent(_Table):
         description="list: change nothing, refuse what is not fit; safe: only what keeps the shape; "
         "bold: also sew visible cracks and close small holes",
     )
-    mend_within: PositiveLength | None = Field(None, description="nothing moves farther than this")
-    close_holes: PositiveLength | None = Field(None, description="largest hole that bold mending closes")
+    mend_within: PositiveLength | None = Field(None, description="nothing moves farther than this")  # type: ignore[valid-type]
+    close_holes: PositiveLength | None = Field(None, description="largest hole that bold closes")  # type: ignore[valid-type]
     coarsen: Coarsening = "auto"
     want: tuple[tuple[str, str], ...] = Field(
         (), description="couplings that must meet the accuracy, as pairs of conductors; all if left out"

@@ -8,11 +8,11 @@ import numpy as np
 import shapely
 from numpy.typing import NDArray
 
-from daraf.bem.regions import Regions, find_regions
-from daraf.bem.surface import Surface
+from daraf.bem.regions import Regions
 
 from .bodies import Body
 from .changes import Change
+from .flat_faces import flat_faces
 from .gaps import Shape, encloses, touch_tolerance
 from .solids import Solids
 
@@ -40,7 +40,7 @@ def clip_sheet(sheet: Shape, others: Sequence[tuple[Shape, Sequence[Shape]]]) ->
     if not others:
         return body
     cutters = [_Cutter(shape, walls, touch_tolerance(body, shape.body)) for shape, walls in others]
-    regions, _ = find_regions(Surface(body.vertices, body.triangles, np.zeros(len(body.triangles)), np.zeros(1)))
+    regions = flat_faces(body)
     kept, fresh, removed, place = [], [], 0.0, None
     for region in range(len(regions)):
         rows = regions.triangles_of(region)

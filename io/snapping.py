@@ -7,10 +7,8 @@ import numpy as np
 import shapely
 from numpy.typing import NDArray
 
-from daraf.bem.regions import find_regions
-from daraf.bem.surface import Surface
-
 from .bodies import Body
+from .flat_faces import flat_faces
 from .gaps import Shape
 from .triangle_boxes import near_pairs
 
@@ -46,15 +44,15 @@ def snap(body: Body, fixed: Sequence[Shape], reach: float, overlap: float) -> tu
         Longest way of a vertex.
     """
     shape = Shape(body)
-    regions, _ = find_regions(Surface(body.vertices, body.triangles, np.zeros(len(body.triangles)), np.zeros(1)))
+    regions = flat_faces(body)
     wishes: dict[int, list[tuple[FloatArray, float]]] = {}
     for other in fixed:
         for region, normal, origin, depth in _meeting_faces(shape, other, regions.triangle_region, reach, overlap):
-            vertices = np.unique(body.triangles[regions.triangles_of(region)])
-            height = (body.vertices[vertices] - origin) @ normal
+            corners = np.unique(body.triangles[regions.triangles_of(region)])
+            height = (body.vertices[corners] - origin) @ normal
             if np.abs(height).max() > reach:
                 continue
-            for vertex, h in zip(vertices.tolist(), height.tolist(), strict=True):
+            for vertex, h in zip(corners.tolist(), height.tolist(), strict=True):
                 wishes.setdefault(vertex, []).append((normal, -depth - h))
     if not wishes:
         return body, 0.0

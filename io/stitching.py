@@ -104,13 +104,13 @@ def stitch(vertices: FloatArray, triangles: IntArray, tolerance: float) -> Stitc
 def _rim(edges: Edges) -> IntArray:
     """Edges of one triangle with two different ends, (n, 2) vertices."""
     ends = edges.ends[edges.count == 1]
-    return ends[ends[:, 0] != ends[:, 1]]
+    proper: IntArray = ends[ends[:, 0] != ends[:, 1]]
+    return proper
 
 
 def _anything_near(vertices: FloatArray, rim: IntArray, tolerance: float) -> bool:
     """Whether any vertex of a rim comes near another rim edge; cheap, so that open sheets cost nothing."""
-    into, _ = _near_edges(vertices, rim, tolerance)
-    if len(into):
+    if len(_near_edges(vertices, rim, tolerance)[0]):
         return True
     used = np.unique(rim)
     return len(cKDTree(vertices[used]).query_pairs(tolerance)) > 0
