@@ -9,7 +9,9 @@ from typing import TYPE_CHECKING, Any
 if TYPE_CHECKING:
     from .bodies import Body, read_bodies
     from .case import Case, load_case, make_case
+    from .changes import Mend
     from .inspection import inspect_files
+    from .markers import write_marks
     from .mending import fit_bodies
     from .outcome import Outcome, solve_case
     from .problem import bodies_to_surface
@@ -18,6 +20,7 @@ if TYPE_CHECKING:
 __all__ = [
     "Body",
     "Case",
+    "Mend",
     "Outcome",
     "Result",
     "bodies_to_surface",
@@ -28,11 +31,13 @@ __all__ = [
     "read_bodies",
     "read_result",
     "solve_case",
+    "write_marks",
 ]
 
 _HOMES = {
     "Body": "bodies",
     "Case": "case",
+    "Mend": "changes",
     "Outcome": "outcome",
     "Result": "result",
     "bodies_to_surface": "problem",
@@ -43,6 +48,7 @@ _HOMES = {
     "read_bodies": "bodies",
     "read_result": "result",
     "solve_case": "outcome",
+    "write_marks": "markers",
 }
 
 

@@ -32,6 +32,8 @@ BoolArray = NDArray[np.bool_]
 
 #: Rounds of edge exchanges; each removes at least one triangle of a chain along one edge.
 _ROUNDS = 100
+#: Rounds without fewer triangles left after which no more are tried.
+_IDLE = 5
 
 #: A boundary loop whose cap would be a smaller share of the area looks like a hole, not like a rim.
 HOLE_SHARE = 0.02
@@ -254,8 +256,13 @@ def _without_flat(vertices: FloatArray, triangles: IntArray, height: float, note
     exchanged = 0
     place: Place | None = None
     triangles = triangles.copy()
+    fewest, idle = len(triangles), 0
     for _ in range(_ROUNDS):
         flat = flat_triangles(vertices, triangles, height)
+        left = int(flat.sum())
+        fewest, idle = (left, 0) if left < fewest else (fewest, idle + 1)
+        if idle > _IDLE:  # exchanges go around in a circle
+            break
         if flat.any() and place is None:
             place = _middle(vertices, triangles, flat)
         if not flat.any():
@@ -268,6 +275,8 @@ def _without_flat(vertices: FloatArray, triangles: IntArray, height: float, note
     if exchanged:
         text = f"exchanged the edge of {_many(exchanged, 'panel')} without area; the shape is the same"
         notes.append(Change("exchanged", exchanged, place, text))
+    if flat.any() and edges_of(triangles).closed and not edges_of(triangles[~flat]).closed:
+        return triangles  # better a sliver than a hole: panels do without it
     if flat.any():
         count = int(flat.sum())
         place = _middle(vertices, triangles, flat)
@@ -287,7 +296,8 @@ def _exchange_round(vertices: FloatArray, triangles: IntArray, flat: BoolArray) 
     at_edge: dict[int, list[int]] = {}
     for corner in wanted:
         at_edge.setdefault(int(edges.edge.flat[corner]), []).append(int(corner))
-    known = {(int(a), int(b)) for a, b in edges.ends} if len(flat_rows) else set()
+    n = len(vertices)
+    known = set((edges.ends[:, 0] * n + edges.ends[:, 1]).tolist())
     busy: set[int] = set()
     done = 0
     for row, side, edge in zip(flat_rows.tolist(), longest.tolist(), shared.tolist(), strict=True):
@@ -297,7 +307,7 @@ def _exchange_round(vertices: FloatArray, triangles: IntArray, flat: BoolArray) 
         neighbour, start = divmod(others[0], 3)
         between = int(triangles[row, (side + 2) % 3])
         s, t, d = (int(triangles[neighbour, (start + k) % 3]) for k in range(3))
-        if d == between or (min(between, d), max(between, d)) in known:
+        if d == between or min(between, d) * n + max(between, d) in known:
             continue
         triangles[neighbour] = s, between, d
         triangles[row] = between, t, d
