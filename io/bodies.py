@@ -175,6 +175,9 @@ def read_mesh_set(
         raise InputError("no mesh file is named; name at least one")
     raws = [read_file(path) for path in names]
     units = [_unit_of(raw.path, raw.unit, stated, unit_needed, raw.parts) for raw in raws]
+    if mend is not None and (mend.within or mend.holes) and None in units:
+        bare = raws[units.index(None)].path
+        raise InputError(f"{bare}: a length for mending is stated, but the unit of the file is not; state it")
     if None in units and any(u is not None for u in units):
         bare = raws[units.index(None)].path
         raise InputError(f"{bare}: carries no unit while another file does; state its unit, for example mm")

@@ -105,13 +105,18 @@ def _limit_threads(n: int) -> None:
 
 def _marked(args: argparse.Namespace, case_file: str | None) -> tuple["Problem", float, float | None]:
     """As `_read`; where conductors meet, the places are drawn beside the error."""
+    from daraf.bem.errors import InputError
     from daraf.io.markers import MeetingError, write_marks
 
     try:
         return _read(args, case_file)
     except MeetingError as error:
-        file = write_marks(args.markers or Path(args.files[0]).with_suffix(".markers.vtp"), error.marks, error.unit)
-        raise type(error)(f"{error}; drawn in {file}", error.marks, error.unit) from None
+        file = args.markers or Path(args.files[0]).with_suffix(".markers.vtp")
+        try:
+            drawn = f"drawn in {write_marks(file, error.marks, error.unit)}"
+        except InputError as trouble:
+            drawn = f"not drawn: {trouble}"
+        raise InputError(f"{error}; {drawn}") from None
 
 
 def _read(args: argparse.Namespace, case_file: str | None) -> tuple["Problem", float, float | None]:

@@ -260,6 +260,13 @@ def test_the_command_draws_the_places_beside_the_error(tmp_path, capsys):
     assert main(["inspect", *files, "--unit", "mm", "--markers", str(tmp_path / "look.vtp")]) == 0
     assert (tmp_path / "look.vtp").exists()
     assert main(["inspect", *files, "--unit", "mm", "--markers", str(tmp_path / "look.txt")]) == 2
+    capsys.readouterr()
+    assert main(["solve", *files, "--unit", "mm", "--markers", str(tmp_path / "no" / "x.vtp")]) == 2
+    said = capsys.readouterr().err
+    assert "overlaps conductor" in said  # the error itself comes first
+    assert "not drawn: " in said
+    assert main(["inspect", *files, "--mend-within", "0.1 mm"]) == 2
+    assert "the unit of the file is not; state it" in capsys.readouterr().err
 
 
 def test_list_refuses_what_safe_would_unite_or_mend(tmp_path):
