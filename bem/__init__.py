@@ -17,6 +17,7 @@ from .network import Excitation, MutualCapacitance, eliminate_floating, excite, 
 from .panels import Panels
 from .solution import CapacitanceSolution, Notice, Pass
 from .surface import Surface
+from .terminals import Modes, Quantity, Terminals, terminals
 
 __all__ = [
     "EPSILON_0",
@@ -25,15 +26,19 @@ __all__ = [
     "Excitation",
     "InputError",
     "MemoryRefused",
+    "Modes",
     "MutualCapacitance",
     "Notice",
     "NumericalError",
     "Panels",
     "Pass",
+    "Quantity",
     "Surface",
+    "Terminals",
     "eliminate_floating",
     "excite",
     "mutual_capacitance",
     "set_threads",
     "solve_capacitance",
+    "terminals",
 ]

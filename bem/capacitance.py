@@ -2,23 +2,27 @@
 
 import time
 from collections.abc import Callable, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 from numpy.typing import NDArray
 
+from .account import account_bodies, change_notices, facet_notices
 from .adaptive import PassResult, Plan, plan_next, run_pass
-from .coarse import coarsening_uncertainty, region_deviation, take_as_drawn
+from .coarse import region_deviation, take_as_drawn
 from .constants import FOUR_PI_EPSILON_0
 from .creases import find_creases
 from .errors import InputError
 from .extrapolation import extrapolation_uncertainty
-from .facets import Facets, facet_uncertainty, find_facets, move_facets
+from .facets import Facets, facet_meaning, find_facets, greatest_turn, move_facets
 from .flats import panel_regions
+from .forecast import Goal
 from .memory import dense_bytes, free_memory, panels_that_fit, peak_memory, refuse_if_too_large
 from .refinement import accuracy_targets
 from .regions import find_regions
-from .solution import CapacitanceSolution, Notice, Pass
+from .rounding import checked_rounding
+from .shape_doubts import ShapeDoubts
+from .solution import BodyAccount, CapacitanceSolution, Notice, Pass
 from .start import side_decays, starting_panels
 from .surface import Surface
 
@@ -67,16 +71,16 @@ class _Judgement:
     def pointless(self) -> bool:
         """Whether no entry that misses its target would gain from smaller panels."""
         n = len(self.value)
-        fixed = np.hypot(self.lines["facets"], self.lines["integration"])[:, :n]
-        if "coarsening" in self.lines:
-            fixed = np.hypot(fixed, self.lines["coarsening"][:, :n])
+        fixed = np.sqrt(sum(line**2 for cause, line in self.lines.items() if cause != "discretisation"))[:, :n]
         return bool((~self.missed | (self.lines["discretisation"][:, :n] < POINTLESS * fixed)).all())
 
     @property
-    def excess(self) -> float:
-        """Largest uncertainty over its target."""
+    def worst(self) -> tuple[float, tuple[int, int], str]:
+        """Largest uncertainty over its target, where that is, and the cause that drives it."""
         n = len(self.value)
-        return float((self.total[:, :n] / self.targets).max())
+        excess = self.total[:, :n] / self.targets
+        i, j = (int(k) for k in np.unravel_index(np.argmax(excess), (n, n)))
+        return float(excess[i, j]), (i, j), max(self.lines, key=lambda line: self.lines[line][i, j])
 
 
 def solve_capacitance(
@@ -87,6 +91,7 @@ def solve_capacitance(
     memory_limit: int | None = None,
     facets: str = "auto",
     want: Sequence[tuple[int, int]] | None = None,
+    rounding: FloatArray | None = None,
     progress: Progress | None = None,
 ) -> CapacitanceSolution:
     """Maxwell capacitance matrix of conductors in one homogeneous medium.
@@ -105,12 +110,14 @@ def solve_capacitance(
         ``sqrt(C_ii C_jj)``; weaker couplings are held to that floor.
     memory_limit : int, optional
         Bytes; nine tenths of the free memory by default.
-    facets : {"auto", "true"}
-        "auto": edges that turn gently in rows stand for a smooth surface, whose capacitance is wanted;
-        "true": the facets are the part.
+    facets : {"auto", "round", "as drawn"}
+        What the facets mean, see :func:`daraf.bem.facets.facet_meaning`: whether edges that turn gently in rows stand
+        for a smooth surface, whose capacitance is wanted, or the facets are the part.
     want : sequence of (int, int), optional
         Entries of the matrix that must meet the accuracy; all by default. Panels are spent on these alone, and
         the uncertainty of the others is still given.
+    rounding : (n_bodies,) float, m, optional
+        How far the coordinates of each body may be off, for the line "coordinates" of the budget.
     progress : callable, optional
         Called with (stage, done, total, note). It may raise KeyboardInterrupt: what the finished passes
         gave is then returned, marked ``interrupted``.
@@ -130,14 +137,17 @@ def solve_capacitance(
         raise InputError(f"accuracy must lie between 0 and 1, got {accuracy:g}")
     if not 1.0 <= relative_permittivity < float("inf"):
         raise InputError(f"relative permittivity must be at least 1, got {relative_permittivity:g}")
-    if facets not in ("auto", "true"):
-        raise InputError(f"facets must be 'auto' or 'true', got {facets!r}")
+    meaning = facet_meaning(facets)
     accuracies = _accuracies(accuracy, want, surface.n_conductors)
+    if rounding is not None:
+        rounding = checked_rounding(rounding, surface.n_bodies)
     begin = time.perf_counter()
     limit = memory_limit if memory_limit is not None else int(0.9 * free_memory())
     report = progress or _silent
     report("panels", 0.0, 1.0, "")
-    start, round_parts, coarse, notices, most = _prepare(surface, facets, limit)
+    start, round_parts, coarse, notices, bodies, most = _prepare(surface, meaning, limit)
+    doubts = ShapeDoubts(round_parts, rounding, coarse)
+    goal = Goal(accuracy, most, surface.conductor_names)
     seconds = {"panels": time.perf_counter() - begin}
     passes: list[Pass] = []
     plan: Plan | None = start
@@ -145,7 +155,7 @@ def solve_capacitance(
     interrupted = False
     try:
         while plan is not None:
-            result, judgement = _pass(plan, round_parts, coarse, accuracies, passes, report)
+            result, judgement = _pass(plan, doubts, accuracies, goal, passes, report)
             previous = plan.before
             for stage, time_spent in result.seconds.items():
                 seconds[stage] = seconds.get(stage, 0.0) + time_spent
@@ -173,7 +183,7 @@ def solve_capacitance(
         reached=judgement.reached,
         panels=result.panels,
         densities=np.ascontiguousarray(farads * result.density.T),
-        passes=[Pass(p.panels, farads * p.maxwell, farads * p.estimate, p.seconds) for p in passes],
+        passes=[replace(p, maxwell=farads * p.maxwell, estimate=farads * p.estimate) for p in passes],
         method="dense Cholesky",
         iterations=0,
         seconds=seconds,
@@ -181,6 +191,8 @@ def solve_capacitance(
         warnings=notices + _guards(surface, judgement, value, total),
         previous=None if previous is None else (previous.panels, farads * previous.density.T),
         interrupted=interrupted,
+        facets=meaning,
+        bodies=bodies,
     )
 
 
@@ -203,56 +215,44 @@ def _silent(stage: str, done: float, total: float, note: str = "") -> None:
 
 
 def _prepare(
-    surface: Surface, facets: str, limit: int
-) -> tuple[Plan, Facets | None, FloatArray | None, list[Notice], int]:
-    """Panels to start from, round parts, what coarsening moved, notices, and the most panels there is room for."""
+    surface: Surface, meaning: str, limit: int
+) -> tuple[Plan, Facets | None, FloatArray | None, list[Notice], tuple[BodyAccount, ...], int]:
+    """Panels to start from, round parts, what coarsening moved, notices, bodies, the most panels there is room for."""
     regions, notices = find_regions(surface)
-    creases = find_creases(surface, regions)
+    creases = find_creases(surface, regions, greatest_turn=greatest_turn(meaning))
     panels, more = panel_regions(surface, regions, creases=creases)
     refuse_if_too_large(len(panels), limit)
     most = max(len(panels), min(MOST_PANELS, panels_that_fit(limit)))
-    round_parts = find_facets(surface, regions, creases) if facets == "auto" else None
+    round_parts = None if meaning == "as drawn" else find_facets(surface, regions, creases)
     coarse = region_deviation(surface, regions)
     if coarse is not None and round_parts is not None:
         round_parts = take_as_drawn(round_parts, regions, coarse)
+    bodies = account_bodies(surface, regions, creases, panels, round_parts)
+    notices += more + change_notices(bodies) + facet_notices(surface, regions, creases, bodies, meaning)
     decays = side_decays(surface, creases, panels)
     if round_parts is not None:
         panels = move_facets(round_parts, panels)
     start = starting_panels(panels, decays, max(len(panels), most // 4))
-    return (
-        Plan(start.panels, start.symmetric, start.sides, np.zeros(surface.n_bodies, dtype=np.int64)),
-        round_parts,
-        coarse,
-        notices + more,
-        most,
-    )
+    plan = Plan(start.panels, start.symmetric, start.sides, np.zeros(surface.n_bodies, dtype=np.int64))
+    return plan, round_parts, coarse, notices, bodies, most
 
 
 def _pass(
-    plan: Plan,
-    round_parts: Facets | None,
-    coarse: FloatArray | None,
-    accuracy: FloatArray,
-    passes: list[Pass],
-    report: Progress,
+    plan: Plan, doubts: ShapeDoubts, accuracies: FloatArray, goal: Goal, passes: list[Pass], report: Progress
 ) -> tuple[PassResult, _Judgement]:
     start = time.perf_counter()
     note = f"pass {len(passes) + 1}, {len(plan.panels)} panels"
     result = run_pass(plan, lambda stage, done, total: report(stage, done, total, note))
-    judgement = _judge(result, round_parts, coarse, accuracy, len(passes) + 1)
+    judgement = _judge(result, doubts, accuracies, len(passes) + 1)
     flat = result.gains.reshape(-1, result.gains.shape[2])
-    passes.append(Pass(len(result.panels), result.value, flat.T @ flat, time.perf_counter() - start))
-    report("pass", float(len(passes)), 0.0, f"{note}, uncertainty {judgement.excess:.3g} x the one asked")
+    excess, entry, cause = judgement.worst
+    spent = time.perf_counter() - start
+    passes.append(Pass(len(result.panels), result.value, flat.T @ flat, spent, excess * goal.accuracy, entry, cause))
+    report("pass", float(len(passes)), 0.0, f"{note}: {goal.standing(passes)}")
     return result, judgement
 
 
-def _judge(
-    result: PassResult,
-    round_parts: Facets | None,
-    coarse: FloatArray | None,
-    accuracy: FloatArray,
-    n_passes: int,
-) -> _Judgement:
+def _judge(result: PassResult, doubts: ShapeDoubts, accuracy: FloatArray, n_passes: int) -> _Judgement:
     """Extrapolated value with the lines of its budget, one column more for the sum over all conductors."""
     n = len(result.value)
     sums = np.hstack([np.eye(n), np.ones((n, 1))])
@@ -269,13 +269,9 @@ def _judge(
             sums,
             result.refined,
         ),
-        "facets": np.zeros_like(value),
         "integration": INTEGRATION * np.hstack([scale, scale.max(axis=1, keepdims=True)]),
+        **doubts.lines(result.panels, result.density, sums),
     }
-    if round_parts is not None and round_parts.any:
-        lines["facets"] = facet_uncertainty(round_parts, result.panels, result.density, sums)
-    if coarse is not None:
-        lines["coarsening"] = coarsening_uncertainty(coarse, result.panels, result.density, sums)
     total = np.sqrt(sum(line**2 for line in lines.values()))
     return _Judgement(value, lines, total, accuracy_targets(value[:, :n], accuracy), n_passes)
 
@@ -306,11 +302,13 @@ def _guards(surface: Surface, judgement: _Judgement, value: FloatArray, total: F
             text = f"row sum of {names[i]} is negative: {value[i, n]:.3g} F, uncertainty {total[i, n]:.2g} F"
             notices.append(Notice("maxwell-sign", text))
     if not judgement.reached:
-        worst = np.unravel_index(np.argmax(judgement.total[:, :n] / judgement.targets), (n, n))
-        cause = max(judgement.lines, key=lambda line: judgement.lines[line][worst])
-        text = f"the accuracy asked was not reached: {names[worst[0]]} - {names[worst[1]]} is driven by {cause}"
+        _, worst, cause = judgement.worst
+        place = " - ".join(dict.fromkeys(names[k] for k in worst))
+        text = f"the accuracy asked was not reached: {place} is driven by {cause}"
+        if cause == "coordinates":
+            text += ", which the file rounds; move the part to the origin in CAD, or export more digits"
         if cause == "facets":
-            text += "; export round parts with a finer tolerance, or declare the facets true"
+            text += '; export round parts with a finer tolerance, or say facets = "as drawn" if they are the part'
         if cause == "coarsening":
             text += "; forbid it or state a smaller distance (coarsen)"
         notices.append(Notice("accuracy-not-reached", text))

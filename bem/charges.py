@@ -13,7 +13,7 @@ from numpy.typing import NDArray
 
 from .constants import FOUR_PI_EPSILON_0
 from .creases import Creases, find_creases
-from .facets import Facets, find_facets
+from .facets import Facets, facet_meaning, find_facets, greatest_turn
 from .network import Excitation
 from .panels import Panels
 from .regions import Regions, find_regions
@@ -86,15 +86,16 @@ def stated_charges(
     solution : CapacitanceSolution
     state : Excitation
         From :func:`daraf.bem.network.excite` with the matrix of `solution`.
-    facets : {"auto", "true"}
+    facets : {"auto", "round", "as drawn"}
         As in :func:`daraf.bem.solve_capacitance`.
 
     Returns
     -------
     StatedCharges
     """
+    meaning = facet_meaning(facets)
     regions, _ = find_regions(surface)
-    creases = find_creases(surface, regions)
+    creases = find_creases(surface, regions, greatest_turn=greatest_turn(meaning))
     round_parts = find_facets(surface, regions, creases)
     panels = solution.panels
     galerkin = np.asarray(state.potential @ solution.densities)
@@ -109,12 +110,12 @@ def stated_charges(
         regions=regions,
         creases=creases,
         facets=round_parts,
-        facets_meant=facets == "true",
+        facets_meant=meaning == "as drawn",
         panels=panels,
         density=density,
         galerkin=galerkin,
         margin=_filled(panels, density, state.charge + sign * state.charge_uncertainty),
-        faceted=density if facets == "true" else _filled(panels, density, state.charge - change),
+        faceted=density if meaning == "as drawn" else _filled(panels, density, state.charge - change),
         previous=None if solution.previous is None else _at(solution.previous, state.potential),
         four_pi_epsilon=four_pi_epsilon,
     )

@@ -25,21 +25,22 @@ from .field import polygon_field
 from .frames import CENTROID, CORNER, DIRECTION, LENGTH, NORMAL, OUTWARD, RADIUS
 from .gauss import GAUSS_NODES, GAUSS_WEIGHTS
 from .jit import kernel
-from .near import (
-    _MAX_PIECES,
-    _NARROW,
-    _PARALLEL,
-    _S,
-    _WS,
-    N_POINTS,
-    _across,
-    _edge_line,
-    _height,
-    _narrow_rule,
-    _narrowness,
-    _pieces,
-)
+from .parallel import log_difference
 from .polygon import polygon_potential
+from .segments import (
+    CROWDED_NODES,
+    CROWDED_WEIGHTS,
+    MAX_PIECES,
+    N_POINTS,
+    NARROW,
+    PARALLEL,
+    across,
+    edge_line,
+    height_over,
+    narrow_rule,
+    narrowness,
+    pieces,
+)
 
 __all__ = ["close_force", "divided_force", "turned"]
 
@@ -63,16 +64,16 @@ def turned(six):
 @kernel
 def _field_along(line, other, w0, w1, origin):
     """Integrals along a segment of (field of `other`) x (weight, linear from w0 to w1), and of its moment."""
-    breaks = np.empty(_MAX_PIECES)
-    n = _pieces(breaks, line, other)
+    breaks = np.empty(MAX_PIECES)
+    n = pieces(breaks, line, other)
     slope = (w1 - w0) / line[6]
     fx, fy, fz, tx, ty, tz = 0.0, 0.0, 0.0, 0.0, 0.0, 0.0
     for b in range(n - 1):
         piece = breaks[b + 1] - breaks[b]
         for q in range(N_POINTS):
-            s = breaks[b] + piece * _S[q]
+            s = breaks[b] + piece * CROWDED_NODES[q]
             x, y, z = line[0] + s * line[3], line[1] + s * line[4], line[2] + s * line[5]
-            weight = piece * _WS[q] * (w0 + slope * s)
+            weight = piece * CROWDED_WEIGHTS[q] * (w0 + slope * s)
             gx, gy, gz = polygon_field(other, x, y, z)
             gx, gy, gz = weight * gx, weight * gy, weight * gz
             x, y, z = x - origin[0], y - origin[1], z - origin[2]
@@ -87,7 +88,7 @@ def _narrow_force(narrow, other, side, n):
     line, origin = np.empty(7), np.zeros(3)
     fx, fy, fz, tx, ty, tz = 0.0, 0.0, 0.0, 0.0, 0.0, 0.0
     for q in range(n):
-        w0, w1 = _across(narrow, side, GAUSS_NODES[n, q], line)
+        w0, w1 = across(narrow, side, GAUSS_NODES[n, q], line)
         if line[6] > 0.0:
             gx, gy, gz, mx, my, mz = _field_along(line, other, w0, w1, origin)
             w = GAUSS_WEIGHTS[n, q]
@@ -108,7 +109,7 @@ def _edges_force(panel, other, origin):
         distance = (panel[c] - origin[0]) * panel[o] + (panel[c + 1] - origin[1]) * panel[o + 1]
         distance += (panel[c + 2] - origin[2]) * panel[o + 2]
         if abs(distance) > 1e-14 * panel[RADIUS]:
-            _edge_line(line, panel, k)
+            edge_line(line, panel, k)
             gx, gy, gz, mx, my, mz = _field_along(line, other, distance, distance, origin)
             fx, fy, fz, tx, ty, tz = fx + gx, fy + gy, fz + gz, tx + mx, ty + my, tz + mz
     return fx, fy, fz, tx, ty, tz
@@ -140,13 +141,7 @@ def _edge_of_p(q, h, t0, t1):
     """Integrals over t from t0 to t1 of P = ln(R + h) and of (R - h)/(R + h), R^2 = t^2 + q^2 + h^2, m."""
     p2 = q * q + h * h
     r0, r1 = math.sqrt(t0 * t0 + p2), math.sqrt(t1 * t1 + p2)
-    # ln(t + R), differenced without cancellation for negative t
-    if t0 >= 0.0:
-        log_ratio = math.log((t1 + r1) / max(t0 + r0, 1e-300))
-    elif t1 <= 0.0:
-        log_ratio = math.log((r0 - t0) / max(r1 - t1, 1e-300))
-    else:
-        log_ratio = math.log((t1 + r1) * (r0 - t0) / max(p2, 1e-300))
+    log_ratio = log_difference(t0, r0, t1, r1, p2)
     angle = 0.0
     if q > 0.0:
         angle = math.atan2(t1, q) - math.atan2(t0, q)
@@ -177,35 +172,35 @@ def _parallel_force(source, target):
     if h < 0.0:
         nx, ny, nz, h = -nx, -ny, -nz, -h
     lifted = h > 1e-12 * source[RADIUS]
-    breaks, line = np.empty(_MAX_PIECES), np.empty(7)
+    breaks, line = np.empty(MAX_PIECES), np.empty(7)
     fx, fy, fz, tx, ty, tz = 0.0, 0.0, 0.0, 0.0, 0.0, 0.0
-    across, ax, ay, az = 0.0, 0.0, 0.0, 0.0
+    lift, ax, ay, az = 0.0, 0.0, 0.0, 0.0
     for k in range(4):
         if source[LENGTH + k] == 0.0:
             continue
-        _edge_line(line, source, k)
+        edge_line(line, source, k)
         mx, my, mz = source[OUTWARD + 3 * k], source[OUTWARD + 3 * k + 1], source[OUTWARD + 3 * k + 2]
-        n = _pieces(breaks, line, target)
+        n = pieces(breaks, line, target)
         for b in range(n - 1):
             piece = breaks[b + 1] - breaks[b]
             for p in range(N_POINTS):
-                s = breaks[b] + piece * _S[p]
+                s = breaks[b] + piece * CROWDED_NODES[p]
                 x, y, z = line[0] + s * line[3], line[1] + s * line[4], line[2] + s * line[5]
-                weight = piece * _WS[p]
+                weight = piece * CROWDED_WEIGHTS[p]
                 g = -weight * polygon_potential(target, x, y, z)
                 fx, fy, fz = fx + g * mx, fy + g * my, fz + g * mz
                 tx, ty, tz = tx + g * (y * mz - z * my), ty + g * (z * mx - x * mz), tz + g * (x * my - y * mx)
                 if lifted:
                     force, area = _across_from(target, x, y, z, h, mx, my, mz)
-                    across += weight * force
+                    lift += weight * force
                     # the lever is taken about the source's centroid: less to cancel
                     x, y, z = x - source[CENTROID], y - source[CENTROID + 1], z - source[CENTROID + 2]
                     ax += weight * (force * x - area * mx)
                     ay += weight * (force * y - area * my)
                     az += weight * (force * z - area * mz)
-    ax, ay, az = ax + across * source[CENTROID], ay + across * source[CENTROID + 1], az + across * source[CENTROID + 2]
+    ax, ay, az = ax + lift * source[CENTROID], ay + lift * source[CENTROID + 1], az + lift * source[CENTROID + 2]
     tx, ty, tz = tx + ay * nz - az * ny, ty + az * nx - ax * nz, tz + ax * ny - ay * nx
-    return fx + across * nx, fy + across * ny, fz + across * nz, tx, ty, tz
+    return fx + lift * nx, fy + lift * ny, fz + lift * nz, tx, ty, tz
 
 
 @kernel
@@ -301,19 +296,19 @@ def close_force(outer, inner):
     The lines run along `outer` where there is a choice, so that should be the smaller panel.
     """
     line = np.empty(7)
-    ratio, side = _narrowness(outer, inner, line)
-    if ratio > _NARROW:
-        return _narrow_force(outer, inner, side, _narrow_rule(ratio))
-    ratio, side = _narrowness(inner, outer, line)
-    if ratio > _NARROW:
-        return turned(_narrow_force(inner, outer, side, _narrow_rule(ratio)))
+    ratio, side = narrowness(outer, inner, line)
+    if ratio > NARROW:
+        return _narrow_force(outer, inner, side, narrow_rule(ratio))
+    ratio, side = narrowness(inner, outer, line)
+    if ratio > NARROW:
+        return turned(_narrow_force(inner, outer, side, narrow_rule(ratio)))
     nx, ny, nz = outer[NORMAL], outer[NORMAL + 1], outer[NORMAL + 2]
     mx, my, mz = inner[NORMAL], inner[NORMAL + 1], inner[NORMAL + 2]
     lx, ly, lz = ny * mz - nz * my, nz * mx - nx * mz, nx * my - ny * mx
     sine = math.sqrt(lx * lx + ly * ly + lz * lz)
-    height, size = _height(outer, inner), min(outer[RADIUS], inner[RADIUS])
+    height, size = height_over(outer, inner), min(outer[RADIUS], inner[RADIUS])
     # the tilt that is left out here changes the height over the panels by less than 1e-4 of itself
-    if sine < _PARALLEL or sine * max(outer[RADIUS], inner[RADIUS]) < 1e-4 * height:
+    if sine < PARALLEL or sine * max(outer[RADIUS], inner[RADIUS]) < 1e-4 * height:
         return _parallel_force(outer, inner)
     # the origin, where the planes meet, lies off by about height / sine: what cancels then is lost
     if height < _CANCEL * sine * size or height < min(_LOW, _CANCEL_LOW * sine) * size:

@@ -16,7 +16,16 @@ from scipy.sparse.csgraph import connected_components
 from .regions import MeshEdges, Regions, mesh_edges
 from .surface import Surface
 
-__all__ = ["Creases", "corner_normals", "edge_angles", "facet_offsets", "find_creases", "smooth_edges"]
+__all__ = [
+    "GREATEST_TURN",
+    "WIDE_TURN",
+    "Creases",
+    "corner_normals",
+    "edge_angles",
+    "facet_offsets",
+    "find_creases",
+    "smooth_edges",
+]
 
 FloatArray = NDArray[np.float64]
 IntArray = NDArray[np.int64]
@@ -24,6 +33,8 @@ BoolArray = NDArray[np.bool_]
 
 #: An edge that turns by more than this is sharp, rad.
 GREATEST_TURN = np.radians(35.0)
+#: The same where the user says that facets stand for round parts: down to eight facets a turn, rad.
+WIDE_TURN = np.radians(50.0)
 #: Edges that turn by less than this are flat, rad.
 LEAST_TURN = 1e-3
 #: Neighbouring turns of one smooth surface differ at most by this factor.
@@ -61,6 +72,8 @@ class Creases:
         Meant smooth (or flat); never true on rims and branching edges.
     flat_end : (n_edges, 2) bool
         The first or second facet of the edge is a flat face into which the smooth surface runs.
+    greatest_turn : float, rad
+        Edges that turn by more were taken as sharp.
     """
 
     edges: MeshEdges
@@ -70,6 +83,7 @@ class Creases:
     branching: BoolArray
     smooth: BoolArray
     flat_end: BoolArray
+    greatest_turn: float = GREATEST_TURN
 
 
 def edge_angles(surface: Surface, regions: Regions, *, edges: MeshEdges | None = None) -> FloatArray:
@@ -115,7 +129,9 @@ def _region_moments(surface: Surface, regions: Regions) -> FloatArray:
     return np.asarray(moments / np.maximum(weight, 1e-300)[:, None, None])
 
 
-def find_creases(surface: Surface, regions: Regions, *, edges: MeshEdges | None = None) -> Creases:
+def find_creases(
+    surface: Surface, regions: Regions, *, edges: MeshEdges | None = None, greatest_turn: float = GREATEST_TURN
+) -> Creases:
     """Classify all edges of a surface.
 
     Parameters
@@ -124,6 +140,8 @@ def find_creases(surface: Surface, regions: Regions, *, edges: MeshEdges | None 
     regions : Regions
     edges : MeshEdges, optional
         ``mesh_edges(surface.triangles)`` if known already.
+    greatest_turn : float, rad
+        Edges that turn by more are sharp.
 
     Returns
     -------
@@ -133,7 +151,7 @@ def find_creases(surface: Surface, regions: Regions, *, edges: MeshEdges | None 
     angles = edge_angles(surface, regions, edges=edges)
     sides = regions.triangle_region[edges.triangles]
     between = edges.consistent & (sides >= 0).all(axis=1) & (sides[:, 0] != sides[:, 1])
-    gentle = np.flatnonzero(between & (np.abs(angles) < GREATEST_TURN))
+    gentle = np.flatnonzero(between & (np.abs(angles) < greatest_turn))
     smooth = np.zeros(len(angles), bool)
     flat_end = np.zeros((len(angles), 2), bool)
     if len(gentle):
@@ -142,7 +160,7 @@ def find_creases(surface: Surface, regions: Regions, *, edges: MeshEdges | None 
         flat_end[gentle] = flats
     smooth |= edges.consistent & (np.abs(angles) <= LEAST_TURN) & (sides >= 0).all(axis=1)
     rim = edges.count == 1
-    return Creases(edges, angles, between, rim, ~rim & ~edges.consistent, smooth, flat_end)
+    return Creases(edges, angles, between, rim, ~rim & ~edges.consistent, smooth, flat_end, greatest_turn)
 
 
 def _rows_of_edges(

@@ -20,12 +20,13 @@ from dataclasses import dataclass, replace
 import numpy as np
 from numpy.typing import NDArray
 
-from .creases import Creases, corner_normals, facet_offsets
+from .creases import GREATEST_TURN, WIDE_TURN, Creases, corner_normals, facet_offsets
+from .errors import InputError
 from .panels import Panels
 from .regions import Regions
 from .surface import Surface
 
-__all__ = ["Facets", "facet_uncertainty", "find_facets", "move_facets"]
+__all__ = ["FACETS", "Facets", "facet_meaning", "facet_uncertainty", "find_facets", "greatest_turn", "move_facets"]
 
 FloatArray = NDArray[np.float64]
 IntArray = NDArray[np.int64]
@@ -35,8 +36,8 @@ BoolArray = NDArray[np.bool_]
 #: square of the facet's depth per width, for what is of second order. Rims: likewise a share, their coefficient is
 #: read off one panel. Measured with ``scripts/coverage`` on the exact set.
 FACET_SHARE, DEPTH_SHARE, RIM_SHARE = 0.006, 0.65, 0.08
-#: Corners of rims and sharp edges that turn by more than this are corners of the drawing, rad.
-_RIM_TURN = np.radians(35.0)
+#: What facets may be said to mean.
+FACETS = ("auto", "round", "as drawn")
 #: Neighbouring turns of one round edge differ at most by this factor.
 _RIM_SIMILAR = 2.5
 
@@ -74,6 +75,38 @@ class Facets:
     def any(self) -> bool:
         """Whether anything is round."""
         return bool(np.any(self.offset)) or len(self.edge_offset) > 0
+
+
+def facet_meaning(word: str) -> str:
+    """Check what facets are said to mean.
+
+    Parameters
+    ----------
+    word : str
+        "auto": edges that turn gently in rows, by up to 35 degrees, stand for a smooth surface; "round": the same by
+        up to 50 degrees; "as drawn" (or "true"): the facets are the part.
+
+    Returns
+    -------
+    str
+        One of `FACETS`.
+
+    Raises
+    ------
+    InputError
+        If it is none of these.
+    """
+    if word == "true":
+        return "as drawn"
+    if word not in FACETS:
+        known = ", ".join(map(repr, FACETS))
+        raise InputError(f"{word!r} does not say what facets are; write one of {known}")
+    return word
+
+
+def greatest_turn(meaning: str) -> float:
+    """Edges that turn by more than this are sharp, rad; see `facet_meaning`."""
+    return float(WIDE_TURN if meaning == "round" else GREATEST_TURN)
 
 
 def find_facets(surface: Surface, regions: Regions, creases: Creases) -> Facets:
@@ -127,7 +160,8 @@ def _round_edges(
     onward = _unit(points[after] - points[ends[:, 1]])
     first, second = along - into, onward - along
     size = np.linalg.norm(first, axis=1), np.linalg.norm(second, axis=1)
-    gentle = 2.0 * np.sin(0.5 * _RIM_TURN)
+    # corners that turn by more are corners of the drawing
+    gentle = 2.0 * np.sin(0.5 * creases.greatest_turn)
     alike = np.einsum("ij,ij->i", first, second) > 0.7 * size[0] * size[1]
     alike &= (size[0] < gentle) & (size[1] < gentle) & (size[0] > 1e-6) & (before >= 0) & (after >= 0)
     alike &= (size[0] < _RIM_SIMILAR * size[1]) & (size[1] < _RIM_SIMILAR * size[0])

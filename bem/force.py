@@ -29,7 +29,8 @@ _PAIRS_PER_BLOCK = 200_000
 FILLED_SHARE, FACETS_SHARE, PLACE_SHARE, PASS_SHARE = 1.0, 0.03, 0.5, 0.5
 #: How far the line of action may be off beside that, as a share of half the diagonal of the conductor's box.
 LEVER_SHARE = 0.1
-#: Error of the integrals per sum of the sizes of all forces on a conductor.
+#: Error of the integrals per sum of the sizes of all forces on a conductor: by the other conductors, and on its
+#: panels, so that a force that is zero by symmetry has an uncertainty too.
 INTEGRATION = 2e-6
 
 
@@ -83,8 +84,9 @@ def conductor_forces(charges: StatedCharges, *, progress: Progress | None = None
     if charges.previous is not None:
         parts.append(PASS_SHARE * (galerkin - _totals(*charges.previous, charges.four_pi_epsilon)))
     about, size = _boxes(charges.panels)
-    spread = _lengths([part[:, :3] for part in parts], between[0, :, :, :3])
-    turning = _lengths([_about(part, about) for part in parts], _about(between[0], about[:, None, :]))
+    pressure = _pressures(charges)
+    spread = _lengths([part[:, :3] for part in parts], between[0, :, :, :3], pressure)
+    turning = _lengths([_about(part, about) for part in parts], _about(between[0], about[:, None, :]), size * pressure)
     turning = np.hypot(turning, LEVER_SHARE * size * spread)
     return Forces(value[:, :3], spread, _about(value, about), turning, about)
 
@@ -117,10 +119,20 @@ def _about(six: FloatArray, about: FloatArray) -> FloatArray:
     return np.asarray(six[..., 3:] - np.cross(about, six[..., :3]))
 
 
-def _lengths(parts: list[FloatArray], between: FloatArray) -> FloatArray:
+def _pressures(charges: StatedCharges) -> FloatArray:
+    """Sum of the sizes of the forces on all panels of each conductor, (n,) N: what cancels where a force is zero."""
+    panels = charges.panels
+    square = 2.0 * np.pi / charges.four_pi_epsilon * charges.density**2 * panels.areas
+    total = np.zeros(panels.n_conductors)
+    np.add.at(total, panels.conductor, square)
+    return total
+
+
+def _lengths(parts: list[FloatArray], between: FloatArray, pressure: FloatArray) -> FloatArray:
     """Root sum of squares of all parts, and of the error of the integrals."""
     squares = sum(np.einsum("ak,ak->a", part, part) for part in parts)
-    return np.asarray(np.sqrt(squares + (INTEGRATION * np.linalg.norm(between, axis=2).sum(axis=1)) ** 2))
+    scale = np.linalg.norm(between, axis=2).sum(axis=1) + pressure
+    return np.asarray(np.sqrt(squares + (INTEGRATION * scale) ** 2))
 
 
 def interaction(

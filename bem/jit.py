@@ -42,13 +42,16 @@ if TYPE_CHECKING:
 else:
     from numba import prange
 
-__all__ = ["cache_folder", "kernel", "kernel_source_hash", "parallel_kernel", "prange", "set_threads"]
+__all__ = ["REORDER", "cache_folder", "kernel", "kernel_source_hash", "parallel_kernel", "prange", "set_threads"]
 
 F = TypeVar("F", bound=Callable[..., Any])
 
 #: The only place that names numba's options. fastmath stays off: it makes isnan() lie and gained nothing
 #: on a 1/r loop.
 _OPTIONS: dict[str, Any] = {"nogil": True, "error_model": "numpy", "fastmath": False}
+#: For ``kernel(fastmath=REORDER)``: freedom to reorder sums, so that the compiler can use vector instructions; without
+#: nnan and ninf. Measured: a far pair of panels takes a third of the time.
+REORDER = {"reassoc", "contract", "arcp", "nsz"}
 
 _SOURCES = Path(__file__).resolve().parent
 _PREFIX = "kernels-"

@@ -13,7 +13,14 @@ from numpy.typing import ArrayLike, NDArray
 
 from .errors import InputError, NumericalError
 
-__all__ = ["Excitation", "MutualCapacitance", "eliminate_floating", "excite", "mutual_capacitance"]
+__all__ = [
+    "Excitation",
+    "MutualCapacitance",
+    "eliminate_floating",
+    "excite",
+    "mutual_capacitance",
+    "worst_case",
+]
 
 FloatArray = NDArray[np.float64]
 BoolArray = NDArray[np.bool_]
@@ -124,7 +131,7 @@ def eliminate_floating(
     states = np.eye(len(C))[:, kept]
     states[free] = -_floating_inverse(C, free)[np.ix_(free, free)] @ C[np.ix_(free, ~free)]
     reduced = states.T @ C @ states
-    spread = [[_worst_case(one, other, limits) for other in states.T] for one in states.T]
+    spread = [[worst_case(one, other, limits) for other in states.T] for one in states.T]
     return 0.5 * (reduced + reduced.T), np.array(spread).reshape(len(kept), len(kept))
 
 
@@ -173,7 +180,7 @@ def excite(
     Q = np.where(is_held, C @ V, given)
 
     def spread(left: FloatArray) -> float:
-        return _worst_case(left, V, limits, row_sums)
+        return worst_case(left, V, limits, row_sums)
 
     # With dC a small symmetric change: dV = -P dC V, dQ = (1 - C P) dC V, dW = (V/2 - P Q) . dC V.
     response = np.eye(len(C)) - C @ P
@@ -222,7 +229,7 @@ def _floating_inverse(C: FloatArray, floating: BoolArray) -> FloatArray:
     return P
 
 
-def _worst_case(left: FloatArray, right: FloatArray, limits: FloatArray, row_sums: FloatArray | None = None) -> float:
+def worst_case(left: FloatArray, right: FloatArray, limits: FloatArray, row_sums: FloatArray | None = None) -> float:
     """Largest first-order change of ``left . dC . right`` for symmetric dC with abs(dC) <= limits.
 
     With ``row_sums`` the same is bounded once more with mutual capacitances and row sums as the

@@ -16,21 +16,17 @@ import math
 
 from .close_force import close_force, turned
 from .field import polygon_field
-from .frames import CENTROID, POINTS, RADIUS
-from .jit import kernel, parallel_kernel, prange
-from .pairs import _REORDER
-from .polygon import polygon_distance
+from .frames import POINTS
+from .jit import REORDER, kernel, parallel_kernel, prange
+from .pair_rule import pair_rule
 
 __all__ = ["far_force", "interaction_rows", "middle_force", "pair_force"]
 
-#: Centre distance over the sum of the radii, beyond which n x n points on both panels do.
-_FAR_2, _FAR_3, _FAR_4 = 15.0, 4.0, 2.6
-#: Distance from the smaller panel's centroid to the larger panel over the smaller one's radius, beyond which
-#: n x n points on the smaller panel do.
-_MIDDLE_3, _MIDDLE_4, _MIDDLE_5 = 5.5, 2.8, 1.9
+#: Limits of :func:`daraf.bem.pair_rule.pair_rule`.
+_FAR, _MIDDLE = (15.0, 4.0, 2.6), (5.5, 2.8, 1.9)
 
 
-@kernel(fastmath=_REORDER)
+@kernel(fastmath=REORDER)
 def far_force(source, target, n):
     """Force and torque by n x n Gauss points on both of two well separated panels.
 
@@ -94,27 +90,11 @@ def pair_force(source, target):
     tx, ty, tz : float, m3
         About the origin of the coordinates.
     """
-    x = source[CENTROID] - target[CENTROID]
-    y = source[CENTROID + 1] - target[CENTROID + 1]
-    z = source[CENTROID + 2] - target[CENTROID + 2]
-    ratio = math.sqrt(x * x + y * y + z * z) / (source[RADIUS] + target[RADIUS])
-    if ratio > _FAR_2:
-        return far_force(source, target, 2)
-    if ratio > _FAR_3:
-        return far_force(source, target, 3)
-    if ratio > _FAR_4:
-        return far_force(source, target, 4)
-    swapped = source[RADIUS] > target[RADIUS]
+    rule, swapped = pair_rule(source, target, _FAR, _MIDDLE)
+    if rule > 0:
+        return far_force(source, target, rule)
     outer, inner = (target, source) if swapped else (source, target)
-    ratio = polygon_distance(inner, outer[CENTROID], outer[CENTROID + 1], outer[CENTROID + 2]) / outer[RADIUS]
-    if ratio > _MIDDLE_3:
-        six = middle_force(outer, inner, 3)
-    elif ratio > _MIDDLE_4:
-        six = middle_force(outer, inner, 4)
-    elif ratio > _MIDDLE_5:
-        six = middle_force(outer, inner, 5)
-    else:
-        six = close_force(outer, inner)
+    six = middle_force(outer, inner, -rule) if rule < 0 else close_force(outer, inner)
     return turned(six) if swapped else six
 
 

@@ -7,7 +7,7 @@ from numpy.typing import NDArray
 
 from .panels import Panels
 
-__all__ = ["CapacitanceSolution", "Notice", "Pass"]
+__all__ = ["BodyAccount", "CapacitanceSolution", "Notice", "Pass"]
 
 FloatArray = NDArray[np.float64]
 
@@ -28,6 +28,49 @@ class Notice:
     text: str
 
 
+@dataclass(frozen=True)
+class BodyAccount:
+    """What became of one body of the mesh before the first pass.
+
+    Attributes
+    ----------
+    body : str
+    triangles : int
+        As they came.
+    slivers : int
+        Of these, triangles much longer than wide.
+    faces : int
+        Flat faces found.
+    panels : int
+        That cover them.
+    area_change : float
+        Relative, by covering the flat faces anew.
+    volume_change : float or None
+        Relative; None of an open body.
+    round_faces : int
+        Flat faces taken as facets of a round surface.
+    turn : tuple of 2 float or None, rad
+        Least and greatest turn of the edges between these.
+    round_outline, round_holes : int
+        Edges of faces that were taken as parts of round outlines and of round holes.
+    rim_turn : tuple of 2 float or None, rad
+        Least and greatest turn from one of these to the next.
+    """
+
+    body: str
+    triangles: int
+    slivers: int
+    faces: int
+    panels: int
+    area_change: float
+    volume_change: float | None
+    round_faces: int = 0
+    turn: tuple[float, float] | None = None
+    round_outline: int = 0
+    round_holes: int = 0
+    rim_turn: tuple[float, float] | None = None
+
+
 @dataclass(frozen=True, eq=False)
 class Pass:
     """One pass of refinement.
@@ -40,12 +83,21 @@ class Pass:
     estimate : (n, n) float, F
         Two-level estimate of exact minus raw, signed.
     seconds : float
+    uncertainty : float
+        Largest relative expanded uncertainty of the entries asked, on the scale on which the accuracy is asked.
+    entry : tuple of 2 int
+        Where it is.
+    cause : str
+        The line of the budget that drives it.
     """
 
     panels: int
     maxwell: FloatArray
     estimate: FloatArray
     seconds: float
+    uncertainty: float = float("nan")
+    entry: tuple[int, int] = (0, 0)
+    cause: str = "discretisation"
 
 
 @dataclass(frozen=True, eq=False)
@@ -79,6 +131,10 @@ class CapacitanceSolution:
         Panels and densities of the pass before the last.
     interrupted : bool
         Whether the user stopped the refinement; the last finished pass is what is given.
+    facets : str
+        What the facets were taken to mean.
+    bodies : tuple of BodyAccount
+        What became of each body before the first pass.
     """
 
     conductor_names: tuple[str, ...]
@@ -100,3 +156,5 @@ class CapacitanceSolution:
     warnings: list[Notice] = field(default_factory=list)
     previous: tuple[Panels, FloatArray] | None = None
     interrupted: bool = False
+    facets: str = "auto"
+    bodies: tuple[BodyAccount, ...] = ()

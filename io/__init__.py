@@ -9,6 +9,7 @@ from typing import TYPE_CHECKING, Any
 if TYPE_CHECKING:
     from .bodies import Body, read_bodies
     from .case import Case, load_case, make_case
+    from .case_inspection import inspect_case
     from .changes import Mend
     from .inspection import inspect_files
     from .markers import write_marks
@@ -25,6 +26,7 @@ __all__ = [
     "Result",
     "bodies_to_surface",
     "fit_bodies",
+    "inspect_case",
     "inspect_files",
     "load_case",
     "make_case",
@@ -42,6 +44,7 @@ _HOMES = {
     "Result": "result",
     "bodies_to_surface": "problem",
     "fit_bodies": "mending",
+    "inspect_case": "case_inspection",
     "inspect_files": "inspection",
     "load_case": "case",
     "make_case": "case",

@@ -8,6 +8,7 @@ import numpy as np
 from daraf.bem.network import Excitation, MutualCapacitance
 from daraf.bem.solution import CapacitanceSolution, Notice
 
+from .account_text import account_document
 from .problem import Problem
 from .units import engineering
 
@@ -83,7 +84,8 @@ def result_document(
         "force": None,
         "torque": None,
         "surface_field": None,
-        "budget": [{"cause": cause, "maxwell": _list(part)} for cause, part in solution.budget.items()],
+        "budget": [_budget_line(solution, cause) for cause in solution.budget],
+        "bodies": account_document(solution.bodies),
         "solution": _solution(solution),
     }
     return {**document, **more, "warnings": warnings}
@@ -113,6 +115,20 @@ def _capacitance(solution: CapacitanceSolution, mutual: MutualCapacitance) -> di
         "mutual_uncertainty": _list(mutual.uncertainty),
         "to_infinity": _list(solution.to_infinity),
         "to_infinity_uncertainty": _list(solution.to_infinity_uncertainty),
+    }
+
+
+def _budget_line(solution: CapacitanceSolution, cause: str) -> dict[str, Any]:
+    """One cause: its contributions, and where it holds the largest share of the square of the uncertainty."""
+    part, total = solution.budget[cause], solution.maxwell_uncertainty
+    share = np.square(part / np.where(total > 0.0, total, np.inf))
+    i, j = (int(k) for k in np.unravel_index(np.argmax(share), share.shape))
+    names = solution.conductor_names
+    return {
+        "cause": cause,
+        "maxwell": _list(part),
+        "largest_share": float(share[i, j]),
+        "largest_share_at": [names[i], names[j]],
     }
 
 
@@ -147,6 +163,7 @@ def _solution(solution: CapacitanceSolution) -> dict[str, Any]:
         "accuracy": float(solution.accuracy),
         "reached": bool(solution.reached),
         "interrupted": bool(solution.interrupted),
+        "facets": solution.facets,
         "relative_permittivity": float(solution.relative_permittivity),
         "history": [
             {
@@ -154,6 +171,9 @@ def _solution(solution: CapacitanceSolution) -> dict[str, Any]:
                 "seconds": float(one.seconds),
                 "maxwell": _list(one.maxwell),
                 "estimate": _list(one.estimate),
+                "uncertainty": float(one.uncertainty) if np.isfinite(one.uncertainty) else None,
+                "at": [solution.conductor_names[k] for k in one.entry],
+                "cause": one.cause,
             }
             for one in solution.passes
         ],

@@ -8,6 +8,7 @@ from typing import Any
 from daraf.bem.network import Excitation, MutualCapacitance, excite, mutual_capacitance
 from daraf.bem.solution import CapacitanceSolution
 
+from .account_text import account_text, counted
 from .case import Case
 from .document import daraf_version, result_document
 from .loads import loads
@@ -156,7 +157,9 @@ def solve_problem(
     log = Log(progress)
     content = problem.case.content
     surface = problem.surface
-    log.add(f"{len(surface.triangles)} triangles, {surface.n_bodies} bodies, {surface.n_conductors} conductors")
+    counts = [("triangle", "triangles", len(surface.triangles)), ("body", "bodies", surface.n_bodies)]
+    counts.append(("conductor", "conductors", surface.n_conductors))
+    log.add(", ".join(counted(n, one, many) for one, many, n in counts))
     solution = solve_capacitance(
         surface,
         relative_permittivity=content.medium.relative_permittivity,
@@ -164,8 +167,11 @@ def solve_problem(
         memory_limit=memory_limit,
         facets=content.facets,
         want=_wanted(problem),
+        rounding=problem.rounding,
         progress=log,
     )
+    for one in solution.bodies:
+        log.add(account_text(one))
     log.add("done" if solution.reached else "stopped before the accuracy asked was reached")
     mutual = mutual_capacitance(
         solution.maxwell,

@@ -27,13 +27,25 @@ from .narrow import narrow_notices, narrowest_gaps
 from .schema import ConductorEntry, Part
 from .uniting import unite
 
-__all__ = ["InputFile", "Problem", "bodies_to_surface", "build_problem", "mend_of", "place", "problem_from_files"]
+__all__ = [
+    "InputFile",
+    "PlacedBodies",
+    "Problem",
+    "bodies_to_surface",
+    "build_problem",
+    "mend_of",
+    "place",
+    "placed_bodies",
+    "problem_from_files",
+]
 
 FloatArray = NDArray[np.float64]
 BoolArray = NDArray[np.bool_]
 _Source = tuple[str, str | None]
 
 _MEETS = {"touches": "touches", "crosses": "cuts through", "overlaps": "overlaps"}
+
+#: How the note of a body begins that is no change of it.
 
 #: A shift of more than so many times the size of what is shifted is worth a question.
 _FAR = 100.0
@@ -64,6 +76,8 @@ class Problem:
     notices : tuple of Notice
     changes : tuple of (conductor, body, Change)
         Everything that was changed of the geometry, by name of conductor and body.
+    rounding : (n_bodies,) float, m, or None
+        How far the coordinates of each body may be off by the rounding of its file; None if not known.
     """
 
     case: Case
@@ -73,6 +87,7 @@ class Problem:
     values: FloatArray | None
     notices: tuple[Notice, ...]
     changes: tuple[tuple[str, str, Change], ...] = ()
+    rounding: FloatArray | None = None
 
 
 def problem_from_files(
@@ -145,6 +160,50 @@ def build_problem(
     InputError
         If a file, a body or a placement cannot be used, or conductors touch or overlap.
     """
+    placed = placed_bodies(case, known=known)
+    bodies, owner = list(placed.bodies), list(placed.owner)
+    notices = placed.notices
+    surface, told, changes, rounding = _surface(case, bodies, owner, accuracy)
+    held, values = _stated(case)
+    inputs = tuple(_input_file(case, entry) for entry in dict.fromkeys(_surfaces(case)))
+    return Problem(case, surface, inputs, held, values, (*notices, *told), changes, rounding)
+
+
+@dataclass(frozen=True, eq=False)
+class PlacedBodies:
+    """Bodies of a case where it puts them, neither mended nor oriented.
+
+    Attributes
+    ----------
+    bodies : tuple of Body
+    owner : tuple of int
+        Conductor of each.
+    notices : tuple of Notice
+    """
+
+    bodies: tuple[Body, ...]
+    owner: tuple[int, ...]
+    notices: tuple[Notice, ...]
+
+
+def placed_bodies(case: Case, *, known: dict[_Source, list[Body]] | None = None) -> PlacedBodies:
+    """Read the surface files of a case, choose and place its bodies.
+
+    Parameters
+    ----------
+    case : Case
+    known : dict, optional
+        Bodies read before, by path and unit.
+
+    Returns
+    -------
+    PlacedBodies
+
+    Raises
+    ------
+    InputError
+        If a file, a body or a placement cannot be used.
+    """
     files = dict(known or {})
     used: dict[tuple[_Source, int], str] = {}
     bodies: list[Body] = []
@@ -158,11 +217,7 @@ def build_problem(
                 notices += _placement_notice(part, body, entry)
                 bodies.append(place(body, part))
                 owner.append(index)
-    notices += _unused(files, used)
-    surface, told, changes = _surface(case, bodies, owner, accuracy)
-    held, values = _stated(case)
-    inputs = tuple(_input_file(case, entry) for entry in dict.fromkeys(_surfaces(case)))
-    return Problem(case, surface, inputs, held, values, (*notices, *told), changes)
+    return PlacedBodies(tuple(bodies), tuple(owner), (*notices, *_unused(files, used)))
 
 
 def mend_of(case: Case) -> Mend:
@@ -297,7 +352,7 @@ _Changes = tuple[tuple[str, str, Change], ...]
 
 def _surface(
     case: Case, bodies: list[Body], owner: list[int], accuracy: float | None
-) -> tuple[Surface, list[Notice], _Changes]:
+) -> tuple[Surface, list[Notice], _Changes, FloatArray]:
     """Mend the placed bodies, unite those of a conductor, look at each and at every pair, and join them."""
     rule = mend_of(case)
     if not rule.changes:
@@ -323,7 +378,8 @@ def _surface(
         notices += _body_notices(case, body, _described(case, body, conductor))
     notices += told
     names = [entry.name for entry in conductors]
-    return bodies_to_surface(bodies, owner, names=names, deviation=deviation), notices, tuple(changes)
+    rounding = np.array([body.spacing for body in bodies])
+    return bodies_to_surface(bodies, owner, names=names, deviation=deviation), notices, tuple(changes), rounding
 
 
 def _refuse_unfit(case: Case, bodies: list[Body], owner: list[int]) -> None:
@@ -349,7 +405,11 @@ def _refuse_unfit(case: Case, bodies: list[Body], owner: list[int]) -> None:
 def _body_notices(case: Case, body: Body, name: str) -> list[Notice]:
     """What was changed of a body, and what is still wrong with it."""
     unit = case.content.unit or "m"
-    told = [Notice("mended", f"{name}: {'; '.join(note.said(unit) for note in body.notes)}")] if body.notes else []
+    walls = [note for note in body.notes if note.code == "cavity-wall"]
+    changes = [note for note in body.notes if note not in walls]
+    told = [Notice("cavity-wall", f"{name} {note}") for note in walls]
+    if changes:
+        told.append(Notice("mended", f"{name}: {'; '.join(note.said(unit) for note in changes)}"))
     for fault in faults_of(Shape(body)):
         # After mending only the wall of a cavity is wound inwards, as it should be.
         if fault.severity != "note" and fault.code != "inside-out":

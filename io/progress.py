@@ -31,7 +31,7 @@ class Silence:
 
 
 class PlainProgress(Silence):
-    """Lines for a log file or a pipe: one when a stage starts, then at most one in so many seconds.
+    """Lines for a log file or a pipe: messages, and at most one line in so many seconds about the stage at work.
 
     A report without a total is a message and printed as it is.
 
@@ -51,14 +51,16 @@ class PlainProgress(Silence):
         if total <= 0.0:
             self._say(note or stage)
         elif stage != self._stage:
-            self._stage, self._started, self._shown = stage, now, now
-            self._say(f"{stage}{_after(note)}")
+            self._stage, self._started = stage, now
+            # a stage that starts soon after the last line is not worth one
+            if not self._shown or now - self._shown >= self._interval:
+                self._say(f"{stage}{_after(note)}")
         elif now - self._shown >= self._interval and 0 < done < total:
-            self._shown = now
             left = (now - self._started) * (total - done) / done
             self._say(f"{stage}: {100 * done / total:.0f} %, about {duration(left)} left{_after(note)}")
 
     def _say(self, text: str) -> None:
+        self._shown = time.monotonic()
         self._stream.write(text + "\n")
         self._stream.flush()
 

@@ -14,7 +14,7 @@ from daraf.bem.errors import InputError
 
 from .surface_file import SolvedSurface, read_surface
 
-__all__ = ["Result", "check_destination", "document_text", "read_result", "write_result"]
+__all__ = ["Result", "check_destination", "document_text", "foreign_files", "read_result", "write_result"]
 
 _DOCUMENT, _SURFACE, _LOG = "result.json", "surface.vtp", "log.txt"
 
@@ -117,7 +117,7 @@ def write_result(
     """Write a result folder whole or not at all.
 
     A folder beside the target is filled, flushed to disk and renamed; an older result steps aside only
-    then and is removed last.
+    then and is removed last. Whatever else lies in the folder of an older result is kept.
 
     Parameters
     ----------
@@ -152,6 +152,9 @@ def write_result(
     try:
         draft = _sibling(target)
         try:
+            for name in foreign_files(target):
+                if name not in files:
+                    _take_along(target / name, draft / name)
             for name, content in files.items():
                 _write(draft / name, content)
             if target.exists():
@@ -170,6 +173,14 @@ def write_result(
     except OSError as error:
         raise _refusal(target, error) from None
     return target
+
+
+def foreign_files(folder: str | Path) -> list[str]:
+    """Names of what lies in a result folder and is no part of a result; empty if there is no such folder."""
+    place = Path(folder)
+    if not place.is_dir():
+        return []
+    return sorted(item.name for item in place.iterdir() if item.name not in (_DOCUMENT, _SURFACE, _LOG))
 
 
 def read_result(folder: str | Path) -> Result:
@@ -213,6 +224,22 @@ def _replaceable(target: Path) -> bool:
     except InputError:
         return False
     return True
+
+
+def _take_along(source: Path, destination: Path) -> None:
+    """Put a file or folder into the new result as well; files are linked where the disk can, else copied."""
+
+    def linked(one: str, other: str) -> str:
+        try:
+            os.link(one, other, follow_symlinks=False)
+        except OSError:
+            shutil.copy2(one, other, follow_symlinks=False)
+        return other
+
+    if source.is_dir() and not source.is_symlink():
+        shutil.copytree(source, destination, symlinks=True, copy_function=linked)
+    else:
+        linked(str(source), str(destination))
 
 
 def _sibling(target: Path) -> Path:

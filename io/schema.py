@@ -12,6 +12,7 @@ from pydantic import AfterValidator, BaseModel, BeforeValidator, ConfigDict, Fie
 from pydantic import model_validator as whole
 
 from daraf.bem.errors import InputError
+from daraf.bem.facets import FACETS, facet_meaning
 
 from .mesh_units import length_unit
 from .units import KINDS, parse_quantity
@@ -125,16 +126,20 @@ def parse_accuracy(value: Any) -> float:
     """
     number = parse_quantity(value, "ratio")
     if not 1e-6 <= number <= 0.5:
-        raise InputError(f"accuracy {value!r} is outside 0.0001 % to 50 %; write text such as '1 %' (0.01 is the same)")
+        meant = f"{number:g} %" if 0.5 < number <= 50.0 else "1 %"
+        raise InputError(
+            f"accuracy {value!r} is outside 0.0001 % to 50 %; write text such as {meant!r} "
+            f"({parse_quantity(meant, 'ratio'):g} is the same)"
+        )
     return number
 
 
 def _facets(value: Any) -> str:
-    if value is True or value == "true":
-        return "true"
-    if value == "auto":
-        return "auto"
-    raise InputError(f"{value!r} does not say what facets are; write 'auto' or 'true'")
+    if value is True:
+        return "as drawn"
+    if isinstance(value, str):
+        return facet_meaning(value)
+    raise InputError(f"{value!r} does not say what facets are; write one of {', '.join(map(repr, FACETS))}")
 
 
 def _positive(value: float) -> float:
@@ -186,8 +191,9 @@ Facets = Annotated[
     BeforeValidator(_facets),
     WithJsonSchema(
         {
-            "enum": ["auto", "true", True],
-            "description": "auto: facets that turn gently stand for a smooth surface; true: as drawn",
+            "enum": list(FACETS),
+            "description": "auto: facets in rows that turn by up to 35 degrees stand for a round surface, and what was "
+            "assumed is told; round: by up to 50 degrees; as drawn: the facets are the part",
         }
     ),
 ]

@@ -6,10 +6,20 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
+from .account_text import counted, facet_columns
 from .mesh_units import METRES_PER_UNIT
 from .units import engineering, prefix_for, rounded, with_uncertainty
 
-__all__ = ["WIDTH", "budget_line", "couplings", "force_table", "matrix_table", "peak_table", "result_text"]
+__all__ = [
+    "WIDTH",
+    "budget_line",
+    "couplings",
+    "facet_share",
+    "force_table",
+    "matrix_table",
+    "peak_table",
+    "result_text",
+]
 
 FloatArray = NDArray[np.float64]
 
@@ -19,6 +29,10 @@ LARGEST_MATRIX = 12
 #: Longest list of couplings; the rest stands in `result.json`.
 MOST_COUPLINGS = 40
 _NAME_WIDTH = 18
+#: Notices that ask for a look and are no reason for doubt.
+NOTES = ("cavity-wall", "facets-taken-as-drawn", "facets-taken-round", "mended", "unused-body")
+#: Causes below this share of the largest are not printed.
+_PRINTED = 1e-3
 
 
 def result_text(document: dict[str, Any]) -> str:
@@ -40,19 +54,22 @@ def result_text(document: dict[str, Any]) -> str:
         _state(document),
         force_table(document),
         peak_table(document),
+        _facets(document),
         _accuracy(document),
         _effort(document),
     ]
     # What this version cannot compute stands in `result.json`; the tables claim nothing about it.
     told = [one for one in document["warnings"] if one["code"] != "not-computed"]
-    blocks += [_wrapped(f"warning ({one['code']}): {one['text']}") for one in told]
+    blocks += [
+        _wrapped(f"{'note' if one['code'] in NOTES else 'warning'} ({one['code']}): {one['text']}") for one in told
+    ]
     return "\n\n".join("\n".join(block) for block in blocks if block) + "\n"
 
 
 def _heading(document: dict[str, Any]) -> list[str]:
     names, medium = document["conductors"], document["solution"]["relative_permittivity"]
     title = document["title"] or "capacitance"
-    count = f"{len(names)} conductor{'s' if len(names) > 1 else ''}"
+    count = counted(len(names), "conductor")
     lines = [*_wrapped(title), f"{count}, relative permittivity {medium:g}"]
     return [*lines, "± is the expanded uncertainty, k = 2, for the geometry as modelled"]
 
@@ -100,7 +117,7 @@ def matrix_table(
     """
     exponent, prefix = prefix_for(float(np.nanmax(np.abs(values))))
     cells = [_cells(column, column_spread, exponent) for column, column_spread in zip(values.T, spreads.T, strict=True)]
-    labels = [_label(name, k) for k, name in enumerate(rows)]
+    labels = _labels(rows)
     heads = [_label(name, k) if k < len(rows) else name for k, name in enumerate(columns)]
     left = max(map(len, labels))
     width = max(len(cell) for column in cells for cell in column)
@@ -162,34 +179,33 @@ def couplings(names: Sequence[str], mutual: FloatArray, spreads: FloatArray, mos
 
 
 def _self_list(names: Sequence[str], maxwell: FloatArray, spread: FloatArray, content: dict[str, Any]) -> list[str]:
-    labels = [_label(name, k) for k, name in enumerate(names)]
-    left = max(map(len, labels))
+    labels = _labels(names)
     own = [with_uncertainty(maxwell[k, k], spread[k, k], "F") for k in range(len(names))]
     far = [
         with_uncertainty(value, around, "F")
         for value, around in zip(content["to_infinity"], content["to_infinity_uncertainty"], strict=True)
     ]
-    width = max(map(len, [*own, "Maxwell C_ii"]))
-    lines = [
-        "Capacitances of each conductor",
-        " " * left + "  " + "Maxwell C_ii".ljust(width) + "  to infinity",
-    ]
-    rows = zip(labels, own, far, strict=True)
-    return lines + [f"{label.ljust(left)}  {one.ljust(width)}  {two}" for label, one, two in rows]
+    columns = {"": labels, "Maxwell C_ii": own, "to infinity": far}
+    return ["Capacitances of each conductor", *_columns(columns)]
+
+
+def _columns(columns: dict[str, list[str]]) -> list[str]:
+    """Lines of columns under their heads, left-aligned."""
+    padded = []
+    for head, cells in columns.items():
+        width = max(map(len, [head, *cells]))
+        padded.append([cell.ljust(width) for cell in [head, *cells]])
+    return ["  ".join(row).rstrip() for row in zip(*padded, strict=True)]
 
 
 def _state(document: dict[str, Any]) -> list[str]:
     potential, charge, energy = document["potential"], document["charge"], document["energy"]
     if potential["value"] is None:
         return []
-    labels = [_label(name, k) for k, name in enumerate(document["conductors"])]
-    left = max(map(len, labels))
     volts = [with_uncertainty(v, u, "V") for v, u in zip(potential["value"], potential["uncertainty"], strict=True)]
     coulombs = [with_uncertainty(v, u, "C") for v, u in zip(charge["value"], charge["uncertainty"], strict=True)]
-    width = max(map(len, [*volts, "potential"]))
-    lines = ["Potentials and charges as stated", " " * left + "  " + "potential".ljust(width) + "  charge"]
-    rows = zip(labels, volts, coulombs, strict=True)
-    lines += [f"{label.ljust(left)}  {one.ljust(width)}  {two}" for label, one, two in rows]
+    columns = {"": _labels(document["conductors"]), "potential": volts, "charge": coulombs}
+    lines = ["Potentials and charges as stated", *_columns(columns)]
     return [*lines, f"energy {with_uncertainty(energy['value'], energy['uncertainty'], 'J')}"]
 
 
@@ -218,16 +234,10 @@ def force_table(document: dict[str, Any]) -> list[str]:
     ]
     columns = [_aligned([row[k][0] for row in rows]) for k in range(3)]
     columns.append(_aligned([row[0][1] for row in rows]))
-    labels = [_label(name, k) for k, name in enumerate(names)]
-    left = max(map(len, labels))
-    widths = [max(len(column[0]), 1) for column in columns]
-    lines = [f"Forces as stated, {prefix}N; ± holds for the length of the error"]
-    heads = zip("xyz±", widths, strict=True)
-    lines.append(" " * left + "".join("  " + head.rjust(width) for head, width in heads))
-    for k, label in enumerate(labels):
-        cells = "".join("  " + column[k].rjust(width) for column, width in zip(columns, widths, strict=True))
-        lines.append((label.ljust(left) + cells).rstrip())
-    return lines
+    labels = _labels(names)
+    heads = [head.rjust(max(len(column[0]), 1)) for head, column in zip("xyz±", columns, strict=True)]
+    title = f"Forces as stated, {prefix}N; ± holds for the length of the error"
+    return [title, *_columns({"": labels, **dict(zip(heads, columns, strict=True))})]
 
 
 def peak_table(document: dict[str, Any]) -> list[str]:
@@ -247,7 +257,7 @@ def peak_table(document: dict[str, Any]) -> list[str]:
     if not peaks:
         return []
     unit = document["case"].get("unit") or "m"
-    labels = [_label(one["conductor"], k) for k, one in enumerate(peaks)]
+    labels = _labels([one["conductor"] for one in peaks])
     left = max(map(len, labels))
     lines = ["Peak field on the surface as stated"]
     for label, one in zip(labels, peaks, strict=True):
@@ -263,6 +273,12 @@ def peak_table(document: dict[str, Any]) -> list[str]:
     return lines
 
 
+def _facets(document: dict[str, Any]) -> list[str]:
+    columns = facet_columns(document)
+    meaning = document["solution"]["facets"]
+    return [f'Taken as round (facets = "{meaning}")', *_columns(columns)] if columns else []
+
+
 def _accuracy(document: dict[str, Any]) -> list[str]:
     solution = document["solution"]
     pairs = ", ".join(" - ".join(pair) for pair in document["case"].get("want", []))
@@ -272,14 +288,14 @@ def _accuracy(document: dict[str, Any]) -> list[str]:
     )
     if solution["interrupted"]:
         asked += " when the solve was interrupted"
-    return [*_wrapped(asked), *_wrapped(budget_line(document))]
+    return [*_wrapped(asked), *_wrapped(budget_line(document)), *_wrapped(facet_share(document))]
 
 
 def budget_line(document: dict[str, Any]) -> str:
     """Largest relative contribution of each cause, such as "uncertainty: discretisation 0.4 %, facets 0.1 %".
 
-    An entry counts relative to its own size, but not less than 1e-3 of the geometric mean of the two
-    diagonal entries: the scale on which the accuracy is asked.
+    Causes that add nothing are left out. An entry counts relative to its own size, but not less than 1e-3 of the
+    geometric mean of the two diagonal entries: the scale on which the accuracy is asked.
 
     Parameters
     ----------
@@ -293,15 +309,37 @@ def budget_line(document: dict[str, Any]) -> str:
     own = np.sqrt(np.outer(np.diag(maxwell), np.diag(maxwell)))
     scale = np.maximum(maxwell, 1e-3 * own)
     shares = {one["cause"]: float(np.max(np.abs(np.array(one["maxwell"])) / scale)) for one in document["budget"]}
-    ordered = sorted(shares.items(), key=lambda item: -item[1])
+    least = _PRINTED * max(shares.values())
+    ordered = sorted(((cause, x) for cause, x in shares.items() if x > least), key=lambda item: -item[1])
     return "largest relative uncertainty by cause: " + ", ".join(f"{cause} {_percent(x)}" for cause, x in ordered)
+
+
+def facet_share(document: dict[str, Any]) -> str:
+    """Largest share that the facets have in (the square of) an uncertainty, and where.
+
+    Parameters
+    ----------
+    document : dict
+
+    Returns
+    -------
+    str
+        Empty where nothing is round.
+    """
+    lines = [one for one in document["budget"] if one["cause"] == "facets" and one["largest_share"] > 0.0]
+    if not lines:
+        return ""
+    share = lines[0]["largest_share"]
+    one, other = lines[0]["largest_share_at"]
+    shown = "less than 1 %" if share < 0.01 else f"{100 * share:.0f} %"
+    return f"facets: at most {shown} of an uncertainty squared, at {one if one == other else f'{one} - {other}'}"
 
 
 def _effort(document: dict[str, Any]) -> list[str]:
     solution = document["solution"]
     total = solution["seconds"]["total"]
-    passes = f"{solution['passes']} pass{'' if solution['passes'] == 1 else 'es'}"
-    line = f"{solution['panels']} panels, {passes}, {solution['method']}, {total:.2f} s"
+    passes = counted(solution["passes"], "pass", "passes")
+    line = f"{counted(solution['panels'], 'panel')}, {passes}, {solution['method']}, {total:.2f} s"
     memory = solution["peak_memory_bytes"]
     return _wrapped(line + (f", peak memory {engineering(memory, 'B', 3)}" if memory else ""))
 
@@ -313,6 +351,10 @@ def _percent(fraction: float) -> str:
 def _label(name: str, index: int) -> str:
     """Join number and name: numbers keep shortened names apart."""
     return f"{index + 1} {_cut(name, _NAME_WIDTH)}"
+
+
+def _labels(names: Sequence[str]) -> list[str]:
+    return [_label(name, k) for k, name in enumerate(names)]
 
 
 def _cut(name: str, width: int) -> str:
@@ -327,4 +369,4 @@ def _wrapped(text: str) -> list[str]:
             line = "  " + word
         else:
             line = f"{line} {word}" if line else word
-    return [*lines, line]
+    return [*lines, line] if line else lines

@@ -4,9 +4,10 @@ import argparse
 from typing import TYPE_CHECKING
 
 if TYPE_CHECKING:
+    from daraf.io.case import Case
     from daraf.io.changes import Mend
 
-__all__ = ["add_mending", "mend_from", "mending_keys"]
+__all__ = ["add_mending", "mend_from", "mending_keys", "with_mending"]
 
 
 def add_mending(parser: argparse.ArgumentParser) -> None:
@@ -40,3 +41,17 @@ def mend_from(args: argparse.Namespace) -> "Mend":
     keys = mending_keys(args)
     lengths = [parse_quantity(keys[key], "length") if key in keys else None for key in ("mend_within", "close_holes")]
     return Mend(keys.get("mend", "safe"), *lengths)
+
+
+def with_mending(case: "Case", args: argparse.Namespace) -> "Case":
+    """The case with what the command line says about mending.
+
+    Raises
+    ------
+    InputError
+        If a value does not fit.
+    """
+    from daraf.io.case import make_case
+
+    keys = mending_keys(args)
+    return make_case({**case.stated, **keys}, folder=case.folder, file=case.file) if keys else case

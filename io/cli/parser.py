@@ -6,10 +6,11 @@ bytecode) with typer, and half a second is all that `daraf --help` may take.
 
 import argparse
 import re
+from collections.abc import Sequence
 from difflib import get_close_matches
 from typing import NoReturn
 
-__all__ = ["Parser", "UsageError", "positive_whole_number"]
+__all__ = ["Parser", "UsageError", "case_file_among", "positive_whole_number"]
 
 
 class UsageError(Exception):
@@ -55,3 +56,15 @@ def positive_whole_number(text: str) -> int:
     if not text.isascii() or not text.isdigit() or int(text) < 1:
         raise argparse.ArgumentTypeError(f"{text!r} is no whole number from 1")
     return int(text)
+
+
+def case_file_among(files: Sequence[str], unit: str | None) -> str | None:
+    """Return the case file, or None if the files are surfaces."""
+    cases = [name for name in files if name.lower().endswith(".toml")]
+    if not cases:
+        return None
+    if len(files) > 1:
+        raise UsageError(f"{cases[0]}: a case file stands alone; name one case, or surface files only")
+    if unit is not None:
+        raise UsageError(f"--unit is for surface files; {cases[0]} states its unit itself, change it there")
+    return str(cases[0])

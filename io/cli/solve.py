@@ -7,11 +7,10 @@ import sys
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
-from .mending_options import add_mending, mending_keys
-from .parser import UsageError, positive_whole_number
+from .mending_options import add_mending, mending_keys, with_mending
+from .parser import UsageError, case_file_among, positive_whole_number
 
 if TYPE_CHECKING:
-    from daraf.io.case import Case
     from daraf.io.outcome import Outcome
     from daraf.io.problem import Problem
 
@@ -52,7 +51,9 @@ def run(args: argparse.Namespace) -> int:
 
         sys.stdout.write(json.dumps(json_schema(), indent=2, ensure_ascii=False) + "\n")
         return 0
-    case_file = _case_file(args)
+    if not args.files:
+        raise UsageError("name a case file or surface files; see `daraf solve --help`")
+    case_file = case_file_among(args.files, args.unit)
     if args.threads is not None:
         _limit_threads(args.threads)
     from daraf.io.progress import progress_for
@@ -70,20 +71,6 @@ def run(args: argparse.Namespace) -> int:
     if outcome.solution.interrupted:
         return 130
     return 0 if outcome.solution.reached else 3
-
-
-def _case_file(args: argparse.Namespace) -> str | None:
-    """Return the case file, or None if the files are surfaces."""
-    cases = [name for name in args.files if name.lower().endswith(".toml")]
-    if not args.files:
-        raise UsageError("name a case file or surface files; see `daraf solve --help`")
-    if not cases:
-        return None
-    if len(args.files) > 1:
-        raise UsageError(f"{cases[0]}: a case file stands alone; name one case, or surface files only")
-    if args.unit is not None:
-        raise UsageError(f"--unit is for surface files; {cases[0]} states its unit itself, change it there")
-    return str(cases[0])
 
 
 def _limit_threads(n: int) -> None:
@@ -132,15 +119,8 @@ def _read(args: argparse.Namespace, case_file: str | None) -> tuple["Problem", f
     if case_file is None:
         problem = problem_from_files(args.files, args.unit, accuracy=accuracy, mending=mending_keys(args))
     else:
-        problem = build_problem(_with_mending(load_case(case_file), mending_keys(args)), accuracy=accuracy)
+        problem = build_problem(with_mending(load_case(case_file), args), accuracy=accuracy)
     return problem, time.perf_counter() - started, accuracy
-
-
-def _with_mending(case: "Case", keys: dict[str, str]) -> "Case":
-    """The case with what the command line says about mending."""
-    from daraf.io.case import make_case
-
-    return make_case({**case.stated, **keys}, folder=case.folder, file=case.file) if keys else case
 
 
 def _solve(problem: "Problem", accuracy: float | None, progress: Any, seconds: float) -> "Outcome":

@@ -35,8 +35,7 @@ SAMPLE = 20_000
 #: Operations per pair of points of a far pair: 3 differences, 5 for the square, root, quotient, 1 for the sum.
 FAR_FLOPS = 11
 NAMES = ["far 2x2", "far 3x3", "far 4x4", "middle 3x3", "middle 4x4", "middle 5x5", "close"]
-_FAR = np.array([rules._FAR_2, rules._FAR_3, rules._FAR_4])
-_MIDDLE = np.array([rules._MIDDLE_3, rules._MIDDLE_4, rules._MIDDLE_5])
+_FAR, _MIDDLE = np.array(rules._FAR), np.array(rules._MIDDLE)
 
 
 @kernel

@@ -222,6 +222,23 @@ def test_wanted_entries_alone_are_refined():
         solve_capacitance(surface, want=[(0, 3)])
 
 
+def test_a_far_body_of_complicated_shape_gets_few_panels_where_only_the_pair_is_wanted():
+    """A comb of five blocks far away costs most of the panels unless the case says what it wants."""
+    comb = [shapes.moved(shapes.block(0.2, 2.0, 2.0), 40.0 + 0.4 * k) for k in range(5)]
+    surface = shapes.surface([[shapes.plate()], [shapes.moved(shapes.plate(), z=0.2)], comb])
+    pair = solve_capacitance(surface, accuracy=0.005, want=[(0, 1)])
+    everything = solve_capacitance(surface, accuracy=0.005)
+    assert pair.reached
+    spent, needed = (np.count_nonzero(s.panels.conductor == 2) for s in (pair, everything))
+    fewest = solve_capacitance(surface, accuracy=0.5).panels
+    # hardly more than the comb starts with, which is what any accuracy costs
+    assert spent <= 1.1 * np.count_nonzero(fewest.conductor == 2)
+    assert spent < 0.6 * needed
+    # the uncertainty of what was not wanted is told all the same, and holds
+    excess = np.abs(pair.maxwell - everything.maxwell)
+    assert (excess <= pair.maxwell_uncertainty + everything.maxwell_uncertainty).all()
+
+
 def test_an_edge_over_a_panel_near_its_own_edge_is_not_missed():
     """Three sheets, the middle one 1 mm wider all round: charge crowds under the outer rims and at its own rim alike.
 

@@ -1,12 +1,13 @@
 import numpy as np
 import pytest
 
-from daraf.bem import solve_capacitance
+from daraf.bem import InputError, solve_capacitance
 from daraf.bem.constants import FOUR_PI_EPSILON_0
 from daraf.bem.creases import find_creases
-from daraf.bem.facets import find_facets
+from daraf.bem.facets import facet_meaning, find_facets
 from daraf.bem.regions import find_regions
 from published import shapes
+from published.exact_tables import solid_cylinder
 
 
 def facets_of(*conductors):
@@ -72,7 +73,7 @@ def test_hole_of_a_plate_moves_into_the_plate():
 @pytest.mark.parametrize("levels", [1, 2])
 def test_sphere_is_met_from_its_facets(levels):
     mesh = shapes.icosphere(1.0, levels)
-    flat, _ = in_metres(solve_capacitance(shapes.surface([mesh]), accuracy=0.005, facets="true"))
+    flat, _ = in_metres(solve_capacitance(shapes.surface([mesh]), accuracy=0.005, facets="as drawn"))
     smooth, uncertainty = in_metres(solve_capacitance(shapes.surface([mesh]), accuracy=0.005))
     assert abs(smooth - 1.0) < uncertainty
     assert flat < smooth
@@ -85,7 +86,7 @@ def test_sphere_is_met_from_its_facets(levels):
 def test_disc_is_met_from_its_rim(sides):
     exact = 2.0 / np.pi
     mesh = shapes.disc(1.0, sides)
-    flat, _ = in_metres(solve_capacitance(shapes.surface([mesh]), accuracy=0.003, facets="true"))
+    flat, _ = in_metres(solve_capacitance(shapes.surface([mesh]), accuracy=0.003, facets="as drawn"))
     smooth, uncertainty = in_metres(solve_capacitance(shapes.surface([mesh]), accuracy=0.003))
     assert abs(smooth - exact) < uncertainty
     # dC/da = 8 eps, in metres 2/pi, times the mean bulge; the rim coefficient is read off one panel
@@ -112,3 +113,32 @@ def test_open_bowl_is_met():
     solution = solve_capacitance(shapes.surface([shapes.bowl(1.0, half_angle, 24, 6)]), accuracy=0.01)
     value, uncertainty = in_metres(solution)
     assert abs(value - exact) < uncertainty
+
+
+@pytest.mark.slow
+@pytest.mark.parametrize(("sides", "meaning"), [(12, "auto"), (12, "round"), (8, "round")])
+def test_prism_of_few_sides_said_to_be_round_meets_the_cylinder(sides, meaning):
+    surface = shapes.surface([shapes.cylinder(1.0, 2.0, sides)])
+    value, uncertainty = in_metres(solve_capacitance(surface, accuracy=0.01, facets=meaning))
+    assert abs(value - solid_cylinder(1.0, 2.0)) < uncertainty
+
+
+@pytest.mark.slow
+@pytest.mark.parametrize(("sides", "meaning"), [(12, "as drawn"), (8, "auto"), (8, "as drawn")])
+def test_prism_meant_as_drawn_lies_between_the_cylinders_about_and_inside_it(sides, meaning):
+    """Capacitance grows with the body: the prism holds the cylinder shrunk onto its flats, and lies in its own."""
+    surface = shapes.surface([shapes.cylinder(1.0, 2.0, sides)])
+    value, uncertainty = in_metres(solve_capacitance(surface, accuracy=0.003, facets=meaning))
+    round_one = solid_cylinder(1.0, 2.0)
+    assert value + uncertainty < round_one
+    assert value - uncertainty > np.cos(np.pi / sides) * round_one
+    # the same prism with other triangles on its ends and in three rows: the same body
+    other = shapes.surface([shapes.turned(shapes.cylinder(1.0, 2.0, sides, 3), 0.3)])
+    again, spread = in_metres(solve_capacitance(other, accuracy=0.003, facets="as drawn"))
+    assert abs(again - value) < np.hypot(uncertainty, spread)
+
+
+def test_old_and_wrong_words_for_facets():
+    assert facet_meaning("true") == "as drawn"
+    with pytest.raises(InputError, match="as drawn"):
+        facet_meaning("smooth")

@@ -61,7 +61,7 @@ def test_tip_of_a_cone_has_no_peak():
 def test_facets_that_are_the_part_are_sharp():
     mesh = shapes.icosphere(1.0, 1)
     assert peaks([mesh], [1.0])[0].bounded
-    assert not peaks([mesh], [1.0], facets="true")[0].bounded
+    assert not peaks([mesh], [1.0], facets="as drawn")[0].bounded
 
 
 def test_smooth_bodies_are_bounded():

@@ -171,3 +171,24 @@ def test_the_wall_of_a_cavity_is_not_called_inside_out(folder):
     trimesh.util.concatenate([outer, inner]).export(folder / "shell.stl")
     problem = build(folder, {"name": "shell", "surface": "shell.stl"})
     assert "inside-out" not in [one.code for one in problem.notices]
+
+
+def test_the_wall_of_a_cavity_is_no_mending(folder):
+    ball = trimesh.creation.box((4, 4, 4))
+    hole = trimesh.creation.box((2, 2, 2))
+    hole.invert()
+    trimesh.util.concatenate([ball, hole]).export(folder / "hollow.stl")
+    problem = build(folder, {"name": "H", "surface": "hollow.stl"})
+    told = [one.code for one in problem.notices if one.code in ("mended", "cavity-wall", "inner-surface")]
+    assert told == ["inner-surface"]  # no other conductor lies in it: left out, since it carries no charge
+
+
+def test_rounding_of_the_file_is_handed_on(folder):
+    """Half a step of single precision at the largest coordinate, in metres, body by body."""
+    box_there = trimesh.creation.box((4, 4, 4))
+    box_there.apply_translation((3000.0, 0, 0))
+    box_there.export(folder / "there.stl")  # binary
+    problem = build(folder, {"name": "T", "surface": "there.stl"}, {"name": "W", "surface": "wall.stl"})
+    # 3002 mm lies between 2^11 and 2^12: half a step is at most 2^-24 of it
+    assert problem.rounding[0] == pytest.approx(3.002 * 2.0**-24, rel=0.01)
+    assert problem.rounding[1] < 1e-9

@@ -32,6 +32,20 @@ def test_plain_lines_with_the_time_left(monkeypatch):
     ]
 
 
+def test_plain_lines_leave_out_stages_that_pass_quickly(monkeypatch):
+    now = [100.0]
+    monkeypatch.setattr(progress_module.time, "monotonic", lambda: now[0])
+    stream = io.StringIO()
+    show = PlainProgress(stream, interval=5.0)
+    for stage in ("panels", "matrix", "factorisation"):
+        show(stage, 0, 1)
+        now[0] += 1.0
+    show("pass", 1, 0, "pass 1")
+    now[0] += 6.0
+    show("matrix", 0, 1, "pass 2")
+    assert stream.getvalue().splitlines() == ["panels", "pass 1", "matrix (pass 2)"]
+
+
 def test_terminal_shows_messages_that_stay():
     stream = Terminal()
     with progress_for(stream) as show:

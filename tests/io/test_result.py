@@ -12,7 +12,7 @@ import pytest
 
 from daraf.bem.errors import InputError
 from daraf.io import result as result_module
-from daraf.io.result import check_destination, document_text, read_result, write_result
+from daraf.io.result import check_destination, document_text, foreign_files, read_result, write_result
 from daraf.io.surface_file import SolvedSurface, read_surface, surface_bytes
 
 DOCUMENT = {
@@ -99,9 +99,23 @@ def test_cut_surface_file_is_refused(tmp_path, surface):
 
 def test_older_result_is_replaced_as_a_whole(tmp_path):
     folder = write_result(tmp_path / "a.daraf", DOCUMENT, b"", "first")
-    (folder / "leftover.txt").write_text("x")
     write_result(folder, DOCUMENT, b"", "second")
     assert sorted(os.listdir(folder)) == ["log.txt", "result.json", "surface.vtp"]
+    assert (folder / "log.txt").read_text() == "second"
+    assert os.listdir(tmp_path) == ["a.daraf"]
+
+
+def test_what_the_user_put_into_a_result_folder_is_kept(tmp_path):
+    folder = write_result(tmp_path / "a.daraf", DOCUMENT, b"", "first")
+    (folder / "notes.txt").write_text("measured: 3.4 pF")
+    (folder / "photos").mkdir()
+    (folder / "photos" / "one.txt").write_text("x")
+    (folder / "link").symlink_to("notes.txt")
+    write_result(folder, DOCUMENT, b"", "second")
+    assert foreign_files(folder) == ["link", "notes.txt", "photos"]
+    assert (folder / "notes.txt").read_text() == "measured: 3.4 pF"
+    assert (folder / "photos" / "one.txt").read_text() == "x"
+    assert (folder / "link").is_symlink()
     assert (folder / "log.txt").read_text() == "second"
     assert os.listdir(tmp_path) == ["a.daraf"]
 

@@ -8,7 +8,16 @@ from daraf.bem.network import excite, mutual_capacitance
 from daraf.io.case import make_case
 from daraf.io.document import result_document
 from daraf.io.problem import Problem
-from daraf.io.tables import WIDTH, budget_line, couplings, force_table, matrix_table, peak_table, result_text
+from daraf.io.tables import (
+    WIDTH,
+    budget_line,
+    couplings,
+    facet_share,
+    force_table,
+    matrix_table,
+    peak_table,
+    result_text,
+)
 
 
 def document(n, volts=20e3, **options):
@@ -91,6 +100,25 @@ def test_budget_is_relative_to_the_scale_of_the_accuracy():
     assert budget_line(made) == "largest relative uncertainty by cause: discretisation 0.5 %, facets 0.1 %"
 
 
+def test_facets_share_is_told_with_its_entry():
+    """In the made-up solution the facets are 0.1 of every uncertainty, so a hundredth of its square."""
+    made = document(2)
+    line = made["budget"][1]
+    assert line["cause"] == "facets"
+    assert line["largest_share"] == pytest.approx(0.01)
+    assert facet_share(made) == "facets: at most 1 % of an uncertainty squared, at plate 1 - plate 2"
+    line["largest_share"], line["largest_share_at"] = 0.374, ["plate 1", "plate 2"]
+    assert "at most 37 % of an uncertainty squared, at plate 1 - plate 2" in result_text(made)
+    line["largest_share"] = 0.0
+    assert facet_share(made) == ""
+
+
+def test_causes_that_add_nothing_are_not_printed():
+    made = document(1)
+    made["budget"].append({**made["budget"][0], "cause": "coordinates", "maxwell": [[1e-20]]})
+    assert "coordinates" not in budget_line(made)
+
+
 def test_caution_beyond_extra_low_voltage_only():
     assert "extra-low voltage" in result_text(document(2, volts=51.0))
     assert "extra-low voltage" not in result_text(document(2, volts=49.0))
@@ -102,7 +130,7 @@ def test_caution_beyond_extra_low_voltage_only():
 def test_keys_of_the_document_in_order():
     wanted = (
         "daraf title case inputs changes conductors capacitance charge potential energy force torque surface_field "
-        "budget solution warnings"
+        "budget bodies solution warnings"
     )
     made = document(2)
     assert list(made) == wanted.split()

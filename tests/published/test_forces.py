@@ -89,6 +89,17 @@ def test_two_spheres(one, two, distance, given, values, repulsion):
     assert_pushes(conductor_forces(charges(spheres(one, two, distance), given, values)), repulsion, worst)
 
 
+def test_no_force_inside_a_concentric_shell():
+    """Zero by symmetry, of a mesh as symmetric: what is left is rounding, and the uncertainty says as much."""
+    surface = shapes.surface([shapes.icosphere(1.0, 1), shapes.icosphere(2.0, 1)])
+    forces = conductor_forces(charges((surface, solve_capacitance(surface, accuracy=0.02)), "potential", (1.0, 0.0)))
+    size = np.linalg.norm(forces.force, axis=1)
+    assert (size <= forces.force_uncertainty).all()
+    assert (np.linalg.norm(forces.torque, axis=1) <= forces.torque_uncertainty).all()
+    # the pressure on the inner sphere, eps E^2 / 2 over 4 pi a^2 with E = 2 V/m, is 8 pi eps
+    assert (forces.force_uncertainty < 1e-3 * 2.0 * FOUR_PI_EPSILON_0).all()
+
+
 @pytest.mark.parametrize("distance", DISC_FORCES)
 def test_two_discs(distance):
     surface = shapes.surface([shapes.disc(1.0, 64), shapes.moved(shapes.turned(shapes.disc(1.0, 64), 0.1), z=distance)])
