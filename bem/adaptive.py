@@ -3,11 +3,12 @@
 import time
 from collections.abc import Callable
 from dataclasses import dataclass, field, replace
+from functools import lru_cache
 
 import numpy as np
 from numpy.typing import NDArray
 from scipy.linalg import lapack
-from threadpoolctl import threadpool_limits
+from threadpoolctl import ThreadpoolController
 
 from .bisection import SPLIT_U, SPLIT_V, split_panels, split_sides
 from .errors import NumericalError
@@ -200,7 +201,7 @@ def _solve(matrix: FloatArray, charges: FloatArray) -> tuple[FloatArray, list[No
     """Bare densities by Cholesky factorisation of the lower triangle."""
     notices = []
     # a small factorisation gains nothing from threads and waits long for them where the machine is busy
-    with threadpool_limits(1 if len(matrix) < SERIAL else None):
+    with _thread_pools().limit(limits=1 if len(matrix) < SERIAL else None):
         factor, info = _cholesky(matrix, 1.0)
         if info != 0:
             factor, info = _cholesky(matrix, 1.0 + COINCIDENT)
@@ -215,6 +216,12 @@ def _solve(matrix: FloatArray, charges: FloatArray) -> tuple[FloatArray, list[No
             )
         density, _ = lapack.dpotrs(factor, charges, lower=0)
     return np.ascontiguousarray(density), notices
+
+
+@lru_cache(maxsize=1)
+def _thread_pools() -> ThreadpoolController:
+    """Pools of the libraries loaded, looked for once: the search takes as long as a small factorisation."""
+    return ThreadpoolController()
 
 
 def _cholesky(matrix: FloatArray, diagonal: float) -> tuple[FloatArray, int]:

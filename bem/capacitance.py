@@ -156,7 +156,8 @@ def solve_capacitance(
     try:
         while plan is not None:
             result, judgement = _pass(plan, doubts, accuracies, goal, passes, report)
-            previous = plan.before
+            if plan.before is not None:
+                previous = plan.before.density[plan.parent]
             for stage, time_spent in result.seconds.items():
                 seconds[stage] = seconds.get(stage, 0.0) + time_spent
             notices += [notice for notice in result.notices if notice not in notices]
@@ -189,7 +190,7 @@ def solve_capacitance(
         seconds=seconds,
         peak_memory_bytes=peak_memory(),
         warnings=notices + _guards(surface, judgement, value, total),
-        previous=None if previous is None else (previous.panels, farads * previous.density.T),
+        previous=None if previous is None else np.ascontiguousarray(farads * previous.T),
         interrupted=interrupted,
         facets=meaning,
         bodies=bodies,

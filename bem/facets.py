@@ -197,16 +197,19 @@ def _unit(vectors: FloatArray) -> FloatArray:
     return np.asarray(vectors / np.where(length > 0, length, 1.0)[:, None])
 
 
-def _sides_on_edges(facets: Facets, panels: Panels, ends: FloatArray) -> tuple[IntArray, IntArray, IntArray]:
-    """Edges, panels and sides of panels that lie on them: three arrays of one length."""
+def _sides_on_edges(
+    facets: Facets, panels: Panels, ends: FloatArray, chosen: BoolArray | None = None
+) -> tuple[IntArray, IntArray, IntArray]:
+    """Edges (of those chosen), panels and sides of panels that lie on them: three arrays of one length."""
     found: list[tuple[IntArray, IntArray, IntArray]] = []
-    for region in np.unique(facets.edge_region):
+    wanted = np.ones(len(ends), dtype=np.bool_) if chosen is None else chosen
+    for region in np.unique(facets.edge_region[wanted]):
         rows = np.flatnonzero(panels.region == region)
         corners = panels.corners[rows]
         sides = np.roll(corners, -1, axis=1) - corners
         middles = corners + 0.5 * sides
         exists = np.linalg.norm(sides, axis=2) > 0
-        for k in np.flatnonzero(facets.edge_region == region):
+        for k in np.flatnonzero(wanted & (facets.edge_region == region)):
             a, chord = ends[k, 0], ends[k, 1] - ends[k, 0]
             along = np.clip((middles - a) @ chord / (chord @ chord), 0.0, 1.0)
             gap = np.linalg.norm(middles - (a + along[..., None] * chord), axis=2)
@@ -283,10 +286,8 @@ def _rim_factors(facets: Facets, panels: Panels) -> FloatArray:
     A panel of width w along the rim with the mean density of K / sqrt(d) has K = sigma sqrt(w) / 2.
     """
     shift = facets.edge_offset[:, None] * facets.edge_out
-    edge, panel, side = _sides_on_edges(facets, panels, facets.edge_ends + shift[:, None, :])
+    edge, panel, side = _sides_on_edges(facets, panels, facets.edge_ends + shift[:, None, :], facets.edge_rim)
     factor = np.zeros(len(panels))
-    rim = facets.edge_rim[edge]
-    edge, panel, side = edge[rim], panel[rim], side[rim]
     length = np.linalg.norm(panels.corners[panel, (side + 1) % 4] - panels.corners[panel, side], axis=1)
     width = panels.areas[panel] / length
     np.add.at(factor, panel, 0.5 * np.pi**2 * width * length * np.abs(facets.edge_offset[edge]))

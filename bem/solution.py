@@ -127,8 +127,8 @@ class CapacitanceSolution:
     seconds : dict of str to float
     peak_memory_bytes : int
     warnings : list of Notice
-    previous : tuple of Panels and (n_conductors, n_panels) float, C/m2 per V, or None
-        Panels and densities of the pass before the last.
+    previous : (n_conductors, n_panels) float, C/m2 per V, or None
+        Densities of the pass before the last, on the panels of the last.
     interrupted : bool
         Whether the user stopped the refinement; the last finished pass is what is given.
     facets : str
@@ -154,7 +154,7 @@ class CapacitanceSolution:
     seconds: dict[str, float]
     peak_memory_bytes: int
     warnings: list[Notice] = field(default_factory=list)
-    previous: tuple[Panels, FloatArray] | None = None
+    previous: FloatArray | None = None
     interrupted: bool = False
     facets: str = "auto"
     bodies: tuple[BodyAccount, ...] = ()

@@ -12,10 +12,10 @@ if TYPE_CHECKING:
     from .case_inspection import inspect_case
     from .changes import Mend
     from .inspection import inspect_files
+    from .joining import bodies_to_surface
     from .markers import write_marks
     from .mending import fit_bodies
     from .outcome import Outcome, solve_case
-    from .problem import bodies_to_surface
     from .result import Result, read_result
 
 __all__ = [
@@ -42,7 +42,7 @@ _HOMES = {
     "Mend": "changes",
     "Outcome": "outcome",
     "Result": "result",
-    "bodies_to_surface": "problem",
+    "bodies_to_surface": "joining",
     "fit_bodies": "mending",
     "inspect_case": "case_inspection",
     "inspect_files": "inspection",

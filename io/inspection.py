@@ -13,12 +13,15 @@ from daraf.bem.errors import InputError
 from .bodies import Body, Fault, read_mesh_set
 from .changes import Change, Mend
 from .contacts import Contact, cavity_walls, contacts, shapes_of
+from .facet_tolerance import parse_facet_tolerance
 from .faults import faults_of
 from .gaps import Approach, Shape, box_gap, closest_approach
 from .inspection_text import inspection_to_text
 from .markers import Mark, contact_mark, fault_marks
 from .mending import fit_bodies, make_fit
+from .progress import ProgressCallback, Silence
 from .topology import boundary_loops, edges_of
+from .triangle_distance import sides_and_areas
 
 __all__ = [
     "BodyReport",
@@ -134,6 +137,8 @@ def inspect_files(
     *,
     mend: Mend | None = None,
     marked: bool = False,
+    facet_tolerance: float | str | None = None,
+    progress: ProgressCallback | None = None,
 ) -> Inspection:
     """Read mesh files and look at every body.
 
@@ -141,11 +146,14 @@ def inspect_files(
     ----------
     paths : str, Path or several
     unit : str, optional
-        Unit of the files. Without one, lengths stay in the unit of the files.
+        Unit of the files that carry none. Without one, lengths stay in the unit of the files.
     mend : Mend, optional
         What a solve would be allowed to change.
     marked : bool
         Whether to draw marks too, which takes as long again where bodies meet.
+    facet_tolerance : float or str, optional
+        Of curved shapes, such as "0.02 mm" or "0.1 %"; a bare number is metres.
+    progress : callable, optional
 
     Returns
     -------
@@ -156,12 +164,21 @@ def inspect_files(
     InputError
         If a file cannot be used.
     """
-    read = read_mesh_set(paths, unit, unit_needed=False, mend=mend)
-    return replace(inspect_bodies(read.bodies, mend=mend, marked=marked), files=read.files, unit=read.unit)
+    tell = progress or Silence()
+    tell("reading", 0, 1)
+    tolerance = None if facet_tolerance is None else parse_facet_tolerance(facet_tolerance)
+    read = read_mesh_set(paths, unit, unit_needed=False, facet_tolerance=tolerance, mend=mend)
+    seen = inspect_bodies(read.bodies, mend=mend, marked=marked, progress=tell)
+    return replace(seen, files=read.files, unit=read.unit)
 
 
 def inspect_bodies(
-    bodies: Sequence[Body], unit: str | None = None, *, mend: Mend | None = None, marked: bool = False
+    bodies: Sequence[Body],
+    unit: str | None = None,
+    *,
+    mend: Mend | None = None,
+    marked: bool = False,
+    progress: ProgressCallback | None = None,
 ) -> Inspection:
     """Look at every body and at every pair of them.
 
@@ -175,23 +192,33 @@ def inspect_bodies(
         What a solve would be allowed to change.
     marked : bool
         Whether to draw marks too, which takes as long again where bodies meet.
+    progress : callable, optional
 
     Returns
     -------
     Inspection
     """
+    tell = progress or Silence()
+    total = sum(len(body.triangles) for body in bodies)
+    tell("mending on trial", 0, 1)
     shapes = shapes_of(_as_solved(bodies, mend or Mend()))
+    tell("looking for contacts and gaps", 0, 1)
     found = contacts([shape.body for shape in shapes], shapes=shapes)
     cavities = cavity_walls(shapes)
     gaps = _gaps(shapes, found)
     reports, faulty = [], []
+    done = 0
     for k, (body, shape) in enumerate(zip(bodies, shapes, strict=True)):
+        tell("looking for faults", done, total)
+        done += len(body.triangles)
         own = faults_of(shape if shape.body is body else Shape(body))
         if k in cavities:
             own = [_cavity(bodies[cavities[k]]) if fault.code == "inside-out" else fault for fault in own]
         faults = [*own, *_contact_faults(k, found, bodies)]
         reports.append(_report(k, replace(body, faults=faults), shape, gaps[k]))
         faulty.append(replace(body, faults=own))
+    if marked:
+        tell("drawing marks", 0, 1)
     marks = fault_marks(faulty) if marked else []
     marks += [_contact_mark(contact, shapes) for contact in found if contact.meets and marked]
     return Inspection(list(dict.fromkeys(body.file for body in bodies)), unit, reports, marks)
@@ -218,9 +245,7 @@ def _something_left(body: Body) -> bool:
 
 
 def _report(k: int, body: Body, shape: Shape, gaps: list[Gap]) -> BodyReport:
-    sides = np.roll(shape.corners, -1, axis=1) - shape.corners
-    lengths = np.linalg.norm(sides, axis=2)
-    doubled = np.linalg.norm(np.cross(sides[:, 0], sides[:, 1]), axis=1)
+    lengths, doubled = sides_and_areas(shape.corners)
     longest = lengths.max(axis=1)
     sized = doubled > 1e-12 * longest**2
     solved = shape.body

@@ -15,7 +15,8 @@ from .branching import split_branching
 from .changes import Change, Mend, Place
 from .holes import fill_loop, hole_loops
 from .orientation import consistent, orient
-from .topology import boundary_loops, connected_pieces, edges_of, proper_rows, signed_volume
+from .topology import boundary_loops, compacted, connected_pieces, edges_of, proper_rows, signed_volume
+from .triangle_distance import sides_and_areas
 
 __all__ = [
     "HOLE_SHARE",
@@ -29,6 +30,9 @@ __all__ = [
 FloatArray = NDArray[np.float64]
 IntArray = NDArray[np.int64]
 BoolArray = NDArray[np.bool_]
+
+#: An odd number whose bits are spread: products with it hardly ever agree by chance (Knuth, TAOCP 3, 6.4).
+_MIX = np.uint64(0x9E3779B97F4A7C15)
 
 #: Rounds of edge exchanges; each removes at least one triangle of a chain along one edge.
 _ROUNDS = 100
@@ -66,11 +70,8 @@ def flat_triangles(vertices: FloatArray, triangles: IntArray, height: float) -> 
     -------
     (nt,) bool
     """
-    corners = vertices[triangles]
-    sides = np.roll(corners, -1, axis=1) - corners
-    longest = np.linalg.norm(sides, axis=2).max(axis=1)
-    doubled = np.linalg.norm(np.cross(sides[:, 0], sides[:, 1]), axis=1)
-    flat: BoolArray = ~proper_rows(triangles) | (doubled <= height * longest)
+    sides, doubled = sides_and_areas(vertices[triangles])
+    flat: BoolArray = ~proper_rows(triangles) | (doubled <= height * sides.max(axis=1))
     return flat
 
 
@@ -86,7 +87,13 @@ def coincident_groups(triangles: IntArray) -> tuple[IntArray, IntArray]:
     group : (nt,) int
     size : (n_groups,) int
     """
-    _, group, size = np.unique(np.sort(triangles, axis=1), axis=0, return_inverse=True, return_counts=True)
+    ordered = np.sort(triangles, axis=1)
+    n = np.uint64(triangles.max(initial=0) + 1)
+    a, b, c = ordered.astype(np.uint64).T
+    key = np.sort(((a * n + b) * _MIX) ^ c)
+    if (key[1:] != key[:-1]).all():  # the usual mesh: no two keys are equal, so no two triangles
+        return np.arange(len(triangles)), np.ones(len(triangles), dtype=np.int64)
+    _, group, size = np.unique(ordered, axis=0, return_inverse=True, return_counts=True)
     return group.ravel(), size
 
 
@@ -154,11 +161,11 @@ def make_fit(body: Body) -> Body:
 
 
 def _with_triangles(body: Body, vertices: FloatArray, triangles: IntArray, notes: list[Change]) -> Body:
-    used, index = np.unique(triangles, return_inverse=True)
+    used, index = compacted(triangles, len(vertices))
     return replace(
         body,
         vertices=np.ascontiguousarray(vertices[used]),
-        triangles=np.ascontiguousarray(index.reshape(-1, 3), dtype=np.int64),
+        triangles=index,
         notes=[*body.notes, *notes],
     )
 
@@ -255,6 +262,8 @@ def _without_flat(vertices: FloatArray, triangles: IntArray, height: float, note
     """Remove triangles whose corners lie on one line by exchanging their longest edge."""
     exchanged = 0
     place: Place | None = None
+    if not flat_triangles(vertices, triangles, height).any():
+        return triangles
     triangles = triangles.copy()
     fewest, idle = len(triangles), 0
     for _ in range(_ROUNDS):

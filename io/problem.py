@@ -16,16 +16,11 @@ from daraf.bem.surface import Surface
 
 from .bodies import Body, pick_bodies, read_bodies
 from .case import Case, make_case
-from .changes import Change, Mend, place_text
-from .coarsening import coarsen_bodies
-from .contacts import cavity_walls, contacts, shapes_of
-from .faults import faults_of
-from .gaps import Shape
-from .markers import MeetingError, contact_mark
-from .mending import fit_bodies
-from .narrow import narrow_notices, narrowest_gaps
+from .changes import Change
+from .facet_tolerance import FacetTolerance, parse_facet_tolerance
+from .joining import bodies_to_surface, joined, mend_of
+from .readers import may_be_curved
 from .schema import ConductorEntry, Part
-from .uniting import unite
 
 __all__ = [
     "InputFile",
@@ -41,11 +36,10 @@ __all__ = [
 
 FloatArray = NDArray[np.float64]
 BoolArray = NDArray[np.bool_]
-_Source = tuple[str, str | None]
+_Source = tuple[str, str | None, FacetTolerance | None]
 
-_MEETS = {"touches": "touches", "crosses": "cuts through", "overlaps": "overlaps"}
-
-#: How the note of a body begins that is no change of it.
+#: Remarks of readers that stand beside a result.
+_TOLD = ("facet-tolerance", "no-unit", "odd-unit")
 
 #: A shift of more than so many times the size of what is shifted is worth a question.
 _FAR = 100.0
@@ -95,6 +89,7 @@ def problem_from_files(
     unit: str | None,
     *,
     accuracy: float | str | None = None,
+    facet_tolerance: float | str | None = None,
     mending: Mapping[str, Any] | None = None,
 ) -> Problem:
     """Problem in which each body of the files is a conductor, without potentials or charges.
@@ -104,6 +99,8 @@ def problem_from_files(
     paths : sequence of str or Path
     unit : str or None
     accuracy : float or str, optional
+    facet_tolerance : float or str, optional
+        Of curved shapes, such as "0.02 mm" or "0.1 %"; a bare number is metres.
     mending : mapping, optional
         Keys of the case that say how far mending goes: mend, mend_within, close_holes, coarsen.
 
@@ -116,24 +113,26 @@ def problem_from_files(
     InputError
         If a file cannot be used, the unit is missing, or bodies touch or overlap.
     """
+    tolerance = None if facet_tolerance is None else parse_facet_tolerance(facet_tolerance)
     more = dict(mending or {})
     # checked before any file is read
     rule = mend_of(make_case({"conductor": [{"name": "any", "surface": "any"}], **more}, folder="."))
-    bodies = read_bodies([str(path) for path in paths], unit, mend=rule)
+    bodies = read_bodies([str(path) for path in paths], unit, facet_tolerance=tolerance, mend=rule)
     folder = Path(paths[0]).absolute().parent
     known: dict[_Source, list[Body]] = {}
     conductors = []
     for body in bodies:
         surface = os.path.relpath(body.file, folder)
-        known.setdefault((str(folder / surface), None), []).append(body)
+        known.setdefault((str(folder / surface), None, tolerance if may_be_curved(surface) else None), []).append(body)
         conductors.append({"name": body.name, "surface": surface, "body": body.index_in_file})
     stated: dict[str, Any] = {
-        "title": ", ".join(Path(file).name for file, _ in known)[:200],
+        "title": ", ".join(Path(file).name for file, _, _ in known)[:200],
         "conductor": conductors,
         **more,
     }
     stated |= {} if unit is None else {"unit": unit}
     stated |= {} if accuracy is None else {"accuracy": accuracy}
+    stated |= {} if facet_tolerance is None else {"facet_tolerance": facet_tolerance}
     case = make_case(stated, folder=folder)
     return build_problem(case, known=known)
 
@@ -163,7 +162,7 @@ def build_problem(
     placed = placed_bodies(case, known=known)
     bodies, owner = list(placed.bodies), list(placed.owner)
     notices = placed.notices
-    surface, told, changes, rounding = _surface(case, bodies, owner, accuracy)
+    surface, told, changes, rounding = joined(case, bodies, owner, accuracy)
     held, values = _stated(case)
     inputs = tuple(_input_file(case, entry) for entry in dict.fromkeys(_surfaces(case)))
     return Problem(case, surface, inputs, held, values, (*notices, *told), changes, rounding)
@@ -217,13 +216,8 @@ def placed_bodies(case: Case, *, known: dict[_Source, list[Body]] | None = None)
                 notices += _placement_notice(part, body, entry)
                 bodies.append(place(body, part))
                 owner.append(index)
-    return PlacedBodies(tuple(bodies), tuple(owner), (*notices, *_unused(files, used)))
-
-
-def mend_of(case: Case) -> Mend:
-    """How far mending may go, as a case states it."""
-    content = case.content
-    return Mend(content.mend, content.mend_within, content.close_holes)
+    notices += [*_told_by_files(case, files), *_unused(files, used)]
+    return PlacedBodies(tuple(bodies), tuple(owner), tuple(notices))
 
 
 def place(body: Body, part: Part) -> Body:
@@ -246,54 +240,11 @@ def place(body: Body, part: Part) -> Body:
     return replace(body, vertices=np.ascontiguousarray(vertices + np.array(part.shift)))
 
 
-def bodies_to_surface(
-    bodies: Sequence[Body],
-    conductor: Sequence[int] | None = None,
-    *,
-    names: Sequence[str] = (),
-    deviation: Sequence[FloatArray] = (),
-) -> Surface:
-    """Join bodies into the surface that the solver takes.
-
-    The bodies are taken as they are; `fit_bodies` mends and orients them, `build_problem` does it by itself.
-
-    Parameters
-    ----------
-    bodies : sequence of Body
-    conductor : sequence of int, optional
-        Conductor of each body; each body is one by default.
-    names : sequence of str, optional
-        Of the conductors; those of the bodies if each is one.
-    deviation : sequence of (nt,) float, m
-        How far the triangles of each body may lie from the drawing, if that is not nothing.
-
-    Returns
-    -------
-    daraf.bem Surface
-
-    Raises
-    ------
-    InputError
-        If the numbers do not fit the bodies.
-    """
-    if not bodies:
-        raise InputError("no conductor; give at least one body")
-    owner = np.arange(len(bodies)) if conductor is None else np.asarray(conductor, dtype=np.int64)
-    starts = np.concatenate([[0], np.cumsum([len(body.vertices) for body in bodies])])
-    triangles = [body.triangles + start for body, start in zip(bodies, starts[:-1], strict=True)]
-    return Surface(
-        vertices=np.concatenate([body.vertices for body in bodies]),
-        triangles=np.concatenate(triangles),
-        triangle_body=np.repeat(np.arange(len(bodies)), [len(body.triangles) for body in bodies]),
-        body_conductor=owner,
-        conductor_names=tuple(names) or (tuple(body.name for body in bodies) if conductor is None else ()),
-        body_names=tuple(body.name for body in bodies),
-        triangle_deviation=np.concatenate(deviation) if len(deviation) else None,
-    )
-
-
 def _source(case: Case, part: Part) -> _Source:
-    return str(case.folder / part.surface), part.unit
+    tolerance = part.facet_tolerance
+    if tolerance is None and may_be_curved(part.surface):
+        tolerance = case.content.facet_tolerance
+    return str(case.folder / part.surface), part.unit, tolerance
 
 
 def _chosen(case: Case, part: Part, where: str, files: dict[_Source, list[Body]]) -> list[Body]:
@@ -301,7 +252,13 @@ def _chosen(case: Case, part: Part, where: str, files: dict[_Source, list[Body]]
     source = _source(case, part)
     try:
         if source not in files:
-            files[source] = read_bodies([source[0]], part.unit or case.content.unit, mend=mend_of(case))
+            files[source] = read_bodies(
+                [source[0]],
+                part.unit,
+                other_unit=case.content.unit,
+                facet_tolerance=source[2],
+                mend=mend_of(case),
+            )
         return pick_bodies(files[source], part.body) if part.body else files[source]
     except InputError as error:
         raise InputError(f"{where}: {error}") from None
@@ -336,6 +293,22 @@ def _placement_notice(part: Part, body: Body, entry: ConductorEntry) -> list[Not
     return [Notice("far-shift", text)]
 
 
+def _told_by_files(case: Case, files: dict[_Source, list[Body]]) -> list[Notice]:
+    """What each file says of itself that a reader of the result should know."""
+    if case.content.facet_tolerance is not None and not any(may_be_curved(surface) for surface in _surfaces(case)):
+        raise InputError(f"{case.label}: facet_tolerance: all surfaces are facets as drawn; take the key out")
+    notices = []
+    for (path, stated, _), bodies in files.items():
+        file, own, general = Path(path).name, bodies[0].unit, case.content.unit
+        if stated is None and None not in (own, general) and own != general:
+            text = f"{file}: is in {own}, as the file says; the case's {general} is for files that carry no unit"
+            notices.append(Notice("own-unit", text))
+        for fault in bodies[0].faults:
+            if fault.code in _TOLD:
+                notices.append(Notice(fault.code, f"{file}: {fault.text}"))
+    return notices
+
+
 def _unused(files: dict[_Source, list[Body]], used: dict[tuple[_Source, int], str]) -> list[Notice]:
     notices = []
     for source, bodies in files.items():
@@ -345,109 +318,6 @@ def _unused(files: dict[_Source, list[Body]], used: dict[tuple[_Source, int], st
             text = f"{Path(source[0]).name}: {len(idle)} of {len(bodies)} bodies belong to no conductor: {shown}"
             notices.append(Notice("unused-body", text + "; left out of the computation"))
     return notices
-
-
-_Changes = tuple[tuple[str, str, Change], ...]
-
-
-def _surface(
-    case: Case, bodies: list[Body], owner: list[int], accuracy: float | None
-) -> tuple[Surface, list[Notice], _Changes, FloatArray]:
-    """Mend the placed bodies, unite those of a conductor, look at each and at every pair, and join them."""
-    rule = mend_of(case)
-    if not rule.changes:
-        _refuse_unfit(case, bodies, owner)
-    united = unite(fit_bodies(bodies, rule), owner, rule)
-    bodies, owner = united.bodies, united.owner
-    told = _meeting(case, bodies, owner)
-    narrowest = narrowest_gaps(bodies, owner)
-    described = [_described(case, body, c) for body, c in zip(bodies, owner, strict=True)]
-    told += narrow_notices(bodies, described, narrowest, case.content.unit or "m")
-    gaps = [one[0] for one in narrowest]
-    bodies, deviation = coarsen_bodies(bodies, gaps, accuracy or case.content.accuracy, case.content.coarsen)
-    conductors = case.content.conductor
-    changes = [
-        (conductors[c].name, body.name, note) for body, c in zip(bodies, owner, strict=True) for note in body.notes
-    ]
-    changes += [(conductors[c].name, "", note) for c, note in united.dropped]
-    unit = case.content.unit or "m"
-    notices = [
-        Notice("inner-surface", f"conductor {conductors[c].name!r}: {note.said(unit)}") for c, note in united.dropped
-    ]
-    for body, conductor in zip(bodies, owner, strict=True):
-        notices += _body_notices(case, body, _described(case, body, conductor))
-    notices += told
-    names = [entry.name for entry in conductors]
-    rounding = np.array([body.spacing for body in bodies])
-    return bodies_to_surface(bodies, owner, names=names, deviation=deviation), notices, tuple(changes), rounding
-
-
-def _refuse_unfit(case: Case, bodies: list[Body], owner: list[int]) -> None:
-    """Refuse a body that a solve would have to mend."""
-    cavities = cavity_walls(shapes_of(bodies))
-    for k, (body, conductor) in enumerate(zip(bodies, owner, strict=True)):
-        wrong = [
-            fault
-            for fault in faults_of(Shape(body))
-            if fault.severity != "note"
-            and fault.code not in ("coarse-coordinates", "self-touching")
-            and not (fault.code == "inside-out" and k in cavities)
-        ]
-        if wrong:
-            place = "" if wrong[0].place is None else f", at {place_text(wrong[0].place, case.content.unit or 'm')}"
-            more = f" (and {len(wrong) - 1} more to mend)" if len(wrong) > 1 else ""
-            raise InputError(
-                f"{case.label}: {_described(case, body, conductor)}: {wrong[0].text}{place}{more}; "
-                "mend = 'list' changes nothing: repair it in CAD, or allow mend = 'safe' or 'bold'"
-            )
-
-
-def _body_notices(case: Case, body: Body, name: str) -> list[Notice]:
-    """What was changed of a body, and what is still wrong with it."""
-    unit = case.content.unit or "m"
-    walls = [note for note in body.notes if note.code == "cavity-wall"]
-    changes = [note for note in body.notes if note not in walls]
-    told = [Notice("cavity-wall", f"{name} {note}") for note in walls]
-    if changes:
-        told.append(Notice("mended", f"{name}: {'; '.join(note.said(unit) for note in changes)}"))
-    for fault in faults_of(Shape(body)):
-        # After mending only the wall of a cavity is wound inwards, as it should be.
-        if fault.severity != "note" and fault.code != "inside-out":
-            place = "" if fault.place is None else f" at {place_text(fault.place, unit)}"
-            told.append(Notice(fault.code, f"{name}: {fault.text}{place}: {fault.remedy}"))
-    return told
-
-
-def _meeting(case: Case, bodies: list[Body], owner: list[int]) -> list[Notice]:
-    """Refuse conductors that meet; tell of bodies of one conductor that do and could not be united."""
-    notices, marks, texts = [], [], []
-    shapes = shapes_of(bodies)
-    unit = case.content.unit or "m"
-    for contact in contacts(bodies, owner, shapes=shapes):
-        a, b = shapes[contact.body_a], shapes[contact.body_b]
-        if not contact.meets:
-            continue
-        one, other = (_described(case, bodies[k], owner[k]) for k in (contact.body_a, contact.body_b))
-        text = f"{one} {_MEETS[contact.kind]} {other} at {place_text(contact.place, unit)}"
-        if not contact.same_conductor:
-            texts.append(text)
-            marks.append(contact_mark(a, b, contact.kind, text))
-        elif a.volume is not None and b.volume is not None:
-            if case.content.mend == "list":
-                raise InputError(
-                    f"{case.label}: {text}; mend = 'list' changes nothing: unite them in CAD, or allow mend = 'safe'"
-                )
-            notices.append(Notice("bodies-meet", f"{text}; better join them in CAD"))
-    if texts:
-        more = f" (and {len(texts) - 1} more such places)" if len(texts) > 1 else ""
-        text = f"{case.label}: {texts[0]}{more}; leave a gap between them, or make them one conductor"
-        raise MeetingError(text, marks, unit)
-    return notices
-
-
-def _described(case: Case, body: Body, conductor: int) -> str:
-    name = case.content.conductor[conductor].name
-    return f"conductor {name!r}" if body.name == name else f"conductor {name!r} (body {body.name!r})"
 
 
 def _stated(case: Case) -> tuple[BoolArray | None, FloatArray | None]:

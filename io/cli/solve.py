@@ -32,7 +32,12 @@ result folder.
 def add_arguments(parser: argparse.ArgumentParser) -> None:
     """Declare the arguments."""
     parser.add_argument("files", nargs="*", metavar="FILE", help="one case file (.toml), or surface files")
-    parser.add_argument("--unit", metavar="UNIT", help="length unit of the surface files, such as mm")
+    parser.add_argument("--unit", metavar="UNIT", help="length unit of the surface files that carry none")
+    parser.add_argument(
+        "--facet-tolerance",
+        metavar="X",
+        help="largest distance of facets from curved shapes (STEP), such as '0.02 mm' or '0.1 %%' of the size",
+    )
     parser.add_argument("--accuracy", metavar="X", help="relative, such as '0.5 %%'; overrides the case (default 1 %%)")
     add_mending(parser)
     parser.add_argument("--coarsen", metavar="X", help="auto, no, or a length within which round parts are coarsened")
@@ -53,7 +58,7 @@ def run(args: argparse.Namespace) -> int:
         return 0
     if not args.files:
         raise UsageError("name a case file or surface files; see `daraf solve --help`")
-    case_file = case_file_among(args.files, args.unit)
+    case_file = case_file_among(args.files, unit=args.unit, facet_tolerance=args.facet_tolerance)
     if args.threads is not None:
         _limit_threads(args.threads)
     from daraf.io.progress import progress_for
@@ -117,7 +122,13 @@ def _read(args: argparse.Namespace, case_file: str | None) -> tuple["Problem", f
     started = time.perf_counter()
     accuracy = None if args.accuracy is None else parse_accuracy(args.accuracy)
     if case_file is None:
-        problem = problem_from_files(args.files, args.unit, accuracy=accuracy, mending=mending_keys(args))
+        problem = problem_from_files(
+            args.files,
+            args.unit,
+            accuracy=accuracy,
+            facet_tolerance=args.facet_tolerance,
+            mending=mending_keys(args),
+        )
     else:
         problem = build_problem(with_mending(load_case(case_file), args), accuracy=accuracy)
     return problem, time.perf_counter() - started, accuracy

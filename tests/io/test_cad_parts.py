@@ -20,8 +20,8 @@ from daraf.bem.surface import Surface
 from daraf.io.bodies import Body, read_bodies
 from daraf.io.changes import Mend
 from daraf.io.gaps import Shape
+from daraf.io.joining import bodies_to_surface
 from daraf.io.mending import fit_bodies
-from daraf.io.problem import bodies_to_surface
 from daraf.io.topology import edges_of
 from daraf.io.uniting import unite
 

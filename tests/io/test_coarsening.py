@@ -12,8 +12,8 @@ from daraf.bem.regions import find_regions
 from daraf.io.bodies import Body
 from daraf.io.coarsening import coarsen, coarsen_bodies, count_faces
 from daraf.io.gaps import Shape
+from daraf.io.joining import bodies_to_surface
 from daraf.io.narrow import narrow_notices, narrowest_gaps
-from daraf.io.problem import bodies_to_surface
 from daraf.io.topology import edges_of
 
 

@@ -10,7 +10,8 @@ from sample_solution import ascii_stl
 from daraf.bem.errors import InputError
 from daraf.io.bodies import read_bodies
 from daraf.io.case import make_case
-from daraf.io.problem import bodies_to_surface, build_problem, problem_from_files
+from daraf.io.joining import bodies_to_surface
+from daraf.io.problem import build_problem, problem_from_files
 
 
 @pytest.fixture
