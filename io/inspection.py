@@ -21,7 +21,6 @@ from .markers import Mark, contact_mark, fault_marks
 from .mending import fit_bodies, make_fit
 from .progress import ProgressCallback, Silence
 from .topology import boundary_loops, edges_of
-from .triangle_distance import sides_and_areas
 
 __all__ = [
     "BodyReport",
@@ -231,7 +230,10 @@ def _contact_mark(contact: Contact, shapes: list[Shape]) -> Mark:
 
 def _as_solved(bodies: Sequence[Body], mend: Mend) -> list[Body]:
     """Bodies as a solve would take them: open or closed, and what encloses what, is asked of these."""
-    fits = [_something_left(body) for body in bodies]
+    try:
+        return fit_bodies(bodies, mend)
+    except InputError:  # some body has nothing left, as its faults say: leave that one as it is
+        fits = [_something_left(body) for body in bodies]
     fitted = iter(fit_bodies([body for body, fit in zip(bodies, fits, strict=True) if fit], mend))
     return [next(fitted) if fit else body for body, fit in zip(bodies, fits, strict=True)]
 
@@ -239,13 +241,13 @@ def _as_solved(bodies: Sequence[Body], mend: Mend) -> list[Body]:
 def _something_left(body: Body) -> bool:
     try:
         make_fit(body)
-    except InputError:  # its faults say so
+    except InputError:
         return False
     return True
 
 
 def _report(k: int, body: Body, shape: Shape, gaps: list[Gap]) -> BodyReport:
-    lengths, doubled = sides_and_areas(shape.corners)
+    lengths, doubled = shape.measures
     longest = lengths.max(axis=1)
     sized = doubled > 1e-12 * longest**2
     solved = shape.body

@@ -15,14 +15,22 @@ from .branching import split_branching
 from .changes import Change, Mend, Place
 from .holes import fill_loop, hole_loops
 from .orientation import consistent, orient
-from .topology import boundary_loops, compacted, connected_pieces, edges_of, proper_rows, signed_volume
+from .topology import (
+    boundary_loops,
+    coincident_groups,
+    compacted,
+    connected_pieces,
+    edges_of,
+    proper_rows,
+    signed_volume,
+)
 from .triangle_distance import sides_and_areas
 
 __all__ = [
     "HOLE_SHARE",
-    "coincident_groups",
     "fit_bodies",
     "flat_height",
+    "flat_rows",
     "flat_triangles",
     "make_fit",
 ]
@@ -30,9 +38,6 @@ __all__ = [
 FloatArray = NDArray[np.float64]
 IntArray = NDArray[np.int64]
 BoolArray = NDArray[np.bool_]
-
-#: An odd number whose bits are spread: products with it hardly ever agree by chance (Knuth, TAOCP 3, 6.4).
-_MIX = np.uint64(0x9E3779B97F4A7C15)
 
 #: Rounds of edge exchanges; each removes at least one triangle of a chain along one edge.
 _ROUNDS = 100
@@ -70,31 +75,13 @@ def flat_triangles(vertices: FloatArray, triangles: IntArray, height: float) -> 
     -------
     (nt,) bool
     """
-    sides, doubled = sides_and_areas(vertices[triangles])
+    return flat_rows(triangles, *sides_and_areas(vertices[triangles]), height)
+
+
+def flat_rows(triangles: IntArray, sides: FloatArray, doubled: FloatArray, height: float) -> BoolArray:
+    """As `flat_triangles`, of triangles whose sides (nt, 3) and doubled areas (nt,) are known."""
     flat: BoolArray = ~proper_rows(triangles) | (doubled <= height * sides.max(axis=1))
     return flat
-
-
-def coincident_groups(triangles: IntArray) -> tuple[IntArray, IntArray]:
-    """Group of each triangle by its set of vertices, and the size of each group.
-
-    Parameters
-    ----------
-    triangles : (nt, 3) int
-
-    Returns
-    -------
-    group : (nt,) int
-    size : (n_groups,) int
-    """
-    ordered = np.sort(triangles, axis=1)
-    n = np.uint64(triangles.max(initial=0) + 1)
-    a, b, c = ordered.astype(np.uint64).T
-    key = np.sort(((a * n + b) * _MIX) ^ c)
-    if (key[1:] != key[:-1]).all():  # the usual mesh: no two keys are equal, so no two triangles
-        return np.arange(len(triangles)), np.ones(len(triangles), dtype=np.int64)
-    _, group, size = np.unique(ordered, axis=0, return_inverse=True, return_counts=True)
-    return group.ravel(), size
 
 
 def fit_bodies(bodies: Sequence[Body], mend: Mend | None = None) -> list[Body]:
@@ -220,8 +207,7 @@ def _checked(before: Body, after: Body) -> Body:
 
 
 def _area(body: Body) -> float:
-    a, b, c = np.moveaxis(body.vertices[body.triangles], 1, 0)
-    return 0.5 * float(np.linalg.norm(np.cross(b - a, c - a), axis=1).sum())
+    return 0.5 * float(sides_and_areas(body.vertices[body.triangles])[1].sum())
 
 
 def _point(point: FloatArray) -> Place:

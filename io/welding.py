@@ -48,7 +48,8 @@ def weld(vertices: FloatArray, triangles: IntArray) -> tuple[FloatArray, IntArra
     tolerance : float
         `RELATIVE_WELD` times the diagonal of the bounding box, in the unit of the vertices.
     """
-    corners = vertices[triangles.ravel()] + 0.0  # + 0.0 makes -0.0 and 0.0 the same bits
+    corners = vertices[triangles.ravel()]
+    corners += 0.0  # makes -0.0 and 0.0 the same bits
     first, inverse = _equal_rows(corners)
     distinct = corners[first]
     tolerance = RELATIVE_WELD * float(np.linalg.norm(np.ptp(distinct, axis=0)))
@@ -92,12 +93,19 @@ def _close_pairs(points: FloatArray, tolerance: float) -> IntArray:
 
 
 def _equal_rows(rows: FloatArray) -> tuple[IntArray, IntArray]:
-    """First occurrence of each distinct row, and the number of the distinct row that each row equals."""
-    bits = np.ascontiguousarray(rows).view(np.uint64)
-    bits = (bits ^ (bits >> np.uint64(29))) * _MIX
-    key = bits[:, 0] ^ (bits[:, 1] >> np.uint64(7)) ^ (bits[:, 2] << np.uint64(13)) ^ (bits[:, 2] >> np.uint64(31))
-    _, first, inverse = np.unique(key, return_index=True, return_inverse=True)
-    if np.array_equal(rows[first[inverse]], rows):
+    """One occurrence of each distinct row, and the number of the distinct row that each row equals."""
+    key = np.zeros(len(rows), dtype=np.uint64)
+    for column, mix in zip(rows.T, _MIX, strict=True):
+        bits = np.ascontiguousarray(column).view(np.uint64)
+        key ^= (bits ^ (bits >> np.uint64(29))) * mix
+        key = (key << np.uint64(13)) | (key >> np.uint64(51))
+    order = np.argsort(key)  # which of equal rows comes first does not matter, and the stable kinds are slower
+    ordered = key[order]
+    fresh = np.concatenate([[True], ordered[1:] != ordered[:-1]])[: len(ordered)]
+    first = order[fresh]
+    inverse = np.empty(len(rows), dtype=np.int64)
+    inverse[order] = np.cumsum(fresh) - 1
+    if all(np.array_equal(column[first][inverse], column) for column in rows.T):
         return first, inverse
     _, first, inverse = np.unique(rows, axis=0, return_index=True, return_inverse=True)  # a key was shared
     return first, inverse.ravel()
