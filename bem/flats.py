@@ -162,7 +162,7 @@ def _add_pairs(store: _Store, surface: Surface, regions: Regions, which: IntArra
     normal = regions.normals[which_fit]
     height = np.einsum("nki,ni->nk", points - regions.origins[which_fit][:, None], normal)
     points = points - height[:, :, None] * normal[:, None, :]
-    into, out = points - np.roll(points, 1, axis=1), np.roll(points, -1, axis=1) - points
+    into, out = points - points[:, [3, 0, 1, 2]], points[:, [1, 2, 3, 0]] - points
     length = np.linalg.norm(into, axis=2) * np.linalg.norm(out, axis=2)
     sine = np.einsum("nki,ni->nk", np.cross(into, out), normal) / np.maximum(length, 1e-300)
     good = sine.min(axis=1) > STRICTLY_CONVEX
@@ -200,7 +200,7 @@ def region_outlines(
     vertices, local = np.unique(surface.triangles[members], return_inverse=True)
     points = surface.vertices[vertices]
     local = local.reshape(-1, 3).astype(np.int64)
-    ahead = np.roll(local, -1, axis=1)
+    ahead = local[:, [1, 2, 0]]
     sides = (points[ahead] - points[local]).reshape(-1, 3)
     longest = sides[np.argmax((sides * sides).sum(axis=1))]
     frame = plane_frame(regions.normals[region], regions.origins[region], longest)

@@ -4,19 +4,24 @@ from daraf.bem.solution import Notice
 
 from .case import Case
 from .inspection import Inspection, inspect_bodies
+from .joining import mend_of, unit_told
 from .problem import placed_bodies
 from .progress import ProgressCallback
 
 __all__ = ["inspect_case"]
 
 
-def inspect_case(case: Case, *, progress: ProgressCallback | None = None) -> tuple[Inspection, tuple[Notice, ...]]:
+def inspect_case(
+    case: Case, *, marked: bool = False, progress: ProgressCallback | None = None
+) -> tuple[Inspection, tuple[Notice, ...]]:
     """Look at every body of a case.
 
     Parameters
     ----------
     case : Case
         From `load_case` or `make_case`.
+    marked : bool
+        Whether to draw marks too.
     progress : callable, optional
 
     Returns
@@ -32,4 +37,6 @@ def inspect_case(case: Case, *, progress: ProgressCallback | None = None) -> tup
         If a file, a body or a placement cannot be used.
     """
     placed = placed_bodies(case)
-    return inspect_bodies(placed.bodies, case.content.unit, progress=progress), placed.notices
+    unit = unit_told(case, placed.bodies)
+    inspection = inspect_bodies(placed.bodies, unit, mend=mend_of(case), marked=marked, progress=progress)
+    return inspection, placed.notices

@@ -11,15 +11,16 @@ from numpy.typing import NDArray
 from daraf.bem.errors import InputError
 
 from .bodies import Body, Fault, read_mesh_set
+from .changes import Change, Mend
 from .contacts import Contact, cavity_walls, contacts, shapes_of
 from .facet_tolerance import parse_facet_tolerance
 from .faults import faults_of
 from .gaps import Approach, Shape, box_gap, closest_approach
 from .inspection_text import inspection_to_text
-from .mending import make_fit, orient
+from .markers import Mark, contact_mark, fault_marks
+from .mending import fit_bodies, make_fit
 from .progress import ProgressCallback, Silence
 from .topology import boundary_loops, edges_of
-from .triangle_distance import sides_and_areas
 
 __all__ = [
     "BodyReport",
@@ -83,8 +84,8 @@ class BodyReport:
     gaps : list of Gap
         Nearest first.
     faults : list of Fault
-    notes : list of str
-        What reading changed.
+    notes : list of Change
+        What reading and mending changed.
     """
 
     name: str
@@ -100,7 +101,7 @@ class BodyReport:
     aspect: Spread
     gaps: list[Gap]
     faults: list[Fault]
-    notes: list[str] = field(default_factory=list)
+    notes: list[Change] = field(default_factory=list)
 
 
 @dataclass(frozen=True, eq=False)
@@ -113,11 +114,14 @@ class Inspection:
     unit : str or None
         Unit of the files; None if none is known, and then every length is in the unit of the files.
     bodies : list of BodyReport
+    marks : list of Mark
+        Places of faults and contacts, to be drawn; not part of the text.
     """
 
     files: list[str]
     unit: str | None
     bodies: list[BodyReport]
+    marks: list[Mark] = field(default_factory=list)
 
     @property
     def box(self) -> FloatArray:
@@ -130,6 +134,8 @@ def inspect_files(
     paths: str | Path | Iterable[str | Path],
     unit: str | None = None,
     *,
+    mend: Mend | None = None,
+    marked: bool = False,
     facet_tolerance: float | str | None = None,
     progress: ProgressCallback | None = None,
 ) -> Inspection:
@@ -140,6 +146,10 @@ def inspect_files(
     paths : str, Path or several
     unit : str, optional
         Unit of the files that carry none. Without one, lengths stay in the unit of the files.
+    mend : Mend, optional
+        What a solve would be allowed to change.
+    marked : bool
+        Whether to draw marks too, which takes as long again where bodies meet.
     facet_tolerance : float or str, optional
         Of curved shapes, such as "0.02 mm" or "0.1 %"; a bare number is metres.
     progress : callable, optional
@@ -156,12 +166,18 @@ def inspect_files(
     tell = progress or Silence()
     tell("reading", 0, 1)
     tolerance = None if facet_tolerance is None else parse_facet_tolerance(facet_tolerance)
-    read = read_mesh_set(paths, unit, unit_needed=False, facet_tolerance=tolerance)
-    return replace(inspect_bodies(read.bodies, progress=tell), files=read.files, unit=read.unit)
+    read = read_mesh_set(paths, unit, unit_needed=False, facet_tolerance=tolerance, mend=mend)
+    seen = inspect_bodies(read.bodies, mend=mend, marked=marked, progress=tell)
+    return replace(seen, files=read.files, unit=read.unit)
 
 
 def inspect_bodies(
-    bodies: Sequence[Body], unit: str | None = None, *, progress: ProgressCallback | None = None
+    bodies: Sequence[Body],
+    unit: str | None = None,
+    *,
+    mend: Mend | None = None,
+    marked: bool = False,
+    progress: ProgressCallback | None = None,
 ) -> Inspection:
     """Look at every body and at every pair of them.
 
@@ -171,6 +187,10 @@ def inspect_bodies(
         As read, neither mended nor oriented.
     unit : str, optional
         Unit to show lengths in.
+    mend : Mend, optional
+        What a solve would be allowed to change.
+    marked : bool
+        Whether to draw marks too, which takes as long again where bodies meet.
     progress : callable, optional
 
     Returns
@@ -180,12 +200,12 @@ def inspect_bodies(
     tell = progress or Silence()
     total = sum(len(body.triangles) for body in bodies)
     tell("mending on trial", 0, 1)
-    shapes = shapes_of(_as_solved(bodies))
+    shapes = shapes_of(_as_solved(bodies, mend or Mend()))
     tell("looking for contacts and gaps", 0, 1)
     found = contacts([shape.body for shape in shapes], shapes=shapes)
     cavities = cavity_walls(shapes)
     gaps = _gaps(shapes, found)
-    reports = []
+    reports, faulty = [], []
     done = 0
     for k, (body, shape) in enumerate(zip(bodies, shapes, strict=True)):
         tell("looking for faults", done, total)
@@ -195,22 +215,39 @@ def inspect_bodies(
             own = [_cavity(bodies[cavities[k]]) if fault.code == "inside-out" else fault for fault in own]
         faults = [*own, *_contact_faults(k, found, bodies)]
         reports.append(_report(k, replace(body, faults=faults), shape, gaps[k]))
-    return Inspection(list(dict.fromkeys(body.file for body in bodies)), unit, reports)
+        faulty.append(replace(body, faults=own))
+    if marked:
+        tell("drawing marks", 0, 1)
+    marks = fault_marks(faulty) if marked else []
+    marks += [_contact_mark(contact, shapes) for contact in found if contact.meets and marked]
+    return Inspection(list(dict.fromkeys(body.file for body in bodies)), unit, reports, marks)
 
 
-def _as_solved(bodies: Sequence[Body]) -> list[Body]:
+def _contact_mark(contact: Contact, shapes: list[Shape]) -> Mark:
+    a, b = shapes[contact.body_a], shapes[contact.body_b]
+    return contact_mark(a, b, contact.kind, f"{a.body.name!r} {contact.kind} {b.body.name!r}")
+
+
+def _as_solved(bodies: Sequence[Body], mend: Mend) -> list[Body]:
     """Bodies as a solve would take them: open or closed, and what encloses what, is asked of these."""
-    fitted = []
-    for body in bodies:
-        try:
-            fitted.append(make_fit(body))
-        except InputError:  # nothing is left of it: its faults say so
-            fitted.append(body)
-    return orient(fitted)
+    try:
+        return fit_bodies(bodies, mend)
+    except InputError:  # some body has nothing left, as its faults say: leave that one as it is
+        fits = [_something_left(body) for body in bodies]
+    fitted = iter(fit_bodies([body for body, fit in zip(bodies, fits, strict=True) if fit], mend))
+    return [next(fitted) if fit else body for body, fit in zip(bodies, fits, strict=True)]
+
+
+def _something_left(body: Body) -> bool:
+    try:
+        make_fit(body)
+    except InputError:
+        return False
+    return True
 
 
 def _report(k: int, body: Body, shape: Shape, gaps: list[Gap]) -> BodyReport:
-    lengths, doubled = sides_and_areas(shape.corners)
+    lengths, doubled = shape.measures
     longest = lengths.max(axis=1)
     sized = doubled > 1e-12 * longest**2
     solved = shape.body
@@ -229,7 +266,7 @@ def _report(k: int, body: Body, shape: Shape, gaps: list[Gap]) -> BodyReport:
         aspect=_spread(longest[sized] ** 2 / doubled[sized]),
         gaps=gaps,
         faults=body.faults,
-        notes=list(body.notes),
+        notes=list(solved.notes),
     )
 
 
@@ -352,7 +389,16 @@ def _body_to_dict(body: BodyReport) -> dict[str, Any]:
             }
             for fault in body.faults
         ],
-        "notes": body.notes,
+        "changes": [
+            {
+                "code": note.code,
+                "count": note.count,
+                "at": None if note.place is None else list(note.place),
+                "moved": note.moved,
+                "text": note.text,
+            }
+            for note in body.notes
+        ],
     }
 
 

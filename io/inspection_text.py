@@ -56,6 +56,7 @@ class _Ruler:
         self.unit = "" if unit is None else f" {unit}"
         self.said = "unit unknown" if unit is None else f"lengths in {unit}"
         self.size = size
+        self.name = unit
 
     def length(self, metres: float) -> str:
         return f"{metres * self.factor:.4g}{self.unit}"
@@ -111,7 +112,7 @@ def _body(body: "BodyReport", ruler: _Ruler) -> list[str]:
     if len(body.gaps) > _GAPS_SHOWN:
         lines += _labelled("", f"and {_many(len(body.gaps) - _GAPS_SHOWN, 'wider one')}")
     for note in body.notes:
-        lines += _labelled("changed", note)
+        lines += _labelled("changed", note.said(ruler.name))
     if not any(fault.severity != "note" for fault in body.faults):
         lines += _labelled("faults", "none")
     for fault in body.faults:
