@@ -26,7 +26,7 @@ from .memory import free_memory, panels_that_fit, peak_memory, refuse_if_too_lar
 from .panels import Panels
 from .refinement import accuracy_targets
 from .regions import find_regions
-from .solution import Notice
+from .solution import Notice, Pass
 from .start import Start, starting_panels
 from .surface import Surface
 
@@ -68,8 +68,8 @@ class MediaSolution:
         Total charge density (free and bound) with conductor i at 1 V: its vacuum field is the field.
     free : (S, n, n_panels) float or complex, C/m2 per V
         Free charge density on conductors; on interfaces 0.
-    passes : list of int
-        Panels of each pass.
+    passes : list of Pass
+        Real parts of the first state, conductors and loads alike.
     method : str
     seconds : dict of str to float
     peak_memory_bytes : int
@@ -89,7 +89,7 @@ class MediaSolution:
     panels: Panels
     state: Array
     free: Array
-    passes: list[int]
+    passes: list[Pass]
     method: str
     seconds: dict[str, float]
     peak_memory_bytes: int
@@ -101,7 +101,7 @@ class MediaSolution:
 class _Run:
     """How the solve went."""
 
-    passes: list[int]
+    passes: list[Pass]
     seconds: dict[str, float]
     notices: list[Notice]
     interrupted: bool
@@ -197,16 +197,17 @@ def solve_media(  # noqa: PLR0913 (all but two are options by name)
     images.place(start.panels, surface.body_names)
     refined = np.zeros(surface.n_bodies, dtype=np.int64)
     plan: MediaPlan | None = MediaPlan(start.panels, start.symmetric, start.sides, refined)
-    passes: list[int] = []
+    passes: list[Pass] = []
     result = judgement = None
     interrupted = False
     try:
         while plan is not None:
             note = f"pass {len(passes) + 1}, {len(plan.panels)} panels"
+            clock = time.perf_counter()
             result = media_pass(plan, media, images, _noted(report, note), loads)
-            passes.append(len(plan.panels))
-            judgement = _judge(result, media, images, round_parts, allowed, len(passes))
-            excess = float((np.abs(judgement.total[:, :, :n]) / judgement.targets).max())
+            judgement = _judge(result, media, images, round_parts, allowed, len(passes) + 1)
+            passes.append(_told(result, judgement, accuracy, time.perf_counter() - clock))
+            excess = passes[-1].uncertainty / accuracy
             report("pass", float(len(passes)), 0.0, f"{note}, uncertainty {excess:.3g} x the one asked")
             for stage, time_spent in result.seconds.items():
                 seconds[stage] = seconds.get(stage, 0.0) + time_spent
@@ -220,6 +221,25 @@ def solve_media(  # noqa: PLR0913 (all but two are options by name)
     assert judgement is not None
     seconds["total"] = time.perf_counter() - begin
     return _solution(surface, media, result, judgement, _Run(passes, seconds, notices, interrupted), accuracy)
+
+
+def _told(result: MediaPass, judgement: _Judgement, accuracy: float, seconds: float) -> Pass:
+    """One pass for the record, F."""
+    n = judgement.targets.shape[1]
+    excess = np.abs(judgement.total[:, :, :n]) / judgement.targets
+    _, i, j = np.unravel_index(np.argmax(excess), excess.shape)
+    cause = max(judgement.lines, key=lambda line: float(np.abs(judgement.lines[line][:, i, j]).max()))
+    raw = FOUR_PI_EPSILON_0 * result.value[0].real
+    return Pass(
+        len(result.panels),
+        raw,
+        FOUR_PI_EPSILON_0 * result.limit[0].real - raw,
+        FOUR_PI_EPSILON_0 * judgement.total[0, :, :n].real,
+        seconds,
+        float(excess.max()) * accuracy,
+        (int(i), int(j)),
+        cause,
+    )
 
 
 def _check_half_space(images: Images, media: Media) -> None:

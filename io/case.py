@@ -12,7 +12,7 @@ from pydantic import ValidationError
 from daraf.bem.errors import InputError
 
 from .names import check_file_name
-from .schema import NOT_YET, CaseContent, ConductorEntry, Medium, Part, Rotation
+from .schema import NOT_YET, CaseContent, ConductorEntry, DielectricEntry, Medium, Part, Rotation
 
 __all__ = ["Case", "load_case", "make_case"]
 
@@ -20,6 +20,7 @@ _TABLES: dict[str, Any] = {
     "": CaseContent,
     "medium": Medium,
     "conductor": ConductorEntry,
+    "dielectric": DielectricEntry,
     "part": Part,
     "rotation": Rotation,
 }
@@ -150,8 +151,8 @@ def _explain(error: ValidationError, stated: Mapping[str, Any]) -> str:
     first = complaints[0]
     where, kind = first["loc"], first["type"]
     table = next((item for item in reversed(where) if isinstance(item, str)), "")
-    if table in ("conductor", "part") and kind in ("tuple_type", "model_type"):
-        heading = {"conductor": "[[conductor]]", "part": "[[conductor.part]]"}[table]
+    if table in ("conductor", "dielectric", "part") and kind in ("tuple_type", "model_type"):
+        heading = "[[conductor.part]]" if table == "part" else f"[[{table}]]"
         text = f"{table}: {_shown(first['input'])} is no list of tables; write {heading} in double brackets"
     elif kind == "extra_forbidden":
         text = _unknown_key(where, stated)

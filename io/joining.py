@@ -6,6 +6,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from daraf.bem.errors import InputError
+from daraf.bem.media import Media
 from daraf.bem.solution import Notice
 from daraf.bem.surface import Surface
 
@@ -14,6 +15,7 @@ from .case import Case
 from .changes import Change, Mend, place_text
 from .coarsening import coarsen_bodies
 from .contacts import cavity_walls, contacts, shapes_of
+from .dielectrics import said, with_dielectrics
 from .faults import faults_of
 from .gaps import Shape
 from .markers import MeetingError, contact_mark
@@ -90,7 +92,7 @@ def bodies_to_surface(
 
 def joined(
     case: Case, bodies: list[Body], owner: list[int], accuracy: float | None
-) -> tuple[Surface, list[Notice], _Changes, FloatArray]:
+) -> tuple[Surface, Media | None, list[Notice], _Changes, FloatArray]:
     """Mend the placed bodies, unite those of a conductor, look at each and at every pair, and join them.
 
     Parameters
@@ -106,6 +108,7 @@ def joined(
     Returns
     -------
     surface : daraf.bem Surface
+    media : daraf.bem Media or None
     notices : list of Notice
     changes : tuple of (conductor, body, Change)
     rounding : (n_bodies,) float, m
@@ -120,27 +123,31 @@ def joined(
         _refuse_unfit(case, bodies, owner)
     united = unite(fit_bodies(bodies, rule), owner, rule)
     bodies, owner = united.bodies, united.owner
-    told = _meeting(case, bodies, owner)
-    narrowest = narrowest_gaps(bodies, owner)
-    described = [_described(case, body, c) for body, c in zip(bodies, owner, strict=True)]
-    told += narrow_notices(bodies, described, narrowest, unit_told(case, bodies))
-    gaps = [one[0] for one in narrowest]
-    bodies, deviation = coarsen_bodies(bodies, gaps, accuracy or case.content.accuracy, case.content.coarsen)
-    conductors = case.content.conductor
-    changes = [
-        (conductors[c].name, body.name, note) for body, c in zip(bodies, owner, strict=True) for note in body.notes
-    ]
-    changes += [(conductors[c].name, "", note) for c, note in united.dropped]
+    metal = [k for k, c in enumerate(owner) if c < len(case.content.conductor)]
+    conductors, of = [bodies[k] for k in metal], [owner[k] for k in metal]
+    told = _meeting(case, conductors, of)
+    narrowest = narrowest_gaps(conductors, of)
+    described = [_described(case, body, c) for body, c in zip(conductors, of, strict=True)]
+    told += narrow_notices(conductors, described, narrowest, unit_told(case, bodies))
+    deviation: Sequence[FloatArray] = ()
+    media = case.content.dielectric or case.content.frequencies
+    if not media:
+        gaps = [one[0] for one in narrowest]
+        bodies, deviation = coarsen_bodies(bodies, gaps, accuracy or case.content.accuracy, case.content.coarsen)
+    entries = (*case.content.conductor, *case.content.dielectric)
+    changes = [(entries[c].name, body.name, note) for body, c in zip(bodies, owner, strict=True) for note in body.notes]
+    changes += [(entries[c].name, "", note) for c, note in united.dropped]
     unit = unit_told(case, bodies)
-    notices = [
-        Notice("inner-surface", f"conductor {conductors[c].name!r}: {note.said(unit)}") for c, note in united.dropped
-    ]
+    notices = [Notice("inner-surface", f"{said(case, c)}: {note.said(unit)}") for c, note in united.dropped]
     for body, conductor in zip(bodies, owner, strict=True):
         notices += _body_notices(case, body, _described(case, body, conductor))
     notices += told
-    names = [entry.name for entry in conductors]
+    if media:
+        surface, filled, more, rounding = with_dielectrics(case, bodies, owner)
+        return surface, filled, notices + more, tuple(changes), rounding
+    names = [entry.name for entry in entries]
     rounding = np.array([body.spacing for body in bodies])
-    return bodies_to_surface(bodies, owner, names=names, deviation=deviation), notices, tuple(changes), rounding
+    return bodies_to_surface(bodies, owner, names=names, deviation=deviation), None, notices, tuple(changes), rounding
 
 
 def _refuse_unfit(case: Case, bodies: list[Body], owner: list[int]) -> None:
@@ -207,5 +214,5 @@ def _meeting(case: Case, bodies: list[Body], owner: list[int]) -> list[Notice]:
 
 
 def _described(case: Case, body: Body, conductor: int) -> str:
-    name = case.content.conductor[conductor].name
-    return f"conductor {name!r}" if body.name == name else f"conductor {name!r} (body {body.name!r})"
+    what = said(case, conductor)
+    return what if what.endswith(f" {body.name!r}") else f"{what} (body {body.name!r})"

@@ -5,6 +5,8 @@ from dataclasses import dataclass, replace
 from pathlib import Path
 from typing import Any
 
+import numpy as np
+
 from daraf.bem.network import Excitation, MutualCapacitance, excite, mutual_capacitance
 from daraf.bem.solution import CapacitanceSolution
 
@@ -12,6 +14,7 @@ from .account_text import account_text, counted
 from .case import Case
 from .document import daraf_version, result_document
 from .loads import loads
+from .media_outcome import solve_with_media
 from .problem import Problem, build_problem
 from .progress import Log, ProgressCallback
 from .result import write_result
@@ -70,12 +73,15 @@ class Outcome:
         return write_result(folder, self.document, surface, log)
 
     def _solved_surface(self) -> SolvedSurface:
-        panels, densities = self.solution.panels, self.solution.densities
+        panels = self.solution.panels
+        # interfaces carry no free charge
+        rows = np.flatnonzero(panels.conductor < len(self.solution.conductor_names))
+        densities = self.solution.densities[:, rows]
         return SolvedSurface(
-            corners=panels.corners,
-            n_corners=panels.n_corners,
-            conductor=panels.conductor,
-            body=panels.body,
+            corners=panels.corners[rows],
+            n_corners=panels.n_corners[rows],
+            conductor=panels.conductor[rows],
+            body=panels.body[rows],
             conductor_names=self.solution.conductor_names,
             body_names=self.problem.surface.body_names,
             densities=densities,
@@ -158,18 +164,25 @@ def solve_problem(
     content = problem.case.content
     surface = problem.surface
     counts = [("triangle", "triangles", len(surface.triangles)), ("body", "bodies", surface.n_bodies)]
-    counts.append(("conductor", "conductors", surface.n_conductors))
+    counts.append(("conductor", "conductors", len(content.conductor)))
     log.add(", ".join(counted(n, one, many) for one, many, n in counts))
-    solution = solve_capacitance(
-        surface,
-        relative_permittivity=content.medium.relative_permittivity,
-        accuracy=content.accuracy if accuracy is None else accuracy,
-        memory_limit=memory_limit,
-        facets=content.facets,
-        want=_wanted(problem),
-        rounding=problem.rounding,
-        progress=log,
-    )
+    asked: dict[str, Any] = {
+        "accuracy": content.accuracy if accuracy is None else accuracy,
+        "memory_limit": memory_limit,
+        "want": _wanted(problem),
+        "progress": log,
+    }
+    extras: dict[str, Any] = {}
+    if problem.media is None:
+        solution = solve_capacitance(
+            surface,
+            relative_permittivity=content.medium.relative_permittivity,
+            facets=content.facets,
+            rounding=problem.rounding,
+            **asked,
+        )
+    else:
+        solution, extras = solve_with_media(problem, **asked)
     for one in solution.bodies:
         log.add(account_text(one))
     log.add("done" if solution.reached else "stopped before the accuracy asked was reached")
@@ -180,9 +193,8 @@ def solve_problem(
         to_infinity_uncertainty=solution.to_infinity_uncertainty,
     )
     state = _state(problem, solution)
-    extras: dict[str, Any] = {}
     further: dict[str, float] = {}
-    if state is not None and not solution.interrupted:
+    if state is not None and not solution.interrupted and problem.media is None:
         try:
             extras, further = loads(problem, solution, state, progress=log)
         except KeyboardInterrupt:
@@ -197,7 +209,7 @@ def solve_problem(
 
 def _wanted(problem: Problem) -> list[tuple[int, int]] | None:
     """Return the couplings that must meet the accuracy, by number; None for all."""
-    place = {name: k for k, name in enumerate(problem.surface.conductor_names)}
+    place = {entry.name: k for k, entry in enumerate(problem.case.content.conductor)}
     return [(place[one], place[two]) for one, two in problem.case.content.want] or None
 
 

@@ -11,6 +11,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from daraf.bem.errors import InputError
+from daraf.bem.media import Media
 from daraf.bem.solution import Notice
 from daraf.bem.surface import Surface
 
@@ -20,7 +21,7 @@ from .changes import Change
 from .facet_tolerance import FacetTolerance, parse_facet_tolerance
 from .joining import bodies_to_surface, joined, mend_of
 from .readers import may_be_curved
-from .schema import ConductorEntry, Part
+from .schema import Part
 
 __all__ = [
     "InputFile",
@@ -72,6 +73,8 @@ class Problem:
         Everything that was changed of the geometry, by name of conductor and body.
     rounding : (n_bodies,) float, m, or None
         How far the coordinates of each body may be off by the rounding of its file; None if not known.
+    media : daraf.bem Media or None
+        What lies on either side of each body; None if all lies in one medium without losses.
     """
 
     case: Case
@@ -82,6 +85,7 @@ class Problem:
     notices: tuple[Notice, ...]
     changes: tuple[tuple[str, str, Change], ...] = ()
     rounding: FloatArray | None = None
+    media: Media | None = None
 
 
 def problem_from_files(
@@ -162,10 +166,10 @@ def build_problem(
     placed = placed_bodies(case, known=known)
     bodies, owner = list(placed.bodies), list(placed.owner)
     notices = placed.notices
-    surface, told, changes, rounding = joined(case, bodies, owner, accuracy)
+    surface, media, told, changes, rounding = joined(case, bodies, owner, accuracy)
     held, values = _stated(case)
     inputs = tuple(_input_file(case, entry) for entry in dict.fromkeys(_surfaces(case)))
-    return Problem(case, surface, inputs, held, values, (*notices, *told), changes, rounding)
+    return Problem(case, surface, inputs, held, values, (*notices, *told), changes, rounding, media)
 
 
 @dataclass(frozen=True, eq=False)
@@ -176,7 +180,7 @@ class PlacedBodies:
     ----------
     bodies : tuple of Body
     owner : tuple of int
-        Conductor of each.
+        Conductor of each, or the number of conductors plus that of the dielectric.
     notices : tuple of Notice
     """
 
@@ -208,12 +212,13 @@ def placed_bodies(case: Case, *, known: dict[_Source, list[Body]] | None = None)
     bodies: list[Body] = []
     owner: list[int] = []
     notices: list[Notice] = []
-    for index, entry in enumerate(case.content.conductor):
+    for index, entry in enumerate((*case.content.conductor, *case.content.dielectric)):
+        what = f"{'conductor' if index < len(case.content.conductor) else 'dielectric'} {entry.name!r}"
         for number, part in enumerate(entry.parts):
-            where = f"{case.label}: conductor {entry.name!r}" + (f", part {number + 1}" if entry.part else "")
+            where = f"{case.label}: {what}" + (f", part {number + 1}" if entry.part else "")
             for body in _chosen(case, part, where, files):
-                _refuse_second_use((_source(case, part), body.index_in_file), part, body, entry.name, used, where)
-                notices += _placement_notice(part, body, entry)
+                _refuse_second_use((_source(case, part), body.index_in_file), part, body, what, used, where)
+                notices += _placement_notice(part, body, what)
                 bodies.append(place(body, part))
                 owner.append(index)
     notices += [*_told_by_files(case, files), *_unused(files, used)]
@@ -276,18 +281,18 @@ def _refuse_second_use(
     unplaced = part.rotation is None and not any(part.shift)
     if unplaced and key in used:
         raise InputError(
-            f"{where}: body {body.name!r} of {part.surface} already belongs to conductor {used[key]!r}; "
+            f"{where}: body {body.name!r} of {part.surface} already belongs to {used[key]}; "
             "choose other bodies, or place it elsewhere with shift or rotation"
         )
     used.setdefault(key, name)
 
 
-def _placement_notice(part: Part, body: Body, entry: ConductorEntry) -> list[Notice]:
+def _placement_notice(part: Part, body: Body, what: str) -> list[Notice]:
     size, distance = body.diagonal, float(np.linalg.norm(part.shift))
     if distance <= _FAR * size:
         return []
     text = (
-        f"conductor {entry.name!r} is shifted by {distance:.4g} m, {distance / size:.0f} times its size; "
+        f"{what} is shifted by {distance:.4g} m, {distance / size:.0f} times its size; "
         "bare numbers are metres, write text such as '2 mm' if that was meant"
     )
     return [Notice("far-shift", text)]
@@ -330,7 +335,7 @@ def _stated(case: Case) -> tuple[BoolArray | None, FloatArray | None]:
 
 
 def _surfaces(case: Case) -> list[str]:
-    return [part.surface for entry in case.content.conductor for part in entry.parts]
+    return [part.surface for entry in (*case.content.conductor, *case.content.dielectric) for part in entry.parts]
 
 
 def _input_file(case: Case, surface: str) -> InputFile:

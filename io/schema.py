@@ -22,6 +22,7 @@ __all__ = [
     "NOT_YET",
     "CaseContent",
     "ConductorEntry",
+    "DielectricEntry",
     "Medium",
     "Part",
     "Rotation",
@@ -32,8 +33,6 @@ __all__ = [
 #: Keys that later versions solve, by table, with the words for the message. Never ignored silently.
 NOT_YET = {
     "": {
-        "dielectric": "dielectric bodies",
-        "dielectrics": "dielectric bodies",
         "mirror": "mirror planes",
         "mirrors": "mirror planes",
         "mirror_plane": "mirror planes",
@@ -48,7 +47,6 @@ NOT_YET = {
         "variation": "variations",
         "variations": "variations",
     },
-    "medium": {"loss_tangent": "losses of the medium", "conductivity": "a conducting medium"},
 }
 
 
@@ -146,6 +144,18 @@ def _facets(value: Any) -> str:
 def _positive(value: float) -> float:
     if value <= 0.0:
         raise InputError(f"{value:g} m is no size; write a length above 0 such as '0.01 mm'")
+    return value
+
+
+def _not_negative(value: float) -> float:
+    if value < 0.0:
+        raise InputError(f"{value:g} is below 0; losses are 0 or more")
+    return value
+
+
+def _above_zero(value: float) -> float:
+    if value <= 0.0:
+        raise InputError(f"{value:g} Hz is no frequency of a loss; write one above 0 such as '50 Hz'")
     return value
 
 
@@ -251,8 +261,8 @@ class Part(_Table):
     shift: Point = (0.0, 0.0, 0.0)
 
 
-class ConductorEntry(_Table):
-    """One conductor: its surface (or its parts), and its potential, its charge or ground."""
+class _Placed(_Table):
+    """Named bodies: one surface file, or several parts."""
 
     name: Name
     surface: str | None = Field(None, min_length=1, description="surface file, relative to the case file")
@@ -261,16 +271,10 @@ class ConductorEntry(_Table):
     body: BodyChoice = ()
     rotation: Rotation | None = None
     shift: Point = (0.0, 0.0, 0.0)
-    part: tuple[Part, ...] = Field((), description="several surfaces that make one conductor")
-    potential: _quantity("voltage") | None = None  # type: ignore[valid-type]
-    charge: _quantity("charge") | None = Field(None, description="floating: the total charge is given")  # type: ignore[valid-type]
-    ground: StrictBool = False
+    part: tuple[Part, ...] = Field((), description="several surfaces that belong together")
 
     @whole(mode="after")
-    def _check(self) -> Self:
-        stated = self.stated
-        if len(stated) > 1:
-            raise InputError(f"{' and '.join(stated)} are both given; keep one of potential, charge, ground")
+    def _check_parts(self) -> Self:
         placed = self.model_fields_set & {"unit", "facet_tolerance", "body", "rotation", "shift"}
         if self.part and (self.surface or placed):
             extra = ", ".join(sorted(placed | ({"surface"} if self.surface else set())))
@@ -280,14 +284,8 @@ class ConductorEntry(_Table):
         return self
 
     @property
-    def stated(self) -> list[str]:
-        """Which of potential, charge and ground are given."""
-        values = {"potential": self.potential, "charge": self.charge, "ground": self.ground or None}
-        return [key for key, value in values.items() if value is not None]
-
-    @property
     def parts(self) -> tuple[Part, ...]:
-        """The parts; a conductor of one surface has one."""
+        """The parts; there is one if there is one surface."""
         if self.part:
             return self.part
         assert self.surface is not None
@@ -303,14 +301,50 @@ class ConductorEntry(_Table):
         )
 
 
+class ConductorEntry(_Placed):
+    """One conductor: its surface (or its parts), and its potential, its charge or ground."""
+
+    potential: _quantity("voltage") | None = None  # type: ignore[valid-type]
+    charge: _quantity("charge") | None = Field(None, description="floating: the total charge is given")  # type: ignore[valid-type]
+    ground: StrictBool = False
+
+    @whole(mode="after")
+    def _check_stated(self) -> Self:
+        if len(self.stated) > 1:
+            raise InputError(f"{' and '.join(self.stated)} are both given; keep one of potential, charge, ground")
+        return self
+
+    @property
+    def stated(self) -> list[str]:
+        """Which of potential, charge and ground are given."""
+        values = {"potential": self.potential, "charge": self.charge, "ground": self.ground or None}
+        return [key for key, value in values.items() if value is not None]
+
+
+Permittivity = Annotated[float, Field(ge=1.0, le=1e5, allow_inf_nan=False)]
+LossTangent = Annotated[_quantity("ratio"), AfterValidator(_not_negative)]  # type: ignore[valid-type]
+Conductivity = Annotated[_quantity("conductivity"), AfterValidator(_not_negative)]  # type: ignore[valid-type]
+Frequency = Annotated[_quantity("frequency"), AfterValidator(_above_zero)]  # type: ignore[valid-type]
+
+
+class DielectricEntry(_Placed):
+    """Closed bodies of a dielectric."""
+
+    relative_permittivity: Permittivity
+    loss_tangent: LossTangent = 0.0  # type: ignore[valid-type]
+    conductivity: Conductivity = 0.0  # type: ignore[valid-type]
+
+
 class Medium(_Table):
     """What fills the space around the conductors."""
 
-    relative_permittivity: float = Field(1.0, ge=1.0, le=1e5, allow_inf_nan=False)
+    relative_permittivity: Permittivity = 1.0
+    loss_tangent: LossTangent = 0.0  # type: ignore[valid-type]
+    conductivity: Conductivity = 0.0  # type: ignore[valid-type]
 
 
 class CaseContent(_Table):
-    """A case: conductors in a medium and the accuracy asked."""
+    """A case: conductors, what is between and around them, and the accuracy asked."""
 
     title: str = Field("", max_length=200)
     unit: Unit | None = Field(None, description="length unit of the surface files that carry none")
@@ -330,6 +364,12 @@ class CaseContent(_Table):
     )
     medium: Medium = Medium(relative_permittivity=1.0)
     conductor: tuple[ConductorEntry, ...] = Field(min_length=1)
+    dielectric: tuple[DielectricEntry, ...] = Field(
+        (), description="in order of precedence: where bodies overlap, conductors come first, then those listed before"
+    )
+    frequencies: tuple[Frequency, ...] = Field(  # type: ignore[valid-type]
+        (), description="at which losses are asked: loss tangents and conductivities of the media"
+    )
 
     @whole(mode="after")
     def _check(self) -> Self:
@@ -338,6 +378,7 @@ class CaseContent(_Table):
             if entry.name in seen:
                 raise InputError(f"two conductors are named {entry.name!r}; give each its own name")
             seen.add(entry.name)
+        self._check_media(set(seen))
         for name in (name for pair in self.want for name in pair):
             if name not in seen:
                 known = ", ".join(repr(entry.name) for entry in self.conductor)
@@ -349,6 +390,18 @@ class CaseContent(_Table):
                 "add one (charge = 0 for a floating one), or take all of them out for capacitances only"
             )
         return self
+
+    def _check_media(self, taken: set[str]) -> None:
+        for entry in self.dielectric:
+            if entry.name in taken:
+                raise InputError(f"two bodies are named {entry.name!r}; give each dielectric its own name")
+            taken.add(entry.name)
+        media = [("medium", self.medium), *((f"dielectric {one.name!r}", one) for one in self.dielectric)]
+        lossy = [where for where, one in media if one.loss_tangent or one.conductivity]
+        if lossy and not self.frequencies:
+            raise InputError(f"{lossy[0]} has losses: add frequencies, such as frequencies = ['50 Hz', '1 kHz']")
+        if self.frequencies and not lossy:
+            raise InputError("frequencies: no medium has losses, so nothing depends on them; leave the key out")
 
     @property
     def excited(self) -> bool:

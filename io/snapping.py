@@ -23,7 +23,7 @@ _PARALLEL = 1e-7
 _SHARED = 1e-6
 
 
-def snap(body: Body, fixed: Sequence[Shape], reach: float, overlap: float) -> tuple[Body, float]:
+def snap(body: Body, fixed: Sequence[Shape], reach: float, overlap: float, *, sunk: float = 0.0) -> tuple[Body, float]:
     """Move flat faces of a body onto parallel faces of other bodies that are no farther than a reach.
 
     A face that looks at the other one is put the overlap below its surface, so that a union joins both; a face
@@ -36,6 +36,8 @@ def snap(body: Body, fixed: Sequence[Shape], reach: float, overlap: float) -> tu
     fixed : sequence of Shape
         Not moved.
     reach, overlap : float, m
+    sunk : float, m
+        How far below a face that looks the same way it is put.
 
     Returns
     -------
@@ -47,7 +49,9 @@ def snap(body: Body, fixed: Sequence[Shape], reach: float, overlap: float) -> tu
     regions = flat_faces(body)
     wishes: dict[int, list[tuple[FloatArray, float]]] = {}
     for other in fixed:
-        for region, normal, origin, depth in _meeting_faces(shape, other, regions.triangle_region, reach, overlap):
+        for region, normal, origin, depth in _meeting_faces(
+            shape, other, regions.triangle_region, reach, (overlap, sunk)
+        ):
             corners = np.unique(body.triangles[regions.triangles_of(region)])
             height = (body.vertices[corners] - origin) @ normal
             if np.abs(height).max() > reach:
@@ -69,7 +73,7 @@ def snap(body: Body, fixed: Sequence[Shape], reach: float, overlap: float) -> tu
 
 
 def _meeting_faces(
-    shape: Shape, other: Shape, region: IntArray, reach: float, overlap: float
+    shape: Shape, other: Shape, region: IntArray, reach: float, depths: tuple[float, float]
 ) -> list[tuple[int, FloatArray, FloatArray, float]]:
     """Regions of a body, the plane of the face of the other body that each meets, and the depth below it."""
     found: dict[tuple[int, int], tuple[int, FloatArray, FloatArray, float]] = {}
@@ -83,7 +87,7 @@ def _meeting_faces(
         facing = _overlapping(shape.corners[i], other.corners[j], other.normals[j], reach) | (cosine > 0.0)
         for a, b, c in zip(i[facing].tolist(), j[facing].tolist(), cosine[facing].tolist(), strict=True):
             key = (int(region[a]), b)
-            found.setdefault(key, (key[0], other.normals[b], other.corners[b, 0], overlap if c < 0.0 else 0.0))
+            found.setdefault(key, (key[0], other.normals[b], other.corners[b, 0], depths[0] if c < 0.0 else depths[1]))
     return _one_per_plane(list(found.values()))
 
 

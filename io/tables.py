@@ -30,7 +30,7 @@ LARGEST_MATRIX = 12
 MOST_COUPLINGS = 40
 _NAME_WIDTH = 18
 #: Notices that ask for a look and are no reason for doubt.
-NOTES = ("cavity-wall", "facets-taken-as-drawn", "facets-taken-round", "mended", "unused-body")
+NOTES = ("cavity-wall", "dielectric-yields", "facets-taken-as-drawn", "facets-taken-round", "mended", "unused-body")
 #: Causes below this share of the largest are not printed.
 _PRINTED = 1e-3
 
@@ -51,6 +51,7 @@ def result_text(document: dict[str, Any]) -> str:
     blocks = [
         _heading(document),
         *_capacitances(document),
+        *_conductances(document),
         _state(document),
         force_table(document),
         peak_table(document),
@@ -70,7 +71,9 @@ def _heading(document: dict[str, Any]) -> list[str]:
     names, medium = document["conductors"], document["solution"]["relative_permittivity"]
     title = document["title"] or "capacitance"
     count = counted(len(names), "conductor")
-    lines = [*_wrapped(title), f"{count}, relative permittivity {medium:g}"]
+    filled = [one for one in document.get("media", []) if one["name"] != "surrounding medium"]
+    said = "".join(f", {one['name']} {one['relative_permittivity']:g}" for one in filled)
+    lines = [*_wrapped(title), *_wrapped(f"{count}, relative permittivity {medium:g}{said}")]
     return [*lines, "± is the expanded uncertainty, k = 2, for the geometry as modelled"]
 
 
@@ -91,6 +94,18 @@ def _capacitances(document: dict[str, Any]) -> Iterator[list[str]]:
         return
     yield _self_list(names, maxwell, spread, content)
     yield couplings(names, mutual, mutual_spread)
+
+
+def _conductances(document: dict[str, Any]) -> Iterator[list[str]]:
+    """Losses at each frequency: the conductance matrix, as the Maxwell matrix has its signs."""
+    names = document["conductors"]
+    for at in document.get("admittance", {"at": []})["at"]:
+        title = f"at {engineering(at['frequency'], 'Hz')}: "
+        real, spread = np.array(at["conductance"]), np.array(at["conductance_uncertainty"])
+        if len(names) == 1:
+            yield [f"{title}conductance to infinity  {with_uncertainty(real[0, 0], spread[0, 0], 'S')}"]
+        elif len(names) <= LARGEST_MATRIX and real.any():
+            yield matrix_table(f"{title}conductance matrix", names, names, real, spread, "S")
 
 
 def matrix_table(

@@ -29,6 +29,8 @@ KINDS = {
     "charge": ("C", "3 nC"),
     "angle": ("rad", "30 deg"),
     "ratio": ("", "0.5 %"),
+    "frequency": ("Hz", "50 Hz"),
+    "conductivity": ("S/m", "0.5 mS/m"),
 }
 
 _DEFINITIONS = """\
@@ -49,6 +51,8 @@ ampere = [current] = A
 radian = [] = rad
 coulomb = ampere * second = C
 volt = [voltage] = V
+hertz = 1 / second = Hz
+siemens = ampere / volt = S
 inch = 0.0254 * meter = in
 mil = 0.001 * inch = thou
 foot = 12 * inch = ft = feet
