@@ -101,13 +101,13 @@ BAD = [
     ('"0.5 %"', '"0 %"', "is outside"),
     ("= 2.2", "= 0.5", "greater than or equal to 1"),
     ("= 2.2", '= "high"', "does not fit"),
-    ("[medium]", "[dielectric]", "does not solve dielectric bodies"),
+    ("[medium]", "[dielectric]", "write [[dielectric]] in double brackets"),
     ("[medium]", "[[mirror]]", "does not solve mirror planes"),
     ("[medium]", "[[given_charge]]", "does not solve given charges"),
     ("[medium]", "[external_field]", "does not solve an external field"),
     ("[medium]", "[[probe]]", "does not solve probes"),
     ("[medium]", "[[variation]]", "does not solve variations"),
-    ("relative_permittivity", "loss_tangent", "does not solve losses"),
+    ("relative_permittivity", "loss_tangent", "medium has losses: add frequencies"),
     ('unit = "mm"', 'unit = "mmm"', "did you mean 'mm'"),
     ('unit = "mm"', 'facets = "no"', "does not say what facets are"),
     ('unit = "mm"', "unit = 3", "is no unit"),
@@ -166,7 +166,18 @@ def test_json_schema_names_every_key():
     assert schema["$schema"].endswith("2020-12/schema")
     assert schema["additionalProperties"] is False
     mending = {"mend", "mend_within", "close_holes", "coarsen"}
-    known = {"title", "unit", "facet_tolerance", "accuracy", "facets", "want", "medium", "conductor"}
+    known = {
+        "title",
+        "unit",
+        "facet_tolerance",
+        "accuracy",
+        "facets",
+        "want",
+        "medium",
+        "conductor",
+        "dielectric",
+        "frequencies",
+    }
     assert set(schema["properties"]) == known | mending
     for key in ("potential", "charge", "ground", "rotation", "shift", "about", "relative_permittivity"):
         assert f'"{key}"' in text
