@@ -12,7 +12,17 @@ from pydantic import ValidationError
 from daraf.bem.errors import InputError
 
 from .names import check_file_name
-from .schema import NOT_YET, CaseContent, ConductorEntry, DielectricEntry, Medium, Part, Rotation
+from .schema import (
+    NOT_YET,
+    CaseContent,
+    ConductorEntry,
+    DielectricEntry,
+    HalfSpaceEntry,
+    Medium,
+    Part,
+    PlaneEntry,
+    Rotation,
+)
 
 __all__ = ["Case", "load_case", "make_case"]
 
@@ -21,6 +31,8 @@ _TABLES: dict[str, Any] = {
     "medium": Medium,
     "conductor": ConductorEntry,
     "dielectric": DielectricEntry,
+    "plane": PlaneEntry,
+    "half_space": HalfSpaceEntry,
     "part": Part,
     "rotation": Rotation,
 }
@@ -151,7 +163,7 @@ def _explain(error: ValidationError, stated: Mapping[str, Any]) -> str:
     first = complaints[0]
     where, kind = first["loc"], first["type"]
     table = next((item for item in reversed(where) if isinstance(item, str)), "")
-    if table in ("conductor", "dielectric", "part") and kind in ("tuple_type", "model_type"):
+    if table in ("conductor", "dielectric", "plane", "part") and kind in ("tuple_type", "model_type"):
         heading = "[[conductor.part]]" if table == "part" else f"[[{table}]]"
         text = f"{table}: {_shown(first['input'])} is no list of tables; write {heading} in double brackets"
     elif kind == "extra_forbidden":

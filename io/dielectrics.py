@@ -15,6 +15,7 @@ from .case import Case
 from .contacts import cavity_walls, shapes_of
 from .gaps import encloses
 from .media_pieces import Drawn, Piece, cut_where_media_meet
+from .mirror_planes import cut_at_plane, plane_notices, without_mirror_faces
 from .topology import boundary_loops, edges_of
 
 __all__ = ["permittivities", "said", "with_dielectrics"]
@@ -32,6 +33,12 @@ def permittivities(case: Case) -> NDArray[np.complex128]:
 
     content = case.content
     media = [content.medium, *content.dielectric]
+    if content.conduction:
+        # duality: current for charge, conductivity for permittivity, relative to the smallest
+        conductivity = np.array([one.conductivity for one in media])
+        return np.asarray(conductivity / conductivity.min(), dtype=np.complex128)[:, None]
+    if content.half_space:
+        return np.ones((1, 1), dtype=np.complex128)
     relative = [one.relative_permittivity for one in media]
     if not content.frequencies:
         return np.array(relative, dtype=np.complex128)[:, None]
@@ -68,6 +75,11 @@ def with_dielectrics(
     drawn, of = _drawn(case, bodies, owner)
     n = len(case.content.conductor)
     pieces, yielded = cut_where_media_meet(drawn)
+    for plane in case.content.plane:
+        pieces = without_mirror_faces(pieces, drawn, np.array(plane.point), np.array(plane.normal))
+    if case.content.half_space:
+        plane = case.content.half_space
+        pieces = cut_at_plane(pieces, np.array(plane.point), np.array(plane.normal))
     pieces.sort(key=lambda piece: of[piece.drawn])
     owners = [of[piece.drawn] for piece in pieces]
     group = np.unique(owners, return_inverse=True)[1].reshape(-1)
@@ -93,7 +105,7 @@ def with_dielectrics(
         n,
         np.array([piece.drawn for piece in pieces]),
     )
-    notices = [_yield_notice(drawn[k], lost) for k, lost in yielded]
+    notices = [*(_yield_notice(drawn[k], lost) for k, lost in yielded), *plane_notices(case)]
     rounding = np.array([drawn[piece.drawn].body.spacing for piece in pieces])
     return surface, media, notices, rounding
 
@@ -150,7 +162,7 @@ def said(case: Case, owner: int) -> str:
 
 def _piece_name(drawn: list[Drawn], piece: Piece, pieces: list[Piece], labels: list[str]) -> str:
     name = drawn[piece.drawn].body.name
-    alone = sum(other.drawn == piece.drawn for other in pieces) == 1
+    alone = len({(other.front, other.back) for other in pieces if other.drawn == piece.drawn}) == 1
     return name if alone else f"{name} | {labels[piece.front]}"
 
 

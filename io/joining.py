@@ -130,8 +130,7 @@ def joined(
     described = [_described(case, body, c) for body, c in zip(conductors, of, strict=True)]
     told += narrow_notices(conductors, described, narrowest, unit_told(case, bodies))
     deviation: Sequence[FloatArray] = ()
-    media = case.content.dielectric or case.content.frequencies
-    if not media:
+    if case.content.in_one_medium:
         gaps = [one[0] for one in narrowest]
         bodies, deviation = coarsen_bodies(bodies, gaps, accuracy or case.content.accuracy, case.content.coarsen)
     entries = (*case.content.conductor, *case.content.dielectric)
@@ -142,7 +141,7 @@ def joined(
     for body, conductor in zip(bodies, owner, strict=True):
         notices += _body_notices(case, body, _described(case, body, conductor))
     notices += told
-    if media:
+    if not case.content.in_one_medium:
         surface, filled, more, rounding = with_dielectrics(case, bodies, owner)
         return surface, filled, notices + more, tuple(changes), rounding
     names = [entry.name for entry in entries]

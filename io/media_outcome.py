@@ -9,10 +9,17 @@ from daraf.bem.facets import facet_meaning
 from daraf.bem.solution import CapacitanceSolution
 
 from .case import Case
+from .mirror_planes import images_of
 from .problem import Problem
 from .progress import ProgressCallback
 
 __all__ = ["media_document", "solve_with_media"]
+
+_CAUTION = (
+    "resistances hold for the conductivity stated, the same everywhere and all year: soil is layered, and its "
+    "conductivity changes with season and moisture several times over. Touch and step voltages are a matter for the "
+    "applicable earthing standard and licensed practice"
+)
 
 
 def solve_with_media(
@@ -49,6 +56,7 @@ def solve_with_media(
     solved = solve_media(
         problem.surface,
         problem.media,
+        images=images_of(problem.case),
         accuracy=accuracy,
         memory_limit=memory_limit,
         facets=content.facets,
@@ -90,8 +98,31 @@ def solve_with_media(
             }
         )
     units = {"frequency": "Hz", "capacitance": "F", "conductance": "S"}
-    more = {"admittance": {"unit": units, "at": rows}} if rows else {}
+    more: dict[str, Any] = {"admittance": {"unit": units, "at": rows}} if rows else {}
+    if content.conduction:
+        more |= _conduction(problem.case, solution)
     return solution, {"media": media_document(problem.case), **more}
+
+
+def _conduction(case: Case, solution: CapacitanceSolution) -> dict[str, Any]:
+    """Conductances and resistances by duality, with what to be careful of."""
+    from daraf.bem import conductance_by_duality
+
+    smallest = min(one.conductivity for one in (case.content.medium, *case.content.dielectric))
+    conductance, spread = conductance_by_duality(solution.maxwell, solution.maxwell_uncertainty, smallest)
+    resistance = np.linalg.inv(conductance)
+    return {
+        "conduction": {
+            "conductance": {"unit": "S", "value": conductance.tolist(), "uncertainty": spread.tolist()},
+            "resistance": {
+                "unit": "ohm",
+                "value": resistance.tolist(),
+                # to first order, without regard to sign
+                "uncertainty": (np.abs(resistance) @ spread @ np.abs(resistance)).tolist(),
+            },
+        },
+        "warnings": [{"code": "conduction", "text": _CAUTION}],
+    }
 
 
 def media_document(case: Case) -> list[dict[str, Any]]:

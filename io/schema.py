@@ -23,8 +23,10 @@ __all__ = [
     "CaseContent",
     "ConductorEntry",
     "DielectricEntry",
+    "HalfSpaceEntry",
     "Medium",
     "Part",
+    "PlaneEntry",
     "Rotation",
     "json_schema",
     "parse_accuracy",
@@ -33,11 +35,6 @@ __all__ = [
 #: Keys that later versions solve, by table, with the words for the message. Never ignored silently.
 NOT_YET = {
     "": {
-        "mirror": "mirror planes",
-        "mirrors": "mirror planes",
-        "mirror_plane": "mirror planes",
-        "half_space": "a dielectric or earth half-space",
-        "earth": "a dielectric or earth half-space",
         "given_charge": "given charges",
         "given_charges": "given charges",
         "external_field": "an external field",
@@ -343,6 +340,24 @@ class Medium(_Table):
     conductivity: Conductivity = 0.0  # type: ignore[valid-type]
 
 
+class PlaneEntry(_Table):
+    """A mirror plane through a point: the model is what lies on one side."""
+
+    kind: Literal["electric", "magnetic"] = Field(
+        description="electric: an earthed plane; magnetic: symmetry, or a surface that no field passes"
+    )
+    normal: Axis
+    point: Point = (0.0, 0.0, 0.0)
+
+
+class HalfSpaceEntry(_Table):
+    """Another medium beyond a plane, to infinity."""
+
+    relative_permittivity: Permittivity
+    normal: Axis = Field((0.0, 0.0, 1.0), description="points out of the half-space")
+    point: Point = (0.0, 0.0, 0.0)
+
+
 class CaseContent(_Table):
     """A case: conductors, what is between and around them, and the accuracy asked."""
 
@@ -366,6 +381,11 @@ class CaseContent(_Table):
     conductor: tuple[ConductorEntry, ...] = Field(min_length=1)
     dielectric: tuple[DielectricEntry, ...] = Field(
         (), description="in order of precedence: where bodies overlap, conductors come first, then those listed before"
+    )
+    plane: tuple[PlaneEntry, ...] = Field((), description="mirror planes, orthogonal to each other")
+    half_space: HalfSpaceEntry | None = None
+    conduction: StrictBool = Field(
+        False, description="steady currents in media of the stated conductivities: conductances and resistances"
     )
     frequencies: tuple[Frequency, ...] = Field(  # type: ignore[valid-type]
         (), description="at which losses are asked: loss tangents and conductivities of the media"
@@ -397,11 +417,35 @@ class CaseContent(_Table):
                 raise InputError(f"two bodies are named {entry.name!r}; give each dielectric its own name")
             taken.add(entry.name)
         media = [("medium", self.medium), *((f"dielectric {one.name!r}", one) for one in self.dielectric)]
+        if self.conduction:
+            self._check_conduction()
+            return
         lossy = [where for where, one in media if one.loss_tangent or one.conductivity]
+        if self.half_space and (self.dielectric or lossy):
+            raise InputError(
+                "half_space: images hold for conductors in media without losses only; leave the dielectrics and losses "
+                "out, or model the half-space as a large dielectric body"
+            )
         if lossy and not self.frequencies:
             raise InputError(f"{lossy[0]} has losses: add frequencies, such as frequencies = ['50 Hz', '1 kHz']")
         if self.frequencies and not lossy:
             raise InputError("frequencies: no medium has losses, so nothing depends on them; leave the key out")
+
+    def _check_conduction(self) -> None:
+        media = [("medium", self.medium), *((f"dielectric {one.name!r}", one) for one in self.dielectric)]
+        silent = [where for where, one in media if not one.conductivity]
+        if silent:
+            raise InputError(
+                f"conduction: {silent[0]} has no conductivity; write one such as '0.01 S/m' "
+                "(a surface that no current passes is a magnetic plane)"
+            )
+        if self.frequencies or self.half_space or any(entry.stated for entry in self.conductor):
+            raise InputError("conduction: takes no frequencies, half-space, potentials or charges; leave them out")
+
+    @property
+    def in_one_medium(self) -> bool:
+        """Whether one medium without losses fills all space."""
+        return not (self.dielectric or self.frequencies or self.plane or self.half_space or self.conduction)
 
     @property
     def excited(self) -> bool:

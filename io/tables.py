@@ -30,7 +30,15 @@ LARGEST_MATRIX = 12
 MOST_COUPLINGS = 40
 _NAME_WIDTH = 18
 #: Notices that ask for a look and are no reason for doubt.
-NOTES = ("cavity-wall", "dielectric-yields", "facets-taken-as-drawn", "facets-taken-round", "mended", "unused-body")
+NOTES = (
+    "cavity-wall",
+    "dielectric-yields",
+    "facets-taken-as-drawn",
+    "facets-taken-round",
+    "mended",
+    "modelled-part",
+    "unused-body",
+)
 #: Causes below this share of the largest are not printed.
 _PRINTED = 1e-3
 
@@ -50,7 +58,7 @@ def result_text(document: dict[str, Any]) -> str:
     """
     blocks = [
         _heading(document),
-        *_capacitances(document),
+        *(_conduction(document) if "conduction" in document else _capacitances(document)),
         *_conductances(document),
         _state(document),
         force_table(document),
@@ -94,6 +102,18 @@ def _capacitances(document: dict[str, Any]) -> Iterator[list[str]]:
         return
     yield _self_list(names, maxwell, spread, content)
     yield couplings(names, mutual, mutual_spread)
+
+
+def _conduction(document: dict[str, Any]) -> Iterator[list[str]]:
+    """Steady currents: conductances, signed as the Maxwell matrix, and resistances."""
+    names = document["conductors"]
+    for key in ("conductance", "resistance"):
+        one = document["conduction"][key]
+        value, spread = np.array(one["value"]), np.array(one["uncertainty"])
+        if len(names) == 1:
+            yield [f"{key} to infinity  {with_uncertainty(value[0, 0], spread[0, 0], one['unit'])}"]
+        elif len(names) <= LARGEST_MATRIX:
+            yield matrix_table(f"{key.capitalize()} matrix", names, names, value, spread, one["unit"])
 
 
 def _conductances(document: dict[str, Any]) -> Iterator[list[str]]:

@@ -102,7 +102,8 @@ BAD = [
     ("= 2.2", "= 0.5", "greater than or equal to 1"),
     ("= 2.2", '= "high"', "does not fit"),
     ("[medium]", "[dielectric]", "write [[dielectric]] in double brackets"),
-    ("[medium]", "[[mirror]]", "does not solve mirror planes"),
+    ("[medium]", "[[mirror]]", "unknown key 'mirror'"),
+    ("[medium]", "[plane]", "write [[plane]] in double brackets"),
     ("[medium]", "[[given_charge]]", "does not solve given charges"),
     ("[medium]", "[external_field]", "does not solve an external field"),
     ("[medium]", "[[probe]]", "does not solve probes"),
@@ -166,19 +167,9 @@ def test_json_schema_names_every_key():
     assert schema["$schema"].endswith("2020-12/schema")
     assert schema["additionalProperties"] is False
     mending = {"mend", "mend_within", "close_holes", "coarsen"}
-    known = {
-        "title",
-        "unit",
-        "facet_tolerance",
-        "accuracy",
-        "facets",
-        "want",
-        "medium",
-        "conductor",
-        "dielectric",
-        "frequencies",
-    }
-    assert set(schema["properties"]) == known | mending
+    known = {"title", "unit", "facet_tolerance", "accuracy", "facets", "want", "medium", "conductor"}
+    around = {"dielectric", "frequencies", "plane", "half_space", "conduction"}
+    assert set(schema["properties"]) == known | mending | around
     for key in ("potential", "charge", "ground", "rotation", "shift", "about", "relative_permittivity"):
         assert f'"{key}"' in text
 
