@@ -183,7 +183,10 @@ def solve_capacitance(
         reached=judgement.reached,
         panels=result.panels,
         densities=np.ascontiguousarray(farads * result.density.T),
-        passes=[replace(p, maxwell=farads * p.maxwell, estimate=farads * p.estimate) for p in passes],
+        passes=[
+            replace(p, maxwell=farads * p.maxwell, estimate=farads * p.estimate, spread=farads * p.spread)
+            for p in passes
+        ],
         method="dense Cholesky",
         iterations=0,
         seconds=seconds,
@@ -241,10 +244,11 @@ def _pass(
     note = f"pass {len(passes) + 1}, {len(plan.panels)} panels"
     result = run_pass(plan, lambda stage, done, total: report(stage, done, total, note))
     judgement = _judge(result, doubts, accuracies, len(passes) + 1)
-    flat = result.gains.reshape(-1, result.gains.shape[2])
+    estimate, n = result.limit - result.value, len(result.value)
     excess, entry, cause = judgement.worst
-    spent = time.perf_counter() - start
-    passes.append(Pass(len(result.panels), result.value, flat.T @ flat, spent, excess * goal.accuracy, entry, cause))
+    spent, largest = time.perf_counter() - start, excess * goal.accuracy
+    spread = judgement.total[:, :n]
+    passes.append(Pass(len(result.panels), result.value, estimate, spread, spent, largest, entry, cause))
     report("pass", float(len(passes)), 0.0, f"{note}: {goal.standing(passes)}")
     return result, judgement
 
@@ -257,14 +261,14 @@ def _judge(result: PassResult, doubts: ShapeDoubts, accuracy: FloatArray, n_pass
     scale = np.sqrt(np.outer(np.diag(result.limit), np.diag(result.limit)))
     lines = {
         "discretisation": extrapolation_uncertainty(
-            result.feared,
-            result.feared_decay,
-            result.realised,
-            result.drift,
+            result.first,
+            result.second,
+            result.unseen,
             result.panels.body,
             result.change,
             sums,
             result.refined,
+            result.realised,
         ),
         "integration": INTEGRATION * np.hstack([scale, scale.max(axis=1, keepdims=True)]),
         **doubts.lines(result.panels, result.density, sums),

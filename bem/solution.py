@@ -81,7 +81,9 @@ class Pass:
     maxwell : (n, n) float, F
         Raw Galerkin value; its diagonal converges from below.
     estimate : (n, n) float, F
-        Two-level estimate of exact minus raw, signed.
+        Estimate of exact minus raw, signed: the mean of two opinions on what the panels are off.
+    spread : (n, n) float, F
+        Expanded uncertainty (k = 2) of raw plus estimate.
     seconds : float
     uncertainty : float
         Largest relative expanded uncertainty of the entries asked, on the scale on which the accuracy is asked.
@@ -94,6 +96,7 @@ class Pass:
     panels: int
     maxwell: FloatArray
     estimate: FloatArray
+    spread: FloatArray
     seconds: float
     uncertainty: float = float("nan")
     entry: tuple[int, int] = (0, 0)
