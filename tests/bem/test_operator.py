@@ -183,8 +183,8 @@ def test_parts_agree_with_direct_sums(name):
     result = operator.at_parts(parts[chosen], operator.expand(density), chosen)
     filled = parts[chosen, :, AREA] > 0
     area = parts[chosen, :, AREA][filled]
-    # the twin sums the far sources by one point each, and its own error is 1e-4 of the potential
-    assert relative_error(result[filled], exact[chosen][filled], area).max() < 2e-4
+    # the twin takes sources beyond six radii in one point, which leaves (1/12)^2 / 6 of each and less of their sum
+    assert relative_error(result[filled], exact[chosen][filled], area).max() < 5e-4
     assert not result[~filled].any()
 
 
