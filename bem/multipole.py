@@ -332,8 +332,8 @@ class FarField:
         pairs, kind, tile = pairs[order], kind[order], tile[order]
         new = np.nonzero(np.diff(kind, prepend=-1) | np.diff(tile, prepend=-1))[0]
         table = self.translations[1]
-        groups = np.column_stack([new, np.append(new[1:], len(kind)), table[kind[new], 0], table[kind[new], 1]])
-        groups = groups[: len(new)].astype(np.int64)
+        end = np.append(new[1:], len(kind))[: len(new)]
+        groups = np.column_stack([new, end, table[kind[new], 0], table[kind[new], 1]]).astype(np.int64)
         of_tile = np.searchsorted(tile[new], np.arange(n_tiles + 1))
         factor = (2.0 ** level[pairs].max(axis=1)).astype(self.real)
         return [groups[of_tile[t] : of_tile[t + 1]] for t in range(n_tiles)], pairs.astype(np.int32), factor

@@ -97,6 +97,21 @@ def test_diagonal_and_leaf_blocks_are_those_of_the_matrix(name):
         np.testing.assert_allclose(operator.leaf_block(leaf), A[np.ix_(leaves[leaf], leaves[leaf])], rtol=3e-4)
 
 
+@pytest.mark.parametrize("n", [1, 3])
+def test_few_panels_are_all_near(n):
+    corners = squares(n)
+    operator = FastOperator(corners)
+    matrix = galerkin_matrix(corners)
+    density = np.arange(1.0, 2 * n * n + 1).reshape(-1, 2)
+    exact = (matrix + np.tril(matrix, -1).T) @ density
+    # single precision
+    np.testing.assert_allclose(operator.apply(density), exact, rtol=1e-6)
+    assert operator.check(density) < 1e-6
+    potential, gradient = operator.at_points(np.array([[0.3, 0.4, 2.0]]), density)
+    assert np.isfinite(potential).all()
+    assert (gradient[:, :, 2] < 0.0).all()
+
+
 def test_one_column_and_many_agree_and_scale():
     corners, _ = case("sphere")
     operator = FastOperator(corners)
