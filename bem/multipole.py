@@ -29,7 +29,7 @@ IntArray = NDArray[np.int64]
 #: Sums may be reordered, so that the compiler can use vector instructions; nan and inf stay what they are.
 _REORDER = {"reassoc", "contract", "arcp", "nsz"}
 #: Cells of one tile of translations: enough rows for a matrix product, few enough for the cache.
-_CELLS_PER_TILE = 1000
+_CELLS_PER_TILE = 2000
 #: Panels of one tile of the other steps.
 _PANELS_PER_TILE = 8192
 
@@ -125,27 +125,35 @@ def _leaf_moments(corners, order, centre, scale, rules, moments):
 
 @kernel(fastmath=_REORDER)
 def _gather_charges(leaves, start, moments, charges, multipoles):
-    """Add the charges (n_columns, n) of panels to the multipoles of their leaves; `start` are places of panels."""
+    """Add the charges (n, n_columns) of panels to the multipoles of their leaves; `start` are places of panels."""
     for k in range(len(leaves)):
-        for c in range(charges.shape[0]):
-            row = multipoles[leaves[k], c]
-            for i in range(start[k], start[k + 1]):
-                q, panel = charges[c, i], moments[i]
-                for j in range(len(row)):
-                    row[j] += q * panel[j]
+        if charges.shape[1] > 1:
+            here = charges[start[k] : start[k + 1]]
+            np.dot(here.T, moments[start[k] : start[k + 1]], multipoles[leaves[k]])
+            continue
+        row = multipoles[leaves[k], 0]
+        for i in range(start[k], start[k + 1]):
+            q, panel = charges[i, 0], moments[i]
+            for j in range(len(row)):
+                row[j] += q * panel[j]
 
 
 @kernel(fastmath=_REORDER)
 def _add_means(leaves, start, moments, locals_, sums):
-    """Add the mean potentials of panels from the local expansions of their leaves to sums (n_columns, n)."""
+    """Add the mean potentials of panels from the local expansions of their leaves to sums (n, n_columns)."""
     for k in range(len(leaves)):
-        for c in range(locals_.shape[1]):
-            row = locals_[leaves[k], c]
-            for i in range(start[k], start[k + 1]):
-                panel, total = moments[i], sums[c, i]
-                for j in range(len(row)):
-                    total += panel[j] * row[j]
-                sums[c, i] = total
+        if sums.shape[1] > 1:
+            means = np.dot(moments[start[k] : start[k + 1]], locals_[leaves[k]].T)
+            for i in range(len(means)):
+                for c in range(sums.shape[1]):
+                    sums[start[k] + i, c] += means[i, c]
+            continue
+        row = locals_[leaves[k], 0]
+        for i in range(start[k], start[k + 1]):
+            panel, total = moments[i], sums[i, 0]
+            for j in range(len(row)):
+                total += panel[j] * row[j]
+            sums[i, 0] = total
 
 
 @kernel
@@ -318,14 +326,14 @@ class FarField:
         far, level = self.pairs.far, self.tree.level
         pairs = np.concatenate([far, far[:, ::-1]])
         kind = np.concatenate([2 * self.pairs.translation, 2 * self.pairs.translation + 1])
-        n_tiles = max(1, min(8, len(level) // 100), -(-len(level) // _CELLS_PER_TILE))
+        n_tiles = max(1, min(4, len(level) // 200), -(-len(level) // _CELLS_PER_TILE))
         tile = pairs[:, 0] * n_tiles // len(level)
         order = np.lexsort((pairs[:, 0], kind, tile))
         pairs, kind, tile = pairs[order], kind[order], tile[order]
         new = np.nonzero(np.diff(kind, prepend=-1) | np.diff(tile, prepend=-1))[0]
         table = self.translations[1]
-        groups = np.column_stack([new, np.append(new[1:], len(kind)), table[kind[new], 0], table[kind[new], 1]])
-        groups = groups[: len(new)].astype(np.int64)
+        end = np.append(new[1:], len(kind))[: len(new)]
+        groups = np.column_stack([new, end, table[kind[new], 0], table[kind[new], 1]]).astype(np.int64)
         of_tile = np.searchsorted(tile[new], np.arange(n_tiles + 1))
         factor = (2.0 ** level[pairs].max(axis=1)).astype(self.real)
         return [groups[of_tile[t] : of_tile[t + 1]] for t in range(n_tiles)], pairs.astype(np.int32), factor
@@ -346,11 +354,11 @@ class FarField:
 
         Parameters
         ----------
-        charges : (n_columns, n) float
+        charges : (n, n_columns) float
             In the tree's order.
         """
         tree = self.tree
-        shape = (len(tree.level), len(charges), n_coefficients(self.degree))
+        shape = (len(tree.level), charges.shape[1], n_coefficients(self.degree))
         result: NDArray[np.floating] = np.zeros(shape, dtype=self.real)
 
         def gather(tile: int) -> None:
@@ -403,7 +411,7 @@ class FarField:
         return result
 
     def add_means(self, locals_: NDArray[np.floating], sums: NDArray[np.floating]) -> None:
-        """Add the mean potentials of the panels to sums (n_columns, n or more), in the tree's order."""
+        """Add the mean potentials of the panels to sums (n or more, n_columns), in the tree's order."""
         tree = self.tree
 
         def task(tile: int) -> None:

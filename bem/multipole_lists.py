@@ -22,7 +22,7 @@ IntArray = NDArray[np.int64]
 #: Most levels between a leaf and a finer cell far from it.
 MOST_LEVELS_APART = 3
 #: Leaves with fewer pairs of panels than this act directly: an expansion would cost more.
-FEW_PAIRS = 400
+FEW_PAIRS = 256
 
 
 @dataclass(frozen=True, eq=False)

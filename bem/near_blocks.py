@@ -1,8 +1,9 @@
 """Near part of the product: closed-form integrals of the near pairs of leaves, stored once for both directions.
 
-A block holds the mean of 1/r over each pair of panels (their double integral over both areas) for a pair of leaves,
-the first leaf's panels along the rows; of a leaf with itself all of it. Pairs further apart than a few radii within
-a block take the first terms of the expansion of 1/r, the other ones :func:`daraf.bem.pairs.pair_integral`.
+The matrix of a leaf holds the mean of 1/r over each pair of panels (their double integral over both areas), the
+leaf's own panels along the rows, along the columns these again and then those of the near leaves behind it. Pairs
+further apart than a few radii take the first terms of the expansion of 1/r, the other ones
+:func:`daraf.bem.pairs.pair_integral`.
 
 Tiles are runs of first leaves. A tile writes the rows of its own leaves; what it adds to leaves of other tiles goes
 to rows of its own behind them, which are added up in the order of the tiles.
@@ -18,7 +19,7 @@ from .frames import panel_frames
 from .jit import kernel
 from .multipole_lists import CellPairs
 from .near import self_integral
-from .pairs import pair_integral
+from .pairs import far_integral, pair_integral
 from .panels import polygon_geometry
 from .threads import run_tiles
 from .tree import Tree
@@ -41,13 +42,17 @@ class NearLayout:
     Attributes
     ----------
     pairs : (n_blocks, 2) int
-        Leaves, the smaller place first, in ascending order.
-    start : (n_blocks + 1,) int
-        First entry of each block.
+        Leaves, the smaller place first, in ascending order: for each leaf itself, then its near leaves behind it.
+    column : (n_blocks,) int
+        First column of a block in the matrix of its first leaf.
     place : (n_blocks,) int
         Where the second leaf's sums of a block begin: its own place, or one behind all panels.
+    head : (n_leaves + 1,) int
+        First block of each leaf.
+    start : (n_leaves + 1,) int
+        First entry of the matrix of each leaf.
     tile : (n_tiles + 1,) int
-        First block of each tile.
+        First leaf of each tile.
     extra : (n_extra, 2) int
         Place behind the panels and leaf, in the order in which they are added.
     rows : int
@@ -55,8 +60,10 @@ class NearLayout:
     """
 
     pairs: IntArray
-    start: IntArray
+    column: IntArray
     place: IntArray
+    head: IntArray
+    start: IntArray
     tile: IntArray
     extra: IntArray
     rows: int
@@ -66,14 +73,14 @@ def near_layout(tree: Tree, pairs: CellPairs) -> NearLayout:
     """Lay out the near blocks of a tree."""
     near, leaf_start = pairs.near, tree.leaf_start
     size = np.diff(leaf_start)
-    start = np.concatenate([[0], np.cumsum(size[near[:, 0]] * size[near[:, 1]])])
-    # tiles end where the first leaf changes
-    heads = np.searchsorted(near[:, 0], np.arange(len(size) + 1))
+    head = np.searchsorted(near[:, 0], np.arange(len(size) + 1))
+    columns = np.concatenate([[0], np.cumsum(size[near[:, 1]])])
+    width = columns[head[1:]] - columns[head[:-1]]
+    start = np.concatenate([[0], np.cumsum(size * width)])
     n_tiles = max(1, round(start[-1] / _ENTRIES_PER_TILE))
-    leaf_cut = np.searchsorted(start[heads], np.linspace(0, start[-1], n_tiles + 1))
-    leaf_cut = np.unique(np.concatenate([[0], leaf_cut[1:-1], [len(size)]]))
-    tile = heads[leaf_cut]
-    tile_of_leaf = np.searchsorted(leaf_cut, np.arange(len(size)), side="right") - 1
+    tile = np.searchsorted(start, np.linspace(0, start[-1], n_tiles + 1))
+    tile = np.unique(np.concatenate([[0], tile[1:-1], [len(size)]]))
+    tile_of_leaf = np.searchsorted(tile, np.arange(len(size)), side="right") - 1
     other = tile_of_leaf[near[:, 0]] != tile_of_leaf[near[:, 1]]
     # one stretch for each tile and leaf of another tile
     code = tile_of_leaf[near[other, 0]] * len(size) + near[other, 1]
@@ -83,7 +90,8 @@ def near_layout(tree: Tree, pairs: CellPairs) -> NearLayout:
     place[other] = stretch[inverse.reshape(-1)]
     order = np.argsort(found % len(size), kind="stable")
     extra = np.column_stack([stretch[:-1], found % len(size)])[order]
-    return NearLayout(near, start, place, tile, extra, int(stretch[-1]))
+    column = columns[:-1] - columns[head[near[:, 0]]]
+    return NearLayout(near, column, place, head, start, tile, extra, int(stretch[-1]))
 
 
 @kernel
@@ -104,7 +112,7 @@ def _expanded(a, b):
 @kernel
 def _known_value(p, q, old):
     """Entry of the panels p, q in earlier blocks, or -1 where it is not stored."""
-    place, leaf_of_place, leaf_start, head, pairs, start, values = old
+    place, leaf_of_place, leaf_start, head, pairs, column, start, values = old
     i, j = place[p], place[q]
     if i < 0 or j < 0:
         return -1.0
@@ -120,7 +128,8 @@ def _known_value(p, q, old):
             high = middle
     if low == head[a + 1] or pairs[low, 1] != b:
         return -1.0
-    return float(values[start[low] + (i - leaf_start[a]) * (leaf_start[b + 1] - leaf_start[b]) + j - leaf_start[b]])
+    width = (start[a + 1] - start[a]) // (leaf_start[a + 1] - leaf_start[a])
+    return float(values[start[a] + (i - leaf_start[a]) * width + column[low] + j - leaf_start[b]])
 
 
 @kernel
@@ -129,8 +138,8 @@ def _fill(blocks, leaf_start, frames, frame_start, simple, limits, old, values):
 
     Parameters
     ----------
-    blocks : (n, 3) int
-        Leaves and first entry.
+    blocks : (n, 4) int
+        Leaves, first entry, and entries of a row.
     leaf_start : (n_leaves + 1,) int
     frames : (m, FRAME_SIZE) float
         Of the panels of these leaves, each leaf's together.
@@ -138,93 +147,113 @@ def _fill(blocks, leaf_start, frames, frame_start, simple, limits, old, values):
         First frame of a leaf.
     simple : (n, 12) float
         In the tree's order: centroid, radius, second moments, area, panel.
-    limits : (2,) float
-        Distance over the sum of the radii beyond which the expansion does; factor of earlier values.
+    limits : (3,) float
+        Distance over the sum of the radii beyond which the expansion does, beyond which three by three points do;
+        factor of earlier values.
     old : tuple
         Of earlier blocks: see :func:`_known_value`.
     values : (n_entries,) float
     """
     for k in range(len(blocks)):
-        a, b, at = blocks[k, 0], blocks[k, 1], blocks[k, 2]
+        a, b, at, width = blocks[k, 0], blocks[k, 1], blocks[k, 2], blocks[k, 3]
         first, n = leaf_start[b], leaf_start[b + 1] - leaf_start[b]
         for i in range(leaf_start[a + 1] - leaf_start[a]):
             pi = simple[leaf_start[a] + i]
             for j in range(i + 1 if a == b else n):
                 pj = simple[first + j]
-                x, y, z, reach = pi[0] - pj[0], pi[1] - pj[1], pi[2] - pj[2], limits[0] * (pi[3] + pj[3])
-                if x * x + y * y + z * z > reach * reach:
+                x, y, z = pi[0] - pj[0], pi[1] - pj[1], pi[2] - pj[2]
+                ratio2 = (x * x + y * y + z * z) / (pi[3] + pj[3]) ** 2
+                if ratio2 > limits[0] ** 2:
                     value = _expanded(pi, pj)
+                elif ratio2 > limits[1] ** 2:
+                    value = far_integral(frames[frame_start[a] + i], frames[frame_start[b] + j], 3)
+                    value /= pi[10] * pj[10]
                 else:
-                    value = limits[1] * _known_value(int(pi[11]), int(pj[11]), old)
+                    value = limits[2] * _known_value(int(pi[11]), int(pj[11]), old)
                     if value < 0.0:
                         fi, fj = frames[frame_start[a] + i], frames[frame_start[b] + j]
                         value = self_integral(fi) if a == b and i == j else pair_integral(fi, fj)
                         value /= pi[10] * pj[10]
-                values[at + i * n + j] = value
+                values[at + i * width + j] = value
                 if a == b:
-                    values[at + j * n + i] = value
+                    values[at + j * width + i] = value
 
 
 @kernel(fastmath=_REORDER)
-def _rows_and_columns(block, xa, xb, ya, yb):
+def _both_ways(block, xa, xb, ya, yb):
     """``ya += block xb`` and ``yb += block^T xa`` with one pass over the block (n_a, n_b), four rows at a time."""
     n_a, n_b = block.shape
     i = 0
     while i + 4 <= n_a:
         r0, r1, r2, r3 = block[i], block[i + 1], block[i + 2], block[i + 3]
-        x0, x1, x2, x3 = xa[i], xa[i + 1], xa[i + 2], xa[i + 3]
-        s0, s1, s2, s3 = ya[i], ya[i + 1], ya[i + 2], ya[i + 3]
+        x0, x1, x2, x3 = xa[i, 0], xa[i + 1, 0], xa[i + 2, 0], xa[i + 3, 0]
+        s0, s1, s2, s3 = ya[i, 0], ya[i + 1, 0], ya[i + 2, 0], ya[i + 3, 0]
         for j in range(n_b):
-            v0, v1, v2, v3, x = r0[j], r1[j], r2[j], r3[j], xb[j]
+            v0, v1, v2, v3, x = r0[j], r1[j], r2[j], r3[j], xb[j, 0]
             s0 += v0 * x
             s1 += v1 * x
             s2 += v2 * x
             s3 += v3 * x
-            yb[j] += v0 * x0 + v1 * x1 + v2 * x2 + v3 * x3
-        ya[i], ya[i + 1], ya[i + 2], ya[i + 3] = s0, s1, s2, s3
+            yb[j, 0] += v0 * x0 + v1 * x1 + v2 * x2 + v3 * x3
+        ya[i, 0], ya[i + 1, 0], ya[i + 2, 0], ya[i + 3, 0] = s0, s1, s2, s3
         i += 4
     while i < n_a:
-        row, x0, s0 = block[i], xa[i], ya[i]
+        row, x0, s0 = block[i], xa[i, 0], ya[i, 0]
         for j in range(n_b):
-            s0 += row[j] * xb[j]
-            yb[j] += row[j] * x0
-        ya[i] = s0
+            s0 += row[j] * xb[j, 0]
+            yb[j, 0] += row[j] * x0
+        ya[i, 0] = s0
         i += 1
 
 
-@kernel(fastmath=_REORDER)
-def _rows(block, x, y):
-    """``y += block x``."""
-    for i in range(len(block)):
-        row, s = block[i], y[i]
-        for j in range(len(row)):
-            s += row[j] * x[j]
-        y[i] = s
-
-
 @kernel
-def _multiply(blocks, place, leaf_start, values, x, y):
-    """Add the products of blocks to y (n_columns, rows); `blocks` hold leaves and first entry."""
-    for k in range(len(blocks)):
-        a, b, at = blocks[k, 0], blocks[k, 1], blocks[k, 2]
-        a0, a1, b0, b1 = leaf_start[a], leaf_start[a + 1], leaf_start[b], leaf_start[b + 1]
-        block = values[at : at + (a1 - a0) * (b1 - b0)].reshape(a1 - a0, b1 - b0)
-        to = place[k]
-        for c in range(len(x)):
-            if a == b:
-                _rows(block, x[c, a0:a1], y[c, a0:a1])
-            else:
-                _rows_and_columns(block, x[c, a0:a1], x[c, b0:b1], y[c, a0:a1], y[c, to : to + b1 - b0])
+def _multiply(leaves, head, pairs, place, leaf_start, start, values, vectors):
+    """Add the products of the matrices of leaves, first to last of `leaves`, to y.
+
+    `vectors` are x (n, n_columns) and y (rows, n_columns); the other arrays those of :class:`NearLayout`.
+    """
+    x, y = vectors
+    n_columns = x.shape[1]
+    widest = 0
+    for a in range(leaves[0], leaves[1]):
+        widest = max(widest, (start[a + 1] - start[a]) // (leaf_start[a + 1] - leaf_start[a]))
+    near, back = np.empty((widest, n_columns), x.dtype), np.empty((widest, n_columns), x.dtype)
+    for a in range(leaves[0], leaves[1]):
+        a0, a1 = leaf_start[a], leaf_start[a + 1]
+        n_a = a1 - a0
+        width = (start[a + 1] - start[a]) // n_a
+        block = values[start[a] : start[a + 1]].reshape(n_a, width)
+        n = 0
+        for k in range(head[a], head[a + 1]):
+            for i in range(leaf_start[pairs[k, 1]], leaf_start[pairs[k, 1] + 1]):
+                for c in range(n_columns):
+                    near[n, c], back[n, c] = x[i, c], 0.0
+                n += 1
+        if n_columns == 1:
+            _both_ways(block, x[a0:a1], near[:n], y[a0:a1], back[:n])
+        else:
+            forward = np.dot(block, near[:n])
+            np.dot(block.T, x[a0:a1], back[:n])
+            for i in range(n_a):
+                for c in range(n_columns):
+                    y[a0 + i, c] += forward[i, c]
+        n = n_a
+        for k in range(head[a] + 1, head[a + 1]):
+            b = pairs[k, 1]
+            for i in range(leaf_start[b + 1] - leaf_start[b]):
+                for c in range(n_columns):
+                    y[place[k] + i, c] += back[n, c]
+                n += 1
 
 
 @kernel
 def _add_extra(extra, leaf_start, y):
     """Add the places behind the panels to the leaves they belong to, in this order."""
-    for c in range(len(y)):
-        for e in range(len(extra)):
-            first, n = leaf_start[extra[e, 1]], leaf_start[extra[e, 1] + 1] - leaf_start[extra[e, 1]]
-            for i in range(n):
-                y[c, first + i] += y[c, extra[e, 0] + i]
+    for e in range(len(extra)):
+        first = leaf_start[extra[e, 1]]
+        for i in range(leaf_start[extra[e, 1] + 1] - first):
+            for c in range(y.shape[1]):
+                y[first + i, c] += y[extra[e, 0] + i, c]
 
 
 @dataclass(frozen=True, eq=False)
@@ -271,8 +300,9 @@ class NearBlocks:
     layout : NearLayout
     corners : (n, 4, 3) float
         Panels in their own order, in the tree's coordinates.
-    expand_beyond : float
-        Distance over the sum of the radii beyond which a pair is expanded.
+    beyond : (float, float)
+        Distance over the sum of the radii beyond which a pair is expanded, and beyond which three by three points
+        on both panels do.
     real : type
         Precision they are stored in; they are computed in double precision.
     known : Known, optional
@@ -285,35 +315,37 @@ class NearBlocks:
         tree: Tree,
         layout: NearLayout,
         corners: FloatArray,
-        expand_beyond: float,
+        beyond: tuple[float, float],
         real: type,
         known: Known | None = None,
         progress: Progress | None = None,
     ) -> None:
         self.tree, self.layout = tree, layout
-        self._blocks = np.column_stack([layout.pairs, layout.start[:-1]])
         self.values: NDArray[np.floating] = np.empty(int(layout.start[-1]), dtype=real)
-        self._assemble(corners, expand_beyond, known, progress)
+        self._assemble(corners, beyond, known, progress)
 
     @property
     def bytes(self) -> int:
         """Memory held, bytes."""
-        return int(self.values.nbytes + self._blocks.nbytes + self.layout.place.nbytes)
+        return int(self.values.nbytes)
 
     def _assemble(
-        self, corners: FloatArray, expand_beyond: float, known: Known | None, progress: Progress | None
+        self, corners: FloatArray, beyond: tuple[float, float], known: Known | None, progress: Progress | None
     ) -> None:
         tree, layout = self.tree, self.layout
         simple = _simple_rows(corners, tree.order)
         old = _no_known(len(corners), self.values) if known is None else known.blocks.as_known(known.panel)
         factor = 1.0 if known is None else tree.scale / known.blocks.tree.scale
-        limits = np.array([expand_beyond, factor])
+        limits = np.array([*beyond, factor])
         done = 0.0
 
         def task(tile: int) -> None:
             nonlocal done
-            blocks = self._blocks[layout.tile[tile] : layout.tile[tile + 1]]
-            leaves = np.unique(blocks[:, :2])
+            here = slice(layout.head[layout.tile[tile]], layout.head[layout.tile[tile + 1]])
+            pairs, lead = layout.pairs[here], layout.pairs[here, 0]
+            width = np.diff(layout.start)[lead] // np.diff(tree.leaf_start)[lead]
+            blocks = np.column_stack([pairs, layout.start[lead] + layout.column[here], width])
+            leaves = np.unique(pairs)
             size = np.diff(tree.leaf_start)[leaves]
             frame_start = np.full(len(tree.leaves), -1, dtype=np.int64)
             frame_start[leaves] = np.concatenate([[0], np.cumsum(size)[:-1]])
@@ -333,28 +365,29 @@ class NearBlocks:
         place_of[tree.order] = np.arange(len(tree.order))
         place = np.where(panel >= 0, place_of[np.maximum(panel, 0)], -1)
         leaf_of_place = np.repeat(np.arange(len(tree.leaves)), np.diff(tree.leaf_start))
-        head = np.searchsorted(layout.pairs[:, 0], np.arange(len(tree.leaves) + 1))
-        return place, leaf_of_place, tree.leaf_start, head, layout.pairs, layout.start, self.values
+        of_tree = place, leaf_of_place, tree.leaf_start
+        return *of_tree, layout.head, layout.pairs, layout.column, layout.start, self.values
 
     def multiply(self, charges: NDArray[np.floating]) -> NDArray[np.floating]:
         """Near part of the potentials.
 
         Parameters
         ----------
-        charges : (n_columns, n) float
+        charges : (n, n_columns) float
             In the tree's order.
 
         Returns
         -------
-        (n_columns, layout.rows) float
-            The first n of each row are the sums.
+        (layout.rows, n_columns) float
+            The first n rows are the sums.
         """
         tree, layout = self.tree, self.layout
-        y = np.zeros((len(charges), layout.rows), dtype=self.values.dtype)
+        y: NDArray[np.floating] = np.zeros((layout.rows, charges.shape[1]), dtype=self.values.dtype)
 
         def task(tile: int) -> None:
-            here = slice(layout.tile[tile], layout.tile[tile + 1])
-            _multiply(self._blocks[here], layout.place[here], tree.leaf_start, self.values, charges, y)
+            leaves = layout.tile[tile : tile + 2]
+            blocks = layout.head, layout.pairs, layout.place, tree.leaf_start
+            _multiply(leaves, *blocks, layout.start, self.values, (charges, y))
 
         run_tiles(task, len(layout.tile) - 1)
         _add_extra(layout.extra, tree.leaf_start, y)
@@ -363,11 +396,10 @@ class NearBlocks:
     def leaf_block(self, leaf: int) -> NDArray[np.floating]:
         """Means of 1/r among the panels of a leaf, (n, n), in the tree's order and coordinates."""
         n = int(self.tree.leaf_start[leaf + 1] - self.tree.leaf_start[leaf])
-        head = int(np.searchsorted(self.layout.pairs[:, 0], leaf))
-        start = int(self.layout.start[head])
-        return self.values[start : start + n * n].reshape(n, n)
+        start, end = self.layout.start[leaf], self.layout.start[leaf + 1]
+        return self.values[start:end].reshape(n, -1)[:, :n]
 
 
 def _no_known(n: int, values: NDArray[np.floating]) -> tuple[NDArray[np.generic], ...]:
     none, pairs = np.empty(0, dtype=np.int64), np.empty((0, 2), dtype=np.int64)
-    return np.full(n, -1, dtype=np.int64), none, none, none, pairs, none, values
+    return np.full(n, -1, dtype=np.int64), none, none, none, pairs, none, none, values

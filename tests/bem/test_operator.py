@@ -97,6 +97,21 @@ def test_diagonal_and_leaf_blocks_are_those_of_the_matrix(name):
         np.testing.assert_allclose(operator.leaf_block(leaf), A[np.ix_(leaves[leaf], leaves[leaf])], rtol=3e-4)
 
 
+@pytest.mark.parametrize("n", [1, 3])
+def test_few_panels_are_all_near(n):
+    corners = squares(n)
+    operator = FastOperator(corners)
+    matrix = galerkin_matrix(corners)
+    density = np.arange(1.0, 2 * n * n + 1).reshape(-1, 2)
+    exact = (matrix + np.tril(matrix, -1).T) @ density
+    # single precision
+    np.testing.assert_allclose(operator.apply(density), exact, rtol=1e-6)
+    assert operator.check(density) < 1e-6
+    potential, gradient = operator.at_points(np.array([[0.3, 0.4, 2.0]]), density)
+    assert np.isfinite(potential).all()
+    assert (gradient[:, :, 2] < 0.0).all()
+
+
 def test_one_column_and_many_agree_and_scale():
     corners, _ = case("sphere")
     operator = FastOperator(corners)
@@ -183,8 +198,8 @@ def test_parts_agree_with_direct_sums(name):
     result = operator.at_parts(parts[chosen], operator.expand(density), chosen)
     filled = parts[chosen, :, AREA] > 0
     area = parts[chosen, :, AREA][filled]
-    # the twin sums the far sources by one point each, and its own error is 1e-4 of the potential
-    assert relative_error(result[filled], exact[chosen][filled], area).max() < 2e-4
+    # the twin takes sources beyond six radii in one point, which leaves (1/12)^2 / 6 of each and less of their sum
+    assert relative_error(result[filled], exact[chosen][filled], area).max() < 5e-4
     assert not result[~filled].any()
 
 
