@@ -6,7 +6,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from .frames import AREA, CENTROID, CORNER, RADIUS, panel_frames
-from .indicator import _part_integral
+from .indicator import part_integral
 from .jit import kernel
 from .multipole import FarField, panel_moments
 from .near_blocks import NearLayout
@@ -51,7 +51,7 @@ def _near_parts(parts, own, sources, near_start, near_panels, density, sums):
             radii = whole[RADIUS] + source[RADIUS]
             ratio2 = (x * x + y * y + z * z) / (radii * radii)
             for c in range(4):
-                value = _part_integral(parts[p, c], source, ratio2)
+                value = part_integral(parts[p, c], source, ratio2)
                 for d in range(density.shape[1]):
                     sums[p, c, d] += value * density[near_panels[k], d]
 

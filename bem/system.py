@@ -16,13 +16,13 @@ from scipy.linalg import lapack
 from .errors import NumericalError
 from .frames import panel_frames
 from .galerkin import galerkin_matrix
-from .indicator import child_potentials
+from .indicator import PartPotentials, child_potentials
 from .operator import FastOperator
 from .panels import Panels
 from .solution import Notice
 from .threads import blas_threads
 
-__all__ = ["Carried", "DenseSystem", "FastSystem", "Solved", "System", "make_system"]
+__all__ = ["Carried", "DenseSystem", "FastSystem", "Solved", "System", "far_tolerance", "make_system", "uses_fast"]
 
 FloatArray = NDArray[np.float64]
 IntArray = NDArray[np.int64]
@@ -37,6 +37,7 @@ CROSS_OVER = 6000
 #: Relative error of a product, per relative uncertainty asked: its effect on the capacitances is measured and lies
 #: well below, since errors of single panels average out.
 FAR_SHARE = 1e-3
+LEAST_TOLERANCE, GREATEST_TOLERANCE = 1e-7, 1e-4
 #: Error of the iteration per relative uncertainty asked, of one conductor and of several: the error of a weak coupling
 #: is only bounded by those of both self entries, and it is asked to 1e-3 of them.
 ALONE_SHARE, COUPLED_SHARE = 1e-2, 1e-4
@@ -44,8 +45,8 @@ ALONE_SHARE, COUPLED_SHARE = 1e-2, 1e-4
 MOST_ITERATIONS = 300
 #: Panels sampled for every conductor to measure what the expansions do to the capacitances.
 SAMPLES = 60
-#: Panels whose parts are evaluated at once.
-_PARTS_AT_ONCE = 20_000
+#: Pairs of panels per call of a kernel.
+_PAIRS_AT_ONCE = 400_000
 
 
 @dataclass(frozen=True, eq=False)
@@ -101,21 +102,11 @@ class System(Protocol):
     def solve(self, charges: FloatArray, start: FloatArray | None, report: Progress) -> Solved:
         """Densities for (n_panels, n_conductors) panel areas on each conductor."""
 
-    def part_potentials(
-        self, parts: Callable[[IntArray], FloatArray], rows: IntArray, density: FloatArray, report: Progress
-    ) -> FloatArray:
-        """Integrals of the potential over parts of panels `rows`, (len(rows), n_parts, n_conductors) m3.
-
-        `parts` gives the packed frames (k, n_parts, FRAME_SIZE) of any of the panels, in coordinates about
-        :attr:`centre`.
-        """
-
-    @property
-    def centre(self) -> FloatArray:
-        """Origin of the coordinates of parts, (3,) m."""
+    def read(self, density: FloatArray) -> PartPotentials:
+        """Integrals of the potential of a density (n_panels, n_conductors) over parts of panels."""
 
     def carried(self, kept: IntArray) -> Carried:
-        """What the next pass may take over."""
+        """What the next pass may take over for the panels `kept`."""
 
 
 class DenseSystem:
@@ -126,7 +117,6 @@ class DenseSystem:
     def __init__(self, panels: Panels, carried: Carried | None, report: Progress) -> None:
         known = None if carried is None else carried.matrix
         self._panels = panels
-        self.centre: FloatArray = panels.corners.reshape(-1, 3).mean(axis=0)
         self.matrix = galerkin_matrix(
             panels.corners, known=known, progress=lambda done, total: report("matrix", done, total)
         )
@@ -165,21 +155,19 @@ class DenseSystem:
         value = charges.T @ density
         return Solved(density, 0.5 * (value + value.T), notices=notices)
 
-    def part_potentials(
-        self, parts: Callable[[IntArray], FloatArray], rows: IntArray, density: FloatArray, report: Progress
-    ) -> FloatArray:
+    def read(self, density: FloatArray) -> PartPotentials:
         """See :class:`System`."""
-        frames = panel_frames(self._panels.corners - self.centre, largest_rule=4)
-        result = []
-        step = max(8, 400_000 // len(frames))
-        for first in range(0, len(rows), step):
-            chosen = rows[first : first + step]
-            packed = parts(chosen)
-            moments = np.empty((len(chosen), packed.shape[1], density.shape[1]))
-            child_potentials(packed, frames[chosen], frames, density, moments)
-            result.append(moments)
-            report("estimate", min(first + step, len(rows)), len(rows))
-        return np.concatenate(result) if result else np.zeros((0, 4, density.shape[1]))
+        frames = panel_frames(self._panels.corners, largest_rule=4)
+        step = max(8, _PAIRS_AT_ONCE // len(frames))
+
+        def potentials(parts: FloatArray, rows: IntArray) -> FloatArray:
+            moments = np.empty((len(rows), parts.shape[1], density.shape[1]))
+            for first in range(0, len(rows), step):
+                here = slice(first, first + step)
+                child_potentials(parts[here], frames[rows[here]], frames, density, moments[here])
+            return moments
+
+        return potentials
 
     def carried(self, kept: IntArray) -> Carried:
         """See :class:`System`."""
@@ -192,3 +180,131 @@ def _cholesky(matrix: FloatArray, diagonal: float) -> tuple[FloatArray, int]:
     copy[np.diag_indices_from(copy)] *= diagonal
     factor, info = lapack.dpotrf(copy, lower=0, clean=0, overwrite_a=1)
     return factor, int(info)
+
+
+class FastSystem:
+    """The fast operator and block conjugate gradients."""
+
+    method = "fast multipole, conjugate gradients"
+
+    def __init__(self, panels: Panels, accuracy: float, carried: Carried | None, report: Progress) -> None:
+        self._panels, self._accuracy = panels, accuracy
+        previous, known = None, None
+        if carried is not None and carried.operator is not None:
+            previous = carried.operator
+            known = np.full(len(panels), -1, dtype=np.int64)
+            known[: len(carried.kept)] = carried.kept
+        self.operator = FastOperator(
+            panels.corners,
+            far_tolerance(accuracy),
+            previous=previous,
+            known=known,
+            progress=lambda done, total: report("matrix", done, total),
+        )
+
+    @property
+    def diagonal(self) -> FloatArray:
+        """Self integrals, (n_panels,) m3."""
+        return self.operator.diagonal
+
+    def solve(self, charges: FloatArray, start: FloatArray | None, report: Progress) -> Solved:
+        """Densities by block conjugate gradients.
+
+        Raises
+        ------
+        NumericalError
+            If the iteration breaks down or does not converge.
+        """
+        n = charges.shape[1]
+        tolerance = self._accuracy * (ALONE_SHARE if n == 1 else COUPLED_SHARE)
+        found = solve_block(
+            self.operator,
+            charges,
+            factored_inverse(stored_entries(self.operator)),
+            tolerance=tolerance,
+            start=start,
+            most=MOST_ITERATIONS,
+            progress=lambda step, excess: report("iteration", *_advance(step, excess)),
+        )
+        if not found.converged:
+            raise NumericalError(
+                f"the iteration for {len(charges)} panels stopped after {found.iterations} steps short of its "
+                "tolerance; panels may coincide or cross"
+            )
+        value = 0.5 * (found.value + found.value.T)
+        report("check", 0.0, 1.0)
+        left = {"solver": found.error_matrix, "far field": self._far_field(found.density, charges)}
+        return Solved(found.density, value, left, found.iterations)
+
+    def _far_field(self, density: FloatArray, charges: FloatArray) -> FloatArray:
+        """What expansions and single precision do to the capacitances, by direct sums on sampled panels.
+
+        The change of entry (i, j) is the sum over panels of charge i times the error of potential j. Panels are drawn
+        with probabilities like the magnitude of charge i: the mean of the errors times the total magnitude estimates
+        it, twice its standard error is added.
+        """
+        n = density.shape[1]
+        product, areas = self.operator.apply(density), self._panels.areas
+        magnitude = np.abs(density) * areas[:, None]
+        random = np.random.default_rng(len(density))
+        spread = np.zeros((n, n))
+        for i in range(n):
+            total = magnitude[:, i].sum()
+            drawn = random.choice(len(density), SAMPLES, p=magnitude[:, i] / total)
+            exact = self.operator.direct_rows(drawn, density)
+            errors = (product[drawn] - exact) / areas[drawn, None] * np.sign(density[drawn, i])[:, None]
+            spread[i] = total * (np.abs(errors.mean(axis=0)) + 2.0 * errors.std(axis=0, ddof=1) / np.sqrt(SAMPLES))
+        return np.maximum(spread, spread.T)
+
+    def read(self, density: FloatArray) -> PartPotentials:
+        """See :class:`System`."""
+        expansion = self.operator.expand(density)
+        return lambda parts, rows: self.operator.at_parts(parts, expansion, rows)
+
+    def carried(self, kept: IntArray) -> Carried:
+        """See :class:`System`."""
+        return Carried(kept, operator=self.operator)
+
+
+def far_tolerance(accuracy: float) -> float:
+    """Relative error of a product for an accuracy asked."""
+    return float(np.clip(FAR_SHARE * accuracy, LEAST_TOLERANCE, GREATEST_TOLERANCE))
+
+
+def _advance(step: int, excess: float) -> tuple[float, float]:
+    """Progress of an iteration whose error falls by a constant factor a step: steps done, and in all."""
+    if step == 0 or excess <= 1.0:
+        return float(step), float(max(step, 1))
+    return float(step), step * (1.0 + np.log(excess) / 12.0)
+
+
+def make_system(
+    panels: Panels, accuracy: float, method: str, carried: Carried | None, report: Progress
+) -> DenseSystem | FastSystem:
+    """Equations of a pass.
+
+    Parameters
+    ----------
+    panels : Panels
+        With coordinates about the middle of the model.
+    accuracy : float
+        Relative uncertainty asked.
+    method : {"auto", "dense", "fast"}
+        "auto": by the number of panels.
+    carried : Carried or None
+        From the pass before.
+    report : callable
+        Told (stage, done, total).
+
+    Returns
+    -------
+    DenseSystem or FastSystem
+    """
+    if uses_fast(len(panels), method):
+        return FastSystem(panels, accuracy, carried, report)
+    return DenseSystem(panels, carried, report)
+
+
+def uses_fast(n_panels: int, method: str) -> bool:
+    """Whether so many panels are solved with the fast operator."""
+    return method == "fast" or (method == "auto" and n_panels >= CROSS_OVER)

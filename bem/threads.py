@@ -15,7 +15,7 @@ import numba
 import scipy.linalg  # noqa: F401  kernels take their matrix products from here: it must be loaded to be limited
 from threadpoolctl import ThreadpoolController
 
-__all__ = ["one_blas_thread", "run_tiles"]
+__all__ = ["blas_threads", "one_blas_thread", "run_tiles"]
 
 
 @functools.cache
@@ -28,10 +28,15 @@ def _controller() -> ThreadpoolController:
     return ThreadpoolController()
 
 
+def blas_threads(limit: int | None) -> AbstractContextManager[object]:
+    """Keep the libraries of linear algebra to some threads; None leaves them free."""
+    limited: AbstractContextManager[object] = _controller().limit(limits=limit, user_api="blas")
+    return limited
+
+
 def one_blas_thread() -> AbstractContextManager[object]:
     """Keep the libraries of linear algebra to one thread: the tiles are what runs side by side."""
-    limit: AbstractContextManager[object] = _controller().limit(limits=1, user_api="blas")
-    return limit
+    return blas_threads(1)
 
 
 def run_tiles(task: Callable[[int], None], n_tiles: int) -> None:
