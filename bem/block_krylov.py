@@ -25,7 +25,7 @@ from numpy.typing import NDArray
 from .errors import NumericalError
 from .preconditioner import Preconditioner
 
-__all__ = ["BlockSolution", "SymmetricOperator", "solve_block"]
+__all__ = ["BlockSolution", "SymmetricOperator", "second_order_value", "solve_block"]
 
 FloatArray = NDArray[np.float64]
 IntArray = NDArray[np.int64]
@@ -80,6 +80,21 @@ class BlockSolution:
         """Bounds of the errors of all entries of `value`, (n_columns, n_columns)."""
         root = np.sqrt(self.error)
         return np.asarray(np.outer(root, root))
+
+
+def second_order_value(right: FloatArray, density: FloatArray, residual: FloatArray) -> FloatArray:
+    """``B^T X + X^T R``, made symmetric: ``B^T A^-1 B`` but for a term of second order in the residuals.
+
+    Parameters
+    ----------
+    right, density, residual : (n, n_columns) float
+
+    Returns
+    -------
+    (n_columns, n_columns) float
+    """
+    value = right.T @ density + density.T @ residual
+    return np.asarray(0.5 * (value + value.T))
 
 
 def solve_block(
@@ -216,12 +231,11 @@ class _State:
         return True
 
     def solution(self, iterations: int, converged: bool, error: FloatArray) -> BlockSolution:
-        value = self.right.T @ self.density + self.density.T @ self.residual
         assert self.first is not None
         return BlockSolution(
             density=self.density,
             residual=self.residual,
-            value=0.5 * (value + value.T),
+            value=second_order_value(self.right, self.density, self.residual),
             error=error,
             iterations=iterations,
             products=self.products,

@@ -11,18 +11,20 @@ import numpy as np
 from numpy.typing import NDArray
 
 from .jit import kernel, parallel_kernel, prange
+from .operator import FastOperator
 
-__all__ = ["Patches", "StoredEntries", "make_patches"]
+__all__ = ["CLUSTER_SIZE", "Patches", "StoredEntries", "make_patches", "stored_entries"]
 
 FloatArray = NDArray[np.float64]
 IntArray = NDArray[np.int64]
 
 #: Most panels of a cluster, and of a patch besides its own cluster.
-CLUSTER_SIZE, PATCH_SIZE = 16, 160
+CLUSTER_SIZE, PATCH_SIZE = 16, 256
 #: Most clusters of a patch besides its own.
-_SLOTS = 48
-#: Clusters are neighbours if their boxes are closer than this share of the radius of the smaller one.
-NEIGHBOUR = 0.6
+_SLOTS = 64
+#: Clusters are neighbours if their boxes are closer than this many radii of the smaller one: at 0.6 twice the
+#: iterations on graded sheets, at 2 twice the set-up for one iteration less (scripts/bench/iterations.py).
+NEIGHBOUR = 1.5
 
 
 @dataclass(frozen=True, eq=False)
@@ -57,6 +59,21 @@ class StoredEntries:
     unit: float
 
 
+def stored_entries(operator: FastOperator) -> StoredEntries:
+    """Near entries of a fast operator."""
+    tree, layout = operator.plan.tree, operator.plan.layout
+    return StoredEntries(
+        order=tree.order,
+        leaf_start=tree.leaf_start,
+        pairs=layout.pairs,
+        start=layout.start,
+        values=operator.near.values,
+        corners=operator.corners,
+        areas=operator.areas,
+        unit=tree.scale,
+    )
+
+
 @dataclass(frozen=True, eq=False)
 class Patches:
     """Clusters and their patches.
@@ -79,8 +96,8 @@ class Patches:
 
 
 @kernel
-def _halve(points, places, first, last):
-    """Sort a stretch of `places` along the longest side of its box and return where to cut it."""
+def _halve(points, places, first, last, most):
+    """Sort a stretch of `places` along the longest side of its box and return where to cut it: at whole clusters."""
     widest, axis = -1.0, 0
     for k in range(3):
         low, high = points[places[first], k], points[places[first], k]
@@ -96,7 +113,8 @@ def _halve(points, places, first, last):
     turn = np.argsort(keys, kind="mergesort")  # stable: ties keep the order of the tree
     for i in range(last - first):
         places[first + i] = stretch[turn[i]]
-    return (first + last) // 2
+    half = (last - first + 1) // 2
+    return first + most * ((half + most - 1) // most)
 
 
 @kernel
@@ -132,7 +150,7 @@ def cut_leaves(points, leaf_start, most, places, cluster_start, leaf):
                 cluster_start[n], leaf[n] = first, a
                 n += 1
                 continue
-            middle = _halve(points, places, first, last)
+            middle = _halve(points, places, first, last, most)
             stack[depth, 0], stack[depth, 1] = middle, last
             stack[depth + 1, 0], stack[depth + 1, 1] = first, middle
             depth += 2

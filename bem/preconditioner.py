@@ -15,7 +15,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from .jit import kernel, parallel_kernel, prange
-from .patches import Patches, StoredEntries, make_patches
+from .patches import CLUSTER_SIZE, Patches, StoredEntries, make_patches
 
 __all__ = ["FactoredInverse", "Preconditioner", "factored_inverse"]
 
@@ -25,6 +25,8 @@ IntArray = NDArray[np.int64]
 #: Pivots of a patch, of a matrix with ones on its diagonal, are kept above this: panels that coincide, and entries
 #: stored in single precision, leave less.
 LEAST_PIVOT = 1e-6
+#: Sums within a row may be reordered.
+_REORDER = {"reassoc", "contract", "arcp", "nsz"}
 #: Clusters per call of a kernel.
 _BLOCK = 4096
 
@@ -104,7 +106,7 @@ def patch_matrix(members, leaf, stored, scale, points):
     return matrix
 
 
-@kernel(fastmath={"reassoc", "contract", "arcp", "nsz"})
+@kernel(fastmath=_REORDER)
 def last_inverse_rows(matrix, n_last, least):
     """Last rows of the inverse Cholesky factor of a symmetric matrix.
 
@@ -148,47 +150,54 @@ def last_inverse_rows(matrix, n_last, least):
 
 @parallel_kernel
 def _factor(clusters, stored, scale, points, rows, values):
-    """Write the values of clusters; `clusters` are first, last, patches, `rows` the layout."""
+    """Write the rows of clusters; `clusters` are first, last, cluster_start, leaves; `rows` row_start, members."""
     first, last, cluster_start, leaf_of_place = clusters
-    row_start, value_start, members = rows
+    row_start, members = rows
     for c in prange(first, last):
         here = members[row_start[c] : row_start[c + 1]].astype(np.int64)
         matrix = patch_matrix(here, leaf_of_place[here], stored, scale, points)
         n_own = cluster_start[c + 1] - cluster_start[c]
         found = last_inverse_rows(matrix, n_own, LEAST_PIVOT)
-        at = value_start[c]
         for k in range(len(here)):
+            row = values[row_start[c] + k]
+            row[:] = 0.0
             for i in range(n_own):
-                values[at] = found[k, i]
-                at += 1
+                row[i] = found[k, i]
 
 
-@parallel_kernel(fastmath={"reassoc", "contract", "arcp", "nsz"})
-def _forward(cluster_start, row_start, value_start, members, values, x, y):
-    """``y = G x``, x and y (n_columns, n); x by place, y in the order of the clusters."""
-    for c in prange(len(value_start) - 1):
-        first, n_own = cluster_start[c], cluster_start[c + 1] - cluster_start[c]
+@parallel_kernel(fastmath=_REORDER)
+def _forward(row_start, members, values, x, y):
+    """``y = G x``: x (n_columns, n) by place, y (n_columns, n_clusters, CLUSTER_SIZE)."""
+    for c in prange(len(row_start) - 1):
         for column in range(len(x)):
-            out, source = y[column, first : first + n_own], x[column]
-            out[:] = 0.0
-            at = value_start[c]
-            for k in range(row_start[c], row_start[c + 1]):
-                factor = source[members[k]]
-                for i in range(n_own):
-                    out[i] += factor * values[at + i]
-                at += n_own
+            source, out = x[column], y[column, c]
+            for i in range(CLUSTER_SIZE):
+                out[i] = 0.0
+            k, last = row_start[c], row_start[c + 1]
+            while k + 4 <= last:
+                v0, v1, v2, v3 = values[k], values[k + 1], values[k + 2], values[k + 3]
+                x0, x1 = source[members[k]], source[members[k + 1]]
+                x2, x3 = source[members[k + 2]], source[members[k + 3]]
+                for i in range(CLUSTER_SIZE):
+                    out[i] += x0 * v0[i] + x1 * v1[i] + x2 * v2[i] + x3 * v3[i]
+                k += 4
+            while k < last:
+                v0, x0 = values[k], source[members[k]]
+                for i in range(CLUSTER_SIZE):
+                    out[i] += x0 * v0[i]
+                k += 1
 
 
-@parallel_kernel(fastmath={"reassoc", "contract", "arcp", "nsz"})
-def _backward(cluster_start, occurrence_start, occurrences, cluster_of, values, y, z):
+@parallel_kernel(fastmath=_REORDER)
+def _backward(occurrence_start, occurrences, cluster_of_row, values, y, z):
     """``z = G^T y``: each place gathers from the clusters in whose patch it is."""
     for p in prange(len(occurrence_start) - 1):
         for column in range(len(y)):
             total = 0.0
             for e in range(occurrence_start[p], occurrence_start[p + 1]):
-                at, first, last = occurrences[e], cluster_start[cluster_of[e]], cluster_start[cluster_of[e] + 1]
-                for i in range(last - first):
-                    total += values[at + i] * y[column, first + i]
+                row, cluster = values[occurrences[e]], y[column, cluster_of_row[occurrences[e]]]
+                for i in range(CLUSTER_SIZE):
+                    total += row[i] * cluster[i]
             z[column, p] = total
 
 
@@ -209,7 +218,7 @@ class FactoredInverse:
     """
 
     def __init__(self, stored: StoredEntries, patches: Patches) -> None:
-        self._order, self._cluster_start = stored.order, patches.cluster_start
+        self._order = stored.order
         n, places, starts = len(stored.order), patches.places, patches.cluster_start
         # patches: clusters, those of one leaf together, their own cluster last
         lists, owner = _patch_lists(patches)
@@ -217,19 +226,15 @@ class FactoredInverse:
         counts = size[lists]
         n_rows = np.bincount(owner, counts, len(size)).astype(np.int64)
         self._row_start = np.concatenate([[0], np.cumsum(n_rows)])
-        self._value_start = np.concatenate([[0], np.cumsum(n_rows * size)])
         within = np.arange(int(counts.sum())) - np.repeat(np.cumsum(counts) - counts, counts)
         self._members = places[np.repeat(starts[lists], counts) + within].astype(np.int32)
-        cluster_of_row = np.repeat(np.arange(len(size)), n_rows)
-        value_of_row = self._value_start[cluster_of_row] + (
-            (np.arange(len(self._members)) - self._row_start[cluster_of_row]) * size[cluster_of_row]
-        )
+        self._cluster_of_row = np.repeat(np.arange(len(size), dtype=np.int32), n_rows)
         by_place = np.argsort(self._members, kind="stable")
         self._occurrence_start = np.searchsorted(self._members[by_place], np.arange(n + 1))
-        self._occurrences, self._occurrence_cluster = value_of_row[by_place], cluster_of_row[by_place].astype(np.int32)
+        self._occurrences = by_place.astype(np.int32)
         diagonal = _stored_diagonal(stored)
         self._scale = np.sqrt(stored.unit / diagonal) / stored.areas[stored.order]
-        self._values = np.empty(int(self._value_start[-1]), dtype=np.float32)
+        self._values = np.empty((len(self._members), CLUSTER_SIZE), dtype=np.float32)
         self._fill(stored, patches, 1.0 / np.sqrt(diagonal))
 
     def _fill(self, stored: StoredEntries, patches: Patches, scale: FloatArray) -> None:
@@ -244,7 +249,7 @@ class FactoredInverse:
             np.ascontiguousarray(stored.leaf_start, dtype=np.int64),
             stored.values,
         )
-        rows = (self._row_start, self._value_start, self._members)
+        rows = (self._row_start, self._members)
         for first in range(0, len(patches.leaf), _BLOCK):
             last = min(first + _BLOCK, len(patches.leaf))
             clusters = (first, last, patches.cluster_start, leaf_of_place)
@@ -253,14 +258,14 @@ class FactoredInverse:
     @property
     def bytes(self) -> int:
         """Memory held, bytes."""
-        held = [self._members, self._occurrences, self._occurrence_cluster, self._values, self._scale]
-        held += [self._cluster_start, self._row_start, self._value_start, self._occurrence_start]
+        held = [self._members, self._occurrences, self._cluster_of_row, self._values, self._scale]
+        held += [self._row_start, self._occurrence_start]
         return int(sum(array.nbytes for array in held))
 
     @property
     def mean_patch(self) -> float:
         """Mean number of panels of a patch."""
-        return float(len(self._members) / max(1, len(self._cluster_start) - 1))
+        return float(len(self._members) / max(1, len(self._row_start) - 1))
 
     def apply(self, residual: FloatArray) -> FloatArray:
         """Approximate solution of ``A x = residual``.
@@ -274,10 +279,9 @@ class FactoredInverse:
         (n, n_columns) float
         """
         x = np.ascontiguousarray((residual[self._order] * self._scale[:, None]).T)
-        y = np.empty_like(x)
-        starts = self._cluster_start
-        _forward(starts, self._row_start, self._value_start, self._members, self._values, x, y)
-        _backward(starts, self._occurrence_start, self._occurrences, self._occurrence_cluster, self._values, y, x)
+        y = np.empty((len(x), len(self._row_start) - 1, CLUSTER_SIZE))
+        _forward(self._row_start, self._members, self._values, x, y)
+        _backward(self._occurrence_start, self._occurrences, self._cluster_of_row, self._values, y, x)
         result = np.empty_like(residual)
         result[self._order] = (x * self._scale).T
         return result
