@@ -21,7 +21,14 @@ from .pairs import middle_integral
 from .panels import Panels
 from .polygon import polygon_distance, polygon_potential
 
-__all__ = ["PANELS_AT_ONCE", "PartPotentials", "child_potentials", "part_integral", "self_integrals", "two_level_indicator"]
+__all__ = [
+    "PANELS_AT_ONCE",
+    "PartPotentials",
+    "child_potentials",
+    "part_integral",
+    "self_integrals",
+    "two_level_indicator",
+]
 
 FloatArray = NDArray[np.float64]
 PartPotentials = Callable[[FloatArray, NDArray[np.int64]], FloatArray]

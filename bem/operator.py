@@ -377,16 +377,20 @@ class FastOperator:
 
     def error_at(self, targets: IntArray, density: FloatArray, product: FloatArray) -> float:
         """Relative error of ``product = apply(density)`` at some panels against direct sums."""
+        exact, over = self.direct_rows(targets, density), self.areas[targets, None]
+        scale = np.sqrt(((exact / over) ** 2).sum(axis=0))
+        return float(np.max(np.sqrt((((product[targets] - exact) / over) ** 2).sum(axis=0)) / scale))
+
+    def direct_rows(self, targets: IntArray, density: FloatArray) -> FloatArray:
+        """Rows of ``A @ density`` by direct sums over all panels, (n_targets, n_columns)."""
         origin, chosen = self.plan.tree.origin, np.asarray(targets, dtype=np.int64)
         frames = panel_frames(self.corners[chosen] - origin)
-        exact = np.zeros((len(targets), density.shape[1]))
+        exact = np.zeros((len(chosen), density.shape[1]))
         for first in range(0, len(density), _DIRECT_BLOCK):
             here = slice(first, first + _DIRECT_BLOCK)
             sources = panel_frames(self.corners[here] - origin)
             _direct_rows(frames, chosen - first, sources, np.ascontiguousarray(density[here]), exact)
-        over = self.areas[targets, None]
-        scale = np.sqrt(((exact / over) ** 2).sum(axis=0))
-        return float(np.max(np.sqrt((((product[targets] - exact) / over) ** 2).sum(axis=0)) / scale))
+        return exact
 
 
 @kernel

@@ -39,8 +39,8 @@ class StoredEntries:
         First place of each leaf.
     pairs : (n_blocks, 2) int
         Leaves, the smaller first, in ascending order; each leaf is paired with itself.
-    start : (n_blocks + 1,) int
-        First entry of each block, the first leaf's panels along the rows.
+    start, stride : (n_blocks,) int
+        First entry of each block, the first leaf's panels along the rows, and entries from one row to the next.
     values : (n_entries,) float
         Means of 1/r over pairs of panels, 1/m, times `unit`.
     corners : (n, 4, 3) float, m
@@ -53,6 +53,7 @@ class StoredEntries:
     leaf_start: IntArray
     pairs: IntArray
     start: IntArray
+    stride: IntArray
     values: NDArray[np.floating]
     corners: FloatArray
     areas: FloatArray
@@ -62,11 +63,15 @@ class StoredEntries:
 def stored_entries(operator: FastOperator) -> StoredEntries:
     """Near entries of a fast operator."""
     tree, layout = operator.plan.tree, operator.plan.layout
+    # the blocks of one leaf stand side by side in one matrix
+    leaf = layout.pairs[:, 0]
+    width = np.diff(layout.start) // np.maximum(np.diff(tree.leaf_start), 1)
     return StoredEntries(
         order=tree.order,
         leaf_start=tree.leaf_start,
         pairs=layout.pairs,
-        start=layout.start,
+        start=layout.start[leaf] + layout.column,
+        stride=width[leaf],
         values=operator.near.values,
         corners=operator.corners,
         areas=operator.areas,

@@ -62,7 +62,7 @@ def patch_matrix(members, leaf, stored, scale, points):
     leaf : (m,) int
         Their leaves; members of one leaf stand together.
     stored : tuple
-        pairs, first block of each leaf, start, leaf_start, values; the latter times `unit`.
+        pairs, first block of each leaf, start, stride, leaf_start, values; the latter times `unit`.
     scale : (n,) float
         Reciprocal roots of the stored diagonal.
     points : (n, 3) float
@@ -73,7 +73,7 @@ def patch_matrix(members, leaf, stored, scale, points):
     (m, m) float
         Lower triangle.
     """
-    pairs, head, start, leaf_start, values = stored
+    pairs, head, start, stride, leaf_start, values = stored
     m = len(members)
     matrix = np.zeros((m, m))
     first = 0
@@ -88,7 +88,6 @@ def patch_matrix(members, leaf, stored, scale, points):
                 end += 1
             a, b = leaf[first], leaf[other]
             block = _block_of(pairs, head, min(a, b), max(a, b))
-            width = leaf_start[max(a, b) + 1] - leaf_start[max(a, b)]
             for i in range(first, last):
                 p = members[i]
                 for j in range(other, min(end, i + 1)):
@@ -97,7 +96,7 @@ def patch_matrix(members, leaf, stored, scale, points):
                         row, column = p - leaf_start[a], q - leaf_start[b]
                         if a > b:
                             row, column = column, row
-                        value = float(values[start[block] + row * width + column])
+                        value = float(values[start[block] + row * stride[block] + column])
                     else:
                         value = 1.0 / np.sqrt(((points[p] - points[q]) ** 2).sum())
                     matrix[i, j] = value * scale[p] * scale[q]
@@ -246,6 +245,7 @@ class FactoredInverse:
             np.ascontiguousarray(stored.pairs, dtype=np.int64),
             head,
             np.ascontiguousarray(stored.start, dtype=np.int64),
+            np.ascontiguousarray(stored.stride, dtype=np.int64),
             np.ascontiguousarray(stored.leaf_start, dtype=np.int64),
             stored.values,
         )
@@ -303,7 +303,7 @@ def _stored_diagonal(stored: StoredEntries) -> FloatArray:
     own = np.flatnonzero(stored.pairs[:, 0] == stored.pairs[:, 1])
     size = np.diff(stored.leaf_start)
     within = np.arange(int(stored.leaf_start[-1])) - np.repeat(stored.leaf_start[:-1], size)
-    found = stored.values[np.repeat(stored.start[own], size) + within * (np.repeat(size, size) + 1)]
+    found = stored.values[np.repeat(stored.start[own], size) + within * (np.repeat(stored.stride[own], size) + 1)]
     return np.asarray(found, dtype=np.float64)
 
 

@@ -13,12 +13,15 @@ import numpy as np
 from numpy.typing import NDArray
 from scipy.linalg import lapack
 
+from .block_krylov import solve_block
 from .errors import NumericalError
 from .frames import panel_frames
 from .galerkin import galerkin_matrix
 from .indicator import PartPotentials, child_potentials
 from .operator import FastOperator
 from .panels import Panels
+from .patches import stored_entries
+from .preconditioner import factored_inverse
 from .solution import Notice
 from .threads import blas_threads
 
