@@ -314,6 +314,10 @@ def _judge(result: PassResult, doubts: ShapeDoubts, accuracy: FloatArray, n_pass
         **{cause: np.hstack([part, part.sum(axis=1, keepdims=True)]) for cause, part in result.open.items()},
         **doubts.lines(result.panels, result.density, sums),
     }
+    # a weak coupling that the estimate moves by as much as is left of it is not known better than that
+    added = np.abs((result.limit - result.value) @ sums)
+    unsure = added * np.minimum(added / np.maximum(np.abs(value), 1e-300), 1.0)
+    lines["discretisation"] = np.maximum(lines["discretisation"], unsure)
     total = np.sqrt(sum(line**2 for line in lines.values()))
     return _Judgement(value, lines, total, accuracy_targets(value[:, :n], accuracy), n_passes)
 

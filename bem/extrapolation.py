@@ -58,9 +58,9 @@ JOINT_SHARE = 0.5
 DISPUTED_SHARE = 0.4
 #: Share of the change since the pass before: where errors fall by a factor 0.6 a pass, what is left is 1.5 times it.
 CHANGE_SHARE = 1.5
-#: Expanded uncertainty as a share of the sum without regard to sign over the panels of a body: the parts of a weak
-#: coupling cancel, their errors need not. Seen on two plates with a sheet between that shields them.
-SINGLE_SHARE = 0.05
+#: Expanded uncertainty as a share of what cancels in the sum over the panels of a body: the parts of a weak coupling
+#: cancel, their errors need not. Seen on two plates with a sheet between that shields them, and through a closed shell.
+CANCELLED_SHARE = 0.15
 #: Share of what narrow gaps may hide; measured on discs at 1 % of their size.
 UNSEEN_SHARE = 0.6
 
@@ -260,7 +260,8 @@ def extrapolation_uncertainty(
         share = UNREFINED_SHARE if refined[number] == 0 else SHARE + JOINT_SHARE * abs(1.0 - realised)
         known = np.hypot(share * 0.5 * (one + two), DISPUTED_SHARE * (one - two))
         sizes = 0.5 * (_products(np.abs(first[own])) + _products(np.abs(second[own]))) @ sums
-        spread += np.hypot(known, SINGLE_SHARE * sizes) + UNSEEN_SHARE * np.abs(_products(unseen[own]) @ sums)
+        cancelled = sizes - 0.5 * np.abs(one + two)
+        spread += np.hypot(known, CANCELLED_SHARE * cancelled) + UNSEEN_SHARE * np.abs(_products(unseen[own]) @ sums)
     return spread if change is None else np.hypot(spread, CHANGE_SHARE * change @ sums)
 
 

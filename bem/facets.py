@@ -50,7 +50,7 @@ FACET_SHARE = 0.004
 #: To it is added this multiple of the square of the facet's depth per width, for what is of second order: of flat pairs
 #: of triangles, where 2.0 was seen on tori of 8 to 16 sides and 1.5 on spheres of 6 rings, and of single triangles,
 #: where it was 0.6 on spheres and spheroids.
-DEPTH_SHARE, SINGLE_DEPTH_SHARE = 1.5, 0.8
+DEPTH_SHARE, SINGLE_DEPTH_SHARE = 2.0, 0.8
 #: Rims: likewise a share; their coefficient is read off one panel.
 RIM_SHARE = 0.08
 #: Near another conductor the facet's hollow counts once more, in second order: this multiple of its depth per gap. The

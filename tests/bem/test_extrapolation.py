@@ -2,13 +2,13 @@ import numpy as np
 import pytest
 
 from daraf.bem.extrapolation import (
+    CANCELLED_SHARE,
     EDGE_SHOWN,
     GREATEST_DECAY,
     GREATEST_REALISED,
     LEAST_REALISED,
     RIM_SHOWN,
     SHARE,
-    SINGLE_SHARE,
     SMOOTH_DECAY,
     UNREFINED_SHARE,
     UNSEEN_SHARE,
@@ -119,12 +119,20 @@ def _uncertainty(first, second, refined, unseen=0.0, realised=1.0):
 
 def test_opinions_that_agree_leave_their_share_and_those_that_differ_leave_more():
     # squares of square roots
-    assert _uncertainty(0.1, 0.1, 3) == pytest.approx(0.1 * np.hypot(SHARE, SINGLE_SHARE), rel=1e-14)
-    assert _uncertainty(0.1, 0.1, 0) == pytest.approx(0.1 * np.hypot(UNREFINED_SHARE, SINGLE_SHARE), rel=1e-14)
+    assert _uncertainty(0.1, 0.1, 3) == pytest.approx(0.1 * SHARE, rel=1e-14)
+    assert _uncertainty(0.1, 0.1, 0) == pytest.approx(0.1 * UNREFINED_SHARE, rel=1e-14)
     # one that sees nothing must not pass for certainty
     assert _uncertainty(0.0, 0.1, 3) > 0.04
     assert _uncertainty(0.1, 0.0, 3) > 0.04
-    assert _uncertainty(0.1, 0.1, 3, unseen=0.2) == pytest.approx(
-        0.1 * np.hypot(SHARE, SINGLE_SHARE) + 0.2 * UNSEEN_SHARE, rel=1e-14
-    )
+    assert _uncertainty(0.1, 0.1, 3, unseen=0.2) == pytest.approx(0.1 * SHARE + 0.2 * UNSEEN_SHARE, rel=1e-14)
     assert _uncertainty(0.1, 0.1, 3, realised=0.5) > 3.0 * _uncertainty(0.1, 0.1, 3)
+
+
+def test_parts_of_a_coupling_that_cancel_leave_a_share_of_what_they_are():
+    opinion = np.zeros((2, 2, 2))
+    opinion[0, 0], opinion[1, 0] = [0.3, 0.2], [0.3, -0.2]
+    body, refined = np.zeros(2, np.int64), np.array([3])
+    found = extrapolation_uncertainty(opinion, opinion, np.zeros((2, 2, 2)), body, None, np.eye(2), refined, 1.0)
+    # by hand: the self entry sums 2 x 0.09, the coupling 0.06 - 0.06
+    assert found[0, 0] == pytest.approx(0.18 * SHARE, rel=1e-14)
+    assert found[0, 1] == pytest.approx(0.12 * CANCELLED_SHARE, rel=1e-14)
