@@ -34,7 +34,7 @@ FloatArray = NDArray[np.float64]
 PartPotentials = Callable[[FloatArray, NDArray[np.int64]], FloatArray]
 
 #: Panels whose parts are packed at once.
-PANELS_AT_ONCE = 20_000
+PANELS_AT_ONCE = 4_000
 
 #: Centre distance over the sum of the radii of panel and source, beyond which one point on the part and one on
 #: the source, or two by two on the source, are enough.
