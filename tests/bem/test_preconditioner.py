@@ -125,7 +125,7 @@ def test_memory_is_counted_and_progress_told():
 @pytest.mark.slow
 @pytest.mark.parametrize("grade", [1.0, 4.0])
 def test_counts_of_iterations_stay_flat(grade):
-    """Panels from 200 to 3200, gap 1 %, aspect up to 1e3: the count to 1e-8 grows by two at most."""
+    """Panels from 200 to 3200, gap 1 %, aspect up to 3e4: the count to 1e-8 grows by two at most."""
     counts = []
     for n in (10, 20, 40):
         corners, matrix, right, _ = sheets(n, grade=grade)
