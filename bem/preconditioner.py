@@ -9,6 +9,7 @@ smooth distributions that patches cannot see are found by the conjugate gradient
 (scripts/bench/iterations.py).
 """
 
+from collections.abc import Callable
 from typing import Protocol
 
 import numpy as np
@@ -21,6 +22,7 @@ __all__ = ["FactoredInverse", "Preconditioner", "factored_inverse"]
 
 FloatArray = NDArray[np.float64]
 IntArray = NDArray[np.int64]
+Progress = Callable[[float, float], None]
 
 #: Pivots of a patch, of a matrix with ones on its diagonal, are kept above this: panels that coincide, and entries
 #: stored in single precision, leave less.
@@ -188,16 +190,34 @@ def _forward(row_start, members, values, x, y):
 
 
 @parallel_kernel(fastmath=_REORDER)
-def _backward(occurrence_start, occurrences, cluster_of_row, values, y, z):
-    """``z = G^T y``: each place gathers from the clusters in whose patch it is."""
+def _row_products(row_start, values, y, products):
+    """Product of each row of values with the part of y (n_clusters, CLUSTER_SIZE) of its cluster."""
+    for c in prange(len(row_start) - 1):
+        own, k, last = y[c], row_start[c], row_start[c + 1]
+        while k + 2 <= last:
+            v0, v1 = values[k], values[k + 1]
+            t0, t1 = 0.0, 0.0
+            for i in range(CLUSTER_SIZE):
+                t0 += v0[i] * own[i]
+                t1 += v1[i] * own[i]
+            products[k], products[k + 1] = t0, t1
+            k += 2
+        while k < last:
+            v0, t0 = values[k], 0.0
+            for i in range(CLUSTER_SIZE):
+                t0 += v0[i] * own[i]
+            products[k] = t0
+            k += 1
+
+
+@parallel_kernel
+def _gather(occurrence_start, occurrences, products, z):
+    """Sum the products of the rows that belong to each place: with `_row_products` the transpose of `_forward`."""
     for p in prange(len(occurrence_start) - 1):
-        for column in range(len(y)):
-            total = 0.0
-            for e in range(occurrence_start[p], occurrence_start[p + 1]):
-                row, cluster = values[occurrences[e]], y[column, cluster_of_row[occurrences[e]]]
-                for i in range(CLUSTER_SIZE):
-                    total += row[i] * cluster[i]
-            z[column, p] = total
+        total = 0.0
+        for e in range(occurrence_start[p], occurrence_start[p + 1]):
+            total += products[occurrences[e]]
+        z[p] = total
 
 
 class FactoredInverse:
@@ -207,6 +227,8 @@ class FactoredInverse:
     ----------
     stored : StoredEntries
     patches : Patches
+    progress : callable, optional
+        Told (clusters done, in all); it may raise to interrupt.
 
     Attributes
     ----------
@@ -216,7 +238,7 @@ class FactoredInverse:
         Mean number of panels of a patch.
     """
 
-    def __init__(self, stored: StoredEntries, patches: Patches) -> None:
+    def __init__(self, stored: StoredEntries, patches: Patches, progress: Progress | None = None) -> None:
         self._order = stored.order
         n, places, starts = len(stored.order), patches.places, patches.cluster_start
         # patches: clusters, those of one leaf together, their own cluster last
@@ -227,16 +249,15 @@ class FactoredInverse:
         self._row_start = np.concatenate([[0], np.cumsum(n_rows)])
         within = np.arange(int(counts.sum())) - np.repeat(np.cumsum(counts) - counts, counts)
         self._members = places[np.repeat(starts[lists], counts) + within].astype(np.int32)
-        self._cluster_of_row = np.repeat(np.arange(len(size), dtype=np.int32), n_rows)
         by_place = np.argsort(self._members, kind="stable")
         self._occurrence_start = np.searchsorted(self._members[by_place], np.arange(n + 1))
         self._occurrences = by_place.astype(np.int32)
         diagonal = _stored_diagonal(stored)
         self._scale = np.sqrt(stored.unit / diagonal) / stored.areas[stored.order]
         self._values = np.empty((len(self._members), CLUSTER_SIZE), dtype=np.float32)
-        self._fill(stored, patches, 1.0 / np.sqrt(diagonal))
+        self._fill(stored, patches, 1.0 / np.sqrt(diagonal), progress)
 
-    def _fill(self, stored: StoredEntries, patches: Patches, scale: FloatArray) -> None:
+    def _fill(self, stored: StoredEntries, patches: Patches, scale: FloatArray, progress: Progress | None) -> None:
         n_leaves = len(stored.leaf_start) - 1
         head = np.searchsorted(stored.pairs[:, 0], np.arange(n_leaves + 1))
         leaf_of_place = np.repeat(np.arange(n_leaves), np.diff(stored.leaf_start))
@@ -254,11 +275,13 @@ class FactoredInverse:
             last = min(first + _BLOCK, len(patches.leaf))
             clusters = (first, last, patches.cluster_start, leaf_of_place)
             _factor(clusters, entries, scale, points, rows, self._values)
+            if progress is not None:
+                progress(float(last), float(len(patches.leaf)))
 
     @property
     def bytes(self) -> int:
         """Memory held, bytes."""
-        held = [self._members, self._occurrences, self._cluster_of_row, self._values, self._scale]
+        held = [self._members, self._occurrences, self._values, self._scale]
         held += [self._row_start, self._occurrence_start]
         return int(sum(array.nbytes for array in held))
 
@@ -281,7 +304,10 @@ class FactoredInverse:
         x = np.ascontiguousarray((residual[self._order] * self._scale[:, None]).T)
         y = np.empty((len(x), len(self._row_start) - 1, CLUSTER_SIZE))
         _forward(self._row_start, self._members, self._values, x, y)
-        _backward(self._occurrence_start, self._occurrences, self._cluster_of_row, self._values, y, x)
+        products = np.empty(len(self._members))
+        for column in range(len(x)):
+            _row_products(self._row_start, self._values, y[column], products)
+            _gather(self._occurrence_start, self._occurrences, products, x[column])
         result = np.empty_like(residual)
         result[self._order] = (x * self._scale).T
         return result
@@ -307,16 +333,18 @@ def _stored_diagonal(stored: StoredEntries) -> FloatArray:
     return np.asarray(found, dtype=np.float64)
 
 
-def factored_inverse(stored: StoredEntries) -> FactoredInverse:
+def factored_inverse(stored: StoredEntries, progress: Progress | None = None) -> FactoredInverse:
     """Sparse factored inverse of a Galerkin matrix.
 
     Parameters
     ----------
     stored : StoredEntries
         Its entries among neighbours.
+    progress : callable, optional
+        Told (clusters done, in all); it may raise to interrupt.
 
     Returns
     -------
     FactoredInverse
     """
-    return FactoredInverse(stored, make_patches(stored))
+    return FactoredInverse(stored, make_patches(stored), progress)
