@@ -96,7 +96,7 @@ class _Means:
     most: int
 
 
-def solve_capacitance(
+def solve_capacitance(  # noqa: PLR0913  the one door to the main job
     surface: Surface,
     *,
     relative_permittivity: float = 1.0,

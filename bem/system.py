@@ -25,7 +25,17 @@ from .preconditioner import factored_inverse
 from .solution import Notice
 from .threads import blas_threads
 
-__all__ = ["Carried", "DenseSystem", "FastSystem", "Solved", "System", "far_tolerance", "make_system", "uses_fast"]
+__all__ = [
+    "Carried",
+    "DenseSystem",
+    "FastSystem",
+    "Solved",
+    "System",
+    "factorise",
+    "far_tolerance",
+    "make_system",
+    "uses_fast",
+]
 
 FloatArray = NDArray[np.float64]
 IntArray = NDArray[np.int64]
@@ -138,23 +148,7 @@ class DenseSystem:
             If the matrix is not positive definite.
         """
         report("factorisation", 0.0, 1.0)
-        matrix, notices = self.matrix, []
-        # a small factorisation gains nothing from threads and waits long for them where the machine is busy
-        with blas_threads(1 if len(matrix) < SERIAL else None):
-            factor, info = _cholesky(matrix, 1.0)
-            if info != 0:
-                factor, info = _cholesky(matrix, 1.0 + COINCIDENT)
-                text = (
-                    "panels coincide: bodies of one conductor overlap or touch along a face; the capacitances hold, "
-                    "but how the charge is shared there is arbitrary"
-                )
-                notices.append(Notice("coincident-panels", text))
-            if info != 0:
-                raise NumericalError(
-                    f"the matrix of {len(matrix)} panels is not positive definite: panels coincide or cross"
-                )
-            density, _ = lapack.dpotrs(factor, charges, lower=0)
-        density = np.ascontiguousarray(density)
+        density, notices = factorise(self.matrix, charges)
         value = charges.T @ density
         return Solved(density, 0.5 * (value + value.T), notices=notices)
 
@@ -175,6 +169,45 @@ class DenseSystem:
     def carried(self, kept: IntArray) -> Carried:
         """See :class:`System`."""
         return Carried(kept, matrix=self.matrix[np.ix_(kept, kept)])
+
+
+def factorise(matrix: FloatArray, charges: FloatArray) -> tuple[FloatArray, list[Notice]]:
+    """Densities by Cholesky factorisation.
+
+    Parameters
+    ----------
+    matrix : (n, n) float, m3
+        Lower triangle.
+    charges : (n, n_columns) float
+
+    Returns
+    -------
+    density : (n, n_columns) float
+    notices : list of Notice
+        If panels coincide.
+
+    Raises
+    ------
+    NumericalError
+        If the matrix is not positive definite.
+    """
+    notices = []
+    # a small factorisation gains nothing from threads and waits long for them where the machine is busy
+    with blas_threads(1 if len(matrix) < SERIAL else None):
+        factor, info = _cholesky(matrix, 1.0)
+        if info != 0:
+            factor, info = _cholesky(matrix, 1.0 + COINCIDENT)
+            text = (
+                "panels coincide: bodies of one conductor overlap or touch along a face; the capacitances hold, "
+                "but how the charge is shared there is arbitrary"
+            )
+            notices.append(Notice("coincident-panels", text))
+        if info != 0:
+            raise NumericalError(
+                f"the matrix of {len(matrix)} panels is not positive definite: panels coincide or cross"
+            )
+        density, _ = lapack.dpotrs(factor, charges, lower=0)
+    return np.ascontiguousarray(density), notices
 
 
 def _cholesky(matrix: FloatArray, diagonal: float) -> tuple[FloatArray, int]:

@@ -193,7 +193,8 @@ def test_parts_agree_with_direct_sums(name):
     operator = FastOperator(corners)
     density = densities(operator.areas, 2)
     exact = np.empty((len(corners), 4, 2))
-    child_potentials(parts, panel_frames(corners), density, exact, 0, len(corners))
+    frames = panel_frames(corners)
+    child_potentials(parts, frames, frames, density, exact)
     chosen = np.random.default_rng(2).permutation(len(corners))
     result = operator.at_parts(parts[chosen], operator.expand(density), chosen)
     filled = parts[chosen, :, AREA] > 0
