@@ -29,6 +29,8 @@ Progress = Callable[[float, float], None]
 
 #: Below this tolerance all is stored in double precision: single precision ends at 2.5e-7.
 _SINGLE = 1e-6
+#: From this tolerance on the rules of close pairs may leave 1e-5 of each.
+_COARSE = 5e-6
 #: Panels of a leaf that are tried.
 _LEAF_SIZES = (32, 64, 128)
 #: Cost of translating from one cell to one other, and of each product in it, over that of a near entry: bytes read
@@ -73,7 +75,7 @@ def settings_for(tolerance: float) -> Settings:
     tubes and graded plates (tests/bem/test_operator.py).
     """
     degree = int(np.clip(np.ceil(7.6 - 2.5 * np.log10(tolerance / 1e-5)), 3, 18))
-    expand_beyond = max(3.2, 4.5 * (tolerance / 1e-5) ** -0.28)
+    expand_beyond = max(3.2, 5.8 * (tolerance / 1e-5) ** -0.28)
     gauss_beyond = max(1.8, 2.0 * (tolerance / 1e-5) ** -0.17)
     real = np.float32 if tolerance >= _SINGLE else np.float64
     return Settings(degree, 0.7, 6.0 * tolerance, expand_beyond, gauss_beyond, real)
@@ -229,11 +231,12 @@ class FastOperator:
         with one_blas_thread():
             self.far.prepare()
             old = None if previous is None or known is None else Known(previous.near, known)
+            rules = (settings.expand_beyond, settings.gauss_beyond, float(tolerance >= _COARSE))
             self.near: NearBlocks = NearBlocks(
                 tree,
                 self.plan.layout,
                 self.far.corners,
-                (settings.expand_beyond, settings.gauss_beyond),
+                rules,
                 settings.real,
                 old,
                 progress,

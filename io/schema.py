@@ -291,7 +291,7 @@ class CaseContent(_Table):
     facets: Facets = "auto"
     method: Literal["auto", "dense", "fast"] = Field(
         "auto",
-        description="how the equations are solved: dense (full matrix), fast (multipoles and iteration), or auto: by size",
+        description="how the equations are solved: dense (full matrix), fast (multipoles, iteration), auto: by size",
     )
     want: tuple[tuple[str, str], ...] = Field(
         (), description="couplings that must meet the accuracy, as pairs of conductors; all if left out"
