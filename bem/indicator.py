@@ -25,6 +25,7 @@ __all__ = [
     "PANELS_AT_ONCE",
     "PartPotentials",
     "child_potentials",
+    "direct_part_potentials",
     "part_integral",
     "self_integrals",
     "two_level_indicator",
@@ -35,6 +36,8 @@ PartPotentials = Callable[[FloatArray, NDArray[np.int64]], FloatArray]
 
 #: Panels whose parts are packed at once.
 PANELS_AT_ONCE = 4_000
+#: Pairs of panels per call of a kernel.
+_PAIRS_AT_ONCE = 400_000
 
 #: Centre distance over the sum of the radii of panel and source, beyond which one point on the part and one on
 #: the source, or two by two on the source, are enough.
@@ -144,6 +147,33 @@ def _thirds_gram(parts, gram):
             for d in range(c):
                 gram[p, c, d] = close_pair_integral(parts[p, c], parts[p, d])
                 gram[p, d, c] = gram[p, c, d]
+
+
+def direct_part_potentials(panels: Panels, density: FloatArray) -> PartPotentials:
+    """Potentials of parts by sums over all panels.
+
+    Parameters
+    ----------
+    panels : Panels
+    density : (n_panels, n_conductors) float
+        Bare charge densities.
+
+    Returns
+    -------
+    callable
+        ``part_potentials(parts, rows)`` of :func:`two_level_indicator`.
+    """
+    frames = panel_frames(panels.corners, largest_rule=4)
+    step = max(8, _PAIRS_AT_ONCE // len(frames))
+
+    def part_potentials(parts: FloatArray, rows: NDArray[np.int64]) -> FloatArray:
+        moments = np.empty((len(rows), parts.shape[1], density.shape[1]))
+        for first in range(0, len(rows), step):
+            here = slice(first, first + step)
+            child_potentials(parts[here], frames[rows[here]], frames, density, moments[here])
+        return moments
+
+    return part_potentials
 
 
 def two_level_indicator(

@@ -15,9 +15,8 @@ from scipy.linalg import lapack
 
 from .block_krylov import solve_block
 from .errors import NumericalError
-from .frames import panel_frames
 from .galerkin import galerkin_matrix
-from .indicator import PartPotentials, child_potentials
+from .indicator import PartPotentials, direct_part_potentials
 from .operator import FastOperator
 from .panels import Panels
 from .patches import stored_entries
@@ -45,8 +44,10 @@ Progress = Callable[[str, float, float], None]
 COINCIDENT = 1e-10
 #: Below this many panels LAPACK runs on one thread.
 SERIAL = 3000
-#: From this many panels on the fast operator is used. Measured by ``scripts/bench/scale.py --crossover``.
-CROSS_OVER = 6000
+#: From this many panels on the fast operator is used. A pass over two balls of together 1,000, 2,000, 3,000, 5,000 and
+#: 8,000 panels took the dense matrix 1.3, 2.0, 4.5, 7.2 and 8.7 times the processor time (scripts/bench/crossover.py);
+#: small models need not wait until the kernels of the fast path are compiled.
+CROSS_OVER = 2_000
 #: Relative error of a product, per relative uncertainty asked: its effect on the capacitances is measured and lies
 #: well below, since errors of single panels average out.
 FAR_SHARE = 1e-3
@@ -58,8 +59,6 @@ ALONE_SHARE, COUPLED_SHARE = 1e-2, 1e-4
 MOST_ITERATIONS = 300
 #: Panels sampled for every conductor to measure what the expansions do to the capacitances.
 SAMPLES = 60
-#: Pairs of panels per call of a kernel.
-_PAIRS_AT_ONCE = 400_000
 
 
 @dataclass(frozen=True, eq=False)
@@ -154,17 +153,7 @@ class DenseSystem:
 
     def read(self, density: FloatArray) -> PartPotentials:
         """See :class:`System`."""
-        frames = panel_frames(self._panels.corners, largest_rule=4)
-        step = max(8, _PAIRS_AT_ONCE // len(frames))
-
-        def potentials(parts: FloatArray, rows: IntArray) -> FloatArray:
-            moments = np.empty((len(rows), parts.shape[1], density.shape[1]))
-            for first in range(0, len(rows), step):
-                here = slice(first, first + step)
-                child_potentials(parts[here], frames[rows[here]], frames, density, moments[here])
-            return moments
-
-        return potentials
+        return direct_part_potentials(self._panels, density)
 
     def carried(self, kept: IntArray) -> Carried:
         """See :class:`System`."""
