@@ -7,15 +7,17 @@ put on the line between its neighbours and drop out of the inner polygon, and fu
 vertices are left: no fan of needles remains for the inside.
 """
 
+from collections.abc import Iterator, Sequence
 from dataclasses import dataclass
 from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
 
-from .outlines import Outline, signed_area
+from .outlines import Outline, last_of, next_of, signed_area
+from .room import circle_radii
 
-__all__ = ["banded", "divide_long_edges"]
+__all__ = ["bands_along", "divide_long_edges"]
 
 FloatArray = NDArray[np.float64]
 IntArray = NDArray[np.int64]
@@ -52,9 +54,9 @@ class _Loop:
     def bisectors(self) -> tuple[FloatArray, FloatArray]:
         """Inset per unit width of each vertex (n, 2) and cotangent of half the corner angle."""
         p = self.points
-        out = np.roll(p, -1, axis=0) - p
+        out = next_of(p) - p
         out = out / np.hypot(out[:, 0], out[:, 1])[:, None]
-        into = np.roll(out, 1, axis=0)
+        into = last_of(out)
         cross = into[:, 0] * out[:, 1] - into[:, 1] * out[:, 0]
         dot = np.einsum("ij,ij->i", into, out)
         half = np.tan(0.5 * np.arctan2(cross, dot))
@@ -66,17 +68,17 @@ class _Loop:
     def inset(self) -> FloatArray:
         """Inset vertices, (n, 2)."""
         q = self.points + self.heights[:, None] * self.bisectors()[0]
-        middle = 0.5 * (np.roll(q, 1, axis=0) + np.roll(q, -1, axis=0))
+        middle = 0.5 * (last_of(q) + next_of(q))
         return np.where(self.merged[:, None], middle, q)
 
     def quads(self) -> FloatArray:
         """Quadrilaterals between outline and inset, (n, 4, 2)."""
         p, q = self.points, self.inset()
-        return np.stack([p, np.roll(p, -1, axis=0), np.roll(q, -1, axis=0), q], axis=1)
+        return np.stack([p, next_of(p), next_of(q), q], axis=1)
 
 
-def banded(outline: Outline, rings: int) -> tuple[FloatArray, Outline, Outline]:
-    """Put bands of quadrilaterals along the outline of a polygon.
+def bands_along(outline: Outline, rings: int) -> Iterator[tuple[FloatArray, Outline, Outline]]:
+    """Put bands of quadrilaterals along the outline of a polygon: one ring, then as many as are of use.
 
     Parameters
     ----------
@@ -84,8 +86,8 @@ def banded(outline: Outline, rings: int) -> tuple[FloatArray, Outline, Outline]:
     rings : int
         Most rings along a round loop; one along the others.
 
-    Returns
-    -------
+    Yields
+    ------
     quads : (n, 4, 2) float, m
     divided : Outline
         The outline with the vertices at which long edges were divided.
@@ -114,15 +116,18 @@ def banded(outline: Outline, rings: int) -> tuple[FloatArray, Outline, Outline]:
             loop.active and 3 * loop.merged.sum() >= len(loop.points) and len(left) > FEW_EDGES
             for loop, left in zip(loops, inner, strict=True)
         ]
+        if ring == 0:
+            yield np.concatenate(quads), divided, current
         if not any(active):
             break
-    return np.concatenate(quads), divided, current
+    if ring > 0:
+        yield np.concatenate(quads), divided, current
 
 
 def _samples(loops: list[FloatArray]) -> tuple[FloatArray, FloatArray, IntArray, FloatArray]:
     """Points along the edges: positions, inward normals, edge numbers, edge lengths."""
     start = np.concatenate(loops)
-    step = np.concatenate([np.roll(loop, -1, axis=0) - loop for loop in loops])
+    step = np.concatenate([next_of(loop) - loop for loop in loops])
     length = np.hypot(step[:, 0], step[:, 1])
     count = np.clip(np.ceil(100 * length / length.sum()), 1, 24).astype(np.int64)
     # On a round outline only the middle of an edge tells the room: near its ends the next edge is close.
@@ -142,40 +147,31 @@ def _split(values: NDArray[Any], loops: list[FloatArray]) -> list[NDArray[Any]]:
 
 def _is_round(loop: FloatArray) -> BoolArray:
     """Edges of a loop with slight turns at both ends and neighbours of similar length."""
-    step = np.roll(loop, -1, axis=0) - loop
-    length, last = np.hypot(step[:, 0], step[:, 1]), np.roll(step, 1, axis=0)
+    step = next_of(loop) - loop
+    length, last = np.hypot(step[:, 0], step[:, 1]), last_of(step)
     turn = np.arctan2(last[:, 0] * step[:, 1] - last[:, 1] * step[:, 0], (last * step).sum(axis=1))
     slight = np.abs(turn) < ROUND_TURN
-    shortest = np.minimum(np.roll(length, 1), np.roll(length, -1))
-    return np.asarray(slight & np.roll(slight, -1) & (length < 2.5 * shortest))
+    shortest = np.minimum(last_of(length), next_of(length))
+    return np.asarray(slight & next_of(slight) & (length < 2.5 * shortest))
 
 
 def _radii(loops: list[FloatArray]) -> tuple[FloatArray, IntArray]:
     """Radius of the largest circle inside that touches the outline at each sample; edge of each sample."""
     points, normals, edge, _ = _samples(loops)
     numbers = np.arange(sum(map(len, loops)))
-    following = np.concatenate([np.roll(part, -1) for part in _split(numbers, loops)])
+    following = np.concatenate([next_of(part) for part in _split(numbers, loops)])
     preceding = np.empty_like(following)
     preceding[following] = numbers
     corners = np.concatenate(loops)
     after, before = _shielded(corners, following, preceding)
-    radii = np.empty(len(points))
-    for block in range(0, len(points), 256):
-        rows = slice(block, block + 256)
-        own = edge[rows, None]
-        near = (edge == own) | (edge == following[own]) | (edge == preceding[own])
-        ends = (numbers == own) | (numbers == following[own])
-        ends |= (numbers == after[own]) | (numbers == before[own])
-        best = np.full(len(own), np.inf)
-        for targets, skip in ((points, near), (corners, ends)):
-            x = targets[None, :, :] - points[rows, None, :]
-            height = np.einsum("ijk,ik->ij", x, normals[rows])
-            square = (x * x).sum(axis=2)
-            ok = ~skip & (height > 1e-9 * np.sqrt(square))
-            circle = np.where(ok, square / (2 * np.where(ok, height, 1.0)), np.inf)
-            best = np.minimum(best, circle.min(axis=1))
-        radii[rows] = best
-    return radii, edge
+    near = np.column_stack([numbers, following, preceding])
+    ends = np.column_stack([numbers, following, after, before])
+    return circle_radii(points, normals, edge, near, corners, ends), edge
+
+
+def _by_edge(values: FloatArray, edge: IntArray) -> list[FloatArray]:
+    """Values of the samples of each edge."""
+    return np.split(values, np.flatnonzero(np.diff(edge)) + 1)
 
 
 def _shielded(corners: FloatArray, following: IntArray, preceding: IntArray) -> tuple[IntArray, IntArray]:
@@ -195,14 +191,14 @@ def _divided(outline: Outline) -> Outline:
     """Halve edges along which the room inside varies much."""
     radii, edge = _radii(outline.loops)
     places = []
-    for k, length in enumerate(_lengths(outline.loops).tolist()):
-        places.append(_halve(radii[edge == k], 0.0, 1.0, length, HALVINGS))
+    for room, length in zip(_by_edge(radii, edge), _lengths(outline.loops).tolist(), strict=True):
+        places.append(_halve(room, 0.0, 1.0, length, HALVINGS))
     return _with_pieces(outline, places)
 
 
 def _lengths(loops: list[FloatArray]) -> FloatArray:
     """Lengths of all edges."""
-    return np.concatenate([np.hypot(*(np.roll(loop, -1, axis=0) - loop).T) for loop in loops])
+    return np.concatenate([np.hypot(*(next_of(loop) - loop).T) for loop in loops])
 
 
 def _with_pieces(outline: Outline, places: list[list[float]]) -> Outline:
@@ -211,15 +207,25 @@ def _with_pieces(outline: Outline, places: list[list[float]]) -> Outline:
     for loop, flags in zip(outline.loops, outline.sharp, strict=True):
         own = places[first : first + len(loop)]
         count = [len(shares) for shares in own]
-        step = np.repeat(np.roll(loop, -1, axis=0) - loop, count, axis=0)
+        step = np.repeat(next_of(loop) - loop, count, axis=0)
         loops.append(np.repeat(loop, count, axis=0) + np.concatenate(own)[:, None] * step)
         sharp.append(np.repeat(flags, count))
         first += len(loop)
     return Outline(loops, sharp)
 
 
-def divide_long_edges(outline: Outline, factor: float) -> Outline:
-    """Divide edges longer than `factor` radii of the largest circle that touches them from inside.
+def divide_long_edges(outline: Outline, factors: Sequence[float]) -> list[Outline]:
+    """Divide edges longer than a factor times the radius of the largest circle that touches them from inside.
+
+    Parameters
+    ----------
+    outline : Outline
+    factors : sequence of float
+
+    Returns
+    -------
+    list of Outline
+        One for each factor.
 
     Raises
     ------
@@ -228,11 +234,17 @@ def divide_long_edges(outline: Outline, factor: float) -> Outline:
     """
     radii, edge = _radii(outline.loops)
     lengths = _lengths(outline.loops).tolist()
-    return _with_pieces(outline, [_cut(radii[edge == k] * factor, a) for k, a in enumerate(lengths)])
+    room = _by_edge(radii, edge)
+    return [
+        _with_pieces(outline, [_cut(one * factor, a) for one, a in zip(room, lengths, strict=True)])
+        for factor in factors
+    ]
 
 
 def _cut(allowed: FloatArray, length: float) -> list[float]:
     """Starts of the pieces of an edge (as shares of it), each about as long as allowed where it lies."""
+    if length * float((1.0 / allowed).sum()) < 1.49 * len(allowed):  # most edges: below one and a half pieces
+        return [0.0]
     wanted = np.cumsum(np.full(len(allowed), length / len(allowed)) / allowed)
     count = min(int(wanted[-1] + 0.5), 4 * len(allowed))
     if count < 2:
@@ -274,16 +286,16 @@ def _start(points: FloatArray, reach: FloatArray, active: bool) -> _Loop:
     loop = _Loop(points, active, reach, np.zeros(len(points)), np.zeros(len(points), bool))
     if not active:
         return loop
-    widths = WIDTH * np.minimum(reach, np.roll(reach, 1))
-    length = np.linalg.norm(np.roll(points, -1, axis=0) - points, axis=1)
+    widths = WIDTH * np.minimum(reach, last_of(reach))
+    length = np.linalg.norm(next_of(points) - points, axis=1)
     cotangent = loop.bisectors()[1]
-    widths = np.minimum(widths, 2 * np.minimum(length, np.roll(length, 1)) + 4 * length.sum() / len(length))
+    widths = np.minimum(widths, 2 * np.minimum(length, last_of(length)) + 4 * length.sum() / len(length))
     for _ in range(4):  # each pass narrows the ends of edges whose mitres would meet
         used = widths * cotangent
-        used = used + np.roll(used, -1)
+        used = used + next_of(used)
         factor = np.minimum(1.0, (1 - KEPT) * length / np.maximum(used, 1e-300))
         factor[used <= 0] = 1.0
-        widths = widths * np.minimum(factor, np.roll(factor, 1))
+        widths = widths * np.minimum(factor, last_of(factor))
     loop.heights = widths
     loop.merged = _mergeable(loop)
     return loop
@@ -292,12 +304,12 @@ def _start(points: FloatArray, reach: FloatArray, active: bool) -> _Loop:
 def _mergeable(loop: _Loop) -> BoolArray:
     """Every second vertex of round parts whose inset edges are short against the width."""
     q = loop.inset()
-    short = np.linalg.norm(np.roll(q, -1, axis=0) - q, axis=1)
-    before = np.roll(short, 1)
+    short = np.linalg.norm(next_of(q) - q, axis=1)
+    before = last_of(short)
     turn = 2 * np.abs(np.arctan(loop.bisectors()[1]))
     even = np.maximum(short, before) < 2.5 * np.minimum(short, before)
     fit = (turn < ROUND_TURN) & even & (np.maximum(short, before) < SHORT * loop.heights)
-    fit &= np.roll(turn, 1) < ROUND_TURN
+    fit &= last_of(turn) < ROUND_TURN
     merged = np.zeros(len(fit), bool)
     for k in range(len(fit)):
         merged[k] = fit[k] and not merged[k - 1] and not (k == len(fit) - 1 and merged[0])
@@ -309,13 +321,13 @@ def _repair(loop: _Loop) -> bool:
     if not loop.active:
         return True
     quads = loop.quads()
-    into, out = quads - np.roll(quads, 1, axis=1), np.roll(quads, -1, axis=1) - quads
+    into, out = quads - quads[:, [3, 0, 1, 2]], quads[:, [1, 2, 3, 0]] - quads
     cross = into[..., 0] * out[..., 1] - into[..., 1] * out[..., 0]
     scale = np.linalg.norm(into, axis=2) * np.linalg.norm(out, axis=2)
     bad = (cross <= LEAST_SINE * scale).any(axis=1)
     if not bad.any():
         return True
-    ends = bad | np.roll(bad, 1)
+    ends = bad | last_of(bad)
     loop.heights[ends & ~loop.merged] *= 0.7
     loop.merged &= ~ends
     return False

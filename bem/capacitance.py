@@ -9,6 +9,7 @@ from numpy.typing import NDArray
 
 from .account import account_bodies, change_notices, facet_notices
 from .adaptive import PassResult, Plan, plan_next, run_pass
+from .coarse import region_deviation, take_as_drawn
 from .constants import FOUR_PI_EPSILON_0
 from .creases import find_creases
 from .errors import InputError
@@ -165,8 +166,8 @@ def solve_capacitance(  # noqa: PLR0913  the one door to the main job
     limit = memory_limit if memory_limit is not None else int(0.9 * free_memory())
     report = progress or _silent
     report("panels", 0.0, 1.0, "")
-    start, round_parts, notices, bodies = _prepare(surface, meaning, limit, method)
-    doubts = ShapeDoubts(round_parts, rounding)
+    start, round_parts, coarse, notices, bodies = _prepare(surface, meaning, limit, method)
+    doubts = ShapeDoubts(round_parts, rounding, coarse)
     means = _Means(method, limit, _most_panels(len(start.panels), surface.n_conductors, limit, method))
     goal = Goal(accuracy, means.most, surface.conductor_names)
     seconds = {"panels": time.perf_counter() - begin}
@@ -241,14 +242,17 @@ def _silent(stage: str, done: float, total: float, note: str = "") -> None:
 
 def _prepare(
     surface: Surface, meaning: str, limit: int, method: str
-) -> tuple[Plan, Facets | None, list[Notice], tuple[BodyAccount, ...]]:
-    """Panels to start from, the round parts, notices, what became of the bodies."""
+) -> tuple[Plan, Facets | None, FloatArray | None, list[Notice], tuple[BodyAccount, ...]]:
+    """Panels to start from, the round parts, what coarsening moved, notices, what became of the bodies."""
     regions, notices = find_regions(surface)
     creases = find_creases(surface, regions, greatest_turn=greatest_turn(meaning))
     panels, more = panel_regions(surface, regions, creases=creases)
     refuse_if_too_large(len(panels), surface.n_conductors, limit, fast=method != "dense")
     most = _most_panels(len(panels), surface.n_conductors, limit, method)
     round_parts = None if meaning == "as drawn" else find_facets(surface, regions, creases)
+    coarse = region_deviation(surface, regions)
+    if coarse is not None and round_parts is not None:
+        round_parts = take_as_drawn(round_parts, regions, coarse)
     bodies = account_bodies(surface, regions, creases, panels, round_parts)
     notices += more + change_notices(bodies) + facet_notices(surface, regions, creases, bodies, meaning)
     decays = side_decays(surface, creases, panels)
@@ -256,7 +260,7 @@ def _prepare(
         panels = move_facets(round_parts, panels)
     start = starting_panels(panels, decays, max(len(panels), min(MOST_AT_START, most // 4)))
     plan = Plan(start.panels, start.symmetric, start.sides, np.zeros(surface.n_bodies, dtype=np.int64))
-    return plan, round_parts, notices, bodies
+    return plan, round_parts, coarse, notices, bodies
 
 
 def _most_panels(n_panels: int, n_conductors: int, limit: int, method: str) -> int:
@@ -359,5 +363,7 @@ def _guards(surface: Surface, judgement: _Judgement, value: FloatArray, total: F
             text += ", which the file rounds; move the part to the origin in CAD, or export more digits"
         if cause == "facets":
             text += '; export round parts with a finer tolerance, or say facets = "as drawn" if they are the part'
+        if cause == "coarsening":
+            text += "; forbid it or state a smaller distance (coarsen)"
         notices.append(Notice("accuracy-not-reached", text))
     return notices

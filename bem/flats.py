@@ -122,8 +122,9 @@ def _raw_notices(surface: Surface, regions: Regions, raw: list[int]) -> list[Not
         return []
     names = sorted({surface.body_names[regions.body[r]] for r in raw})
     shown = ", ".join(names[:4]) + (", ..." if len(names) > 4 else "")
+    many = "1 flat face" if len(raw) == 1 else f"{len(raw)} flat faces"
     text = (
-        f"{len(raw)} flat faces could not be divided into quadrilaterals; their triangles are used as they "
+        f"{many} could not be divided into quadrilaterals; the triangles there are used as they "
         f"are (in {shown}; first at triangle {regions.triangles_of(raw[0])[0]})"
     )
     return [Notice("raw-triangles", text)]
@@ -162,7 +163,7 @@ def _add_pairs(store: _Store, surface: Surface, regions: Regions, which: IntArra
     normal = regions.normals[which_fit]
     height = np.einsum("nki,ni->nk", points - regions.origins[which_fit][:, None], normal)
     points = points - height[:, :, None] * normal[:, None, :]
-    into, out = points - np.roll(points, 1, axis=1), np.roll(points, -1, axis=1) - points
+    into, out = points - points[:, [3, 0, 1, 2]], points[:, [1, 2, 3, 0]] - points
     length = np.linalg.norm(into, axis=2) * np.linalg.norm(out, axis=2)
     sine = np.einsum("nki,ni->nk", np.cross(into, out), normal) / np.maximum(length, 1e-300)
     good = sine.min(axis=1) > STRICTLY_CONVEX
@@ -200,7 +201,7 @@ def region_outlines(
     vertices, local = np.unique(surface.triangles[members], return_inverse=True)
     points = surface.vertices[vertices]
     local = local.reshape(-1, 3).astype(np.int64)
-    ahead = np.roll(local, -1, axis=1)
+    ahead = local[:, [1, 2, 0]]
     sides = (points[ahead] - points[local]).reshape(-1, 3)
     longest = sides[np.argmax((sides * sides).sum(axis=1))]
     frame = plane_frame(regions.normals[region], regions.origins[region], longest)

@@ -10,8 +10,8 @@ import numpy as np
 import shapely
 from numpy.typing import NDArray
 
-from .bands import banded, divide_long_edges
-from .outlines import Outline
+from .bands import bands_along, divide_long_edges
+from .outlines import Outline, next_of
 
 __all__ = ["cover", "pair_triangles", "rectangles", "thirds", "triangulate"]
 
@@ -29,17 +29,21 @@ GOOD_SINE = 0.64
 POOR_EDGE, POOR_LENGTH = 5.0, 40.0
 #: Inner edges longer than this many radii of the largest circle touching them are divided.
 LONG_EDGE = 2.5
-#: Numbers of rings tried along round outlines.
-RINGS = (1, 6)
+#: Most rings along round outlines.
+RINGS = 6
 #: Grids of more cells than this are not tried for rectangles.
 MOST_CELLS = 100_000
+
+_NEXT, _LAST = [1, 2, 3, 0], [3, 0, 1, 2]
 
 
 def corner_sines(corners: FloatArray) -> FloatArray:
     """Sines of the corner angles of quadrilaterals (n, 4, 2); all positive if convex."""
-    into, out = corners - np.roll(corners, 1, axis=1), np.roll(corners, -1, axis=1) - corners
-    cross = into[..., 0] * out[..., 1] - into[..., 1] * out[..., 0]
-    return np.asarray(cross / np.maximum(np.linalg.norm(into, axis=2) * np.linalg.norm(out, axis=2), 1e-300))
+    out = corners[:, _NEXT] - corners
+    x, y = out[..., 0], out[..., 1]
+    length = np.maximum(np.hypot(x, y), 1e-150)  # the square of it is still a number
+    x, y = x / length, y / length
+    return np.asarray(x[:, _LAST] * y - y[:, _LAST] * x)
 
 
 def panel_areas(corners: FloatArray) -> FloatArray:
@@ -88,8 +92,8 @@ def pair_triangles(points: FloatArray, triangles: IntArray) -> IntArray:
         Triangles repeat their third corner.
     """
     m = len(triangles)
-    start, end = triangles.reshape(-1), np.roll(triangles, -1, axis=1).reshape(-1)
-    tip = np.roll(triangles, -2, axis=1).reshape(-1)
+    start, end = triangles.reshape(-1), triangles[:, [1, 2, 0]].reshape(-1)
+    tip = triangles[:, [2, 0, 1]].reshape(-1)
     base = np.int64(len(points))
     order = np.argsort(start * base + end)
     keys = (start * base + end)[order]
@@ -146,13 +150,13 @@ def cover(outline: Outline, tolerance: float) -> FloatArray:
         return _checked(outline, cut, tolerance)
     choices = [_without_poor_triangles(_plain(outline), outline)]
     n_edges = sum(len(loop) for loop in outline.loops)
-    for rings in RINGS if choices[0][0] > n_edges + 1 else ():  # bands alone are one panel per edge
+    if choices[0][0] > n_edges + 1:  # bands alone are one panel per edge
         try:
-            bands, divided, inner = banded(outline, rings)
-            panels = np.concatenate([bands, _interior(inner)])
-            choices.append(_without_poor_triangles(_checked(outline, panels, 0.0), divided))
+            for bands, divided, inner in bands_along(outline, RINGS):
+                panels = np.concatenate([bands, _interior(inner)])
+                choices.append(_without_poor_triangles(_checked(outline, panels, 0.0), divided))
         except ValueError:
-            break  # no bands fit: the paired triangles serve
+            pass  # no bands fit: the paired triangles serve
     return _checked(outline, min(choices, key=lambda choice: choice[0])[1], 0.0)
 
 
@@ -176,8 +180,8 @@ def thirds(triangles: FloatArray) -> FloatArray:
     (3 n, 4, d) float, m
     """
     corner = triangles[:, :3]
-    after = 0.5 * (corner + np.roll(corner, -1, axis=1))
-    before = np.roll(after, 1, axis=1)
+    after = 0.5 * (corner + corner[:, [1, 2, 0]])
+    before = after[:, [2, 0, 1]]
     centre = np.broadcast_to(corner.mean(axis=1, keepdims=True), corner.shape)
     return np.stack([corner, after, centre, before], axis=2).reshape(-1, 4, triangles.shape[2])
 
@@ -185,8 +189,7 @@ def thirds(triangles: FloatArray) -> FloatArray:
 def _interior(inner: Outline) -> FloatArray:
     """Cover what the bands leave free; its edges may be divided, as panels need not match."""
     choices = [_plain(inner)]
-    for factor in (LONG_EDGE, 2 * LONG_EDGE):
-        divided = divide_long_edges(inner, factor)
+    for divided in divide_long_edges(inner, (LONG_EDGE, 2 * LONG_EDGE)):
         if sum(map(len, divided.loops)) > sum(map(len, inner.loops)):
             choices.append(_plain(divided))
     return min(choices, key=_shape_cost)
@@ -222,7 +225,7 @@ def _checked(outline: Outline, corners: FloatArray, tolerance: float) -> FloatAr
 
 def _sides(corners: FloatArray) -> list[tuple[float, ...]]:
     """Sides of polygons (n, k, 2) as tuples x0, y0, x1, y1."""
-    ends = np.concatenate([corners, np.roll(corners, -1, axis=1)], axis=2)
+    ends = np.concatenate([corners, corners[:, _NEXT]], axis=2)
     return list(map(tuple, ends.reshape(-1, 4).tolist()))
 
 
@@ -230,7 +233,7 @@ def _on_sharp(corners: FloatArray, outline: Outline) -> BoolArray:
     """Which sides of panels (n, 4, 2) are sharp edges of the outline."""
     edges: set[tuple[float, ...]] = set()
     for loop, sharp in zip(outline.loops, outline.sharp, strict=True):
-        start, end = loop[sharp], np.roll(loop, -1, axis=0)[sharp]
+        start, end = loop[sharp], next_of(loop)[sharp]
         middle = 0.5 * (start + end)
         for pair in ((start, end), (start, middle), (middle, end)):  # halves: of triangles cut into thirds
             edges.update(map(tuple, np.concatenate(pair, axis=1).tolist()))
@@ -241,10 +244,10 @@ def _poverty(corners: FloatArray, outline: Outline) -> float:
     """Surcharge for sharp outline edges without a well placed quadrilateral on them."""
     sharp = _on_sharp(corners, outline)
     sines = corner_sines(corners)
-    quality = np.clip(np.minimum(sines, np.roll(sines, -1, axis=1)) / GOOD_SINE, 0.0, 1.0)
+    quality = np.clip(np.minimum(sines, sines[:, _NEXT]) / GOOD_SINE, 0.0, 1.0)
     quality[is_triangle(corners)] = 0.0
     poor = (1.0 - quality)[sharp]
-    side = np.roll(corners, -1, axis=1) - corners
+    side = corners[:, _NEXT] - corners
     length = np.hypot(side[..., 0], side[..., 1])[sharp]
     mean = outline.length / sum(len(loop) for loop in outline.loops)
     short = poor @ np.minimum(1.0, length / mean)  # short edges among long ones matter little
@@ -265,7 +268,7 @@ def rectangles(outline: Outline, tolerance: float) -> FloatArray | None:
     (n, 4, 2) float, m, or None
         None if the outline is not rectilinear.
     """
-    edges = np.concatenate([np.roll(loop, -1, axis=0) - loop for loop in outline.loops])
+    edges = np.concatenate([next_of(loop) - loop for loop in outline.loops])
     along = edges[np.argmax((edges**2).sum(axis=1))]
     along = along / np.hypot(*along)
     turn = np.array([along, [-along[1], along[0]]])

@@ -2,6 +2,7 @@
 
 from collections import defaultdict
 from dataclasses import dataclass
+from typing import Any
 
 import numpy as np
 import shapely
@@ -12,7 +13,9 @@ __all__ = [
     "Outline",
     "clean_loop",
     "group_loops",
+    "last_of",
     "merge_flags",
+    "next_of",
     "plane_frame",
     "signed_area",
     "trace_loops",
@@ -69,7 +72,7 @@ class Outline:
     @property
     def length(self) -> float:
         """Length of all loops, m."""
-        return float(sum(np.hypot(*(loop - np.roll(loop, 1, axis=0)).T).sum() for loop in self.loops))
+        return float(sum(np.hypot(*(loop - last_of(loop)).T).sum() for loop in self.loops))
 
     def polygon(self) -> shapely.Polygon:
         """Convert to a shapely polygon."""
@@ -92,10 +95,20 @@ def plane_frame(normal: FloatArray, origin: FloatArray, along: FloatArray) -> Fr
     return Frame(origin, np.stack([first, np.cross(normal, first)]), normal)
 
 
+def next_of(values: NDArray[Any]) -> NDArray[Any]:
+    """Values of the next place around a loop (`np.roll` by -1 along the first axis, ten times as fast)."""
+    return np.concatenate((values[1:], values[:1]))
+
+
+def last_of(values: NDArray[Any]) -> NDArray[Any]:
+    """Values of the last place around a loop."""
+    return np.concatenate((values[-1:], values[:-1]))
+
+
 def signed_area(loop: FloatArray) -> float:
     """Area of a loop (n, 2), positive if counter-clockwise."""
     x, y = (loop - loop[0]).T
-    return 0.5 * float(x @ np.roll(y, -1) - y @ np.roll(x, -1))
+    return 0.5 * float(x @ next_of(y) - y @ next_of(x))
 
 
 def trace_loops(triangles: IntArray, flat: dict[int, tuple[float, float]]) -> list[list[int]]:
@@ -121,7 +134,7 @@ def trace_loops(triangles: IntArray, flat: dict[int, tuple[float, float]]) -> li
     ValueError
         If the edges do not close.
     """
-    halves = np.stack([triangles, np.roll(triangles, -1, axis=1)], axis=2).reshape(-1, 2)
+    halves = np.stack([triangles, triangles[:, [1, 2, 0]]], axis=2).reshape(-1, 2)
     base = np.int64(triangles.max()) + 1
     forward, backward = halves @ [base, 1], halves @ [1, base]
     rim = halves[~np.isin(forward, backward)].tolist()
@@ -185,12 +198,12 @@ def clean_loop(loop: FloatArray, tolerance: float) -> IntArray:
         Numbers of the vertices that stay, in order around the loop (not always from the smallest); fewer
         than three if nothing is left.
     """
-    step = np.hypot(*(loop - np.roll(loop, 1, axis=0)).T)
+    step = np.hypot(*(loop - last_of(loop)).T)
     numbers = np.flatnonzero(step > tolerance)
     if len(numbers) < 3:
         return numbers
     loop = loop[numbers]
-    before, after = np.roll(loop, 1, axis=0), np.roll(loop, -1, axis=0)
+    before, after = last_of(loop), next_of(loop)
     chord = after - before
     offset = np.abs(chord[:, 0] * (loop - before)[:, 1] - chord[:, 1] * (loop - before)[:, 0])
     offset /= np.maximum(np.hypot(*chord.T), 1e-300)
@@ -224,7 +237,7 @@ def merge_flags(flags: BoolArray, kept: IntArray) -> BoolArray:
     """
     n = len(flags)
     count = np.concatenate([[0], np.cumsum(np.concatenate([flags, flags]))])
-    span = (np.roll(kept, -1) - kept) % n
+    span = (next_of(kept) - kept) % n
     return np.asarray(count[kept + np.where(span > 0, span, n)] > count[kept])
 
 

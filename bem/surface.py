@@ -29,6 +29,8 @@ class Surface:
     body_conductor : (n_bodies,) int
         Every conductor from 0 to ``n_conductors - 1`` owns at least one body.
     conductor_names, body_names : tuple of str, optional
+    triangle_deviation : (n_triangles,) float, m, optional
+        How far each triangle may lie from the drawing where round parts were coarsened.
 
     Raises
     ------
@@ -42,6 +44,7 @@ class Surface:
     body_conductor: IntArray
     conductor_names: tuple[str, ...] = ()
     body_names: tuple[str, ...] = field(default=())
+    triangle_deviation: FloatArray | None = None
 
     def __post_init__(self) -> None:
         put = object.__setattr__
@@ -53,6 +56,9 @@ class Surface:
             put(self, "conductor_names", tuple(f"conductor-{i + 1}" for i in range(self.n_conductors)))
         if not self.body_names:
             put(self, "body_names", tuple(f"body-{i + 1}" for i in range(self.n_bodies)))
+        deviation = self.triangle_deviation
+        if deviation is not None and (deviation.shape != (len(self.triangles),) or not (deviation >= 0.0).all()):
+            raise InputError("surface: triangle_deviation must hold one distance per triangle, none negative")
         if len(self.conductor_names) != self.n_conductors or len(self.body_names) != self.n_bodies:
             raise InputError("surface: one name per conductor and per body is needed")
 

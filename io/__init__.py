@@ -10,15 +10,18 @@ if TYPE_CHECKING:
     from .bodies import Body, read_bodies
     from .case import Case, load_case, make_case
     from .case_inspection import inspect_case
+    from .changes import Mend
     from .inspection import inspect_files
+    from .joining import bodies_to_surface
+    from .markers import write_marks
     from .mending import fit_bodies
     from .outcome import Outcome, solve_case
-    from .problem import bodies_to_surface
     from .result import Result, read_result
 
 __all__ = [
     "Body",
     "Case",
+    "Mend",
     "Outcome",
     "Result",
     "bodies_to_surface",
@@ -30,14 +33,16 @@ __all__ = [
     "read_bodies",
     "read_result",
     "solve_case",
+    "write_marks",
 ]
 
 _HOMES = {
     "Body": "bodies",
     "Case": "case",
+    "Mend": "changes",
     "Outcome": "outcome",
     "Result": "result",
-    "bodies_to_surface": "problem",
+    "bodies_to_surface": "joining",
     "fit_bodies": "mending",
     "inspect_case": "case_inspection",
     "inspect_files": "inspection",
@@ -46,6 +51,7 @@ _HOMES = {
     "read_bodies": "bodies",
     "read_result": "result",
     "solve_case": "outcome",
+    "write_marks": "markers",
 }
 
 

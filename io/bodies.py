@@ -12,12 +12,13 @@ from numpy.typing import NDArray
 
 from daraf.bem.errors import InputError
 
+from .changes import Change, Mend
 from .file_units import units_of_files
 from .mesh_units import METRES_PER_UNIT, length_unit
 from .names import printable
+from .stitching import stitch
 from .topology import compacted, connected_pieces
-from .triangle_distance import sides_and_areas
-from .welding import weld
+from .welding import check_shape, weld
 
 if TYPE_CHECKING:
     from .facet_tolerance import FacetTolerance
@@ -28,9 +29,6 @@ __all__ = ["Body", "Fault", "MeshSet", "pick_bodies", "read_bodies", "read_mesh_
 FloatArray = NDArray[np.float64]
 IntArray = NDArray[np.int64]
 Pick = str | int | Sequence[str | int]
-
-#: Coordinates rounded to more than this share of the median edge have lost the shape.
-_LOST_SHAPE = 0.1
 
 
 @dataclass(frozen=True)
@@ -75,7 +73,7 @@ class Body:
         From 1, in the order of the file.
     faults : list of Fault
         What reading alone showed; `inspect_bodies` finds the rest.
-    notes : list of str
+    notes : list of Change
         Every change made to the geometry.
     solid : int
         Which part (solid, object) of the file it came from, from 1.
@@ -83,6 +81,8 @@ class Body:
         Rounding of the coordinates as stored in the file, half a step.
     unit : str or None
         Unit of the file.
+    side_files : tuple of str
+        Files that this file names and that were read with it.
     """
 
     name: str
@@ -91,10 +91,11 @@ class Body:
     file: str = ""
     index_in_file: int = 1
     faults: list[Fault] = field(default_factory=list)
-    notes: list[str] = field(default_factory=list)
+    notes: list[Change] = field(default_factory=list)
     solid: int = 1
     spacing: float = 0.0
     unit: str | None = None
+    side_files: tuple[str, ...] = ()
 
     @cached_property
     def box(self) -> FloatArray:
@@ -124,10 +125,12 @@ def read_bodies(
     pick: Pick | None = None,
     other_unit: str | None = None,
     facet_tolerance: "FacetTolerance | None" = None,
+    mend: Mend | None = None,
 ) -> list[Body]:
     """Read mesh files and split them into named bodies.
 
-    Equal vertices are merged with a tolerance relative to the size of the part; nothing else is changed.
+    Equal vertices are merged with a tolerance relative to the size of the part, and cracks are sewn as far as
+    `mend` allows; nothing else is changed.
 
     Parameters
     ----------
@@ -142,6 +145,8 @@ def read_bodies(
         Unit of files that carry none where `unit` is not stated; files that carry one need not agree with it.
     facet_tolerance : FacetTolerance, optional
         Largest distance of facets from the curved shapes of STEP files; chosen from the size by default.
+    mend : Mend, optional
+        How far cracks are sewn.
 
     Returns
     -------
@@ -152,7 +157,9 @@ def read_bodies(
     InputError
         If a file is unusable, the unit is missing or contradicts the file, or a picked body does not exist.
     """
-    read = read_mesh_set(paths, unit, unit_needed=True, other_unit=other_unit, facet_tolerance=facet_tolerance)
+    read = read_mesh_set(
+        paths, unit, unit_needed=True, other_unit=other_unit, facet_tolerance=facet_tolerance, mend=mend
+    )
     return read.bodies if pick is None else pick_bodies(read.bodies, pick)
 
 
@@ -163,6 +170,7 @@ def read_mesh_set(
     unit_needed: bool,
     other_unit: str | None = None,
     facet_tolerance: "FacetTolerance | None" = None,
+    mend: Mend | None = None,
 ) -> MeshSet:
     """As `read_bodies`, but a missing unit may stand: the vertices are then in the unit of the files.
 
@@ -173,6 +181,7 @@ def read_mesh_set(
     unit_needed : bool
     other_unit : str, optional
     facet_tolerance : FacetTolerance, optional
+    mend : Mend, optional
 
     Returns
     -------
@@ -191,27 +200,33 @@ def read_mesh_set(
     stated = None if unit is None else length_unit(unit)
     if facet_tolerance is not None and not any(may_be_curved(name) for name in names):
         raise InputError(f"{names[0]}: is facets as drawn, so a facet tolerance says nothing; leave it out")
+    mend = mend or Mend()
     raws = [read_file(path, facet_tolerance) for path in names]
     units = units_of_files(raws, stated, other_unit, needed=unit_needed)
+    if (mend.within or mend.holes) and None in units:
+        bare = raws[units.index(None)].path
+        raise InputError(f"{bare}: a length for mending is stated, but no unit; state it, such as --unit mm")
     bodies: list[Body] = []
     for raw, file_unit in zip(raws, units, strict=True):
-        scale = 1.0 if file_unit is None else METRES_PER_UNIT[file_unit]
         told = [Fault(one.code, "note", 1, None, one.text, one.remedy) for one in raw.remarks]
-        for body in _split(raw.path, raw.parts, scale, file_unit or "file units"):
-            bodies.append(replace(body, unit=file_unit, faults=[*told, *body.faults]))
+        for body in _split(raw.path, raw.parts, file_unit, mend):
+            bodies.append(replace(body, faults=[*told, *body.faults], side_files=raw.side_files))
     return MeshSet(_unique_names(bodies), stated or units[0], [str(name) for name in names])
 
 
-def _split(path: Path, parts: list["RawPart"], scale: float, unit: str) -> list[Body]:
-    """Weld every part, cut it into connected pieces, name them."""
+def _split(path: Path, parts: list["RawPart"], unit: str | None, mend: Mend) -> list[Body]:
+    """Weld every part, sew its cracks, cut it into connected pieces, name them."""
+    scale = 1.0 if unit is None else METRES_PER_UNIT[unit]
     bodies: list[Body] = []
     for number, part in enumerate(parts, start=1):
         vertices, triangles, n_moved, tolerance = weld(part.vertices, part.triangles)
-        _check_shape(path, part.name, vertices, triangles, part.spacing)
-        n_pieces, piece = connected_pieces(triangles)
+        check_shape(path, part.name, vertices, triangles, part.spacing)
         notes = []
         if n_moved:
-            notes.append(f"merged {n_moved} vertices closer than {tolerance:.2g} {unit} to another one")
+            text = f"merged {n_moved} {'vertex' if n_moved == 1 else 'vertices'} beside another one"
+            notes.append(Change("merged-vertices", n_moved, None, text, tolerance * scale))
+        vertices, triangles, sewn, cracks = _sewn(vertices, triangles, part.spacing, scale, mend)
+        n_pieces, piece = connected_pieces(triangles)
         name = printable(part.name)
         named = name or printable(path.stem) or "file"
         numbered = n_pieces > 1 or (not name and len(parts) > 1)
@@ -224,33 +239,40 @@ def _split(path: Path, parts: list["RawPart"], scale: float, unit: str) -> list[
                 triangles=index,
                 file=str(path),
                 index_in_file=len(bodies) + 1,
-                notes=list(notes),
+                faults=list(cracks),
+                notes=[*notes, *sewn],
                 solid=number,
                 spacing=part.spacing * scale,
+                unit=unit,
             )
             bodies.append(body)
     return bodies
 
 
-def _check_shape(path: Path, name: str, vertices: FloatArray, triangles: IntArray, spacing: float) -> None:
-    """Refuse a part that is a point or a line, or whose coordinates are too coarse to hold its shape."""
-    label = f"solid {name!r}" if name else "the mesh"
-    sides, doubled = sides_and_areas(vertices[triangles])
-    edge = float(np.median(sides[sides > 0.0])) if (sides > 0.0).any() else 0.0
-    flat = not (doubled > 1e-12 * sides.max(axis=1) ** 2).any()
-    # a true edge rounds to nothing or to whole steps: a lost shape shows as edges of a few steps
-    largest = float(np.abs(vertices).max())
-    if edge > 0.0 and spacing > _LOST_SHAPE * edge:
-        raise InputError(
-            f"{path}: {label}: coordinates near {largest:.3g} in single precision are rounded to steps of "
-            f"{2 * spacing:.2g}, its edges are {edge:.2g} long: the shape is lost; move the part to the "
-            "origin in CAD and export it again"
-        )
-    if flat:
-        raise InputError(
-            f"{path}: {label}: all {len(triangles)} faces have no area, at a rounding of {2 * spacing:.2g} "
-            f"for coordinates near {largest:.3g}; export it as a surface mesh, near the origin"
-        )
+def _sewn(
+    vertices: FloatArray, triangles: IntArray, spacing: float, scale: float, mend: Mend
+) -> tuple[FloatArray, IntArray, list[Change], list[Fault]]:
+    """Sew the cracks of one part, or say where they are: its faces may not even hang together before."""
+    size = float(np.linalg.norm(np.ptp(vertices, axis=0)))
+    rounding = max(2.0 * spacing, 1e-9 * size) * scale
+    reach = mend.reach(rounding, size * scale)
+    found = stitch(vertices, triangles, reach / scale)
+    if found.changed and mend.changes:
+        change = Change("sewn", found.count, _place(found.place * scale), f"sewed {found.text}", found.moved * scale)
+        return found.vertices, found.triangles, [change], []
+    if not found.changed:  # what a bolder reach would sew is worth a word if it closes most of the rim
+        found = stitch(vertices, triangles, Mend("bold").reach(rounding, size * scale) / scale)
+        if not found.changed or 2 * found.n_open > found.n_open_before:
+            return vertices, triangles, [], []
+    remedy = "a solve sews them" if mend.reach(rounding, 0.0) > found.moved * scale else "bold mending sews them"
+    share = f"{found.text}, up to {found.moved / size:.2g} of the part apart"
+    fault = Fault("cracks", "warning", found.count, _place(found.place * scale), share, remedy)
+    return vertices, triangles, [], [fault]
+
+
+def _place(point: FloatArray) -> tuple[float, float, float]:
+    x, y, z = point
+    return float(x), float(y), float(z)
 
 
 def _unique_names(bodies: list[Body]) -> list[Body]:

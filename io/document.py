@@ -73,6 +73,11 @@ def result_document(
         "title": problem.case.content.title,
         "case": problem.case.stated,
         "inputs": [{"file": one.file, "sha256": one.sha256, "bytes": one.bytes} for one in problem.inputs],
+        "changes": [
+            {"conductor": conductor, "body": body, "code": one.code, "count": one.count}
+            | {"at": None if one.place is None else list(one.place), "moved": one.moved, "text": one.text}
+            for conductor, body, one in problem.changes
+        ],
         "conductors": list(solution.conductor_names),
         "capacitance": _capacitance(solution, mutual),
         **_state(state, len(solution.conductor_names)),

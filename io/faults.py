@@ -6,21 +6,20 @@ import numpy as np
 from numpy.typing import NDArray
 
 from .bodies import Fault
+from .changes import HOLE_SIZE
 from .gaps import Shape
-from .mending import coincident_groups, flat_height, flat_triangles
+from .holes import hole_loops
+from .mending import HOLE_SHARE, flat_height, flat_rows
 from .self_contact import self_contacts
-from .topology import boundary_loops, edges_of, proper_rows, signed_volume, winding_flips
+from .topology import boundary_loops, coincident_groups, edges_of, signed_volume, winding_flips
 
-__all__ = ["faults_of"]
+__all__ = ["faults_of", "needs_mending"]
 
 FloatArray = NDArray[np.float64]
 IntArray = NDArray[np.int64]
 
 #: Coordinates rounded to more than this share of the median edge are worth a word.
 _COARSE = 0.01
-
-#: A boundary loop whose cap would be a smaller share of the area looks like a hole, not like a rim.
-_HOLE = 0.02
 
 
 def faults_of(shape: Shape) -> list[Fault]:
@@ -47,6 +46,12 @@ def faults_of(shape: Shape) -> list[Fault]:
     return [*shape.body.faults, *(fault for check in checks for fault in check(shape))]
 
 
+def needs_mending(fault: Fault) -> bool:
+    """Whether a solve that may change nothing refuses the body."""
+    tolerable = ("coarse-coordinates", "self-touching")
+    return fault.severity != "note" and fault.code not in tolerable and not fault.code.endswith("-other")
+
+
 def _place(point: FloatArray) -> tuple[float, float, float]:
     x, y, z = point
     return float(x), float(y), float(z)
@@ -56,18 +61,8 @@ def _count(count: int, thing: str, things: str = "") -> str:
     return f"{count:,} {thing if count == 1 else things or thing + 's'}"
 
 
-def _single_rows(triangles: IntArray) -> IntArray:
-    """Triangles with three different vertices, one of each that coincide."""
-    group, size = coincident_groups(triangles)
-    if len(size) == len(group):
-        return np.flatnonzero(proper_rows(triangles))
-    first = np.zeros(len(triangles), dtype=np.bool_)
-    first[np.unique(group, return_index=True)[1]] = True
-    return np.flatnonzero(first & proper_rows(triangles))
-
-
 def _coarse_coordinates(shape: Shape) -> Iterator[Fault]:
-    sides = np.linalg.norm(np.roll(shape.corners, -1, axis=1) - shape.corners, axis=2)
+    sides, _ = shape.measures
     edge = float(np.median(sides[sides > 0.0])) if (sides > 0.0).any() else 0.0
     if 0.0 < _COARSE * edge < shape.body.spacing:
         yield Fault(
@@ -82,7 +77,8 @@ def _coarse_coordinates(shape: Shape) -> Iterator[Fault]:
 
 
 def _degenerate(shape: Shape) -> Iterator[Fault]:
-    flat = np.flatnonzero(flat_triangles(shape.body.vertices, shape.body.triangles, flat_height(shape.body)))
+    sides, doubled = shape.measures
+    flat = np.flatnonzero(flat_rows(shape.body.triangles, sides, doubled, flat_height(shape.body)))
     if len(flat):
         yield Fault(
             "degenerate-faces",
@@ -95,9 +91,9 @@ def _degenerate(shape: Shape) -> Iterator[Fault]:
 
 
 def _duplicate(shape: Shape) -> Iterator[Fault]:
-    group, size = coincident_groups(shape.body.triangles)
-    if len(size) == len(group):
+    if len(shape.single_rows) == len(shape.body.triangles):
         return
+    group, _ = coincident_groups(shape.body.triangles)
     extra = np.setdiff1d(np.arange(len(group)), np.unique(group, return_index=True)[1])
     if len(extra):
         yield Fault(
@@ -111,7 +107,7 @@ def _duplicate(shape: Shape) -> Iterator[Fault]:
 
 
 def _non_manifold(shape: Shape) -> Iterator[Fault]:
-    edges = edges_of(shape.body.triangles[_single_rows(shape.body.triangles)])
+    edges = edges_of(shape.single)
     bad = np.flatnonzero(edges.count > 2)
     if len(bad):
         yield Fault(
@@ -125,10 +121,9 @@ def _non_manifold(shape: Shape) -> Iterator[Fault]:
 
 
 def _winding(shape: Shape) -> Iterator[Fault]:
-    rows = _single_rows(shape.body.triangles)
+    rows, proper = shape.single_rows, shape.single
     if len(rows) == 0:
         return
-    proper = shape.body.triangles[rows]
     flip, _, orientable = winding_flips(proper)
     if not orientable:
         text = "the surface has a single side (a Moebius strip)"
@@ -144,7 +139,8 @@ def _winding(shape: Shape) -> Iterator[Fault]:
             f"{_count(len(turned), 'panel')} wound against the neighbours",
             "a solve turns them over",
         )
-    proper = np.where(flip[:, None], proper[:, ::-1], proper)
+    if len(turned):
+        proper = np.where(flip[:, None], proper[:, ::-1], proper)
     if edges_of(proper).closed and signed_volume(shape.body.vertices, proper) < 0.0:
         yield Fault(
             "inside-out",
@@ -158,20 +154,23 @@ def _winding(shape: Shape) -> Iterator[Fault]:
 
 def _holes(shape: Shape) -> Iterator[Fault]:
     body = shape.body
-    proper = body.triangles[_single_rows(body.triangles)]
-    if len(proper) == 0:
+    rows, proper = shape.single_rows, shape.single
+    if len(rows) == 0:
         return
     vertex, areas = boundary_loops(body.vertices, proper, edges_of(proper))
-    corners = body.vertices[proper]
-    area = 0.5 * np.linalg.norm(np.cross(corners[:, 1] - corners[:, 0], corners[:, 2] - corners[:, 0]), axis=1).sum()
-    if len(vertex) and (areas < _HOLE * area).all():  # else a large rim says that this is a sheet
+    area = 0.5 * float(shape.measures[1][rows].sum())
+    if len(vertex) and (areas < HOLE_SHARE * area).all():  # else a large rim says that this is a sheet
+        across = [np.linalg.norm(np.ptp(body.vertices[loop], axis=0)) for loop in hole_loops(proper)]
+        share = max(across, default=0.0) / body.diagonal
+        size = f", the largest {share:.2g} of the body across" if across else ""
+        limit = " (state how large a hole it may close)" if share > HOLE_SIZE else ""
         yield Fault(
             "holes",
             "warning",
             len(vertex),
             _place(body.vertices[vertex[0]]),
-            f"closed but for {_count(len(vertex), 'hole')}",
-            "close it in CAD if the body is meant as a solid; a solve takes the surface as an open sheet",
+            f"closed but for {_count(len(vertex), 'hole')}{size}",
+            f"a solve takes it as an open sheet unless bold mending closes it{limit}",
         )
 
 

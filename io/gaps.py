@@ -8,9 +8,16 @@ from numpy.typing import NDArray
 from scipy.spatial import cKDTree
 
 from .bodies import Body
-from .topology import edges_of, proper_rows, signed_volume
+from .topology import coincident_groups, edges_of, proper_rows, signed_volume
 from .triangle_boxes import BoxTree, near_pairs
-from .triangle_distance import edge_crossings, pair_distances, slab_gaps, winding_numbers
+from .triangle_distance import (
+    doubled_area_vectors,
+    edge_crossings,
+    pair_distances,
+    sides_and_areas,
+    slab_gaps,
+    winding_numbers,
+)
 
 __all__ = [
     "Approach",
@@ -61,9 +68,33 @@ class Shape:
     @cached_property
     def normals(self) -> FloatArray:
         """Unit normals, (nt, 3); zero for triangles without area."""
-        normal = np.cross(self.corners[:, 1] - self.corners[:, 0], self.corners[:, 2] - self.corners[:, 0])
-        length = np.linalg.norm(normal, axis=1)
-        return normal / np.where(length > 0.0, length, 1.0)[:, None]
+        normal = doubled_area_vectors(self.corners)
+        length = np.sqrt((normal * normal).sum(axis=0))
+        normal /= np.where(length > 0.0, length, 1.0)
+        return np.ascontiguousarray(normal.T)
+
+    @cached_property
+    def measures(self) -> tuple[FloatArray, FloatArray]:
+        """Lengths of the sides, (nt, 3) m, and twice the areas, (nt,) m2."""
+        return sides_and_areas(self.corners)
+
+    @cached_property
+    def single_rows(self) -> IntArray:
+        """Triangles with three different vertices, one of each that coincide."""
+        triangles = self.body.triangles
+        proper = proper_rows(triangles)
+        group, size = coincident_groups(triangles)
+        if len(size) == len(group):
+            return np.flatnonzero(proper)
+        first = np.zeros(len(triangles), dtype=np.bool_)
+        first[np.unique(group, return_index=True)[1]] = True
+        return np.flatnonzero(first & proper)
+
+    @cached_property
+    def single(self) -> IntArray:
+        """The triangles in these rows, (n, 3) int."""
+        rows, triangles = self.single_rows, self.body.triangles
+        return triangles if len(rows) == len(triangles) else triangles[rows]
 
     @cached_property
     def samples(self) -> FloatArray:
@@ -83,7 +114,8 @@ class Shape:
     def volume(self) -> float | None:
         """Signed volume, m3; None if the body is open."""
         body = self.body
-        proper = body.triangles[proper_rows(body.triangles)]
+        rows = proper_rows(body.triangles)
+        proper = body.triangles if rows.all() else body.triangles[rows]
         if len(proper) == 0 or not edges_of(proper).closed:
             return None
         return signed_volume(body.vertices, proper)

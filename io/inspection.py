@@ -3,7 +3,6 @@
 from collections.abc import Iterable, Sequence
 from dataclasses import dataclass, field, replace
 from pathlib import Path
-from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
@@ -11,15 +10,17 @@ from numpy.typing import NDArray
 from daraf.bem.errors import InputError
 
 from .bodies import Body, Fault, read_mesh_set
+from .changes import Change, Mend
 from .contacts import Contact, cavity_walls, contacts, shapes_of
 from .facet_tolerance import parse_facet_tolerance
 from .faults import faults_of
 from .gaps import Approach, Shape, box_gap, closest_approach
+from .inspection_document import inspection_to_dict
 from .inspection_text import inspection_to_text
-from .mending import make_fit, orient
+from .markers import Mark, contact_mark, fault_marks
+from .mending import fit_bodies, make_fit
 from .progress import ProgressCallback, Silence
 from .topology import boundary_loops, edges_of
-from .triangle_distance import sides_and_areas
 
 __all__ = [
     "BodyReport",
@@ -83,8 +84,8 @@ class BodyReport:
     gaps : list of Gap
         Nearest first.
     faults : list of Fault
-    notes : list of str
-        What reading changed.
+    notes : list of Change
+        What reading and mending changed.
     """
 
     name: str
@@ -100,7 +101,7 @@ class BodyReport:
     aspect: Spread
     gaps: list[Gap]
     faults: list[Fault]
-    notes: list[str] = field(default_factory=list)
+    notes: list[Change] = field(default_factory=list)
 
 
 @dataclass(frozen=True, eq=False)
@@ -113,11 +114,17 @@ class Inspection:
     unit : str or None
         Unit of the files; None if none is known, and then every length is in the unit of the files.
     bodies : list of BodyReport
+    marks : list of Mark
+        Places of faults and contacts, to be drawn; not part of the text.
+    mend : str
+        How far a solve was supposed to mend.
     """
 
     files: list[str]
     unit: str | None
     bodies: list[BodyReport]
+    marks: list[Mark] = field(default_factory=list)
+    mend: str = "safe"
 
     @property
     def box(self) -> FloatArray:
@@ -130,6 +137,8 @@ def inspect_files(
     paths: str | Path | Iterable[str | Path],
     unit: str | None = None,
     *,
+    mend: Mend | None = None,
+    marked: bool = False,
     facet_tolerance: float | str | None = None,
     progress: ProgressCallback | None = None,
 ) -> Inspection:
@@ -140,6 +149,10 @@ def inspect_files(
     paths : str, Path or several
     unit : str, optional
         Unit of the files that carry none. Without one, lengths stay in the unit of the files.
+    mend : Mend, optional
+        What a solve would be allowed to change.
+    marked : bool
+        Whether to draw marks too, which takes as long again where bodies meet.
     facet_tolerance : float or str, optional
         Of curved shapes, such as "0.02 mm" or "0.1 %"; a bare number is metres.
     progress : callable, optional
@@ -156,12 +169,19 @@ def inspect_files(
     tell = progress or Silence()
     tell("reading", 0, 1)
     tolerance = None if facet_tolerance is None else parse_facet_tolerance(facet_tolerance)
-    read = read_mesh_set(paths, unit, unit_needed=False, facet_tolerance=tolerance)
-    return replace(inspect_bodies(read.bodies, progress=tell), files=read.files, unit=read.unit)
+    read = read_mesh_set(paths, unit, unit_needed=False, facet_tolerance=tolerance, mend=mend)
+    seen = inspect_bodies(read.bodies, mend=mend, marked=marked, progress=tell)
+    return replace(seen, files=read.files, unit=read.unit)
 
 
 def inspect_bodies(
-    bodies: Sequence[Body], unit: str | None = None, *, progress: ProgressCallback | None = None
+    bodies: Sequence[Body],
+    unit: str | None = None,
+    *,
+    mend: Mend | None = None,
+    marked: bool = False,
+    owner: Sequence[int] | None = None,
+    progress: ProgressCallback | None = None,
 ) -> Inspection:
     """Look at every body and at every pair of them.
 
@@ -171,21 +191,27 @@ def inspect_bodies(
         As read, neither mended nor oriented.
     unit : str, optional
         Unit to show lengths in.
+    mend : Mend, optional
+        What a solve would be allowed to change.
+    marked : bool
+        Whether to draw marks too, which takes as long again where bodies meet.
+    owner : sequence of int, optional
+        Conductor of each body, where that is known.
     progress : callable, optional
 
     Returns
     -------
     Inspection
     """
-    tell = progress or Silence()
+    tell, mend = progress or Silence(), mend or Mend()
     total = sum(len(body.triangles) for body in bodies)
     tell("mending on trial", 0, 1)
-    shapes = shapes_of(_as_solved(bodies))
+    shapes = shapes_of(_as_solved(bodies, mend))
     tell("looking for contacts and gaps", 0, 1)
-    found = contacts([shape.body for shape in shapes], shapes=shapes)
+    found = contacts([shape.body for shape in shapes], owner, shapes=shapes)
     cavities = cavity_walls(shapes)
     gaps = _gaps(shapes, found)
-    reports = []
+    reports, faulty = [], []
     done = 0
     for k, (body, shape) in enumerate(zip(bodies, shapes, strict=True)):
         tell("looking for faults", done, total)
@@ -193,24 +219,42 @@ def inspect_bodies(
         own = faults_of(shape if shape.body is body else Shape(body))
         if k in cavities:
             own = [_cavity(bodies[cavities[k]]) if fault.code == "inside-out" else fault for fault in own]
-        faults = [*own, *_contact_faults(k, found, bodies)]
+        faults = [*own, *_contact_faults(k, found, bodies, owner is not None, mend)]
         reports.append(_report(k, replace(body, faults=faults), shape, gaps[k]))
-    return Inspection(list(dict.fromkeys(body.file for body in bodies)), unit, reports)
+        faulty.append(replace(body, faults=own))
+    if marked:
+        tell("drawing marks", 0, 1)
+    marks = fault_marks(faulty) if marked else []
+    if marked:
+        marks += [_contact_mark(one, shapes) for one in found if one.meets and not one.same_conductor]
+    return Inspection(list(dict.fromkeys(body.file for body in bodies)), unit, reports, marks, mend.mode)
 
 
-def _as_solved(bodies: Sequence[Body]) -> list[Body]:
+def _contact_mark(contact: Contact, shapes: list[Shape]) -> Mark:
+    a, b = shapes[contact.body_a], shapes[contact.body_b]
+    return contact_mark(a, b, contact.kind, f"{a.body.name!r} {contact.kind} {b.body.name!r}")
+
+
+def _as_solved(bodies: Sequence[Body], mend: Mend) -> list[Body]:
     """Bodies as a solve would take them: open or closed, and what encloses what, is asked of these."""
-    fitted = []
-    for body in bodies:
-        try:
-            fitted.append(make_fit(body))
-        except InputError:  # nothing is left of it: its faults say so
-            fitted.append(body)
-    return orient(fitted)
+    try:
+        return fit_bodies(bodies, mend)
+    except InputError:  # some body has nothing left, as its faults say: leave that one as it is
+        fits = [_something_left(body) for body in bodies]
+    fitted = iter(fit_bodies([body for body, fit in zip(bodies, fits, strict=True) if fit], mend))
+    return [next(fitted) if fit else body for body, fit in zip(bodies, fits, strict=True)]
+
+
+def _something_left(body: Body) -> bool:
+    try:
+        make_fit(body)
+    except InputError:
+        return False
+    return True
 
 
 def _report(k: int, body: Body, shape: Shape, gaps: list[Gap]) -> BodyReport:
-    lengths, doubled = sides_and_areas(shape.corners)
+    lengths, doubled = shape.measures
     longest = lengths.max(axis=1)
     sized = doubled > 1e-12 * longest**2
     solved = shape.body
@@ -229,7 +273,7 @@ def _report(k: int, body: Body, shape: Shape, gaps: list[Gap]) -> BodyReport:
         aspect=_spread(longest[sized] ** 2 / doubled[sized]),
         gaps=gaps,
         faults=body.faults,
-        notes=list(body.notes),
+        notes=list(solved.notes),
     )
 
 
@@ -281,8 +325,8 @@ def _cavity(outer: Body) -> Fault:
     return Fault("cavity-wall", "note", 1, None, text, "its normals point into the cavity")
 
 
-def _contact_faults(k: int, found: list[Contact], bodies: Sequence[Body]) -> list[Fault]:
-    """Contacts of one body with others, told from its own side."""
+def _contact_faults(k: int, found: list[Contact], bodies: Sequence[Body], assigned: bool, mend: Mend) -> list[Fault]:
+    """Contacts of one body with others, told from its own side; `assigned`: it is known which conductor has which."""
     faults = []
     for contact in found:
         if k not in (contact.body_a, contact.body_b):
@@ -293,73 +337,15 @@ def _contact_faults(k: int, found: list[Contact], bodies: Sequence[Body]) -> lis
                 text, remedy = f"lies inside {other!r}", "fine if that is meant"
                 faults.append(Fault("inside-other", "note", 1, contact.place, text, remedy))
             continue
-        text = f"{contact.kind} {other!r}"
+        severity, text = "warning", f"{contact.kind} {other!r}"
         remedy = "give both to one conductor, or separate them in CAD"
-        faults.append(Fault(f"{contact.kind}-other", "warning", 1, contact.place, text, remedy))
+        if assigned and contact.same_conductor:
+            severity = "note" if mend.changes else "error"
+            text += " of the same conductor"
+            remedy = "a solve makes one body of them" if mend.changes else "unite them in CAD, or allow safe mending"
+        elif assigned:
+            severity = "error"
+            text += " of another conductor"
+            remedy = "leave a gap between them, or make them one conductor"
+        faults.append(Fault(f"{contact.kind}-other", severity, 1, contact.place, text, remedy))
     return faults
-
-
-def inspection_to_dict(inspection: Inspection) -> dict[str, Any]:
-    """The inspection as plain numbers, lists and words, ready for JSON; lengths in m.
-
-    Parameters
-    ----------
-    inspection : Inspection
-
-    Returns
-    -------
-    dict
-        ``length_unit`` is ``"m"``, or ``"file"`` if the unit of the files is not known.
-    """
-    return {
-        "files": inspection.files,
-        "unit": inspection.unit,
-        "length_unit": "m" if inspection.unit else "file",
-        "bodies": [_body_to_dict(body) for body in inspection.bodies],
-    }
-
-
-def _body_to_dict(body: BodyReport) -> dict[str, Any]:
-    return {
-        "number": body.number,
-        "name": body.name,
-        "file": body.file,
-        "panels": body.panels,
-        "closed": body.closed,
-        "boundary_loops": body.loops,
-        "box": {"low": body.box[0].tolist(), "high": body.box[1].tolist()},
-        "area": body.area,
-        "volume": body.volume,
-        "edge_length": _spread_to_dict(body.edges),
-        "aspect_ratio": _spread_to_dict(body.aspect),
-        "gaps": [
-            {
-                "other": gap.other,
-                "distance": gap.distance,
-                "at": list(gap.place),
-                "at_other": list(gap.place_other),
-            }
-            for gap in body.gaps
-        ],
-        "faults": [
-            {
-                "code": fault.code,
-                "severity": fault.severity,
-                "count": fault.count,
-                "at": None if fault.place is None else list(fault.place),
-                "text": fault.text,
-                "remedy": fault.remedy,
-            }
-            for fault in body.faults
-        ],
-        "notes": body.notes,
-    }
-
-
-def _spread_to_dict(spread: Spread) -> dict[str, float | None]:
-    finite = np.isfinite(spread.largest)
-    return {
-        "min": spread.smallest if finite else None,
-        "median": spread.median if finite else None,
-        "max": spread.largest if finite else None,
-    }

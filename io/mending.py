@@ -11,21 +11,41 @@ from scipy.sparse.csgraph import connected_components
 from daraf.bem.errors import InputError
 
 from .bodies import Body
-from .contacts import cavity_walls, shapes_of
-from .topology import connected_pieces, edges_of, proper_rows, signed_volume, winding_flips
+from .branching import split_branching
+from .changes import Change, Mend, Place
+from .holes import fill_loop, hole_loops
+from .orientation import consistent, orient
+from .topology import (
+    boundary_loops,
+    coincident_groups,
+    compacted,
+    connected_pieces,
+    edges_of,
+    proper_rows,
+    signed_volume,
+)
 from .triangle_distance import sides_and_areas
 
-__all__ = ["coincident_groups", "fit_bodies", "flat_height", "flat_triangles", "make_fit", "orient"]
+__all__ = [
+    "HOLE_SHARE",
+    "fit_bodies",
+    "flat_height",
+    "flat_rows",
+    "flat_triangles",
+    "make_fit",
+]
 
 FloatArray = NDArray[np.float64]
 IntArray = NDArray[np.int64]
 BoolArray = NDArray[np.bool_]
 
-#: An odd number whose bits are spread: products with it hardly ever agree by chance (Knuth, TAOCP 3, 6.4).
-_MIX = np.uint64(0x9E3779B97F4A7C15)
-
 #: Rounds of edge exchanges; each removes at least one triangle of a chain along one edge.
 _ROUNDS = 100
+#: Rounds without fewer triangles left after which no more are tried.
+_IDLE = 5
+
+#: A boundary loop whose cap would be a smaller share of the area looks like a hole, not like a rim.
+HOLE_SHARE = 0.02
 
 
 def flat_height(body: Body) -> float:
@@ -55,39 +75,23 @@ def flat_triangles(vertices: FloatArray, triangles: IntArray, height: float) -> 
     -------
     (nt,) bool
     """
-    sides, doubled = sides_and_areas(vertices[triangles])
+    return flat_rows(triangles, *sides_and_areas(vertices[triangles]), height)
+
+
+def flat_rows(triangles: IntArray, sides: FloatArray, doubled: FloatArray, height: float) -> BoolArray:
+    """As `flat_triangles`, of triangles whose sides (nt, 3) and doubled areas (nt,) are known."""
     flat: BoolArray = ~proper_rows(triangles) | (doubled <= height * sides.max(axis=1))
     return flat
 
 
-def coincident_groups(triangles: IntArray) -> tuple[IntArray, IntArray]:
-    """Group of each triangle by its set of vertices, and the size of each group.
-
-    Parameters
-    ----------
-    triangles : (nt, 3) int
-
-    Returns
-    -------
-    group : (nt,) int
-    size : (n_groups,) int
-    """
-    ordered = np.sort(triangles, axis=1)
-    n = np.uint64(triangles.max(initial=0) + 1)
-    a, b, c = ordered.astype(np.uint64).T
-    key = np.sort(((a * n + b) * _MIX) ^ c)
-    if (key[1:] != key[:-1]).all():  # the usual mesh: no two keys are equal, so no two triangles
-        return np.arange(len(triangles)), np.ones(len(triangles), dtype=np.int64)
-    _, group, size = np.unique(ordered, axis=0, return_inverse=True, return_counts=True)
-    return group.ravel(), size
-
-
-def fit_bodies(bodies: Sequence[Body]) -> list[Body]:
+def fit_bodies(bodies: Sequence[Body], mend: Mend | None = None) -> list[Body]:
     """Each body made fit, then all of them oriented.
 
     Parameters
     ----------
     bodies : sequence of Body
+    mend : Mend, optional
+        How far to go; with "list" the bodies are returned as they are.
 
     Returns
     -------
@@ -99,7 +103,12 @@ def fit_bodies(bodies: Sequence[Body]) -> list[Body]:
     InputError
         If nothing of a body is left.
     """
-    return orient([make_fit(body) for body in bodies])
+    mend = mend or Mend()
+    if not mend.changes:
+        return list(bodies)
+    fitted = [_filled(consistent(make_fit(body)), mend) for body in bodies]
+    apart = [_taken_apart(body) for body in orient(fitted)]
+    return [_checked(before, after) for before, after in zip(bodies, apart, strict=True)]
 
 
 def make_fit(body: Body) -> Body:
@@ -124,9 +133,9 @@ def make_fit(body: Body) -> Body:
         If no triangle is left.
     """
     height = flat_height(body)
-    notes: list[str] = []
+    notes: list[Change] = []
     triangles = _without_short_edges(body, height, notes)
-    triangles = _without_coincident(triangles, notes)
+    triangles = _without_coincident(body.vertices, triangles, notes)
     triangles = _without_flat(body.vertices, triangles, height, notes)
     if len(triangles) == 0:
         raise InputError(f"{body.file}: body {body.name!r} has no area left after cleaning; export it again")
@@ -134,17 +143,84 @@ def make_fit(body: Body) -> Body:
         return body
     n_pieces, _ = connected_pieces(triangles)
     if n_pieces > 1:
-        notes.append(f"it now consists of {n_pieces} separate pieces")
-    used, index = np.unique(triangles, return_inverse=True)
+        notes.append(Change("fell-apart", n_pieces, None, f"it now consists of {n_pieces} separate pieces"))
+    return _with_triangles(body, body.vertices, triangles, notes)
+
+
+def _with_triangles(body: Body, vertices: FloatArray, triangles: IntArray, notes: list[Change]) -> Body:
+    used, index = compacted(triangles, len(vertices))
     return replace(
         body,
-        vertices=np.ascontiguousarray(body.vertices[used]),
-        triangles=np.ascontiguousarray(index.reshape(-1, 3), dtype=np.int64),
+        vertices=np.ascontiguousarray(vertices[used]),
+        triangles=index,
         notes=[*body.notes, *notes],
     )
 
 
-def _without_short_edges(body: Body, height: float, notes: list[str]) -> IntArray:
+def _filled(body: Body, mend: Mend) -> Body:
+    """Close the holes of a body that is closed but for small ones."""
+    largest = mend.hole_size(body.diagonal)
+    if largest == 0.0:
+        return body
+    _, areas = boundary_loops(body.vertices, body.triangles, edges_of(body.triangles))
+    if len(areas) == 0 or (areas >= HOLE_SHARE * _area(body)).any():
+        return body  # closed, or a large rim says that this is a sheet
+    added, sizes, places = [], [], []
+    for loop in hole_loops(body.triangles):
+        points = body.vertices[loop]
+        size = float(np.linalg.norm(np.ptp(points, axis=0)))
+        cap = fill_loop(points) if size <= largest else None
+        if cap is not None:
+            added.append(loop[cap])
+            sizes.append(size)
+            places.append(_point(points.mean(axis=0)))
+    if not added:
+        return body
+    faces = sum(len(cap) for cap in added)
+    text = f"closed {_many(len(added), 'hole')}, the largest {max(sizes) / body.diagonal:.2g} of the body, with "
+    note = Change("filled", len(added), places[0], text + f"{_many(faces, 'new panel')}")
+    return _with_triangles(body, body.vertices, np.vstack([body.triangles, *added]), [note])
+
+
+def _taken_apart(body: Body) -> Body:
+    """Take a body apart along edges with more than two panels."""
+    vertices, triangles, split = split_branching(body.vertices, body.triangles)
+    if len(split) == 0:
+        return body
+    text = f"took {_many(len(split), 'edge')} with more than two panels apart; the shape is the same"
+    note = Change("split-edges", len(split), _point(body.vertices[split[0]].mean(axis=0)), text)
+    return replace(body, vertices=vertices, triangles=triangles, notes=[*body.notes, note])
+
+
+def _checked(before: Body, after: Body) -> Body:
+    """Tell what mending did to area and volume."""
+    if after.notes == before.notes or after.triangles is before.triangles:
+        return after
+    area = _area(after) / _area(before) - 1.0
+    text = f"area after mending {100.0 * area + 0.0:+.2g} %"
+    if edges_of(before.triangles).closed and edges_of(after.triangles).closed:
+        old = abs(signed_volume(before.vertices, before.triangles))
+        new = abs(signed_volume(after.vertices, after.triangles))
+        if old > 0.0:
+            text += f", volume {100.0 * (new / old - 1.0) + 0.0:+.2g} %"
+    return replace(after, notes=[*after.notes, Change("checked", 1, None, text)])
+
+
+def _area(body: Body) -> float:
+    return 0.5 * float(sides_and_areas(body.vertices[body.triangles])[1].sum())
+
+
+def _point(point: FloatArray) -> Place:
+    x, y, z = point
+    return float(x), float(y), float(z)
+
+
+def _middle(vertices: FloatArray, triangles: IntArray, rows: BoolArray | IntArray) -> Place:
+    """Middle of the first of some triangles."""
+    return _point(vertices[triangles[rows][0]].mean(axis=0))
+
+
+def _without_short_edges(body: Body, height: float, notes: list[Change]) -> IntArray:
     """Merge the ends of edges no longer than a height, and drop the triangles that this collapses."""
     triangles = body.triangles
     edges = edges_of(triangles)
@@ -158,21 +234,32 @@ def _without_short_edges(body: Body, height: float, notes: list[str]) -> IntArra
         triangles = keep[label][triangles]
         moved = n - len(keep)
         if moved:
-            notes.append(f"merged {_many(moved, 'vertex', 'vertices')} at most {height:.2g} m from a neighbour")
+            text = f"merged {_many(moved, 'vertex', 'vertices')} with a neighbour"
+            notes.append(Change("merged-vertices", moved, _point(body.vertices[short[0, 0]]), text, height))
     collapsed = ~proper_rows(triangles)
     if collapsed.any():
-        notes.append(f"dropped {_many(int(collapsed.sum()), 'panel')} with two equal vertices")
+        count = int(collapsed.sum())
+        place = _middle(body.vertices, triangles, collapsed)
+        notes.append(Change("dropped", count, place, f"dropped {_many(count, 'panel')} with two equal vertices"))
     return triangles[~collapsed]
 
 
-def _without_flat(vertices: FloatArray, triangles: IntArray, height: float, notes: list[str]) -> IntArray:
+def _without_flat(vertices: FloatArray, triangles: IntArray, height: float, notes: list[Change]) -> IntArray:
     """Remove triangles whose corners lie on one line by exchanging their longest edge."""
     exchanged = 0
+    place: Place | None = None
     if not flat_triangles(vertices, triangles, height).any():
         return triangles
     triangles = triangles.copy()
+    fewest, idle = len(triangles), 0
     for _ in range(_ROUNDS):
         flat = flat_triangles(vertices, triangles, height)
+        left = int(flat.sum())
+        fewest, idle = (left, 0) if left < fewest else (fewest, idle + 1)
+        if idle > _IDLE:  # exchanges go around in a circle
+            break
+        if flat.any() and place is None:
+            place = _middle(vertices, triangles, flat)
         if not flat.any():
             break
         done = _exchange_round(vertices, triangles, flat)
@@ -181,9 +268,14 @@ def _without_flat(vertices: FloatArray, triangles: IntArray, height: float, note
             break
     flat = flat_triangles(vertices, triangles, height)
     if exchanged:
-        notes.append(f"exchanged the edge of {_many(exchanged, 'panel')} without area; the shape is the same")
+        text = f"exchanged the edge of {_many(exchanged, 'panel')} without area; the shape is the same"
+        notes.append(Change("exchanged", exchanged, place, text))
+    if flat.any() and edges_of(triangles).closed and not edges_of(triangles[~flat]).closed:
+        return triangles  # better a sliver than a hole: panels do without it
     if flat.any():
-        notes.append(f"dropped {_many(int(flat.sum()), 'panel')} without area")
+        count = int(flat.sum())
+        place = _middle(vertices, triangles, flat)
+        notes.append(Change("dropped", count, place, f"dropped {_many(count, 'panel')} without area"))
     return triangles[~flat]
 
 
@@ -199,7 +291,8 @@ def _exchange_round(vertices: FloatArray, triangles: IntArray, flat: BoolArray) 
     at_edge: dict[int, list[int]] = {}
     for corner in wanted:
         at_edge.setdefault(int(edges.edge.flat[corner]), []).append(int(corner))
-    known = {(int(a), int(b)) for a, b in edges.ends} if len(flat_rows) else set()
+    n = len(vertices)
+    known = set((edges.ends[:, 0] * n + edges.ends[:, 1]).tolist())
     busy: set[int] = set()
     done = 0
     for row, side, edge in zip(flat_rows.tolist(), longest.tolist(), shared.tolist(), strict=True):
@@ -209,7 +302,7 @@ def _exchange_round(vertices: FloatArray, triangles: IntArray, flat: BoolArray) 
         neighbour, start = divmod(others[0], 3)
         between = int(triangles[row, (side + 2) % 3])
         s, t, d = (int(triangles[neighbour, (start + k) % 3]) for k in range(3))
-        if d == between or (min(between, d), max(between, d)) in known:
+        if d == between or min(between, d) * n + max(between, d) in known:
             continue
         triangles[neighbour] = s, between, d
         triangles[row] = between, t, d
@@ -218,7 +311,7 @@ def _exchange_round(vertices: FloatArray, triangles: IntArray, flat: BoolArray) 
     return done
 
 
-def _without_coincident(triangles: IntArray, notes: list[str]) -> IntArray:
+def _without_coincident(vertices: FloatArray, triangles: IntArray, notes: list[Change]) -> IntArray:
     """Keep one of coincident triangles, or none of those that are a wall inside."""
     group, size = coincident_groups(triangles)
     if (size == 1).all():
@@ -230,10 +323,14 @@ def _without_coincident(triangles: IntArray, notes: list[str]) -> IntArray:
     inner = _inner_walls(triangles, wall, ~several)
     keep = first & ~inner
     if inner.any():
-        notes.append(f"removed a wall of {_many(int(inner.sum()), 'doubled panel')} inside the body")
-    extra = int((several & ~first & ~np.isin(group, group[inner])).sum())
-    if extra:
-        notes.append(f"dropped {_many(extra, 'panel')} that lay upon an equal one")
+        count = int(inner.sum())
+        text = f"removed a wall of {_many(count, 'doubled panel')} inside the body"
+        notes.append(Change("removed-wall", count, _middle(vertices, triangles, inner), text))
+    extra = several & ~first & ~np.isin(group, group[inner])
+    if extra.any():
+        count = int(extra.sum())
+        text = f"dropped {_many(count, 'panel')} that lay upon an equal one"
+        notes.append(Change("dropped", count, _middle(vertices, triangles, extra), text))
     return triangles[keep]
 
 
@@ -253,70 +350,6 @@ def _inner_walls(triangles: IntArray, wall: BoolArray, single: BoolArray) -> Boo
         if len(rim) and (single_count[rim] == 2).all():
             inner[members] = True
     return inner
-
-
-def orient(bodies: Sequence[Body]) -> list[Body]:
-    """Wind panels consistently, and closed bodies outwards; the walls of cavities inwards.
-
-    Parameters
-    ----------
-    bodies : sequence of Body
-
-    Returns
-    -------
-    list of Body
-        What was changed stands in the notes; a body that was right is the same object.
-    """
-    consistent = [_consistent(body) for body in bodies]
-    shapes = shapes_of(consistent)
-    walls = cavity_walls(shapes)
-    result = []
-    for k, (body, shape) in enumerate(zip(consistent, shapes, strict=True)):
-        if k in walls:
-            note = f"is the wall of a cavity in {consistent[walls[k]].name!r}: its normals point into the cavity"
-            result.append(body if note in body.notes else replace(body, notes=[*body.notes, note]))
-        elif shape.volume is not None:
-            result.append(_outward(body))
-        else:
-            result.append(body)
-    return result
-
-
-def _consistent(body: Body) -> Body:
-    rows = proper_rows(body.triangles)
-    flip = np.zeros(len(rows), dtype=np.bool_)
-    notes: list[str] = []
-    if not rows.any():
-        return body
-    flip[rows], _, orientable = winding_flips(body.triangles[rows])
-    if not orientable:
-        notes.append("has a single side (a Moebius strip): its normals are left as they are")
-        flip = np.zeros_like(flip)
-    if flip.any():
-        notes.append(f"turned {_many(int(flip.sum()), 'panel')} over so that neighbours agree")
-    return _turned(body, flip, notes)
-
-
-def _outward(body: Body) -> Body:
-    """Turn over the patches of a closed body that are closed themselves and enclose a negative volume."""
-    _, patch, _ = winding_flips(body.triangles)
-    n_patches = int(patch.max()) + 1
-    flip = np.zeros(len(body.triangles), dtype=np.bool_)
-    for k in range(n_patches):
-        members = patch == k
-        alone = n_patches == 1 or edges_of(body.triangles[members]).closed
-        if alone and signed_volume(body.vertices, body.triangles[members]) < 0.0:
-            flip |= members
-    notes = [f"turned {_many(int(flip.sum()), 'panel')} over so that the normals point outwards"]
-    return _turned(body, flip, notes if flip.any() else [])
-
-
-def _turned(body: Body, flip: BoolArray, notes: list[str]) -> Body:
-    new = [note for note in notes if note not in body.notes]
-    if not flip.any() and not new:
-        return body
-    triangles = np.where(flip[:, None], body.triangles[:, ::-1], body.triangles)
-    return replace(body, triangles=np.ascontiguousarray(triangles), notes=[*body.notes, *new])
 
 
 def _many(count: int, thing: str, things: str = "") -> str:

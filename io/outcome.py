@@ -115,7 +115,7 @@ def solve_case(
         If a file, a body, a placement or the size of the job cannot be used.
     """
     started = time.perf_counter()
-    problem = build_problem(case)
+    problem = build_problem(case, accuracy=accuracy)
     return solve_problem(
         problem,
         accuracy=accuracy,

@@ -2,7 +2,7 @@
 
 import hashlib
 import os
-from collections.abc import Sequence
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, replace
 from pathlib import Path
 from typing import Any
@@ -16,12 +16,9 @@ from daraf.bem.surface import Surface
 
 from .bodies import Body, pick_bodies, read_bodies
 from .case import Case, make_case
-from .contacts import contacts
+from .changes import Change
 from .facet_tolerance import FacetTolerance, parse_facet_tolerance
-from .faults import faults_of
-from .gaps import Shape
-from .mending import fit_bodies
-from .mesh_units import METRES_PER_UNIT
+from .joining import joined, mend_of
 from .readers import may_be_curved
 from .schema import ConductorEntry, Part
 
@@ -29,7 +26,6 @@ __all__ = [
     "InputFile",
     "PlacedBodies",
     "Problem",
-    "bodies_to_surface",
     "build_problem",
     "place",
     "placed_bodies",
@@ -40,10 +36,6 @@ FloatArray = NDArray[np.float64]
 BoolArray = NDArray[np.bool_]
 _Source = tuple[str, str | None, FacetTolerance | None]
 
-_MEETS = {"touches": "touches", "crosses": "cuts through", "overlaps": "overlaps"}
-
-#: How the note of a body begins that is no change of it.
-_WALL = "is the wall of a cavity"
 #: Remarks of readers that stand beside a result.
 _TOLD = ("facet-tolerance", "no-unit", "odd-unit")
 
@@ -74,6 +66,8 @@ class Problem:
         Whether the potential is given (else the charge); None if nothing is stated.
     values : (n,) float, V or C, or None
     notices : tuple of Notice
+    changes : tuple of (conductor, body, Change)
+        Everything that was changed of the geometry, by name of conductor and body.
     rounding : (n_bodies,) float, m, or None
         How far the coordinates of each body may be off by the rounding of its file; None if not known.
     """
@@ -84,6 +78,7 @@ class Problem:
     held: BoolArray | None
     values: FloatArray | None
     notices: tuple[Notice, ...]
+    changes: tuple[tuple[str, str, Change], ...] = ()
     rounding: FloatArray | None = None
 
 
@@ -93,6 +88,7 @@ def problem_from_files(
     *,
     accuracy: float | str | None = None,
     facet_tolerance: float | str | None = None,
+    mending: Mapping[str, Any] | None = None,
 ) -> Problem:
     """Problem in which each body of the files is a conductor, without potentials or charges.
 
@@ -103,6 +99,8 @@ def problem_from_files(
     accuracy : float or str, optional
     facet_tolerance : float or str, optional
         Of curved shapes, such as "0.02 mm" or "0.1 %"; a bare number is metres.
+    mending : mapping, optional
+        Keys of the case that say how far mending goes: mend, mend_within, close_holes, coarsen.
 
     Returns
     -------
@@ -114,7 +112,10 @@ def problem_from_files(
         If a file cannot be used, the unit is missing, or bodies touch or overlap.
     """
     tolerance = None if facet_tolerance is None else parse_facet_tolerance(facet_tolerance)
-    bodies = read_bodies([str(path) for path in paths], unit, facet_tolerance=tolerance)
+    more = dict(mending or {})
+    # checked before any file is read
+    rule = mend_of(make_case({"conductor": [{"name": "any", "surface": "any"}], **more}, folder="."))
+    bodies = read_bodies([str(path) for path in paths], unit, facet_tolerance=tolerance, mend=rule)
     folder = Path(paths[0]).absolute().parent
     known: dict[_Source, list[Body]] = {}
     conductors = []
@@ -125,6 +126,7 @@ def problem_from_files(
     stated: dict[str, Any] = {
         "title": ", ".join(Path(file).name for file, _, _ in known)[:200],
         "conductor": conductors,
+        **more,
     }
     stated |= {} if unit is None else {"unit": unit}
     stated |= {} if accuracy is None else {"accuracy": accuracy}
@@ -133,7 +135,9 @@ def problem_from_files(
     return build_problem(case, known=known)
 
 
-def build_problem(case: Case, *, known: dict[_Source, list[Body]] | None = None) -> Problem:
+def build_problem(
+    case: Case, *, known: dict[_Source, list[Body]] | None = None, accuracy: float | None = None
+) -> Problem:
     """Read the surface files of a case, choose and place its bodies.
 
     Parameters
@@ -141,6 +145,8 @@ def build_problem(case: Case, *, known: dict[_Source, list[Body]] | None = None)
     case : Case
     known : dict, optional
         Bodies read before, by path and unit.
+    accuracy : float, optional
+        Relative, overrides the case: how far round parts may be coarsened depends on it.
 
     Returns
     -------
@@ -154,11 +160,10 @@ def build_problem(case: Case, *, known: dict[_Source, list[Body]] | None = None)
     placed = placed_bodies(case, known=known)
     bodies, owner = list(placed.bodies), list(placed.owner)
     notices = placed.notices
-    surface, changes = _surface(case, bodies, owner)
+    surface, told, changes, rounding = joined(case, bodies, owner, accuracy)
     held, values = _stated(case)
-    inputs = tuple(_input_file(case, entry) for entry in dict.fromkeys(_surfaces(case)))
-    rounding = np.array([body.spacing for body in bodies])
-    return Problem(case, surface, inputs, held, values, (*notices, *changes), rounding)
+    inputs = tuple(_input_file(case, entry) for entry in dict.fromkeys([*_surfaces(case), *_side_files(case, placed)]))
+    return Problem(case, surface, inputs, held, values, (*notices, *told), changes, rounding)
 
 
 @dataclass(frozen=True, eq=False)
@@ -233,45 +238,6 @@ def place(body: Body, part: Part) -> Body:
     return replace(body, vertices=np.ascontiguousarray(vertices + np.array(part.shift)))
 
 
-def bodies_to_surface(
-    bodies: Sequence[Body], conductor: Sequence[int] | None = None, *, names: Sequence[str] = ()
-) -> Surface:
-    """Join bodies into the surface that the solver takes.
-
-    The bodies are taken as they are; `fit_bodies` mends and orients them, `build_problem` does it by itself.
-
-    Parameters
-    ----------
-    bodies : sequence of Body
-    conductor : sequence of int, optional
-        Conductor of each body; each body is one by default.
-    names : sequence of str, optional
-        Of the conductors; those of the bodies if each is one.
-
-    Returns
-    -------
-    daraf.bem Surface
-
-    Raises
-    ------
-    InputError
-        If the numbers do not fit the bodies.
-    """
-    if not bodies:
-        raise InputError("no conductor; give at least one body")
-    owner = np.arange(len(bodies)) if conductor is None else np.asarray(conductor, dtype=np.int64)
-    starts = np.concatenate([[0], np.cumsum([len(body.vertices) for body in bodies])])
-    triangles = [body.triangles + start for body, start in zip(bodies, starts[:-1], strict=True)]
-    return Surface(
-        vertices=np.concatenate([body.vertices for body in bodies]),
-        triangles=np.concatenate(triangles),
-        triangle_body=np.repeat(np.arange(len(bodies)), [len(body.triangles) for body in bodies]),
-        body_conductor=owner,
-        conductor_names=tuple(names) or (tuple(body.name for body in bodies) if conductor is None else ()),
-        body_names=tuple(body.name for body in bodies),
-    )
-
-
 def _source(case: Case, part: Part) -> _Source:
     tolerance = part.facet_tolerance
     if tolerance is None and may_be_curved(part.surface):
@@ -284,7 +250,13 @@ def _chosen(case: Case, part: Part, where: str, files: dict[_Source, list[Body]]
     source = _source(case, part)
     try:
         if source not in files:
-            files[source] = read_bodies([source[0]], part.unit, other_unit=case.content.unit, facet_tolerance=source[2])
+            files[source] = read_bodies(
+                [source[0]],
+                part.unit,
+                other_unit=case.content.unit,
+                facet_tolerance=source[2],
+                mend=mend_of(case),
+            )
         return pick_bodies(files[source], part.body) if part.body else files[source]
     except InputError as error:
         raise InputError(f"{where}: {error}") from None
@@ -340,63 +312,11 @@ def _unused(files: dict[_Source, list[Body]], used: dict[tuple[_Source, int], st
     for source, bodies in files.items():
         idle = [body.name for body in bodies if (source, body.index_in_file) not in used]
         if idle:
+            verb = "belongs" if len(idle) == 1 else "belong"
             shown = ", ".join(repr(name) for name in idle[:6]) + (", ..." if len(idle) > 6 else "")
-            text = f"{Path(source[0]).name}: {len(idle)} of {len(bodies)} bodies belong to no conductor: {shown}"
+            text = f"{Path(source[0]).name}: {len(idle)} of {len(bodies)} bodies {verb} to no conductor: {shown}"
             notices.append(Notice("unused-body", text + "; left out of the computation"))
     return notices
-
-
-def _surface(case: Case, bodies: list[Body], owner: list[int]) -> tuple[Surface, list[Notice]]:
-    """Mend the placed bodies, look at each and at every pair, and join them."""
-    bodies = fit_bodies(bodies)
-    notices = []
-    for body, conductor in zip(bodies, owner, strict=True):
-        notices += _body_notices(case, body, _described(case, body, conductor))
-    notices += _meeting(case, bodies, owner)
-    names = [entry.name for entry in case.content.conductor]
-    return bodies_to_surface(bodies, owner, names=names), notices
-
-
-def _body_notices(case: Case, body: Body, name: str) -> list[Notice]:
-    """What was changed of a body, and what is still wrong with it."""
-    walls = [note for note in body.notes if note.startswith(_WALL)]
-    changes = [note for note in body.notes if note not in walls]
-    told = [Notice("cavity-wall", f"{name} {note}") for note in walls]
-    if changes:
-        told.append(Notice("mended", f"{name}: {'; '.join(changes)}"))
-    for fault in faults_of(Shape(body)):
-        # After mending only the wall of a cavity is wound inwards, as it should be.
-        if fault.severity != "note" and fault.code != "inside-out":
-            place = "" if fault.place is None else f" at {_place_text(fault.place, case.content.unit)}"
-            told.append(Notice(fault.code, f"{name}: {fault.text}{place}: {fault.remedy}"))
-    return told
-
-
-def _meeting(case: Case, bodies: list[Body], owner: list[int]) -> list[Notice]:
-    """Refuse conductors that meet; tell of bodies of one conductor that do."""
-    notices = []
-    for contact in contacts(bodies, owner):
-        if not contact.meets:
-            continue
-        one, other = (_described(case, bodies[k], owner[k]) for k in (contact.body_a, contact.body_b))
-        place = _place_text(contact.place, case.content.unit)
-        text = f"{one} {_MEETS[contact.kind]} {other} at {place}"
-        if not contact.same_conductor:
-            raise InputError(f"{case.label}: {text}; leave a gap between them, or make them one conductor")
-        notices.append(Notice("bodies-meet", f"{text}; better join them in CAD"))
-    return notices
-
-
-def _described(case: Case, body: Body, conductor: int) -> str:
-    name = case.content.conductor[conductor].name
-    return f"conductor {name!r}" if body.name == name else f"conductor {name!r} (body {body.name!r})"
-
-
-def _place_text(place: tuple[float, float, float], unit: str | None) -> str:
-    """Place in the unit of the case, such as "(1, 0, 2.5) mm"."""
-    shown = unit or "m"
-    numbers = ", ".join(f"{value / METRES_PER_UNIT[shown] + 0.0:.5g}" for value in place)
-    return f"({numbers}) {shown}"
 
 
 def _stated(case: Case) -> tuple[BoolArray | None, FloatArray | None]:
@@ -410,6 +330,13 @@ def _stated(case: Case) -> tuple[BoolArray | None, FloatArray | None]:
 
 def _surfaces(case: Case) -> list[str]:
     return [part.surface for entry in case.content.conductor for part in entry.parts]
+
+
+def _side_files(case: Case, placed: PlacedBodies) -> list[str]:
+    """Files that surface files name and that were read with them, relative to the case where they lie below it."""
+    files = dict.fromkeys(file for body in placed.bodies for file in body.side_files)
+    near = {file: os.path.relpath(file, case.folder) for file in files}
+    return [str(Path(file).absolute()) if near[file].startswith("..") else near[file] for file in files]
 
 
 def _input_file(case: Case, surface: str) -> InputFile:

@@ -8,7 +8,7 @@ import math
 import re
 from typing import Annotated, Any, Literal, Self
 
-from pydantic import BaseModel, BeforeValidator, ConfigDict, Field, StrictBool, WithJsonSchema
+from pydantic import AfterValidator, BaseModel, BeforeValidator, ConfigDict, Field, StrictBool, WithJsonSchema
 from pydantic import model_validator as whole
 
 from daraf.bem.errors import InputError
@@ -143,6 +143,23 @@ def _facets(value: Any) -> str:
     raise InputError(f"{value!r} does not say what facets are; write one of {', '.join(map(repr, FACETS))}")
 
 
+def _positive(value: float) -> float:
+    if value <= 0.0:
+        raise InputError(f"{value:g} m is no size; write a length above 0 such as '0.01 mm'")
+    return value
+
+
+def _coarsening(value: Any) -> float | str:
+    if value in ("auto", "no"):
+        return str(value)
+    if value is False:
+        return "no"
+    try:
+        return _positive(parse_quantity(value, "length"))
+    except InputError:
+        raise InputError(f"{value!r} says no coarsening; write 'auto', 'no' or a length such as '5 um'") from None
+
+
 _THREE_LENGTHS = {
     "anyOf": [
         {"type": "string"},
@@ -195,6 +212,17 @@ Facetting = Annotated[
         {
             "anyOf": [{"type": "number"}, {"type": "string"}],
             "description": "largest distance of facets from curved shapes (STEP): '0.02 mm', or '0.1 %' of the size",
+        }
+    ),
+]
+PositiveLength = Annotated[_quantity("length"), AfterValidator(_positive)]  # type: ignore[valid-type]
+Coarsening = Annotated[
+    float | str,
+    BeforeValidator(_coarsening),
+    WithJsonSchema(
+        {
+            "anyOf": [{"enum": ["auto", "no"]}, {"type": ["number", "string"]}],
+            "description": "auto: over-fine round parts of models too large otherwise; no: never; a length: within it",
         }
     ),
 ]
@@ -293,6 +321,14 @@ class CaseContent(_Table):
         "auto",
         description="how the equations are solved: dense (full matrix), fast (multipoles, iteration), auto: by size",
     )
+    mend: Literal["list", "safe", "bold"] = Field(
+        "safe",
+        description="list: change nothing, refuse what is not fit; safe: only what keeps the shape; "
+        "bold: also sew visible cracks and close small holes",
+    )
+    mend_within: PositiveLength | None = Field(None, description="nothing moves farther than this")  # type: ignore[valid-type]
+    close_holes: PositiveLength | None = Field(None, description="largest hole that bold closes")  # type: ignore[valid-type]
+    coarsen: Coarsening = "auto"
     want: tuple[tuple[str, str], ...] = Field(
         (), description="couplings that must meet the accuracy, as pairs of conductors; all if left out"
     )

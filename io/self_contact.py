@@ -7,7 +7,7 @@ from numpy.typing import NDArray
 
 from .gaps import Shape
 from .triangle_boxes import near_pairs
-from .triangle_distance import edge_crossings, pair_distances, sides_and_areas, slab_gaps
+from .triangle_distance import edge_crossings, pair_distances, slab_gaps
 
 __all__ = ["self_contacts"]
 
@@ -42,7 +42,7 @@ def self_contacts(shape: Shape, tolerance: float) -> tuple[IntArray, FloatArray,
     crossing : (m,) bool
         Whether an edge of one passes through the other.
     """
-    low = _heights(shape.corners) <= tolerance
+    low = _heights(shape) <= tolerance
     pairs, places, crossings = [], [], []
     for i, j in _near_pairs(shape, tolerance):
         tall = ~(low[i] | low[j])
@@ -75,9 +75,9 @@ def _near_pairs(shape: Shape, tolerance: float) -> Iterator[tuple[IntArray, IntA
         yield block[:, 0], block[:, 1]
 
 
-def _heights(corners: FloatArray) -> FloatArray:
+def _heights(shape: Shape) -> FloatArray:
     """Smallest height of each triangle, m."""
-    sides, doubled = sides_and_areas(corners)
+    sides, doubled = shape.measures
     longest = sides.max(axis=1)
     heights: FloatArray = doubled / np.where(longest > 0.0, longest, 1.0)
     return heights

@@ -30,7 +30,16 @@ LARGEST_MATRIX = 12
 MOST_COUPLINGS = 40
 _NAME_WIDTH = 18
 #: Notices that ask for a look and are no reason for doubt.
-NOTES = ("cavity-wall", "facets-taken-as-drawn", "facets-taken-round", "mended", "unused-body")
+NOTES = (
+    "cavity-wall",
+    "facet-tolerance",
+    "facets-taken-as-drawn",
+    "facets-taken-round",
+    "inner-surface",
+    "mended",
+    "own-unit",
+    "unused-body",
+)
 #: Causes below this share of the largest are not printed.
 _PRINTED = 1e-3
 

@@ -2,6 +2,7 @@
 
 from collections import deque
 from dataclasses import dataclass
+from functools import cached_property
 
 import numpy as np
 from numpy.typing import NDArray
@@ -11,6 +12,7 @@ from scipy.sparse.csgraph import connected_components
 __all__ = [
     "Edges",
     "boundary_loops",
+    "coincident_groups",
     "compacted",
     "connected_pieces",
     "edges_of",
@@ -22,6 +24,9 @@ __all__ = [
 FloatArray = NDArray[np.float64]
 IntArray = NDArray[np.int64]
 BoolArray = NDArray[np.bool_]
+
+#: An odd number whose bits are spread: products with it hardly ever agree by chance (Knuth, TAOCP 3, 6.4).
+_MIX = np.uint64(0x9E3779B97F4A7C15)
 
 
 @dataclass(frozen=True, eq=False)
@@ -49,6 +54,21 @@ class Edges:
     def closed(self) -> bool:
         """Whether every edge has an even number of triangles, so that there is no boundary."""
         return bool((self.count % 2 == 0).all())
+
+    @cached_property
+    def pieces(self) -> tuple[int, IntArray]:
+        """See `connected_pieces`."""
+        n = len(self.edge)
+        face = np.repeat(np.arange(n), 3)
+        graph = coo_matrix((np.ones(3 * n), (face, n + self.edge.ravel())), shape=(n + len(self.ends),) * 2)
+        # components are numbered in the order of their first node, and triangles come first
+        n_pieces, labels = connected_components(graph, directed=False)
+        return int(n_pieces) if n else 0, labels[:n].astype(np.int64)
+
+    @cached_property
+    def winding(self) -> tuple[BoolArray, IntArray, bool]:
+        """See `winding_flips`."""
+        return _winding(self)
 
 
 #: Edges of the last large meshes, beside copies of their triangles: one mesh is asked many times in a row.
@@ -94,6 +114,28 @@ def proper_rows(triangles: IntArray) -> BoolArray:
     return proper
 
 
+def coincident_groups(triangles: IntArray) -> tuple[IntArray, IntArray]:
+    """Group of each triangle by its set of vertices, and the size of each group.
+
+    Parameters
+    ----------
+    triangles : (nt, 3) int
+
+    Returns
+    -------
+    group : (nt,) int
+    size : (n_groups,) int
+    """
+    ordered = np.sort(triangles, axis=1)
+    n = np.uint64(triangles.max(initial=0) + 1)
+    a, b, c = ordered.astype(np.uint64).T
+    key = np.sort(((a * n + b) * _MIX) ^ c)
+    if (key[1:] != key[:-1]).all():  # the usual mesh: no two keys are equal, so no two triangles
+        return np.arange(len(triangles)), np.ones(len(triangles), dtype=np.int64)
+    _, group, size = np.unique(ordered, axis=0, return_inverse=True, return_counts=True)
+    return group.ravel(), size
+
+
 def compacted(triangles: IntArray, n_vertices: int) -> tuple[IntArray, IntArray]:
     """Vertices that triangles use, in rising order, and the same triangles over these alone.
 
@@ -126,13 +168,7 @@ def connected_pieces(triangles: IntArray) -> tuple[int, IntArray]:
     n_pieces : int
     piece : (nt,) int
     """
-    n = len(triangles)
-    edges = edges_of(triangles)
-    face = np.repeat(np.arange(n), 3)
-    graph = coo_matrix((np.ones(3 * n), (face, n + edges.edge.ravel())), shape=(n + len(edges.ends),) * 2)
-    # components are numbered in the order of their first node, and triangles come first
-    n_pieces, labels = connected_components(graph, directed=False)
-    return int(n_pieces) if n else 0, labels[:n].astype(np.int64)
+    return edges_of(triangles).pieces
 
 
 def winding_flips(triangles: IntArray) -> tuple[BoolArray, IntArray, bool]:
@@ -154,8 +190,11 @@ def winding_flips(triangles: IntArray) -> tuple[BoolArray, IntArray, bool]:
     orientable : bool
         Whether every patch has two sides; one that has not is left as it is.
     """
-    n = len(triangles)
-    edges = edges_of(triangles)
+    return edges_of(triangles).winding
+
+
+def _winding(edges: Edges) -> tuple[BoolArray, IntArray, bool]:
+    n = len(edges.edge)
     order = np.argsort(edges.edge.ravel(), kind="stable")
     pair = order[edges.count[edges.edge.ravel()[order]] == 2].reshape(-1, 2)
     face, forward = pair // 3, edges.forward.ravel()[pair]
@@ -188,8 +227,9 @@ def signed_volume(vertices: FloatArray, triangles: IntArray) -> float:
     -------
     float, m3
     """
-    a, b, c = np.moveaxis(vertices[triangles] - vertices[triangles[0, 0]], 1, 0)
-    return float(np.einsum("ij,ij->", a, np.cross(b, c))) / 6.0
+    columns = (vertices - vertices[triangles[0, 0]]).T
+    a, b, c = (columns[:, triangles[:, k]] for k in range(3))
+    return sum(float((a[k] * (b[k - 2] * c[k - 1] - b[k - 1] * c[k - 2])).sum()) for k in range(3)) / 6.0
 
 
 def boundary_loops(vertices: FloatArray, triangles: IntArray, edges: Edges) -> tuple[IntArray, FloatArray]:

@@ -7,6 +7,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 __all__ = [
+    "doubled_area_vectors",
     "edge_crossings",
     "inside_fraction",
     "pair_distances",
@@ -152,11 +153,36 @@ def sides_and_areas(corners: FloatArray) -> tuple[FloatArray, FloatArray]:
     """
     a, b, c = (np.ascontiguousarray(corners[:, k].T) for k in range(3))  # columns: a third of the time of rows
     ab, bc, ca = b - a, c - b, a - c
-    sides = np.sqrt(np.stack([(side * side).sum(axis=0) for side in (ab, bc, ca)], axis=1))
-    x = ab[1] * bc[2] - ab[2] * bc[1]
-    y = ab[2] * bc[0] - ab[0] * bc[2]
-    z = ab[0] * bc[1] - ab[1] * bc[0]
-    return sides, np.sqrt(x * x + y * y + z * z)
+    sides = np.empty((len(corners), 3))
+    for k, side in enumerate((ab, bc, ca)):
+        np.sqrt((side * side).sum(axis=0), out=sides[:, k])
+    vector = _cross(ab, bc)
+    return sides, np.sqrt((vector * vector).sum(axis=0))
+
+
+def doubled_area_vectors(corners: FloatArray) -> FloatArray:
+    """Normals of triangles as long as twice their areas, as columns.
+
+    Parameters
+    ----------
+    corners : (n, 3, 3) float, m
+
+    Returns
+    -------
+    (3, n) float, m2
+    """
+    a, b, c = (np.ascontiguousarray(corners[:, k].T) for k in range(3))
+    return _cross(b - a, c - b)
+
+
+def _cross(u: FloatArray, v: FloatArray) -> FloatArray:
+    """Cross products of columns, (3, n)."""
+    product = np.empty_like(u)
+    for k in range(3):
+        i, j = (k + 1) % 3, (k + 2) % 3
+        np.multiply(u[i], v[j], out=product[k])
+        product[k] -= u[j] * v[i]
+    return product
 
 
 def slab_gaps(a: FloatArray, normal_a: FloatArray, b: FloatArray, normal_b: FloatArray) -> FloatArray:

@@ -1,4 +1,6 @@
-"""Merging of equal vertices, with a tolerance relative to the size of the part."""
+"""Merging of equal vertices, with a tolerance relative to the size of the part; parts that lost their shape."""
+
+from pathlib import Path
 
 import numpy as np
 from numpy.typing import NDArray
@@ -6,13 +8,20 @@ from scipy.sparse import coo_matrix
 from scipy.sparse.csgraph import connected_components
 from scipy.spatial import cKDTree
 
-__all__ = ["RELATIVE_WELD", "weld"]
+from daraf.bem.errors import InputError
+
+from .triangle_distance import sides_and_areas
+
+__all__ = ["RELATIVE_WELD", "check_shape", "weld"]
 
 FloatArray = NDArray[np.float64]
 IntArray = NDArray[np.int64]
 
 #: Vertices closer than this share of the diagonal of the part are one vertex.
 RELATIVE_WELD = 1e-9
+
+#: Coordinates rounded to more than this share of the median edge have lost the shape.
+_LOST_SHAPE = 0.1
 
 #: Direction of a line on which the points of no usual drawing fall together, unit length.
 _SKEW = np.array([0.5257311, 0.8090169, 0.2628655]) / np.linalg.norm([0.5257311, 0.8090169, 0.2628655])
@@ -39,7 +48,8 @@ def weld(vertices: FloatArray, triangles: IntArray) -> tuple[FloatArray, IntArra
     tolerance : float
         `RELATIVE_WELD` times the diagonal of the bounding box, in the unit of the vertices.
     """
-    corners = vertices[triangles.ravel()] + 0.0  # + 0.0 makes -0.0 and 0.0 the same bits
+    corners = vertices[triangles.ravel()]
+    corners += 0.0  # makes -0.0 and 0.0 the same bits
     first, inverse = _equal_rows(corners)
     distinct = corners[first]
     tolerance = RELATIVE_WELD * float(np.linalg.norm(np.ptp(distinct, axis=0)))
@@ -83,12 +93,55 @@ def _close_pairs(points: FloatArray, tolerance: float) -> IntArray:
 
 
 def _equal_rows(rows: FloatArray) -> tuple[IntArray, IntArray]:
-    """First occurrence of each distinct row, and the number of the distinct row that each row equals."""
-    bits = np.ascontiguousarray(rows).view(np.uint64)
-    bits = (bits ^ (bits >> np.uint64(29))) * _MIX
-    key = bits[:, 0] ^ (bits[:, 1] >> np.uint64(7)) ^ (bits[:, 2] << np.uint64(13)) ^ (bits[:, 2] >> np.uint64(31))
-    _, first, inverse = np.unique(key, return_index=True, return_inverse=True)
-    if np.array_equal(rows[first[inverse]], rows):
+    """One occurrence of each distinct row, and the number of the distinct row that each row equals."""
+    key = np.zeros(len(rows), dtype=np.uint64)
+    for column, mix in zip(rows.T, _MIX, strict=True):
+        bits = np.ascontiguousarray(column).view(np.uint64)
+        key ^= (bits ^ (bits >> np.uint64(29))) * mix
+        key = (key << np.uint64(13)) | (key >> np.uint64(51))
+    order = np.argsort(key)  # which of equal rows comes first does not matter, and the stable kinds are slower
+    ordered = key[order]
+    fresh = np.concatenate([[True], ordered[1:] != ordered[:-1]])[: len(ordered)]
+    first = order[fresh]
+    inverse = np.empty(len(rows), dtype=np.int64)
+    inverse[order] = np.cumsum(fresh) - 1
+    if all(np.array_equal(column[first][inverse], column) for column in rows.T):
         return first, inverse
     _, first, inverse = np.unique(rows, axis=0, return_index=True, return_inverse=True)  # a key was shared
     return first, inverse.ravel()
+
+
+def check_shape(path: Path, name: str, vertices: FloatArray, triangles: IntArray, spacing: float) -> None:
+    """Refuse a part that is a point or a line, or whose coordinates are too coarse to hold its shape.
+
+    Parameters
+    ----------
+    path : Path
+    name : str
+        Of the part, for messages.
+    vertices : (nv, 3) float
+    triangles : (nt, 3) int
+    spacing : float
+        Rounding of the coordinates, half a step, in the unit of the vertices.
+
+    Raises
+    ------
+    InputError
+    """
+    label = f"solid {name!r}" if name else "the mesh"
+    sides, doubled = sides_and_areas(vertices[triangles])
+    edge = float(np.median(sides[sides > 0.0])) if (sides > 0.0).any() else 0.0
+    flat = not (doubled > 1e-12 * sides.max(axis=1) ** 2).any()
+    # a true edge rounds to nothing or to whole steps: a lost shape shows as edges of a few steps
+    largest = float(np.abs(vertices).max())
+    if edge > 0.0 and spacing > _LOST_SHAPE * edge:
+        raise InputError(
+            f"{path}: {label}: coordinates near {largest:.3g} in single precision are rounded to steps of "
+            f"{2 * spacing:.2g}, its edges are {edge:.2g} long: the shape is lost; move the part to the "
+            "origin in CAD and export it again"
+        )
+    if flat:
+        raise InputError(
+            f"{path}: {label}: all {len(triangles)} faces have no area, at a rounding of {2 * spacing:.2g} "
+            f"for coordinates near {largest:.3g}; export it as a surface mesh, near the origin"
+        )

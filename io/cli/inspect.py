@@ -6,6 +6,7 @@ import os
 import sys
 from typing import TYPE_CHECKING
 
+from .mending_options import add_mending, mend_from, with_mending
 from .parser import case_file_among
 
 if TYPE_CHECKING:
@@ -35,6 +36,8 @@ def add_arguments(parser: argparse.ArgumentParser) -> None:
         metavar="X",
         help="largest distance of facets from curved shapes (STEP), such as '0.02 mm' or '0.1 %%' of the size",
     )
+    add_mending(parser)
+    parser.add_argument("--markers", metavar="FILE", help="draw faults and contacts into a .vtp file")
     parser.add_argument("--json", action="store_true", help="print JSON instead of text")
     parser.add_argument("-q", "--quiet", action="store_true", help="no progress")
 
@@ -42,10 +45,13 @@ def add_arguments(parser: argparse.ArgumentParser) -> None:
 def run(args: argparse.Namespace) -> int:
     """Inspect and print."""
     from daraf.io.inspection import inspection_to_dict, inspection_to_text
+    from daraf.io.markers import write_marks
     from daraf.io.progress import progress_for
 
     with progress_for(quiet=args.quiet or _soon_done(args.files)) as progress:
         inspection = _inspected(args, progress)
+        if args.markers:
+            write_marks(args.markers, inspection.marks, inspection.unit)
     if args.json:
         text = json.dumps(inspection_to_dict(inspection), indent=2, ensure_ascii=False)
     else:
@@ -59,11 +65,19 @@ def _inspected(args: argparse.Namespace, progress: "ProgressCallback") -> "Inspe
     if case_file is None:
         from daraf.io.inspection import inspect_files
 
-        return inspect_files(args.files, args.unit, facet_tolerance=args.facet_tolerance, progress=progress)
+        return inspect_files(
+            args.files,
+            args.unit,
+            mend=mend_from(args),
+            marked=bool(args.markers),
+            facet_tolerance=args.facet_tolerance,
+            progress=progress,
+        )
     from daraf.io.case import load_case
     from daraf.io.case_inspection import inspect_case
 
-    inspection, notices = inspect_case(load_case(case_file), progress=progress)
+    case = with_mending(load_case(case_file), args)
+    inspection, notices = inspect_case(case, marked=bool(args.markers), progress=progress)
     for notice in notices:
         sys.stderr.write(f"note: {notice.text}\n")
     return inspection

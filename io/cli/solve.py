@@ -7,6 +7,7 @@ import sys
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
+from .mending_options import add_mending, mending_keys, with_mending
 from .parser import UsageError, case_file_among, positive_whole_number
 
 if TYPE_CHECKING:
@@ -43,6 +44,9 @@ def add_arguments(parser: argparse.ArgumentParser) -> None:
         choices=("auto", "dense", "fast"),
         help="full matrix, or multipoles and iteration; overrides the case (default: by size)",
     )
+    add_mending(parser)
+    parser.add_argument("--coarsen", metavar="X", help="auto, no, or a length within which round parts are coarsened")
+    parser.add_argument("--markers", metavar="FILE", help="where to draw places at which conductors meet (.vtp)")
     parser.add_argument("--out", metavar="DIR", help="result folder (default: NAME.daraf beside the first file)")
     parser.add_argument("--json", action="store_true", help="print result.json instead of tables")
     parser.add_argument("-q", "--quiet", action="store_true", help="no progress and no messages")
@@ -65,7 +69,7 @@ def run(args: argparse.Namespace) -> int:
     from daraf.io.progress import progress_for
     from daraf.io.result import check_destination
 
-    problem, seconds, accuracy = _read(args, case_file)
+    problem, seconds, accuracy = _marked(args, case_file)
     out = args.out or str(Path(args.files[0]).with_suffix(".daraf"))
     # Before the solve: an hour's work must not end at a folder that cannot be written.
     check_destination(out)
@@ -96,6 +100,22 @@ def _limit_threads(n: int) -> None:
     set_threads(n)
 
 
+def _marked(args: argparse.Namespace, case_file: str | None) -> tuple["Problem", float, float | None]:
+    """As `_read`; where conductors meet, the places are drawn beside the error."""
+    from daraf.bem.errors import InputError
+    from daraf.io.markers import MeetingError, write_marks
+
+    try:
+        return _read(args, case_file)
+    except MeetingError as error:
+        file = args.markers or Path(args.files[0]).with_suffix(".markers.vtp")
+        try:
+            drawn = f"drawn in {write_marks(file, error.marks, error.unit)}"
+        except InputError as trouble:
+            drawn = f"not drawn: {trouble}"
+        raise InputError(f"{error}; {drawn}") from None
+
+
 def _read(args: argparse.Namespace, case_file: str | None) -> tuple["Problem", float, float | None]:
     """Read case and surfaces: the problem, the seconds it took, the accuracy that overrides the case."""
     import time
@@ -107,9 +127,15 @@ def _read(args: argparse.Namespace, case_file: str | None) -> tuple["Problem", f
     started = time.perf_counter()
     accuracy = None if args.accuracy is None else parse_accuracy(args.accuracy)
     if case_file is None:
-        problem = problem_from_files(args.files, args.unit, accuracy=accuracy, facet_tolerance=args.facet_tolerance)
+        problem = problem_from_files(
+            args.files,
+            args.unit,
+            accuracy=accuracy,
+            facet_tolerance=args.facet_tolerance,
+            mending=mending_keys(args),
+        )
     else:
-        problem = build_problem(load_case(case_file))
+        problem = build_problem(with_mending(load_case(case_file), args), accuracy=accuracy)
     return problem, time.perf_counter() - started, accuracy
 
 

@@ -10,7 +10,8 @@ from sample_solution import ascii_stl
 from daraf.bem.errors import InputError
 from daraf.io.bodies import read_bodies
 from daraf.io.case import make_case
-from daraf.io.problem import bodies_to_surface, build_problem, problem_from_files
+from daraf.io.joining import bodies_to_surface
+from daraf.io.problem import build_problem, problem_from_files
 
 
 @pytest.fixture
@@ -156,10 +157,13 @@ def test_mended_and_doubtful_bodies_are_told(folder):
     assert told["mended"].startswith("conductor 'A'")
 
 
-def test_bodies_of_one_conductor_may_meet_and_it_is_told(folder):
+def test_bodies_of_one_conductor_that_meet_are_united_and_it_is_told(folder):
     parts = [{"surface": "wall.stl"}, {"surface": "wall.stl", "shift": "0.5 0.5 0.25 mm"}]
     problem = build(folder, {"name": "both", "part": parts})
-    assert [one.code for one in problem.notices] == ["bodies-meet"]
+    assert [one.code for one in problem.notices] == ["mended"]
+    assert problem.surface.n_bodies == 1
+    ((conductor, body, change),) = problem.changes
+    assert (conductor, body, change.code, change.count) == ("both", "wall+wall", "united", 2)
 
 
 def test_the_wall_of_a_cavity_is_not_called_inside_out(folder):
@@ -176,7 +180,8 @@ def test_the_wall_of_a_cavity_is_no_mending(folder):
     hole.invert()
     trimesh.util.concatenate([ball, hole]).export(folder / "hollow.stl")
     problem = build(folder, {"name": "H", "surface": "hollow.stl"})
-    assert [one.code for one in problem.notices if one.code in ("mended", "cavity-wall")] == ["cavity-wall"]
+    told = [one.code for one in problem.notices if one.code in ("mended", "cavity-wall", "inner-surface")]
+    assert told == ["inner-surface"]  # no other conductor lies in it: left out, since it carries no charge
 
 
 def test_rounding_of_the_file_is_handed_on(folder):

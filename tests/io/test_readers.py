@@ -163,7 +163,7 @@ def test_vertices_within_the_tolerance_are_merged_and_told(tmp_path):
     sheet = "OFF\n6 2 0\n0 0 0\n1 0 0\n1 1 0\n0 0 1e-12\n1 1 1e-12\n0 1 0\n3 0 1 2\n3 3 4 5\n"
     (body,) = read_bodies(write(tmp_path / "sheet.off", sheet), "mm")
     assert len(body.vertices) == 4
-    assert "merged 2 vertices" in body.notes[0]
+    assert "merged 2 vertices" in str(body.notes[0])
 
 
 def test_pick_by_name_number_and_all(tmp_path):

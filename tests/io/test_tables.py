@@ -129,7 +129,7 @@ def test_caution_beyond_extra_low_voltage_only():
 
 def test_keys_of_the_document_in_order():
     wanted = (
-        "daraf title case inputs conductors capacitance charge potential energy force torque surface_field "
+        "daraf title case inputs changes conductors capacitance charge potential energy force torque surface_field "
         "budget bodies solution warnings"
     )
     made = document(2)
