@@ -71,6 +71,24 @@ def test_hole_of_a_plate_moves_into_the_plate():
     assert np.all(facets.edge_offset < 0)
 
 
+@pytest.mark.parametrize("steps", [6, 8])
+def test_straight_sides_between_half_circles_stay_straight(steps):
+    """The outline of a stadium: chords of the arcs bulge, all alike, the long sides do not."""
+    angle = np.linspace(-0.5 * np.pi, 0.5 * np.pi, steps + 1)
+    arc = np.column_stack([1.5 + np.cos(angle), np.sin(angle), np.zeros(steps + 1)])
+    rim = np.concatenate([arc, -arc])
+    fan = np.column_stack([np.zeros(len(rim) - 2, int), np.arange(1, len(rim) - 1), np.arange(2, len(rim))])
+    _, facets = facets_of((rim, fan))
+    turn = np.pi / steps
+    chord = 2.0 * np.sin(0.5 * turn)
+    round_ones = np.abs(facets.edge_offset) > 1e-12
+    assert round_ones.sum() == 2 * steps
+    assert np.linalg.norm(np.diff(facets.edge_ends, axis=1), axis=2)[round_ones] == pytest.approx(chord)
+    segment = 0.5 * (turn - np.sin(turn))
+    # the sine of the turn for the turn, and a chord for an arc: turn^2 / 6 + turn^2 / 24
+    np.testing.assert_allclose(facets.edge_offset[round_ones], segment / chord, rtol=turn**2 / 4)
+
+
 @pytest.mark.slow
 @pytest.mark.parametrize("levels", [1, 2])
 def test_sphere_is_met_from_its_facets(levels):
