@@ -19,6 +19,7 @@ from .surface import Surface
 __all__ = [
     "GREATEST_TURN",
     "LEAST_TURN",
+    "SIMILAR_TURN",
     "TANGENT_TURN",
     "TANGENT_WIDTH",
     "WIDE_TURN",
@@ -47,9 +48,9 @@ SIMILAR_TURN = 2.5
 SIMILAR_WIDTH = 3.0
 #: A facet so many times wider than its smooth neighbour is a flat face that a fillet runs into.
 FLAT_WIDTH = 6.0
-#: A surface of even curvature turns by the mean of the arcs of two neighbouring facets where they meet: where a wide
-#: facet meets a narrow one, by more than from that one to the next narrow one. Where a fillet or a dome runs into a flat
-#: face or a straight strip it turns by half. Between half and 1.25, for facets at least so many times wider:
+#: Where two facets of a surface of even curvature meet, it turns by the mean of their arcs: at a narrow facet, by more
+#: toward a wide one than toward another narrow one. Where a fillet or a dome runs into a flat face or a straight strip
+#: it turns by half as much. Between half and 1.25, for facets at least so many times wider:
 TANGENT_TURN, TANGENT_WIDTH = 0.8, 1.5
 #: Two unit vectors are one direction if the smaller eigenvalue of their sum of squares is below this share of the
 #: larger: at the corners of a polygon of 700 sides, far above the rounding of single precision.
@@ -145,7 +146,12 @@ def _region_moments(surface: Surface, regions: Regions) -> FloatArray:
 
 
 def find_creases(
-    surface: Surface, regions: Regions, *, edges: MeshEdges | None = None, greatest_turn: float = GREATEST_TURN
+    surface: Surface,
+    regions: Regions,
+    *,
+    edges: MeshEdges | None = None,
+    greatest_turn: float = GREATEST_TURN,
+    similar_turn: float = SIMILAR_TURN,
 ) -> Creases:
     """Classify all edges of a surface.
 
@@ -157,6 +163,8 @@ def find_creases(
         ``mesh_edges(surface.triangles)`` if known already.
     greatest_turn : float, rad
         Edges that turn by more are sharp.
+    similar_turn : float
+        Greatest ratio of neighbouring turns of one smooth surface.
 
     Returns
     -------
@@ -170,7 +178,7 @@ def find_creases(
     smooth = np.zeros(len(angles), bool)
     flat_end = np.zeros((len(angles), 2), bool)
     if len(gentle):
-        chosen, flats = _rows_of_edges(surface, regions, edges, gentle, angles[gentle])
+        chosen, flats = _rows_of_edges(surface, regions, edges, gentle, angles[gentle], similar_turn)
         smooth[gentle] = chosen
         flat_end[gentle] = flats
     smooth |= edges.consistent & (np.abs(angles) <= LEAST_TURN) & (sides >= 0).all(axis=1)
@@ -179,7 +187,7 @@ def find_creases(
 
 
 def _rows_of_edges(
-    surface: Surface, regions: Regions, edges: MeshEdges, gentle: IntArray, angles: FloatArray
+    surface: Surface, regions: Regions, edges: MeshEdges, gentle: IntArray, angles: FloatArray, similar_turn: float
 ) -> tuple[BoolArray, BoolArray]:
     """Find the edges that belong to a row of three; also which of their facets are flats at its end."""
     n = len(gentle)
@@ -200,7 +208,7 @@ def _rows_of_edges(
     one, two = one[different], two[different]
     ratio = np.abs(turn[one] / turn[two])
     cosine = np.einsum("ij,ij->i", axis[one], axis[two])
-    fits = (turn[one] * turn[two] > 0) & (ratio < SIMILAR_TURN) & (ratio > 1 / SIMILAR_TURN)
+    fits = (turn[one] * turn[two] > 0) & (ratio < similar_turn) & (ratio > 1 / similar_turn)
     fits &= cosine < -SAME_AXIS
     continues = np.zeros(2 * n, bool)
     continues[one[fits]] = True

@@ -24,6 +24,7 @@ from scipy.spatial import cKDTree
 from .creases import (
     GREATEST_TURN,
     LEAST_TURN,
+    SIMILAR_TURN,
     TANGENT_TURN,
     TANGENT_WIDTH,
     WIDE_TURN,
@@ -62,6 +63,8 @@ GAP_SHARE = 0.2
 WIDE_GAP = 30.0
 #: Edges of partly round bodies that turn by less than this may stand for round ones, rad.
 DOUBTFUL_TURN = np.radians(75.0)
+#: So may those that turn more than the row they end, up to this ratio; the tip of a spheroid of 5 to 1 has 2.8.
+DOUBTFUL_RATIO = 2.0 * SIMILAR_TURN
 #: What rounding them would change counts this often: to first order it falls short where edges are steep. Measured on
 #: spheroids of 4 to 1 and 5 to 1, an ellipsoid and tori of 6 to 10 sides: true over first order 0.6 to 1.4.
 ROUNDER_SHARE = 1.5
@@ -196,7 +199,9 @@ def _if_rounder(surface: Surface, regions: Regions, creases: Creases, offset: Fl
     steep = creases.between & ~creases.smooth & (np.abs(creases.angles) < DOUBTFUL_TURN)
     if not steep.any() or not partly.any():
         return np.zeros(len(regions))
-    rounder = find_creases(surface, regions, edges=creases.edges, greatest_turn=DOUBTFUL_TURN)
+    rounder = find_creases(
+        surface, regions, edges=creases.edges, greatest_turn=DOUBTFUL_TURN, similar_turn=DOUBTFUL_RATIO
+    )
     # triangles that lie singly, not in flat pairs, come from a doubly curved surface however unevenly they turn
     single = (np.diff(regions.starts) == 1)[regions.triangle_region[creases.edges.triangles]].all(axis=1)
     rounder = replace(rounder, smooth=rounder.smooth | (steep & single))
