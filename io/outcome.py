@@ -5,7 +5,11 @@ from dataclasses import dataclass, replace
 from pathlib import Path
 from typing import Any
 
+import numpy as np
+from numpy.typing import NDArray
+
 from daraf.bem.network import Excitation, MutualCapacitance, excite, mutual_capacitance
+from daraf.bem.panels import Panels
 from daraf.bem.solution import CapacitanceSolution
 
 from .account_text import account_text, counted
@@ -66,11 +70,20 @@ class Outcome:
             If it cannot be written; nothing is left behind.
         """
         log = "\n".join([f"daraf {daraf_version()}", *self.log_lines, "", self.text()])
-        surface = surface_bytes(self._solved_surface(), title=self.document["title"])
-        return write_result(folder, self.document, surface, log)
+        title, before = self.document["title"], self.solution.previous
+        surface = surface_bytes(self._solved_surface(), title=title)
+        previous = None if before is None else surface_bytes(self._panels_as_stored(*before), title=title)
+        return write_result(folder, self.document, surface, log, previous=previous)
 
     def _solved_surface(self) -> SolvedSurface:
-        panels, densities = self.solution.panels, self.solution.densities
+        from daraf.bem.meaning import surface_meaning
+
+        panels = self.solution.panels
+        meaning = surface_meaning(self.problem.surface, panels, self.solution.facets)
+        stored = self._panels_as_stored(panels, self.solution.densities)
+        return replace(stored, facet_offset=meaning.facet_offset, body_fill=meaning.fill)
+
+    def _panels_as_stored(self, panels: Panels, densities: NDArray[np.float64]) -> SolvedSurface:
         return SolvedSurface(
             corners=panels.corners,
             n_corners=panels.n_corners,

@@ -2,8 +2,10 @@
 
 Cell arrays: ``conductor`` and ``body`` (index), ``panel_size`` (square root of the area), one
 ``charge_density_NAME`` per conductor (that conductor at 1 V, all others at 0 V) and, when potentials or
-charges were stated, ``charge_density``. Each array carries its unit as VTK's UNITS_LABEL. The names of the
-conductors and bodies are field data.
+charges were stated, ``charge_density``; ``facet_offset`` tells how far a panel was moved outward onto the round
+surface that its facet stands for. Each array carries its unit as VTK's UNITS_LABEL. The names of the conductors and
+bodies are field data, and so is ``body_fill``: 1 for a body whose inside is metal, -1 for the wall of a cavity in one,
+0 for sheets and thin shells.
 """
 
 from collections.abc import Sequence
@@ -38,6 +40,10 @@ class SolvedSurface:
     densities : (n_conductors, n) float, C/m2 per V
     density : (n,) float, C/m2, or None
         For the stated excitation.
+    facet_offset : (n,) float, m, or None
+        How far each panel was moved outward onto the round surface meant.
+    body_fill : (n_bodies,) int or None
+        1 where the inside of a body is metal, -1 where it is a cavity in metal, else 0.
     """
 
     corners: FloatArray
@@ -48,6 +54,8 @@ class SolvedSurface:
     body_names: tuple[str, ...]
     densities: FloatArray
     density: FloatArray | None
+    facet_offset: FloatArray | None = None
+    body_fill: IntArray | None = None
 
 
 def surface_bytes(surface: SolvedSurface, *, title: str = "") -> bytes:
@@ -74,6 +82,10 @@ def surface_bytes(surface: SolvedSurface, *, title: str = "") -> bytes:
         _add(cells, f"charge_density_{name}", density, _UNIT_DENSITY)
     if surface.density is not None:
         _add(cells, "charge_density", surface.density, "C/m2")
+    if surface.facet_offset is not None:
+        _add(cells, "facet_offset", surface.facet_offset, "m")
+    if surface.body_fill is not None:
+        _add(data.GetFieldData(), "body_fill", surface.body_fill.astype(np.int32), "")
     for key, texts in (
         ("title", (title,)),
         ("conductor_names", surface.conductor_names),
@@ -184,6 +196,7 @@ def _from_poly_data(data: Any, file: Path) -> SolvedSurface:
         array = data.GetCellData().GetArray(name)
         return None if array is None else vtk_to_numpy(array).copy()
 
+    fill = data.GetFieldData().GetArray("body_fill")
     names = texts("conductor_names")
     conductor, body = numbers("conductor"), numbers("body")
     densities = [numbers(f"charge_density_{name}") for name in names]
@@ -204,4 +217,6 @@ def _from_poly_data(data: Any, file: Path) -> SolvedSurface:
         body_names=texts("body_names"),
         densities=np.array(found, dtype=np.float64),
         density=numbers("charge_density"),
+        facet_offset=numbers("facet_offset"),
+        body_fill=None if fill is None else vtk_to_numpy(fill).astype(np.int64),
     )
