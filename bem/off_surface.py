@@ -17,7 +17,7 @@ from .frames import AREA, CENTROID, NORMAL, POINTS, RADIUS, panel_frames
 from .jit import kernel, parallel_kernel, prange
 from .polygon import polygon_potential
 
-__all__ = ["OffSurface", "inside_closed", "off_surface", "panel_share"]
+__all__ = ["OffSurface", "PanelSum", "inside_closed", "off_surface", "panel_share", "winding"]
 
 FloatArray = NDArray[np.float64]
 IntArray = NDArray[np.int64]
@@ -74,22 +74,38 @@ def off_surface(
     InputError
         If shapes do not fit or a point is not finite.
     """
-    x, panels = _points(points), np.ascontiguousarray(corners, dtype=np.float64)
-    columns = np.ascontiguousarray(density, dtype=np.float64)
-    columns = columns[:, None] if columns.ndim == 1 else columns
-    if panels.ndim != 3 or panels.shape[1:] != (4, 3) or columns.shape[:1] != panels.shape[:1]:
-        raise InputError(f"field: {panels.shape} corners and {columns.shape} densities do not belong together")
-    centre = panels.reshape(-1, 3).mean(axis=0)
-    frames = panel_frames(panels - centre, largest_rule=2)
-    potential = np.zeros((len(x), columns.shape[1]))
-    field = np.zeros((len(x), 3, columns.shape[1]))
-    step = max(1, _BLOCK // max(len(frames), 1))
-    for first in range(0, len(x), step):
-        last = min(len(x), first + step)
-        _sum_panels(x[first:last] - centre, frames, columns, potential[first:last], field[first:last])
-        if progress is not None:
-            progress(last, len(x))
-    return OffSurface(potential, field)
+    return PanelSum(corners, density)(points, progress=progress)
+
+
+class PanelSum:
+    """Panels made ready for many calls; arguments and errors as of :func:`off_surface`.
+
+    Parameters
+    ----------
+    corners : (n, 4, 3) float, m
+    density : (n,) or (n, k) float, C/m2
+    """
+
+    def __init__(self, corners: ArrayLike, density: ArrayLike) -> None:
+        panels = np.ascontiguousarray(corners, dtype=np.float64)
+        columns = np.ascontiguousarray(density, dtype=np.float64)
+        self._columns = columns[:, None] if columns.ndim == 1 else columns
+        if panels.ndim != 3 or panels.shape[1:] != (4, 3) or columns.shape[:1] != panels.shape[:1]:
+            raise InputError(f"field: {panels.shape} corners and {columns.shape} densities do not belong together")
+        self._centre = panels.reshape(-1, 3).mean(axis=0)
+        self._frames = panel_frames(panels - self._centre, largest_rule=2)
+
+    def __call__(self, points: ArrayLike, *, progress: Callable[[float, float], None] | None = None) -> OffSurface:
+        """Sum over all panels at points, (m, 3) m."""
+        x, n_columns = _points(points), self._columns.shape[1]
+        potential, field = np.zeros((len(x), n_columns)), np.zeros((len(x), 3, n_columns))
+        step = max(1, _BLOCK // max(len(self._frames), 1))
+        for first in range(0, len(x), step):
+            here = slice(first, min(len(x), first + step))
+            _sum_panels(x[here] - self._centre, self._frames, self._columns, potential[here], field[here])
+            if progress is not None:
+                progress(here.stop, len(x))
+        return OffSurface(potential, field)
 
 
 def inside_closed(points: ArrayLike, corners: ArrayLike, body: IntArray, closed: BoolArray) -> IntArray:
@@ -107,12 +123,35 @@ def inside_closed(points: ArrayLike, corners: ArrayLike, body: IntArray, closed:
     Returns
     -------
     (m,) int
-        The body, the last one where they are nested, or -1. By the solid angle that the body fills, which small gaps
-        between panels do not upset.
+        The body, the last one where they are nested, or -1.
+    """
+    found = np.full(len(np.asarray(points)), -1, dtype=np.int64)
+    for one in np.flatnonzero(closed):
+        found[np.abs(winding(points, corners, body, np.array([one]))) > 0.5] = one
+    return found
+
+
+def winding(points: ArrayLike, corners: ArrayLike, body: IntArray, chosen: IntArray) -> FloatArray:
+    """How often some closed bodies wrap around each point.
+
+    Parameters
+    ----------
+    points : (m, 3) float, m
+    corners : (n, 4, 3) float, m
+    body : (n,) int
+        Body of each panel.
+    chosen : (k,) int
+        Bodies that count, each closed.
+
+    Returns
+    -------
+    (m,) float
+        The solid angle over 4 pi that their panels fill, summed: 1 inside an outward wound body, -1 inside one that is
+        wound inwards. Small gaps between panels do not upset it.
     """
     x, panels = _points(points), np.ascontiguousarray(corners, dtype=np.float64)
-    found = np.full(len(x), -1, dtype=np.int64)
-    for one in np.flatnonzero(closed):
+    turns = np.zeros(len(x))
+    for one in chosen:
         own = panels[body == one]
         low, high = own.reshape(-1, 3).min(axis=0), own.reshape(-1, 3).max(axis=0)
         near = np.flatnonzero(((x >= low) & (x <= high)).all(axis=1))
@@ -120,8 +159,9 @@ def inside_closed(points: ArrayLike, corners: ArrayLike, body: IntArray, closed:
             centre = 0.5 * (low + high)
             angle = np.empty(len(near))
             _solid_angles(x[near] - centre, panel_frames(own - centre, largest_rule=2), angle)
-            found[near[np.abs(angle) > 2.0 * math.pi]] = one
-    return found
+            # seen from inside, panels wound outwards show their backs
+            turns[near] -= angle / (4.0 * math.pi)
+    return turns
 
 
 def _points(points: ArrayLike) -> FloatArray:

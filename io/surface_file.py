@@ -18,7 +18,7 @@ from numpy.typing import NDArray
 
 from daraf.bem.errors import InputError
 
-__all__ = ["SolvedSurface", "read_surface", "surface_bytes"]
+__all__ = ["SolvedSurface", "add_array", "add_texts", "read_surface", "surface_bytes"]
 
 FloatArray = NDArray[np.float64]
 IntArray = NDArray[np.int64]
@@ -75,23 +75,23 @@ def surface_bytes(surface: SolvedSurface, *, title: str = "") -> bytes:
 
     data = _poly_data(surface)
     cells = data.GetCellData()
-    _add(cells, "conductor", surface.conductor.astype(np.int32), "")
-    _add(cells, "body", surface.body.astype(np.int32), "")
-    _add(cells, "panel_size", np.sqrt(_areas(surface.corners)), "m")
+    add_array(cells, "conductor", surface.conductor.astype(np.int32), "")
+    add_array(cells, "body", surface.body.astype(np.int32), "")
+    add_array(cells, "panel_size", np.sqrt(_areas(surface.corners)), "m")
     for name, density in zip(surface.conductor_names, surface.densities, strict=True):
-        _add(cells, f"charge_density_{name}", density, _UNIT_DENSITY)
+        add_array(cells, f"charge_density_{name}", density, _UNIT_DENSITY)
     if surface.density is not None:
-        _add(cells, "charge_density", surface.density, "C/m2")
+        add_array(cells, "charge_density", surface.density, "C/m2")
     if surface.facet_offset is not None:
-        _add(cells, "facet_offset", surface.facet_offset, "m")
+        add_array(cells, "facet_offset", surface.facet_offset, "m")
     if surface.body_fill is not None:
-        _add(data.GetFieldData(), "body_fill", surface.body_fill.astype(np.int32), "")
+        add_array(data.GetFieldData(), "body_fill", surface.body_fill.astype(np.int32), "")
     for key, texts in (
         ("title", (title,)),
         ("conductor_names", surface.conductor_names),
         ("body_names", surface.body_names),
     ):
-        _add_texts(data.GetFieldData(), key, texts)
+        add_texts(data.GetFieldData(), key, texts)
 
     writer = vtkXMLPolyDataWriter()
     writer.SetInputData(data)
@@ -164,7 +164,8 @@ def _areas(corners: FloatArray) -> FloatArray:
     return areas
 
 
-def _add(attributes: Any, name: str, values: NDArray[Any], unit: str) -> None:
+def add_array(attributes: Any, name: str, values: NDArray[Any], unit: str) -> None:
+    """Add an array with its unit to the attributes of a VTK data set."""
     from vtkmodules.util.numpy_support import numpy_to_vtk
     from vtkmodules.vtkCommonCore import vtkDataArray
 
@@ -175,7 +176,8 @@ def _add(attributes: Any, name: str, values: NDArray[Any], unit: str) -> None:
     attributes.AddArray(array)
 
 
-def _add_texts(attributes: Any, name: str, texts: Sequence[str]) -> None:
+def add_texts(attributes: Any, name: str, texts: Sequence[str]) -> None:
+    """Add texts to the field data of a VTK data set."""
     from vtkmodules.vtkCommonCore import vtkStringArray
 
     array = vtkStringArray()
