@@ -11,18 +11,22 @@ import numpy as np
 from numpy.typing import NDArray
 from scipy.spatial import cKDTree
 
-from .frames import CENTROID, RADIUS
+from .frames import AREA, CENTROID, CORNER, LENGTH, NORMAL, OUTWARD, RADIUS
 from .jit import parallel_kernel, prange
 from .panels import Panels
 
-__all__ = ["near_steps", "roughness"]
+__all__ = ["OTHER_SIDE", "SMOOTH_COSINE", "near_steps", "roughness"]
 
 FloatArray = NDArray[np.float64]
 
 #: Panels with which each one is compared.
-_NEIGHBOURS = 6
-#: Radii of a panel beyond which nothing of its steps is felt: exp(2 - 16) is 1e-6.
+_NEIGHBOURS = 8
+#: Radii of a panel beyond which nothing of its steps is felt: at least exp(-10), since no panel is wider than that.
 _LAST = 8.0
+#: Neighbours whose normals have a smaller cosine meet at a sharp edge.
+SMOOTH_COSINE = 0.64
+#: Panels near each other whose normals have a smaller cosine lie on both sides of a thin part.
+OTHER_SIDE = -0.3
 
 
 def roughness(panels: Panels, density: FloatArray) -> FloatArray:
@@ -48,9 +52,16 @@ def roughness(panels: Panels, density: FloatArray) -> FloatArray:
             continue
         count = min(_NEIGHBOURS, len(own) - 1)
         distance, near = cKDTree(panels.centroids[own]).query(panels.centroids[own], k=count + 1)
-        change = np.linalg.norm(field[own[near[:, 1:]]] - field[own][:, None, :], axis=2)
+        other = own[near[:, 1:]]
+        change = np.linalg.norm(field[other] - field[own][:, None, :], axis=2)
+        # across a sharp edge nothing is bent: only the sizes are compared
+        cosine = np.einsum("nki,ni->nk", panels.normals[other], panels.normals[own])
+        change = np.where(cosine < SMOOTH_COSINE, np.abs(density[other] - density[own][:, None]), change)
         share = np.minimum(1.0, 2.0 * radius[own, None] / np.maximum(distance[:, 1:], 1e-300))
-        step[own] = np.sqrt(np.mean((change * share) ** 2, axis=1))
+        # the far side of a thin part is near, and no neighbour
+        same = cosine > OTHER_SIDE
+        squares = np.where(same, change * share, 0.0) ** 2
+        step[own] = np.sqrt(squares.sum(axis=1) / np.maximum(same.sum(axis=1), 1))
     return step
 
 
@@ -62,11 +73,11 @@ def near_steps(points, frames, step, potential, field):
     ----------
     points : (m, 3) float
     frames : (n, FRAME_SIZE) float
-        Only centroid and radius are used.
+        Rows of :func:`daraf.bem.frames.panel_frames`.
     step : (n,) float
     potential, field : (m,) float
-        Written, bare: root of the sum of squares of ``2 pi step R f`` and of ``2 pi step f``, where f is 1 up to the
-        distance of a radius R from the centroid and ``exp(2 - 2 r / R)`` beyond.
+        Written, bare: root of the sum of squares of ``2 pi step w f`` and of ``2 pi step f``, with the width w of a
+        panel (its area over its longest side) and ``f = exp(-1.5 d / w)`` at the distance d from it.
     """
     for p in prange(len(points)):
         volts, gradient = 0.0, 0.0
@@ -74,13 +85,24 @@ def near_steps(points, frames, step, potential, field):
             x = points[p, 0] - frames[j, CENTROID]
             y = points[p, 1] - frames[j, CENTROID + 1]
             z = points[p, 2] - frames[j, CENTROID + 2]
-            radius = frames[j, RADIUS]
-            r2 = x * x + y * y + z * z
-            if r2 > _LAST * _LAST * radius * radius:
+            if x * x + y * y + z * z > (_LAST * frames[j, RADIUS]) ** 2:
                 continue
-            part = step[j] * math.exp(min(0.0, 2.0 - 2.0 * math.sqrt(r2) / radius))
+            width = frames[j, AREA] / max(
+                frames[j, LENGTH], frames[j, LENGTH + 1], frames[j, LENGTH + 2], frames[j, LENGTH + 3]
+            )
+            outside = 0.0
+            for k in range(4):
+                c, o = CORNER + 3 * k, OUTWARD + 3 * k
+                across = (
+                    (points[p, 0] - frames[j, c]) * frames[j, o]
+                    + (points[p, 1] - frames[j, c + 1]) * frames[j, o + 1]
+                    + (points[p, 2] - frames[j, c + 2]) * frames[j, o + 2]
+                )
+                outside = max(outside, across)
+            height = x * frames[j, NORMAL] + y * frames[j, NORMAL + 1] + z * frames[j, NORMAL + 2]
+            part = step[j] * math.exp(-1.5 * math.sqrt(height * height + outside * outside) / width)
             gradient += part * part
-            part *= radius
+            part *= width
             volts += part * part
         potential[p] = 2.0 * math.pi * math.sqrt(volts)
         field[p] = 2.0 * math.pi * math.sqrt(gradient)

@@ -93,7 +93,9 @@ def _at_potentials(result: Result, potentials: Mapping[str, float]) -> Excitatio
     names = result.document["conductors"]
     for name in potentials:
         if name not in names:
-            raise InputError(f"{result.folder}: no conductor is named {name!r}; there are {', '.join(map(repr, names))}")
+            raise InputError(
+                f"{result.folder}: no conductor is named {name!r}; there are {', '.join(map(repr, names))}"
+            )
     volts = np.array([potentials.get(name, 0.0) for name in names], dtype=float)
     capacitance = result.document["capacitance"]
     held = np.ones(len(names), bool)

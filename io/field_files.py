@@ -1,4 +1,4 @@
-"""Potentials and fields as files: CSV for points and lines, VTK's open XML formats for planes, boxes and field lines."""
+"""Potentials and fields as files: CSV for points and lines, VTK's open XML formats for the rest."""
 
 import csv
 import io
@@ -78,9 +78,7 @@ def lines_csv(lines: Sequence[FieldLine], probed: Sequence[Probed], names: Seque
     return "".join(texts)
 
 
-def _table(
-    lead: dict[str, Sequence[Any]], points: FloatArray, probed: Probed, names: Sequence[str], unit: str
-) -> str:
+def _table(lead: dict[str, Sequence[Any]], points: FloatArray, probed: Probed, names: Sequence[str], unit: str) -> str:
     stream = io.StringIO()
     writer = csv.writer(stream, lineterminator="\n")
     writer.writerow([*lead, *(f"{axis}_{unit}" for axis in "xyz"), *_VALUES])

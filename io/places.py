@@ -100,7 +100,9 @@ def points_from_file(path: str | Path, scale: float) -> Places:
         raise InputError(f"{file}: holds no points; write a header x,y,z and one point a line")
     rows = [(k, _cells(row)) for k, row in lines]
     head = [cell.strip().lower() for cell in rows[0][1]]
-    columns = [next((i for i, name in enumerate(head) if re.fullmatch(rf"{axis}(\W.*|_.*)?", name)), -1) for axis in "xyz"]
+    columns = [
+        next((i for i, name in enumerate(head) if re.fullmatch(rf"{axis}(\W.*|_.*)?", name)), -1) for axis in "xyz"
+    ]
     if min(columns) >= 0:
         names, rows = [cell.strip() for cell in rows[0][1]], rows[1:]
     elif len(head) == 3 and _numbers(rows[0][1]) is not None:
@@ -111,7 +113,9 @@ def points_from_file(path: str | Path, scale: float) -> Places:
     for k, row in rows:
         found = _numbers([row[i] for i in columns]) if len(row) == len(names) else None
         if found is None:
-            raise InputError(f"{file}: line {k} holds no three finite numbers in {len(names)} columns; mend or remove it")
+            raise InputError(
+                f"{file}: line {k} holds no three finite numbers in {len(names)} columns; mend or remove it"
+            )
         points.append(found)
     if not points:
         raise InputError(f"{file}: holds no points below its header; write one a line")
