@@ -4,10 +4,10 @@ Moved as a rigid body: the exact derivative of the discrete energy is the Coulom
 other bodies. With the force F(V) on a body at the potentials V, ``F = 1/2 V^T dC V`` for every V, so that the
 derivative of entry (i, j) is ``F(e_i + e_j) - F(e_i) - F(e_j)``.
 
-Grown by a uniform offset of its surface (plating, machining, wear): Hadamard's formula,
-``dC_ij = (1/eps) int sigma_i sigma_j dS`` per length (J. Hadamard, Mem. Acad. Sci. 33 (1908), as in
-P. R. Garabedian, Partial Differential Equations, 1964, section 15.1). It has no value for sheets, whose rims carry
-infinitely much of it.
+Grown by a uniform offset of its surface (plating, machining, wear): the derivative of the discrete energy with the
+charges of the panels held, :mod:`daraf.bem.offset_energy`. It has no value for sheets, whose rims carry infinitely
+much of it. Which face matters is told by Hadamard's formula, ``dC_ij = (1/eps) int sigma_i sigma_j dn dS``
+(J. Hadamard, Mem. Acad. Sci. 33 (1908), as in P. R. Garabedian, Partial Differential Equations, 1964, section 15.1).
 """
 
 from collections.abc import Callable
@@ -19,6 +19,8 @@ from numpy.typing import NDArray
 from .charges import filled_density
 from .errors import InputError
 from .force import INTEGRATION, PASS_SHARE, PLACE_SHARE, interaction
+from .growth import Growth
+from .offset_energy import offset_forms
 from .panels import Panels
 
 __all__ = ["Sensitivities", "sensitivities", "surface_product"]
@@ -26,9 +28,11 @@ __all__ = ["Sensitivities", "sensitivities", "surface_product"]
 FloatArray = NDArray[np.float64]
 BoolArray = NDArray[np.bool_]
 
-#: Share (expanded, k = 2) of what the charge that was filled in, and the last step of refinement, change in an offset:
-#: panels hold the mean of the density, and the mean of its square is missed at edges. Measured on cubes and spheres.
-OFFSET_SHARE = 1.0
+#: Shares (expanded, k = 2) of what changes an offset that count as uncertain: the charge that was filled in, the last
+#: step of refinement. Measured on cubes, spheres and pairs of them.
+OFFSET_FILLED_SHARE, OFFSET_PASS_SHARE = 0.5, 0.5
+#: Error of the difference and of how far facets follow the round surface, per offset; likewise measured.
+OFFSET_FLOOR = 2e-3
 
 
 @dataclass(frozen=True, eq=False)
@@ -69,7 +73,7 @@ def sensitivities(
     *,
     one_sided: BoolArray,
     previous: tuple[Panels, FloatArray] | None = None,
-    facet_offset: FloatArray | None = None,
+    grown: Growth | None = None,
     progress: Callable[..., None] | None = None,
 ) -> Sensitivities:
     """Derivatives of all entries of the Maxwell matrix.
@@ -86,9 +90,9 @@ def sensitivities(
         Bodies with the field on their outer side alone: closed ones.
     previous : tuple of Panels and (n, m) float, optional
         Of the pass before: the difference enters the uncertainty, which is wide without it.
-    facet_offset : (n_panels,) float, m, optional
-        How far the facets of round parts were moved outward before the solve; moved as far again, they tell how
-        much hangs on where they lie.
+    grown : Growth, optional
+        How the surface moves when it is offset; without it no offsets are given. It also knows how far the facets of
+        round parts were moved outward before the solve; moved as far again, they tell how much hangs on where they lie.
     progress : callable, optional
         Called with (stage, done, total, note).
 
@@ -116,13 +120,17 @@ def sensitivities(
     about, size = _boxes(panels, n_bodies)
     shift, turn = value[:, :3], _turned_about(value, about)
     parts = [raw - value, raw - value if before is None else PASS_SHARE * (raw - before)]
-    if facet_offset is not None and np.any(facet_offset):
-        corners = panels.corners + (facet_offset[:, None] * panels.normals)[:, None, :]
+    if grown is not None and np.any(grown.facet_offset):
+        corners = panels.corners + (grown.facet_offset[panels.region][:, None] * panels.normals)[:, None, :]
         parts.append(PLACE_SHARE * (_rigid(replace(panels, corners=corners), filled, four_pi_epsilon, None) - value))
     shift_spread = _lengths([part[:, :3] for part in parts], shift)
     turn_spread = _lengths([_turned_about(part, about) for part in parts], turn)
-    offset, offset_spread = _offsets(panels, filled, densities, previous, four_pi_epsilon, n_bodies)
-    offset[~one_sided], offset_spread[~one_sided] = np.nan, np.nan
+    offset, offset_spread = np.full((2, n_bodies, n, n), np.nan)
+    if grown is not None:
+        for body in np.flatnonzero(one_sided):
+            told(body, n_bodies)
+            one = _offset(panels, filled, densities, previous, grown, int(body))
+            offset[body], offset_spread[body] = (part / four_pi_epsilon for part in one)
     floor = INTEGRATION * size[:, None, None] * np.abs(shift).max(axis=1)
     return Sensitivities(shift, shift_spread, turn, np.hypot(turn_spread, floor), about, offset, offset_spread)
 
@@ -185,26 +193,25 @@ def _boxes(panels: Panels, n_bodies: int) -> tuple[FloatArray, FloatArray]:
     return centre, size
 
 
-def _offsets(
+def _offset(
     panels: Panels,
     filled: FloatArray,
     densities: FloatArray,
     previous: tuple[Panels, FloatArray] | None,
-    four_pi_epsilon: float,
-    n_bodies: int,
+    grown: Growth,
+    body: int,
 ) -> tuple[FloatArray, FloatArray]:
-    """Hadamard's derivative for every body and its uncertainty, (n_bodies, n, n)."""
-    value = _hadamard(panels, filled, four_pi_epsilon, n_bodies)
-    raw = _hadamard(panels, densities, four_pi_epsilon, n_bodies)
-    before = raw if previous is None else _hadamard(*previous, four_pi_epsilon, n_bodies)
-    spread = OFFSET_SHARE * np.hypot(value - raw, value - raw if previous is None else raw - before)
-    return value, spread + INTEGRATION * np.abs(value)
+    """Derivative per offset of one body and its uncertainty, bare, (n, n).
 
-
-def _hadamard(panels: Panels, densities: FloatArray, four_pi_epsilon: float, n_bodies: int) -> FloatArray:
-    weighted = densities * panels.areas
-    result = np.zeros((n_bodies, len(densities), len(densities)))
-    for body in range(n_bodies):
-        own = panels.body == body
-        result[body] = 4.0 * np.pi / four_pi_epsilon * weighted[:, own] @ densities[:, own].T
-    return result
+    The mixed form of solved and filled densities has the error of the square of theirs: on a cube, where an offset
+    is a scaling, it returns the extrapolated capacitance itself.
+    """
+    n = len(filled)
+    both = offset_forms(panels, grown.of(panels), densities, np.concatenate([filled, densities]), body)
+    mixed, raw = 0.5 * (both[:, :n] + both[:, :n].T), both[:, n:]
+    before = raw
+    if previous is not None:
+        before = offset_forms(previous[0], grown.of(previous[0]), previous[1], previous[1], body)
+    spread = np.hypot(OFFSET_FILLED_SHARE * (mixed - raw), OFFSET_PASS_SHARE * (raw - before))
+    scale = np.sqrt(np.outer(np.abs(np.diag(mixed)), np.abs(np.diag(mixed))))
+    return mixed, spread + OFFSET_FLOOR * np.maximum(np.abs(mixed), 0.1 * scale)

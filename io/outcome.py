@@ -19,6 +19,7 @@ from .loads import loads
 from .problem import Problem, build_problem
 from .progress import Log, ProgressCallback
 from .result import write_result
+from .sensitivity_record import sensitivity_document
 from .surface_file import SolvedSurface, surface_bytes
 from .tables import result_text
 
@@ -195,9 +196,14 @@ def solve_problem(
     state = _state(problem, solution)
     extras: dict[str, Any] = {}
     further: dict[str, float] = {}
-    if state is not None and not solution.interrupted:
+    if not solution.interrupted:
         try:
-            extras, further = loads(problem, solution, state, progress=log)
+            if state is not None:
+                extras, further = loads(problem, solution, state, progress=log)
+            if content.sensitivities:
+                began = time.perf_counter()
+                extras["sensitivity"] = sensitivity_document(problem, solution, progress=log)
+                further["sensitivities"] = time.perf_counter() - began
         except KeyboardInterrupt:
             # The capacitances are there and paid for: give them, and the exit code of an interruption.
             solution = replace(solution, interrupted=True)

@@ -271,6 +271,9 @@ class CaseContent(_Table):
     want: tuple[tuple[str, str], ...] = Field(
         (), description="couplings that must meet the accuracy, as pairs of conductors; all if left out"
     )
+    sensitivities: StrictBool = Field(
+        False, description="also tell how the capacitances move when a body is shifted, turned or grows"
+    )
     medium: Medium = Medium(relative_permittivity=1.0)
     conductor: tuple[ConductorEntry, ...] = Field(min_length=1)
 

@@ -8,6 +8,7 @@ from numpy.typing import NDArray
 
 from .account_text import counted, facet_columns
 from .mesh_units import METRES_PER_UNIT
+from .sensitivity_text import sensitivity_tables
 from .units import engineering, prefix_for, rounded, with_uncertainty
 
 __all__ = [
@@ -54,6 +55,7 @@ def result_text(document: dict[str, Any]) -> str:
         _state(document),
         force_table(document),
         peak_table(document),
+        *sensitivity_tables(document),
         _facets(document),
         _accuracy(document),
         _effort(document),
