@@ -165,7 +165,8 @@ def test_json_schema_names_every_key():
     text = json.dumps(schema)
     assert schema["$schema"].endswith("2020-12/schema")
     assert schema["additionalProperties"] is False
-    assert set(schema["properties"]) == {"title", "unit", "accuracy", "facets", "want", "medium", "conductor"}
+    top = {"title", "unit", "accuracy", "facets", "want", "sensitivities", "medium", "air", "conductor"}
+    assert set(schema["properties"]) == top
     for key in ("potential", "charge", "ground", "rotation", "shift", "about", "relative_permittivity"):
         assert f'"{key}"' in text
 
