@@ -148,8 +148,13 @@ def _fit(
     distance = _from_edges(corners.reshape(-1, 3), edges.ends[beside_it]).reshape(-1, 4)
     beside = np.abs((panels.centroids[near] - place) @ along)
     inside = (distance.min(axis=1) < reach) & (beside <= max(ALONG * reach, float(np.min(beside)) * 1.001))
-    if np.count_nonzero(inside) < FEWEST:
+    # a panel all of whose corners lie on edges says nothing of the way from one
+    telling = distance.max(axis=1) > 0.1 * np.sqrt(panels.areas[near])
+    if np.count_nonzero(inside & telling) < FEWEST:
         inside = np.ones(len(near), bool)
+    inside &= telling
+    if np.count_nonzero(inside) < 2:
+        return None
     rows, distance = near[inside], distance[inside]
     first = 0.5 * np.linalg.norm(
         np.cross(*(panels.corners[rows][:, [1, 2]] - panels.corners[rows][:, :1]).swapaxes(0, 1)), axis=1
@@ -158,7 +163,7 @@ def _fit(
 
     def mean(power: float) -> FloatArray:
         one, two = mean_power(distance[:, [0, 1, 2]], power), mean_power(distance[:, [0, 2, 3]], power)
-        return weight * one + (1.0 - weight) * two
+        return np.asarray(weight * one + (1.0 - weight) * two)
 
     columns = np.stack([mean(-p), mean(2.0 * (1.0 - p) - p)], axis=1)
     # the charge of a panel is what is known well: its mean times its area

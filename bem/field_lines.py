@@ -68,7 +68,7 @@ def field_line(charged: ChargedPanels, start: ArrayLike, normal: ArrayLike | Non
     """
     point = np.asarray(start, dtype=np.float64)
     if point.shape != (3,) or not np.isfinite(point).all():
-        raise InputError(f"field line: the start must be three finite numbers, not {start}")
+        raise InputError(f"field line: the start must be three finite numbers, not {start!r}")
     panels = charged.panels
     tracer = _Tracer(panels, PanelSum(panels.corners, charged.density[:, 0]))
     panel, foot, distance = nearest_on_panels(panels, point)

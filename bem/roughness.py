@@ -51,7 +51,8 @@ def roughness(panels: Panels, density: FloatArray) -> FloatArray:
             step[own] = np.abs(density[own])
             continue
         count = min(_NEIGHBOURS, len(own) - 1)
-        distance, near = cKDTree(panels.centroids[own]).query(panels.centroids[own], k=count + 1)
+        found = cKDTree(panels.centroids[own]).query(panels.centroids[own], k=count + 1)
+        distance, near = np.asarray(found[0]), np.asarray(found[1])
         other = own[near[:, 1:]]
         change = np.linalg.norm(field[other] - field[own][:, None, :], axis=2)
         # across a sharp edge nothing is bent: only the sizes are compared

@@ -128,7 +128,7 @@ def sensitivities(
     offset, offset_spread = np.full((2, n_bodies, n, n), np.nan)
     if grown is not None:
         for body in np.flatnonzero(one_sided):
-            told(body, n_bodies)
+            told(float(body), n_bodies)
             one = _offset(panels, filled, densities, previous, grown, int(body))
             offset[body], offset_spread[body] = (part / four_pi_epsilon for part in one)
     floor = INTEGRATION * size[:, None, None] * np.abs(shift).max(axis=1)
