@@ -5,7 +5,7 @@ peak, and the streamer criterion along the field line from it; laws and sources 
 """
 
 from collections.abc import Callable
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 from numpy.typing import NDArray
@@ -70,7 +70,7 @@ class Screening:
     gap : float or None, m
         Shortest distance between both.
     utilisation : float or None
-        Mean over highest field.
+        Mean over highest field; only of the conductor that has the highest one.
     streamer : float or None
         Margin to the streamer onset; None where the line is too short or weak for one.
     peek : float
@@ -120,12 +120,16 @@ def screen(
     list of Screening
     """
     sums = PanelSum(charged.panels.corners, charged.density[:, 0])
+    peaks = {place.conductor: place.peak for place in places}
     result = []
     for k, place in enumerate(places):
         if progress is not None:
             progress(k, len(places))
         if place.peak > 0.0:
-            result.append(_one(charged, sums, place, density, withstand))
+            one = _one(charged, sums, place, density, withstand)
+            # the factor compares the mean field of a gap with its highest one, wherever that is
+            weaker = place.peak < peaks.get(one.opposite, 0.0)
+            result.append(replace(one, utilisation=None) if weaker else one)
     return result
 
 

@@ -5,6 +5,7 @@ from collections.abc import Sequence
 from typing import Any
 
 import numpy as np
+from numpy.typing import NDArray
 
 from daraf.bem.edge_peak import EdgePeak
 from daraf.bem.force import Forces
@@ -22,7 +23,7 @@ __all__ = ["loads", "loads_document"]
 
 def loads(
     problem: Problem, solution: CapacitanceSolution, state: Excitation, *, progress: ProgressCallback | None = None
-) -> tuple[dict[str, Any], dict[str, float]]:
+) -> tuple[dict[str, Any], dict[str, float], NDArray[np.float64]]:
     """Compute forces, torques and peak surface fields.
 
     Parameters
@@ -38,12 +39,15 @@ def loads(
     document : dict
         The keys "force", "torque", "surface_field" and, where air was asked for, "strength" of `result.json`.
     seconds : dict of str to float
+    sides : (2, n_panels) float, V/m
+        Size of the field on every panel, on the side of its normal and on the other one.
     """
     # Here, not above: numba.
     from daraf.bem.charges import stated_charges
     from daraf.bem.edge_peak import edge_peaks
     from daraf.bem.force import conductor_forces
-    from daraf.bem.peak import peak_fields
+    from daraf.bem.peak import peak_fields, surface_sides
+    from daraf.bem.sides import two_sided_bodies
 
     begin = time.perf_counter()
     charges = stated_charges(problem.surface, solution, state, facets=problem.case.content.facets)
@@ -57,7 +61,8 @@ def loads(
         begin = time.perf_counter()
         document["strength"] = strength_document(problem, solution, state, document["surface_field"], progress=progress)
         seconds["strength"] = time.perf_counter() - begin
-    return document, seconds
+    sides = surface_sides(charges, two_sided_bodies(charges.surface, charges.creases))
+    return document, seconds, np.array(sides)
 
 
 def loads_document(

@@ -40,6 +40,8 @@ class Outcome:
     document : dict
         Content of `result.json`.
     log_lines : list of str
+    sides : (2, n_panels) float, V/m, or None
+        Size of the field on every panel as stated, on the side of its normal and on the other one.
     """
 
     problem: Problem
@@ -48,6 +50,7 @@ class Outcome:
     state: Excitation | None
     document: dict[str, Any]
     log_lines: list[str]
+    sides: NDArray[np.float64] | None = None
 
     def text(self) -> str:
         """Return the tables, as `daraf solve` prints them."""
@@ -82,7 +85,7 @@ class Outcome:
         panels = self.solution.panels
         meaning = surface_meaning(self.problem.surface, panels, self.solution.facets)
         stored = self._panels_as_stored(panels, self.solution.densities)
-        return replace(stored, facet_offset=meaning.facet_offset, body_fill=meaning.fill)
+        return replace(stored, facet_offset=meaning.facet_offset, body_fill=meaning.fill, field_sides=self.sides)
 
     def _panels_as_stored(self, panels: Panels, densities: NDArray[np.float64]) -> SolvedSurface:
         return SolvedSurface(
@@ -196,10 +199,11 @@ def solve_problem(
     state = _state(problem, solution)
     extras: dict[str, Any] = {}
     further: dict[str, float] = {}
+    sides: NDArray[np.float64] | None = None
     if not solution.interrupted:
         try:
             if state is not None:
-                extras, further = loads(problem, solution, state, progress=log)
+                extras, further, sides = loads(problem, solution, state, progress=log)
             if content.sensitivities:
                 began = time.perf_counter()
                 extras["sensitivity"] = sensitivity_document(problem, solution, progress=log)
@@ -211,7 +215,7 @@ def solve_problem(
     seconds = document["solution"]["seconds"]
     total = reading + time.perf_counter() - started
     document["solution"]["seconds"] = {"reading": reading, **seconds, **further, "total": total}
-    return Outcome(problem, solution, mutual, state, document, log.lines)
+    return Outcome(problem, solution, mutual, state, document, log.lines, sides)
 
 
 def _wanted(problem: Problem) -> list[tuple[int, int]] | None:

@@ -3,9 +3,9 @@
 Cell arrays: ``conductor`` and ``body`` (index), ``panel_size`` (square root of the area), one
 ``charge_density_NAME`` per conductor (that conductor at 1 V, all others at 0 V) and, when potentials or
 charges were stated, ``charge_density``; ``facet_offset`` tells how far a panel was moved outward onto the round
-surface that its facet stands for. Each array carries its unit as VTK's UNITS_LABEL. The names of the conductors and
-bodies are field data, and so is ``body_fill``: 1 for a body whose inside is metal, -1 for the wall of a cavity in one,
-0 for sheets and thin shells.
+surface that its facet stands for, ``field_front`` and ``field_back`` how large the stated field is on both sides.
+Each array carries its unit as VTK's UNITS_LABEL. The names of the conductors and bodies are field data, and so is
+``body_fill``: 1 for a body whose inside is metal, -1 for the wall of a cavity in one, 0 for sheets and thin shells.
 """
 
 from collections.abc import Sequence
@@ -24,6 +24,8 @@ FloatArray = NDArray[np.float64]
 IntArray = NDArray[np.int64]
 
 _UNIT_DENSITY = "C/m2 per V"
+#: Arrays of the field on the side of the normals and on the other one.
+_SIDES = ("field_front", "field_back")
 
 
 @dataclass(frozen=True, eq=False)
@@ -44,6 +46,8 @@ class SolvedSurface:
         How far each panel was moved outward onto the round surface meant.
     body_fill : (n_bodies,) int or None
         1 where the inside of a body is metal, -1 where it is a cavity in metal, else 0.
+    field_sides : (2, n) float, V/m, or None
+        Size of the field on the side of the normals and on the other one, as stated.
     """
 
     corners: FloatArray
@@ -56,6 +60,7 @@ class SolvedSurface:
     density: FloatArray | None
     facet_offset: FloatArray | None = None
     body_fill: IntArray | None = None
+    field_sides: FloatArray | None = None
 
 
 def surface_bytes(surface: SolvedSurface, *, title: str = "") -> bytes:
@@ -84,6 +89,9 @@ def surface_bytes(surface: SolvedSurface, *, title: str = "") -> bytes:
         add_array(cells, "charge_density", surface.density, "C/m2")
     if surface.facet_offset is not None:
         add_array(cells, "facet_offset", surface.facet_offset, "m")
+    if surface.field_sides is not None:
+        for name, side in zip(_SIDES, surface.field_sides, strict=True):
+            add_array(cells, name, side, "V/m")
     if surface.body_fill is not None:
         add_array(data.GetFieldData(), "body_fill", surface.body_fill.astype(np.int32), "")
     for key, texts in (
@@ -210,6 +218,7 @@ def _from_poly_data(data: Any, file: Path) -> SolvedSurface:
     index = vtk_to_numpy(data.GetPolys().GetConnectivityArray()).astype(np.int64)
     n_corners = np.diff(offsets)
     slots = offsets[:-1, None] + np.minimum(np.arange(4), n_corners[:, None] - 1)
+    sides = [numbers(name) for name in _SIDES]
     return SolvedSurface(
         corners=np.ascontiguousarray(points[index[slots]], dtype=np.float64),
         n_corners=n_corners,
@@ -221,4 +230,5 @@ def _from_poly_data(data: Any, file: Path) -> SolvedSurface:
         density=numbers("charge_density"),
         facet_offset=numbers("facet_offset"),
         body_fill=None if fill is None else vtk_to_numpy(fill).astype(np.int64),
+        field_sides=None if any(side is None for side in sides) else np.array(sides, dtype=np.float64),
     )

@@ -4,10 +4,11 @@ import numpy as np
 import pytest
 from sample_solution import ascii_stl
 
+from daraf.bem import EPSILON_0
 from daraf.bem.errors import InputError
 from daraf.bem.force import Forces
 from daraf.bem.peak import PeakField
-from daraf.io import load_case, outcome, solve_case
+from daraf.io import load_case, outcome, read_result, solve_case
 from daraf.io.loads import loads_document
 
 CASE = """
@@ -63,6 +64,15 @@ def test_a_solved_case_tells_forces_and_fields(case):
     assert 2e6 < one["peak"] < 2e7
     assert "not-computed" not in [told["code"] for told in made["warnings"]]
     assert {"forces", "peak fields"} <= set(made["solution"]["seconds"])
+
+
+def test_the_field_on_both_sides_is_kept_with_the_panels(case, tmp_path):
+    made = solve_case(case)
+    surface = read_result(made.write(tmp_path / "boxes.daraf")).surface
+    front, back = surface.field_sides
+    # solid boxes: the field is sigma / eps outside and nothing within
+    np.testing.assert_allclose(front, np.abs(surface.density) / EPSILON_0, rtol=0.1)
+    assert not back.any()
 
 
 def test_a_stated_edge_radius_bounds_the_peak(case, tmp_path):
