@@ -155,7 +155,8 @@ def solve_capacitance(
     try:
         while plan is not None:
             result, judgement = _pass(plan, doubts, accuracies, goal, passes, report)
-            previous = plan.before
+            if plan.before is not None:
+                previous = plan.before.density[plan.parent]
             for stage, time_spent in result.seconds.items():
                 seconds[stage] = seconds.get(stage, 0.0) + time_spent
             notices += [notice for notice in result.notices if notice not in notices]
@@ -182,13 +183,16 @@ def solve_capacitance(
         reached=judgement.reached,
         panels=result.panels,
         densities=np.ascontiguousarray(farads * result.density.T),
-        passes=[replace(p, maxwell=farads * p.maxwell, estimate=farads * p.estimate) for p in passes],
+        passes=[
+            replace(p, maxwell=farads * p.maxwell, estimate=farads * p.estimate, spread=farads * p.spread)
+            for p in passes
+        ],
         method="dense Cholesky",
         iterations=0,
         seconds=seconds,
         peak_memory_bytes=peak_memory(),
         warnings=notices + _guards(surface, judgement, value, total),
-        previous=None if previous is None else (previous.panels, farads * previous.density.T),
+        previous=None if previous is None else np.ascontiguousarray(farads * previous.T),
         interrupted=interrupted,
         facets=meaning,
         bodies=bodies,
@@ -240,10 +244,11 @@ def _pass(
     note = f"pass {len(passes) + 1}, {len(plan.panels)} panels"
     result = run_pass(plan, lambda stage, done, total: report(stage, done, total, note))
     judgement = _judge(result, doubts, accuracies, len(passes) + 1)
-    flat = result.gains.reshape(-1, result.gains.shape[2])
+    estimate, n = result.limit - result.value, len(result.value)
     excess, entry, cause = judgement.worst
-    spent = time.perf_counter() - start
-    passes.append(Pass(len(result.panels), result.value, flat.T @ flat, spent, excess * goal.accuracy, entry, cause))
+    spent, largest = time.perf_counter() - start, excess * goal.accuracy
+    spread = judgement.total[:, :n]
+    passes.append(Pass(len(result.panels), result.value, estimate, spread, spent, largest, entry, cause))
     report("pass", float(len(passes)), 0.0, f"{note}: {goal.standing(passes)}")
     return result, judgement
 
@@ -256,18 +261,22 @@ def _judge(result: PassResult, doubts: ShapeDoubts, accuracy: FloatArray, n_pass
     scale = np.sqrt(np.outer(np.diag(result.limit), np.diag(result.limit)))
     lines = {
         "discretisation": extrapolation_uncertainty(
-            result.feared,
-            result.feared_decay,
-            result.realised,
-            result.drift,
+            result.first,
+            result.second,
+            result.unseen,
             result.panels.body,
             result.change,
             sums,
             result.refined,
+            result.realised,
         ),
         "integration": INTEGRATION * np.hstack([scale, scale.max(axis=1, keepdims=True)]),
         **doubts.lines(result.panels, result.density, sums),
     }
+    # a weak coupling that the estimate moves by as much as is left of it is not known better than that
+    added = np.abs((result.limit - result.value) @ sums)
+    unsure = added * np.minimum(added / np.maximum(np.abs(value), 1e-300), 1.0)
+    lines["discretisation"] = np.maximum(lines["discretisation"], unsure)
     total = np.sqrt(sum(line**2 for line in lines.values()))
     return _Judgement(value, lines, total, accuracy_targets(value[:, :n], accuracy), n_passes)
 

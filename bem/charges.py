@@ -47,8 +47,8 @@ class StatedCharges:
         With every conductor's charge larger by its expanded uncertainty.
     faceted : (n,) float, C/m2
         With every conductor's charge changed as much as the facets change it, to first order.
-    previous : tuple of Panels and (m,) float, C/m2, or None
-        Of the pass before the last.
+    previous : (n,) float, C/m2, or None
+        As solved in the pass before the last, whose panels hold these.
     four_pi_epsilon : float, F/m
         4 pi times the permittivity of the medium.
     """
@@ -63,7 +63,7 @@ class StatedCharges:
     galerkin: FloatArray
     margin: FloatArray
     faceted: FloatArray
-    previous: tuple[Panels, FloatArray] | None
+    previous: FloatArray | None
     four_pi_epsilon: float
 
     @property
@@ -116,13 +116,9 @@ def stated_charges(
         galerkin=galerkin,
         margin=filled_density(panels, density, state.charge + sign * state.charge_uncertainty),
         faceted=density if meaning == "as drawn" else filled_density(panels, density, state.charge - change),
-        previous=None if solution.previous is None else _at(solution.previous, state.potential),
+        previous=None if solution.previous is None else np.asarray(state.potential @ solution.previous),
         four_pi_epsilon=four_pi_epsilon,
     )
-
-
-def _at(solved: tuple[Panels, FloatArray], potential: FloatArray) -> tuple[Panels, FloatArray]:
-    return solved[0], np.asarray(potential @ solved[1])
 
 
 def filled_density(panels: Panels, density: FloatArray, charge: FloatArray) -> FloatArray:

@@ -110,8 +110,8 @@ def _strongest(
     """Strongest of some edges: by the field at the stated radius, or at a thousandth of their size."""
     if not len(edges.ends):
         return None
-    passes = [(charges.panels, charges.density)] + ([] if charges.previous is None else [charges.previous])
-    own = [_of_conductor(panels, density, conductor, factor, charges.four_pi_epsilon) for panels, density in passes]
+    passes = [charges.density] + ([] if charges.previous is None else [charges.previous])
+    own = [_of_conductor(charges.panels, one, conductor, factor, charges.four_pi_epsilon) for one in passes]
     _, field, tree = own[0]
     middle = edges.ends.mean(axis=1)
     beside = field[tree.query(middle, k=1)[1]]

@@ -76,14 +76,13 @@ def conductor_forces(charges: StatedCharges, *, progress: Progress | None = None
         if progress is not None:
             progress("forces", done, total, "")
 
-    columns = np.stack([charges.density, charges.margin, charges.faceted, charges.galerkin], axis=1)
-    between = interaction(charges.panels, columns, progress=told) / charges.four_pi_epsilon
-    value, margin, faceted, galerkin = between.sum(axis=2)
-    parts = [margin - value, FILLED_SHARE * (galerkin - value)]
+    columns = [charges.density, charges.margin, charges.faceted, charges.galerkin]
+    columns.append(charges.galerkin if charges.previous is None else charges.previous)
+    between = interaction(charges.panels, np.stack(columns, axis=1), progress=told) / charges.four_pi_epsilon
+    value, margin, faceted, galerkin, previous = between.sum(axis=2)
+    parts = [margin - value, FILLED_SHARE * (galerkin - value), PASS_SHARE * (galerkin - previous)]
     if np.any(charges.offset):
         parts += [FACETS_SHARE * (faceted - value), PLACE_SHARE * (_moved_again(charges) - value)]
-    if charges.previous is not None:
-        parts.append(PASS_SHARE * (galerkin - _totals(*charges.previous, charges.four_pi_epsilon)))
     about, size = _boxes(charges.panels)
     pressure = _pressures(charges)
     spread = _lengths([part[:, :3] for part in parts], between[0, :, :, :3], pressure)
@@ -106,13 +105,8 @@ def _moved_again(charges: StatedCharges) -> FloatArray:
     """Forces with the same charges on facets moved outward once more: how much they hang on where the facets lie."""
     panels = charges.panels
     corners = panels.corners + (charges.offset[:, None] * panels.normals)[:, None, :]
-    density = charges.density
-    return _totals(replace(panels, corners=corners), density, charges.four_pi_epsilon)
-
-
-def _totals(panels: Panels, density: FloatArray, four_pi_epsilon: float) -> FloatArray:
-    """Force and torque on every conductor, (n_conductors, 6)."""
-    return np.asarray(interaction(panels, density[:, None])[0].sum(axis=1) / four_pi_epsilon)
+    between = interaction(replace(panels, corners=corners), charges.density[:, None])[0]
+    return np.asarray(between.sum(axis=1) / charges.four_pi_epsilon)
 
 
 def _about(six: FloatArray, about: FloatArray) -> FloatArray:

@@ -21,7 +21,7 @@ from .pairs import middle_integral
 from .panels import Panels
 from .polygon import polygon_distance, polygon_potential
 
-__all__ = ["child_potentials", "two_level_indicator"]
+__all__ = ["child_potentials", "self_integrals", "two_level_indicator"]
 
 FloatArray = NDArray[np.float64]
 
@@ -105,6 +105,22 @@ def _self_integrals(frames, values):
         values[p] = self_integral(frames[p])
 
 
+def self_integrals(corners: FloatArray) -> FloatArray:
+    """Double integrals of 1/r of panels with themselves, m3.
+
+    Parameters
+    ----------
+    corners : (n, 4, 3) float, m
+
+    Returns
+    -------
+    (n,) float
+    """
+    values = np.empty(len(corners))
+    _self_integrals(panel_frames(corners, largest_rule=0), values)
+    return values
+
+
 @parallel_kernel
 def _thirds_gram(parts, gram):
     """Galerkin matrices of the three parts of each triangle, (n, 3, 3)."""
@@ -173,9 +189,7 @@ def _quad_gains(
     sum_residual = residual.sum(axis=1)
     for slot, direction in enumerate((SPLIT_U, SPLIT_V)):
         pair = halves(corners, direction)
-        first, second = np.empty(len(chosen)), np.empty(len(chosen))
-        _self_integrals(panel_frames(pair[:, 0], largest_rule=0), first)
-        _self_integrals(panel_frames(pair[:, 1], largest_rule=0), second)
+        first, second = self_integrals(pair[:, 0]), self_integrals(pair[:, 1])
         # a(first, whole) from a(whole, whole) = a(1, 1) + a(2, 2) + 2 a(1, 2)
         share = 0.5 * (first + whole - second) / whole
         norm2 = first - share**2 * whole

@@ -42,14 +42,13 @@ class ChargedPanels:
     Attributes
     ----------
     panels : Panels
-    density : (n, 3) float, C/m2
-        Columns: with the whole charge of each conductor, as solved, and with each charge larger by its uncertainty.
+    density : (n, 4) float, C/m2
+        Columns: with the whole charge of each conductor, as solved, with each charge larger by its uncertainty, and
+        as solved in the pass before (as in the last one if there was only one).
     potential : (n_conductors,) float, V
     fill : (n_bodies,) int
         As in :class:`daraf.bem.meaning.SurfaceMeaning`.
     facet_offset : (n,) float, m
-    previous : tuple of Panels and (m,) float, C/m2, or None
-        Of the pass before, as solved.
     four_pi_epsilon : float, F/m
     """
 
@@ -58,7 +57,6 @@ class ChargedPanels:
     potential: FloatArray
     fill: IntArray
     facet_offset: FloatArray
-    previous: tuple[Panels, FloatArray] | None
     four_pi_epsilon: float
 
 
@@ -96,7 +94,7 @@ def charged_panels(
     *,
     fill: IntArray,
     facet_offset: FloatArray | None = None,
-    previous: tuple[Panels, FloatArray] | None = None,
+    previous: FloatArray | None = None,
 ) -> ChargedPanels:
     """Charge the panels of a solve.
 
@@ -110,7 +108,8 @@ def charged_panels(
     four_pi_epsilon : float, F/m
     fill : (n_bodies,) int
     facet_offset : (n,) float, m, optional
-    previous : tuple of Panels and (n_conductors, m) float, optional
+    previous : (n_conductors, n) float, C/m2 per V, optional
+        Of the pass before, on the same panels.
 
     Returns
     -------
@@ -130,11 +129,10 @@ def charged_panels(
     margin = filled_density(panels, filled, charge + sign * state.charge_uncertainty)
     return ChargedPanels(
         panels=panels,
-        density=np.stack([filled, raw, margin], axis=1),
+        density=np.stack([filled, raw, margin, raw if previous is None else potential @ previous], axis=1),
         potential=potential,
         fill=fill,
         facet_offset=np.zeros(len(panels)) if facet_offset is None else facet_offset,
-        previous=None if previous is None else (previous[0], np.asarray(potential @ previous[1])),
         four_pi_epsilon=four_pi_epsilon,
     )
 
@@ -162,8 +160,6 @@ def probe(
     """
     panels, value = charged.panels, charged.density[:, :1]
     work = [(panels.corners, charged.density)]
-    if charged.previous is not None:
-        work.append((charged.previous[0].corners, charged.previous[1][:, None]))
     if np.any(charged.facet_offset):
         step = charged.facet_offset[:, None] * panels.normals
         work.append((panels.corners + step[:, None, :], value))
@@ -180,10 +176,9 @@ def probe(
     columns = found[0]
     at = columns[:, :, 0]
     parts = [FILLED_SHARE * (columns[:, :, 1] - at), columns[:, :, 2] - at]
-    if charged.previous is not None:
-        parts.append(PASS_SHARE * (columns[:, :, 1] - found[1][:, :, 0]))
-    if len(found) > 1 + (charged.previous is not None):
-        parts.append(PLACE_SHARE * (found[-1][:, :, 0] - at))
+    parts.append(PASS_SHARE * (columns[:, :, 1] - columns[:, :, 3]))
+    if len(found) > 1:
+        parts.append(PLACE_SHARE * (found[1][:, :, 0] - at))
     squares = np.sum(np.square(parts), axis=0)
     near = _steps(charged, np.asarray(points, dtype=np.float64))
     squares[:, 0] += (STEP_SHARE[0] * near[0]) ** 2

@@ -72,7 +72,7 @@ def sensitivities(
     four_pi_epsilon: float,
     *,
     one_sided: BoolArray,
-    previous: tuple[Panels, FloatArray] | None = None,
+    previous: FloatArray | None = None,
     grown: Growth | None = None,
     progress: Callable[..., None] | None = None,
 ) -> Sensitivities:
@@ -88,7 +88,7 @@ def sensitivities(
     four_pi_epsilon : float, F/m
     one_sided : (n_bodies,) bool
         Bodies with the field on their outer side alone: closed ones.
-    previous : tuple of Panels and (n, m) float, optional
+    previous : (n, n_panels) float, C/m2 per V, optional
         Of the pass before: the difference enters the uncertainty, which is wide without it.
     grown : Growth, optional
         How the surface moves when it is offset; without it no offsets are given. It also knows how far the facets of
@@ -116,7 +116,7 @@ def sensitivities(
     filled = np.array([filled_density(panels, row, column) for row, column in zip(densities, maxwell.T, strict=True)])
     both = _rigid(panels, np.concatenate([filled, densities]), four_pi_epsilon, told)
     value, raw = both[:, :, :n, :n], both[:, :, n:, n:]
-    before = None if previous is None else _rigid(*previous, four_pi_epsilon, None)
+    before = None if previous is None else _rigid(panels, previous, four_pi_epsilon, None)
     about, size = _boxes(panels, n_bodies)
     shift, turn = value[:, :3], _turned_about(value, about)
     parts = [raw - value, raw - value if before is None else PASS_SHARE * (raw - before)]
@@ -197,7 +197,7 @@ def _offset(
     panels: Panels,
     filled: FloatArray,
     densities: FloatArray,
-    previous: tuple[Panels, FloatArray] | None,
+    previous: FloatArray | None,
     grown: Growth,
     body: int,
 ) -> tuple[FloatArray, FloatArray]:
@@ -207,11 +207,10 @@ def _offset(
     is a scaling, it returns the extrapolated capacitance itself.
     """
     n = len(filled)
-    both = offset_forms(panels, grown.of(panels), densities, np.concatenate([filled, densities]), body)
-    mixed, raw = 0.5 * (both[:, :n] + both[:, :n].T), both[:, n:]
-    before = raw
-    if previous is not None:
-        before = offset_forms(previous[0], grown.of(previous[0]), previous[1], previous[1], body)
-    spread = np.hypot(OFFSET_FILLED_SHARE * (mixed - raw), OFFSET_PASS_SHARE * (raw - before))
+    before = densities if previous is None else previous
+    left, right = np.concatenate([densities, before]), np.concatenate([filled, densities, before])
+    forms = offset_forms(panels, grown.of(panels), left, right, body)
+    mixed, raw, last = 0.5 * (forms[:n, :n] + forms[:n, :n].T), forms[:n, n : 2 * n], forms[n:, 2 * n :]
+    spread = np.hypot(OFFSET_FILLED_SHARE * (mixed - raw), OFFSET_PASS_SHARE * (raw - last))
     scale = np.sqrt(np.outer(np.abs(np.diag(mixed)), np.abs(np.diag(mixed))))
     return mixed, spread + OFFSET_FLOOR * np.maximum(np.abs(mixed), 0.1 * scale)

@@ -81,7 +81,9 @@ class Pass:
     maxwell : (n, n) float, F
         Raw Galerkin value; its diagonal converges from below.
     estimate : (n, n) float, F
-        Two-level estimate of exact minus raw, signed.
+        Estimate of exact minus raw, signed: the mean of two opinions on what the panels are off.
+    spread : (n, n) float, F
+        Expanded uncertainty (k = 2) of raw plus estimate.
     seconds : float
     uncertainty : float
         Largest relative expanded uncertainty of the entries asked, on the scale on which the accuracy is asked.
@@ -94,6 +96,7 @@ class Pass:
     panels: int
     maxwell: FloatArray
     estimate: FloatArray
+    spread: FloatArray
     seconds: float
     uncertainty: float = float("nan")
     entry: tuple[int, int] = (0, 0)
@@ -127,8 +130,8 @@ class CapacitanceSolution:
     seconds : dict of str to float
     peak_memory_bytes : int
     warnings : list of Notice
-    previous : tuple of Panels and (n_conductors, n_panels) float, C/m2 per V, or None
-        Panels and densities of the pass before the last.
+    previous : (n_conductors, n_panels) float, C/m2 per V, or None
+        Densities of the pass before the last, on the panels of the last.
     interrupted : bool
         Whether the user stopped the refinement; the last finished pass is what is given.
     facets : str
@@ -154,7 +157,7 @@ class CapacitanceSolution:
     seconds: dict[str, float]
     peak_memory_bytes: int
     warnings: list[Notice] = field(default_factory=list)
-    previous: tuple[Panels, FloatArray] | None = None
+    previous: FloatArray | None = None
     interrupted: bool = False
     facets: str = "auto"
     bodies: tuple[BodyAccount, ...] = ()

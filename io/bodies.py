@@ -1,7 +1,6 @@
 """Bodies: connected pieces of mesh, read from files, named, in metres."""
 
 import difflib
-import unicodedata
 from collections.abc import Iterable, Sequence
 from dataclasses import dataclass, field, replace
 from functools import cached_property
@@ -13,11 +12,15 @@ from numpy.typing import NDArray
 
 from daraf.bem.errors import InputError
 
-from .mesh_units import METRES_PER_UNIT, box_in_plausible_units, length_unit, size_text
-from .topology import connected_pieces
+from .file_units import units_of_files
+from .mesh_units import METRES_PER_UNIT, length_unit
+from .names import printable
+from .topology import compacted, connected_pieces
+from .triangle_distance import sides_and_areas
 from .welding import weld
 
 if TYPE_CHECKING:
+    from .facet_tolerance import FacetTolerance
     from .readers import RawPart
 
 __all__ = ["Body", "Fault", "MeshSet", "pick_bodies", "read_bodies", "read_mesh_set"]
@@ -25,8 +28,6 @@ __all__ = ["Body", "Fault", "MeshSet", "pick_bodies", "read_bodies", "read_mesh_
 FloatArray = NDArray[np.float64]
 IntArray = NDArray[np.int64]
 Pick = str | int | Sequence[str | int]
-
-_LONGEST_NAME = 60
 
 #: Coordinates rounded to more than this share of the median edge have lost the shape.
 _LOST_SHAPE = 0.1
@@ -80,6 +81,8 @@ class Body:
         Which part (solid, object) of the file it came from, from 1.
     spacing : float, m
         Rounding of the coordinates as stored in the file, half a step.
+    unit : str or None
+        Unit of the file.
     """
 
     name: str
@@ -91,6 +94,7 @@ class Body:
     notes: list[str] = field(default_factory=list)
     solid: int = 1
     spacing: float = 0.0
+    unit: str | None = None
 
     @cached_property
     def box(self) -> FloatArray:
@@ -113,7 +117,14 @@ class MeshSet:
     files: list[str]
 
 
-def read_bodies(paths: str | Path | Iterable[str | Path], unit: str | None, *, pick: Pick | None = None) -> list[Body]:
+def read_bodies(
+    paths: str | Path | Iterable[str | Path],
+    unit: str | None,
+    *,
+    pick: Pick | None = None,
+    other_unit: str | None = None,
+    facet_tolerance: "FacetTolerance | None" = None,
+) -> list[Body]:
     """Read mesh files and split them into named bodies.
 
     Equal vertices are merged with a tolerance relative to the size of the part; nothing else is changed.
@@ -121,11 +132,16 @@ def read_bodies(paths: str | Path | Iterable[str | Path], unit: str | None, *, p
     Parameters
     ----------
     paths : str, Path or several
-        STL, OBJ, PLY, OFF, GLB and 3MF, told apart by extension.
+        STL, OBJ, PLY, OFF, GLB, glTF, 3MF and STEP, told apart by extension; also zipped or gzipped.
     unit : str or None
-        Unit of the files, one of ``m, cm, mm, um, in, mil, ft``. GLB and 3MF carry their own.
+        Unit of those files that carry none, one of ``m, cm, mm, um, in, mil, ft``. GLB, glTF, 3MF and STEP carry
+        their own; if all of the files do, what is stated here must agree.
     pick : str, int or several, optional
         Names, or numbers from 1 in reading order, of the bodies wanted; all by default.
+    other_unit : str, optional
+        Unit of files that carry none where `unit` is not stated; files that carry one need not agree with it.
+    facet_tolerance : FacetTolerance, optional
+        Largest distance of facets from the curved shapes of STEP files; chosen from the size by default.
 
     Returns
     -------
@@ -136,11 +152,18 @@ def read_bodies(paths: str | Path | Iterable[str | Path], unit: str | None, *, p
     InputError
         If a file is unusable, the unit is missing or contradicts the file, or a picked body does not exist.
     """
-    bodies = read_mesh_set(paths, unit, unit_needed=True).bodies
-    return bodies if pick is None else pick_bodies(bodies, pick)
+    read = read_mesh_set(paths, unit, unit_needed=True, other_unit=other_unit, facet_tolerance=facet_tolerance)
+    return read.bodies if pick is None else pick_bodies(read.bodies, pick)
 
 
-def read_mesh_set(paths: str | Path | Iterable[str | Path], unit: str | None, *, unit_needed: bool) -> MeshSet:
+def read_mesh_set(
+    paths: str | Path | Iterable[str | Path],
+    unit: str | None,
+    *,
+    unit_needed: bool,
+    other_unit: str | None = None,
+    facet_tolerance: "FacetTolerance | None" = None,
+) -> MeshSet:
     """As `read_bodies`, but a missing unit may stand: the vertices are then in the unit of the files.
 
     Parameters
@@ -148,6 +171,8 @@ def read_mesh_set(paths: str | Path | Iterable[str | Path], unit: str | None, *,
     paths : str, Path or several
     unit : str or None
     unit_needed : bool
+    other_unit : str, optional
+    facet_tolerance : FacetTolerance, optional
 
     Returns
     -------
@@ -158,37 +183,23 @@ def read_mesh_set(paths: str | Path | Iterable[str | Path], unit: str | None, *,
     InputError
         As `read_bodies`.
     """
-    from .readers import read_file
+    from .readers import may_be_curved, read_file
 
-    stated = None if unit is None else length_unit(unit)
     names = [paths] if isinstance(paths, str | Path) else list(paths)
     if not names:
         raise InputError("no mesh file is named; name at least one")
-    raws = [read_file(path) for path in names]
-    units = [_unit_of(raw.path, raw.unit, stated, unit_needed, raw.parts) for raw in raws]
-    if None in units and any(u is not None for u in units):
-        bare = raws[units.index(None)].path
-        raise InputError(f"{bare}: carries no unit while another file does; state its unit, for example mm")
+    stated = None if unit is None else length_unit(unit)
+    if facet_tolerance is not None and not any(may_be_curved(name) for name in names):
+        raise InputError(f"{names[0]}: is facets as drawn, so a facet tolerance says nothing; leave it out")
+    raws = [read_file(path, facet_tolerance) for path in names]
+    units = units_of_files(raws, stated, other_unit, needed=unit_needed)
     bodies: list[Body] = []
     for raw, file_unit in zip(raws, units, strict=True):
         scale = 1.0 if file_unit is None else METRES_PER_UNIT[file_unit]
-        bodies.extend(_split(raw.path, raw.parts, scale, file_unit or "file units"))
+        told = [Fault(one.code, "note", 1, None, one.text, one.remedy) for one in raw.remarks]
+        for body in _split(raw.path, raw.parts, scale, file_unit or "file units"):
+            bodies.append(replace(body, unit=file_unit, faults=[*told, *body.faults]))
     return MeshSet(_unique_names(bodies), stated or units[0], [str(name) for name in names])
-
-
-def _unit_of(path: Path, own: str | None, stated: str | None, needed: bool, parts: list["RawPart"]) -> str | None:
-    if own is not None:
-        if stated not in (None, own):
-            raise InputError(f"{path}: the file says {own}, the unit stated is {stated}; state {own} or none")
-        return own
-    if stated is None and needed:
-        corners = np.concatenate([part.vertices[part.triangles.ravel()] for part in parts])
-        extents = np.ptp(corners, axis=0)
-        raise InputError(
-            f"{path}: the format carries no unit, and none is stated; its bounding box {size_text(extents)} "
-            f"would be {box_in_plausible_units(extents)}: state the unit"
-        )
-    return stated
 
 
 def _split(path: Path, parts: list["RawPart"], scale: float, unit: str) -> list[Body]:
@@ -201,16 +212,16 @@ def _split(path: Path, parts: list["RawPart"], scale: float, unit: str) -> list[
         notes = []
         if n_moved:
             notes.append(f"merged {n_moved} vertices closer than {tolerance:.2g} {unit} to another one")
-        name = _clean(part.name)
-        named = name or _clean(path.stem) or "file"
+        name = printable(part.name)
+        named = name or printable(path.stem) or "file"
         numbered = n_pieces > 1 or (not name and len(parts) > 1)
         order = np.argsort(piece, kind="stable")
         for k, rows in enumerate(np.split(order, np.cumsum(np.bincount(piece))[:-1]), start=1):
-            used, index = np.unique(triangles[rows], return_inverse=True)
+            used, index = compacted(triangles[rows], len(vertices))
             body = Body(
                 name=f"{named}-{k}" if numbered else named,
                 vertices=np.ascontiguousarray(vertices[used] * scale),
-                triangles=np.ascontiguousarray(index.reshape(-1, 3), dtype=np.int64),
+                triangles=index,
                 file=str(path),
                 index_in_file=len(bodies) + 1,
                 notes=list(notes),
@@ -224,10 +235,8 @@ def _split(path: Path, parts: list["RawPart"], scale: float, unit: str) -> list[
 def _check_shape(path: Path, name: str, vertices: FloatArray, triangles: IntArray, spacing: float) -> None:
     """Refuse a part that is a point or a line, or whose coordinates are too coarse to hold its shape."""
     label = f"solid {name!r}" if name else "the mesh"
-    corners = vertices[triangles]
-    sides = np.linalg.norm(np.roll(corners, -1, axis=1) - corners, axis=2)
+    sides, doubled = sides_and_areas(vertices[triangles])
     edge = float(np.median(sides[sides > 0.0])) if (sides > 0.0).any() else 0.0
-    doubled = np.linalg.norm(np.cross(corners[:, 1] - corners[:, 0], corners[:, 2] - corners[:, 0]), axis=1)
     flat = not (doubled > 1e-12 * sides.max(axis=1) ** 2).any()
     # a true edge rounds to nothing or to whole steps: a lost shape shows as edges of a few steps
     largest = float(np.abs(vertices).max())
@@ -242,12 +251,6 @@ def _check_shape(path: Path, name: str, vertices: FloatArray, triangles: IntArra
             f"{path}: {label}: all {len(triangles)} faces have no area, at a rounding of {2 * spacing:.2g} "
             f"for coordinates near {largest:.3g}; export it as a surface mesh, near the origin"
         )
-
-
-def _clean(name: str) -> str:
-    """A name that can be printed: no control or formatting characters, single blanks, of bounded length."""
-    kept = "".join(" " if c.isspace() else c for c in name if c.isspace() or unicodedata.category(c)[0] != "C")
-    return " ".join(kept.split())[:_LONGEST_NAME].rstrip()
 
 
 def _unique_names(bodies: list[Body]) -> list[Body]:

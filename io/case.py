@@ -11,6 +11,7 @@ from pydantic import ValidationError
 
 from daraf.bem.errors import InputError
 
+from .names import check_file_name
 from .schema import NOT_YET, Air, CaseContent, ConductorEntry, Medium, Part, Rotation
 
 __all__ = ["Case", "load_case", "make_case"]
@@ -71,6 +72,7 @@ def load_case(path: str | Path) -> Case:
         If the file cannot be read or does not follow the schema.
     """
     file = Path(path)
+    check_file_name(file)
     try:
         if file.stat().st_size > _LARGEST:
             raise InputError(f"{file}: too large for a case file; surface files are given with --unit instead")

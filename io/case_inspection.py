@@ -5,17 +5,19 @@ from daraf.bem.solution import Notice
 from .case import Case
 from .inspection import Inspection, inspect_bodies
 from .problem import placed_bodies
+from .progress import ProgressCallback
 
 __all__ = ["inspect_case"]
 
 
-def inspect_case(case: Case) -> tuple[Inspection, tuple[Notice, ...]]:
+def inspect_case(case: Case, *, progress: ProgressCallback | None = None) -> tuple[Inspection, tuple[Notice, ...]]:
     """Look at every body of a case.
 
     Parameters
     ----------
     case : Case
         From `load_case` or `make_case`.
+    progress : callable, optional
 
     Returns
     -------
@@ -30,4 +32,4 @@ def inspect_case(case: Case) -> tuple[Inspection, tuple[Notice, ...]]:
         If a file, a body or a placement cannot be used.
     """
     placed = placed_bodies(case)
-    return inspect_bodies(placed.bodies, case.content.unit), placed.notices
+    return inspect_bodies(placed.bodies, case.content.unit, progress=progress), placed.notices

@@ -55,7 +55,6 @@ def charged_result(result: Result, potentials: Mapping[str, float] | None = None
     fill = surface.body_fill
     if fill is None:
         raise InputError(f"{result.folder}: made by a version that did not keep what fields need; solve the case again")
-    previous = result.previous
     return charged_panels(
         _panels(surface),
         surface.densities,
@@ -63,7 +62,7 @@ def charged_result(result: Result, potentials: Mapping[str, float] | None = None
         FOUR_PI_EPSILON_0 * float(document["solution"]["relative_permittivity"]),
         fill=fill,
         facet_offset=surface.facet_offset,
-        previous=None if previous is None else (_panels(previous), previous.densities),
+        previous=surface.previous,
     )
 
 

@@ -58,15 +58,18 @@ def _count(count: int, thing: str, things: str = "") -> str:
 
 def _single_rows(triangles: IntArray) -> IntArray:
     """Triangles with three different vertices, one of each that coincide."""
+    group, size = coincident_groups(triangles)
+    if len(size) == len(group):
+        return np.flatnonzero(proper_rows(triangles))
     first = np.zeros(len(triangles), dtype=np.bool_)
-    first[np.unique(coincident_groups(triangles)[0], return_index=True)[1]] = True
+    first[np.unique(group, return_index=True)[1]] = True
     return np.flatnonzero(first & proper_rows(triangles))
 
 
 def _coarse_coordinates(shape: Shape) -> Iterator[Fault]:
     sides = np.linalg.norm(np.roll(shape.corners, -1, axis=1) - shape.corners, axis=2)
-    edge = float(np.median(sides))
-    if shape.body.spacing > _COARSE * edge:
+    edge = float(np.median(sides[sides > 0.0])) if (sides > 0.0).any() else 0.0
+    if 0.0 < _COARSE * edge < shape.body.spacing:
         yield Fault(
             "coarse-coordinates",
             "warning",
@@ -92,7 +95,9 @@ def _degenerate(shape: Shape) -> Iterator[Fault]:
 
 
 def _duplicate(shape: Shape) -> Iterator[Fault]:
-    group, _ = coincident_groups(shape.body.triangles)
+    group, size = coincident_groups(shape.body.triangles)
+    if len(size) == len(group):
+        return
     extra = np.setdiff1d(np.arange(len(group)), np.unique(group, return_index=True)[1])
     if len(extra):
         yield Fault(

@@ -12,11 +12,14 @@ from daraf.bem.errors import InputError
 
 from .bodies import Body, Fault, read_mesh_set
 from .contacts import Contact, cavity_walls, contacts, shapes_of
+from .facet_tolerance import parse_facet_tolerance
 from .faults import faults_of
 from .gaps import Approach, Shape, box_gap, closest_approach
 from .inspection_text import inspection_to_text
 from .mending import make_fit, orient
+from .progress import ProgressCallback, Silence
 from .topology import boundary_loops, edges_of
+from .triangle_distance import sides_and_areas
 
 __all__ = [
     "BodyReport",
@@ -123,14 +126,23 @@ class Inspection:
         return np.array([boxes[:, 0].min(axis=0), boxes[:, 1].max(axis=0)])
 
 
-def inspect_files(paths: str | Path | Iterable[str | Path], unit: str | None = None) -> Inspection:
+def inspect_files(
+    paths: str | Path | Iterable[str | Path],
+    unit: str | None = None,
+    *,
+    facet_tolerance: float | str | None = None,
+    progress: ProgressCallback | None = None,
+) -> Inspection:
     """Read mesh files and look at every body.
 
     Parameters
     ----------
     paths : str, Path or several
     unit : str, optional
-        Unit of the files. Without one, lengths stay in the unit of the files.
+        Unit of the files that carry none. Without one, lengths stay in the unit of the files.
+    facet_tolerance : float or str, optional
+        Of curved shapes, such as "0.02 mm" or "0.1 %"; a bare number is metres.
+    progress : callable, optional
 
     Returns
     -------
@@ -141,11 +153,16 @@ def inspect_files(paths: str | Path | Iterable[str | Path], unit: str | None = N
     InputError
         If a file cannot be used.
     """
-    read = read_mesh_set(paths, unit, unit_needed=False)
-    return replace(inspect_bodies(read.bodies), files=read.files, unit=read.unit)
+    tell = progress or Silence()
+    tell("reading", 0, 1)
+    tolerance = None if facet_tolerance is None else parse_facet_tolerance(facet_tolerance)
+    read = read_mesh_set(paths, unit, unit_needed=False, facet_tolerance=tolerance)
+    return replace(inspect_bodies(read.bodies, progress=tell), files=read.files, unit=read.unit)
 
 
-def inspect_bodies(bodies: Sequence[Body], unit: str | None = None) -> Inspection:
+def inspect_bodies(
+    bodies: Sequence[Body], unit: str | None = None, *, progress: ProgressCallback | None = None
+) -> Inspection:
     """Look at every body and at every pair of them.
 
     Parameters
@@ -154,17 +171,25 @@ def inspect_bodies(bodies: Sequence[Body], unit: str | None = None) -> Inspectio
         As read, neither mended nor oriented.
     unit : str, optional
         Unit to show lengths in.
+    progress : callable, optional
 
     Returns
     -------
     Inspection
     """
+    tell = progress or Silence()
+    total = sum(len(body.triangles) for body in bodies)
+    tell("mending on trial", 0, 1)
     shapes = shapes_of(_as_solved(bodies))
+    tell("looking for contacts and gaps", 0, 1)
     found = contacts([shape.body for shape in shapes], shapes=shapes)
     cavities = cavity_walls(shapes)
     gaps = _gaps(shapes, found)
     reports = []
+    done = 0
     for k, (body, shape) in enumerate(zip(bodies, shapes, strict=True)):
+        tell("looking for faults", done, total)
+        done += len(body.triangles)
         own = faults_of(shape if shape.body is body else Shape(body))
         if k in cavities:
             own = [_cavity(bodies[cavities[k]]) if fault.code == "inside-out" else fault for fault in own]
@@ -185,9 +210,7 @@ def _as_solved(bodies: Sequence[Body]) -> list[Body]:
 
 
 def _report(k: int, body: Body, shape: Shape, gaps: list[Gap]) -> BodyReport:
-    sides = np.roll(shape.corners, -1, axis=1) - shape.corners
-    lengths = np.linalg.norm(sides, axis=2)
-    doubled = np.linalg.norm(np.cross(sides[:, 0], sides[:, 1]), axis=1)
+    lengths, doubled = sides_and_areas(shape.corners)
     longest = lengths.max(axis=1)
     sized = doubled > 1e-12 * longest**2
     solved = shape.body

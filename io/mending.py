@@ -13,12 +13,16 @@ from daraf.bem.errors import InputError
 from .bodies import Body
 from .contacts import cavity_walls, shapes_of
 from .topology import connected_pieces, edges_of, proper_rows, signed_volume, winding_flips
+from .triangle_distance import sides_and_areas
 
 __all__ = ["coincident_groups", "fit_bodies", "flat_height", "flat_triangles", "make_fit", "orient"]
 
 FloatArray = NDArray[np.float64]
 IntArray = NDArray[np.int64]
 BoolArray = NDArray[np.bool_]
+
+#: An odd number whose bits are spread: products with it hardly ever agree by chance (Knuth, TAOCP 3, 6.4).
+_MIX = np.uint64(0x9E3779B97F4A7C15)
 
 #: Rounds of edge exchanges; each removes at least one triangle of a chain along one edge.
 _ROUNDS = 100
@@ -51,11 +55,8 @@ def flat_triangles(vertices: FloatArray, triangles: IntArray, height: float) -> 
     -------
     (nt,) bool
     """
-    corners = vertices[triangles]
-    sides = np.roll(corners, -1, axis=1) - corners
-    longest = np.linalg.norm(sides, axis=2).max(axis=1)
-    doubled = np.linalg.norm(np.cross(sides[:, 0], sides[:, 1]), axis=1)
-    flat: BoolArray = ~proper_rows(triangles) | (doubled <= height * longest)
+    sides, doubled = sides_and_areas(vertices[triangles])
+    flat: BoolArray = ~proper_rows(triangles) | (doubled <= height * sides.max(axis=1))
     return flat
 
 
@@ -71,7 +72,13 @@ def coincident_groups(triangles: IntArray) -> tuple[IntArray, IntArray]:
     group : (nt,) int
     size : (n_groups,) int
     """
-    _, group, size = np.unique(np.sort(triangles, axis=1), axis=0, return_inverse=True, return_counts=True)
+    ordered = np.sort(triangles, axis=1)
+    n = np.uint64(triangles.max(initial=0) + 1)
+    a, b, c = ordered.astype(np.uint64).T
+    key = np.sort(((a * n + b) * _MIX) ^ c)
+    if (key[1:] != key[:-1]).all():  # the usual mesh: no two keys are equal, so no two triangles
+        return np.arange(len(triangles)), np.ones(len(triangles), dtype=np.int64)
+    _, group, size = np.unique(ordered, axis=0, return_inverse=True, return_counts=True)
     return group.ravel(), size
 
 
@@ -161,6 +168,8 @@ def _without_short_edges(body: Body, height: float, notes: list[str]) -> IntArra
 def _without_flat(vertices: FloatArray, triangles: IntArray, height: float, notes: list[str]) -> IntArray:
     """Remove triangles whose corners lie on one line by exchanging their longest edge."""
     exchanged = 0
+    if not flat_triangles(vertices, triangles, height).any():
+        return triangles
     triangles = triangles.copy()
     for _ in range(_ROUNDS):
         flat = flat_triangles(vertices, triangles, height)

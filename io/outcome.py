@@ -9,7 +9,6 @@ import numpy as np
 from numpy.typing import NDArray
 
 from daraf.bem.network import Excitation, MutualCapacitance, excite, mutual_capacitance
-from daraf.bem.panels import Panels
 from daraf.bem.solution import CapacitanceSolution
 
 from .account_text import account_text, counted
@@ -74,20 +73,14 @@ class Outcome:
             If it cannot be written; nothing is left behind.
         """
         log = "\n".join([f"daraf {daraf_version()}", *self.log_lines, "", self.text()])
-        title, before = self.document["title"], self.solution.previous
-        surface = surface_bytes(self._solved_surface(), title=title)
-        previous = None if before is None else surface_bytes(self._panels_as_stored(*before), title=title)
-        return write_result(folder, self.document, surface, log, previous=previous)
+        surface = surface_bytes(self._solved_surface(), title=self.document["title"])
+        return write_result(folder, self.document, surface, log)
 
     def _solved_surface(self) -> SolvedSurface:
         from daraf.bem.meaning import surface_meaning
 
-        panels = self.solution.panels
+        panels, densities = self.solution.panels, self.solution.densities
         meaning = surface_meaning(self.problem.surface, panels, self.solution.facets)
-        stored = self._panels_as_stored(panels, self.solution.densities)
-        return replace(stored, facet_offset=meaning.facet_offset, body_fill=meaning.fill, field_sides=self.sides)
-
-    def _panels_as_stored(self, panels: Panels, densities: NDArray[np.float64]) -> SolvedSurface:
         return SolvedSurface(
             corners=panels.corners,
             n_corners=panels.n_corners,
@@ -97,6 +90,10 @@ class Outcome:
             body_names=self.problem.surface.body_names,
             densities=densities,
             density=None if self.state is None else self.state.potential @ densities,
+            facet_offset=meaning.facet_offset,
+            body_fill=meaning.fill,
+            field_sides=self.sides,
+            previous=self.solution.previous,
         )
 
 

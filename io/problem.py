@@ -17,10 +17,12 @@ from daraf.bem.surface import Surface
 from .bodies import Body, pick_bodies, read_bodies
 from .case import Case, make_case
 from .contacts import contacts
+from .facet_tolerance import FacetTolerance, parse_facet_tolerance
 from .faults import faults_of
 from .gaps import Shape
 from .mending import fit_bodies
 from .mesh_units import METRES_PER_UNIT
+from .readers import may_be_curved
 from .schema import ConductorEntry, Part
 
 __all__ = [
@@ -36,12 +38,14 @@ __all__ = [
 
 FloatArray = NDArray[np.float64]
 BoolArray = NDArray[np.bool_]
-_Source = tuple[str, str | None]
+_Source = tuple[str, str | None, FacetTolerance | None]
 
 _MEETS = {"touches": "touches", "crosses": "cuts through", "overlaps": "overlaps"}
 
 #: How the note of a body begins that is no change of it.
 _WALL = "is the wall of a cavity"
+#: Remarks of readers that stand beside a result.
+_TOLD = ("facet-tolerance", "no-unit", "odd-unit")
 
 #: A shift of more than so many times the size of what is shifted is worth a question.
 _FAR = 100.0
@@ -84,7 +88,11 @@ class Problem:
 
 
 def problem_from_files(
-    paths: Sequence[str | Path], unit: str | None, *, accuracy: float | str | None = None
+    paths: Sequence[str | Path],
+    unit: str | None,
+    *,
+    accuracy: float | str | None = None,
+    facet_tolerance: float | str | None = None,
 ) -> Problem:
     """Problem in which each body of the files is a conductor, without potentials or charges.
 
@@ -93,6 +101,8 @@ def problem_from_files(
     paths : sequence of str or Path
     unit : str or None
     accuracy : float or str, optional
+    facet_tolerance : float or str, optional
+        Of curved shapes, such as "0.02 mm" or "0.1 %"; a bare number is metres.
 
     Returns
     -------
@@ -103,20 +113,22 @@ def problem_from_files(
     InputError
         If a file cannot be used, the unit is missing, or bodies touch or overlap.
     """
-    bodies = read_bodies([str(path) for path in paths], unit)
+    tolerance = None if facet_tolerance is None else parse_facet_tolerance(facet_tolerance)
+    bodies = read_bodies([str(path) for path in paths], unit, facet_tolerance=tolerance)
     folder = Path(paths[0]).absolute().parent
     known: dict[_Source, list[Body]] = {}
     conductors = []
     for body in bodies:
         surface = os.path.relpath(body.file, folder)
-        known.setdefault((str(folder / surface), None), []).append(body)
+        known.setdefault((str(folder / surface), None, tolerance if may_be_curved(surface) else None), []).append(body)
         conductors.append({"name": body.name, "surface": surface, "body": body.index_in_file})
     stated: dict[str, Any] = {
-        "title": ", ".join(Path(file).name for file, _ in known)[:200],
+        "title": ", ".join(Path(file).name for file, _, _ in known)[:200],
         "conductor": conductors,
     }
     stated |= {} if unit is None else {"unit": unit}
     stated |= {} if accuracy is None else {"accuracy": accuracy}
+    stated |= {} if facet_tolerance is None else {"facet_tolerance": facet_tolerance}
     case = make_case(stated, folder=folder)
     return build_problem(case, known=known)
 
@@ -197,7 +209,8 @@ def placed_bodies(case: Case, *, known: dict[_Source, list[Body]] | None = None)
                 notices += _placement_notice(part, body, entry)
                 bodies.append(place(body, part))
                 owner.append(index)
-    return PlacedBodies(tuple(bodies), tuple(owner), (*notices, *_unused(files, used)))
+    notices += [*_told_by_files(case, files), *_unused(files, used)]
+    return PlacedBodies(tuple(bodies), tuple(owner), tuple(notices))
 
 
 def place(body: Body, part: Part) -> Body:
@@ -260,7 +273,10 @@ def bodies_to_surface(
 
 
 def _source(case: Case, part: Part) -> _Source:
-    return str(case.folder / part.surface), part.unit
+    tolerance = part.facet_tolerance
+    if tolerance is None and may_be_curved(part.surface):
+        tolerance = case.content.facet_tolerance
+    return str(case.folder / part.surface), part.unit, tolerance
 
 
 def _chosen(case: Case, part: Part, where: str, files: dict[_Source, list[Body]]) -> list[Body]:
@@ -268,7 +284,7 @@ def _chosen(case: Case, part: Part, where: str, files: dict[_Source, list[Body]]
     source = _source(case, part)
     try:
         if source not in files:
-            files[source] = read_bodies([source[0]], part.unit or case.content.unit)
+            files[source] = read_bodies([source[0]], part.unit, other_unit=case.content.unit, facet_tolerance=source[2])
         return pick_bodies(files[source], part.body) if part.body else files[source]
     except InputError as error:
         raise InputError(f"{where}: {error}") from None
@@ -301,6 +317,22 @@ def _placement_notice(part: Part, body: Body, entry: ConductorEntry) -> list[Not
         "bare numbers are metres, write text such as '2 mm' if that was meant"
     )
     return [Notice("far-shift", text)]
+
+
+def _told_by_files(case: Case, files: dict[_Source, list[Body]]) -> list[Notice]:
+    """What each file says of itself that a reader of the result should know."""
+    if case.content.facet_tolerance is not None and not any(may_be_curved(surface) for surface in _surfaces(case)):
+        raise InputError(f"{case.label}: facet_tolerance: all surfaces are facets as drawn; take the key out")
+    notices = []
+    for (path, stated, _), bodies in files.items():
+        file, own, general = Path(path).name, bodies[0].unit, case.content.unit
+        if stated is None and None not in (own, general) and own != general:
+            text = f"{file}: is in {own}, as the file says; the case's {general} is for files that carry no unit"
+            notices.append(Notice("own-unit", text))
+        for fault in bodies[0].faults:
+            if fault.code in _TOLD:
+                notices.append(Notice(fault.code, f"{file}: {fault.text}"))
+    return notices
 
 
 def _unused(files: dict[_Source, list[Body]], used: dict[tuple[_Source, int], str]) -> list[Notice]:

@@ -78,11 +78,11 @@ class TerminalProgress(Silence):
         from rich.progress import BarColumn, Progress, TaskProgressColumn, TextColumn, TimeRemainingColumn
 
         self._bars = Progress(
-            TextColumn("{task.description}"),
+            TextColumn("{task.description}", markup=False),
             BarColumn(bar_width=30),
             TaskProgressColumn(),
             TimeRemainingColumn(compact=True),
-            TextColumn("{task.fields[note]}"),
+            TextColumn("{task.fields[note]}", markup=False),
             console=Console(file=stream),
             transient=True,
         )
@@ -99,7 +99,7 @@ class TerminalProgress(Silence):
     def __call__(self, stage: str, done: float, total: float, note: str = "") -> None:
         """Move the bar, or print a line that stays if there is no total."""
         if total <= 0.0:
-            self._bars.console.print(note or stage, highlight=False)
+            self._bars.console.print(note or stage, highlight=False, markup=False)
             return
         if stage != self._stage or self._task is None:
             if self._task is not None:

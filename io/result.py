@@ -17,9 +17,6 @@ from .surface_file import SolvedSurface, read_surface
 __all__ = ["Result", "check_destination", "document_text", "foreign_files", "read_result", "write_result"]
 
 _DOCUMENT, _SURFACE, _LOG = "result.json", "surface.vtp", "log.txt"
-#: Panels and densities of the pass before the last: what they differ by tells how far a field can be trusted.
-_PREVIOUS = "previous.vtp"
-_OWN = (_DOCUMENT, _SURFACE, _LOG, _PREVIOUS)
 
 
 @dataclass(frozen=True, eq=False)
@@ -40,12 +37,6 @@ class Result:
     def surface(self) -> SolvedSurface:
         """Panels and charge densities, read on first use."""
         return read_surface(self.folder / _SURFACE)
-
-    @cached_property
-    def previous(self) -> SolvedSurface | None:
-        """Panels and charge densities of the pass before the last; None if there was only one."""
-        file = self.folder / _PREVIOUS
-        return read_surface(file) if file.exists() else None
 
     @property
     def log(self) -> str:
@@ -121,7 +112,6 @@ def write_result(
     surface: bytes,
     log: str,
     *,
-    previous: bytes | None = None,
     extras: dict[str, bytes] | None = None,
 ) -> Path:
     """Write a result folder whole or not at all.
@@ -138,8 +128,6 @@ def write_result(
         Content of `surface.vtp`.
     log : str
         Content of `log.txt`.
-    previous : bytes, optional
-        Content of `previous.vtp`.
     extras : dict of str to bytes, optional
         More files by name.
 
@@ -158,7 +146,6 @@ def write_result(
         _DOCUMENT: document_text(document).encode(),
         _SURFACE: surface,
         _LOG: log.encode(),
-        **({} if previous is None else {_PREVIOUS: previous}),
         **(extras or {}),
     }
     aside: Path | None = None
@@ -193,7 +180,7 @@ def foreign_files(folder: str | Path) -> list[str]:
     place = Path(folder)
     if not place.is_dir():
         return []
-    return sorted(item.name for item in place.iterdir() if item.name not in _OWN)
+    return sorted(item.name for item in place.iterdir() if item.name not in (_DOCUMENT, _SURFACE, _LOG))
 
 
 def read_result(folder: str | Path) -> Result:

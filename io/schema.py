@@ -14,6 +14,7 @@ from pydantic import model_validator as whole
 from daraf.bem.errors import InputError
 from daraf.bem.facets import FACETS, facet_meaning
 
+from .facet_tolerance import FacetTolerance, parse_facet_tolerance
 from .mesh_units import length_unit
 from .units import KINDS, parse_quantity
 
@@ -188,6 +189,18 @@ Accuracy = Annotated[
 ]
 
 
+Facetting = Annotated[
+    FacetTolerance,
+    BeforeValidator(parse_facet_tolerance),
+    WithJsonSchema(
+        {
+            "anyOf": [{"type": "number"}, {"type": "string"}],
+            "description": "largest distance of facets from curved shapes (STEP): '0.02 mm', or '0.1 %' of the size",
+        }
+    ),
+]
+
+
 class _Table(BaseModel):
     model_config = ConfigDict(extra="forbid", frozen=True)
 
@@ -205,6 +218,7 @@ class Part(_Table):
 
     surface: str = Field(min_length=1, description="surface file, relative to the case file")
     unit: Unit | None = Field(None, description="unit of this file if it differs from the case's")
+    facet_tolerance: Facetting | None = None
     body: BodyChoice = ()
     rotation: Rotation | None = None
     shift: Point = (0.0, 0.0, 0.0)
@@ -216,6 +230,7 @@ class ConductorEntry(_Table):
     name: Name
     surface: str | None = Field(None, min_length=1, description="surface file, relative to the case file")
     unit: Unit | None = Field(None, description="unit of this file if it differs from the case's")
+    facet_tolerance: Facetting | None = None
     body: BodyChoice = ()
     rotation: Rotation | None = None
     shift: Point = (0.0, 0.0, 0.0)
@@ -234,7 +249,7 @@ class ConductorEntry(_Table):
             raise InputError("edge_radius must be positive; leave it out for a sharp edge")
         if len(stated) > 1:
             raise InputError(f"{' and '.join(stated)} are both given; keep one of potential, charge, ground")
-        placed = self.model_fields_set & {"unit", "body", "rotation", "shift"}
+        placed = self.model_fields_set & {"unit", "facet_tolerance", "body", "rotation", "shift"}
         if self.part and (self.surface or placed):
             extra = ", ".join(sorted(placed | ({"surface"} if self.surface else set())))
             raise InputError(f"{extra} given beside 'part'; move that into the parts")
@@ -256,7 +271,12 @@ class ConductorEntry(_Table):
         assert self.surface is not None
         return (
             Part.model_construct(
-                surface=self.surface, unit=self.unit, body=self.body, rotation=self.rotation, shift=self.shift
+                surface=self.surface,
+                unit=self.unit,
+                facet_tolerance=self.facet_tolerance,
+                body=self.body,
+                rotation=self.rotation,
+                shift=self.shift,
             ),
         )
 
@@ -291,7 +311,8 @@ class CaseContent(_Table):
     """A case: conductors in a medium and the accuracy asked."""
 
     title: str = Field("", max_length=200)
-    unit: Unit | None = Field(None, description="length unit of the surface files")
+    unit: Unit | None = Field(None, description="length unit of the surface files that carry none")
+    facet_tolerance: Facetting | None = None
     accuracy: Accuracy = 0.01
     facets: Facets = "auto"
     want: tuple[tuple[str, str], ...] = Field(

@@ -7,7 +7,7 @@ from numpy.typing import NDArray
 
 from .gaps import Shape
 from .triangle_boxes import near_pairs
-from .triangle_distance import edge_crossings, pair_distances, slab_gaps
+from .triangle_distance import edge_crossings, pair_distances, sides_and_areas, slab_gaps
 
 __all__ = ["self_contacts"]
 
@@ -16,6 +16,10 @@ IntArray = NDArray[np.int64]
 BoolArray = NDArray[np.bool_]
 
 _EXACT = 1024
+
+#: Bodies with more panels are worth the compiled sieve.
+_SIEVED = 20_000
+_BLOCK = 200_000
 
 #: Two panels over a common edge that enclose a smaller angle (radians) lie upon one another.
 _FOLD = 1e-5
@@ -40,7 +44,7 @@ def self_contacts(shape: Shape, tolerance: float) -> tuple[IntArray, FloatArray,
     """
     low = _heights(shape.corners) <= tolerance
     pairs, places, crossings = [], [], []
-    for i, j, _ in near_pairs(shape.tree, shape.tree, [tolerance], itself=True):
+    for i, j in _near_pairs(shape, tolerance):
         tall = ~(low[i] | low[j])
         for found, place in _touching(shape, i[tall], j[tall], tolerance):
             pairs.append(found)
@@ -52,11 +56,29 @@ def self_contacts(shape: Shape, tolerance: float) -> tuple[IntArray, FloatArray,
     return np.concatenate(pairs), np.concatenate(places), np.concatenate(crossings)
 
 
+def _near_pairs(shape: Shape, tolerance: float) -> Iterator[tuple[IntArray, IntArray]]:
+    """Pairs that may meet, in blocks; of large bodies through a compiled sieve that leaves few."""
+    if len(shape.corners) < _SIEVED:
+        for i, j, _ in near_pairs(shape.tree, shape.tree, [tolerance], itself=True):
+            yield i, j
+        return
+    from daraf.bem.self_pairs import self_pairs
+
+    tree, order = shape.tree, shape.tree.order
+    boxes = np.concatenate([np.column_stack(both) for both in zip(tree.low, tree.high, strict=True)])
+    levels = np.cumsum([0, *(len(low) for low in tree.low)])
+    pairs = self_pairs(
+        shape.corners[order], shape.body.triangles[order], shape.normals[order], boxes, levels, tolerance
+    )
+    for start in range(0, len(pairs), _BLOCK):
+        block = order[pairs[start : start + _BLOCK]]
+        yield block[:, 0], block[:, 1]
+
+
 def _heights(corners: FloatArray) -> FloatArray:
     """Smallest height of each triangle, m."""
-    sides = np.roll(corners, -1, axis=1) - corners
-    longest = np.linalg.norm(sides, axis=2).max(axis=1)
-    doubled = np.linalg.norm(np.cross(sides[:, 0], sides[:, 1]), axis=1)
+    sides, doubled = sides_and_areas(corners)
+    longest = sides.max(axis=1)
     heights: FloatArray = doubled / np.where(longest > 0.0, longest, 1.0)
     return heights
 

@@ -2,10 +2,11 @@
 
 Cell arrays: ``conductor`` and ``body`` (index), ``panel_size`` (square root of the area), one
 ``charge_density_NAME`` per conductor (that conductor at 1 V, all others at 0 V) and, when potentials or
-charges were stated, ``charge_density``; ``facet_offset`` tells how far a panel was moved outward onto the round
-surface that its facet stands for, ``field_front`` and ``field_back`` how large the stated field is on both sides.
-Each array carries its unit as VTK's UNITS_LABEL. The names of the conductors and bodies are field data, and so is
-``body_fill``: 1 for a body whose inside is metal, -1 for the wall of a cavity in one, 0 for sheets and thin shells.
+charges were stated, ``charge_density``; ``pass_before_NAME`` are the densities of the pass before;
+``facet_offset`` tells how far a panel was moved outward onto the round surface that its facet stands for,
+``field_front`` and ``field_back`` how large the stated field is on both sides. Each array carries its unit as
+VTK's UNITS_LABEL. The names of the conductors and bodies are field data, and so is ``body_fill``: 1 for a body whose
+inside is metal, -1 for the wall of a cavity in one, 0 for sheets and thin shells.
 """
 
 from collections.abc import Sequence
@@ -48,6 +49,8 @@ class SolvedSurface:
         1 where the inside of a body is metal, -1 where it is a cavity in metal, else 0.
     field_sides : (2, n) float, V/m, or None
         Size of the field on the side of the normals and on the other one, as stated.
+    previous : (n_conductors, n) float, C/m2 per V, or None
+        Densities of the pass before: what they differ by tells how far a field can be trusted.
     """
 
     corners: FloatArray
@@ -61,6 +64,7 @@ class SolvedSurface:
     facet_offset: FloatArray | None = None
     body_fill: IntArray | None = None
     field_sides: FloatArray | None = None
+    previous: FloatArray | None = None
 
 
 def surface_bytes(surface: SolvedSurface, *, title: str = "") -> bytes:
@@ -85,6 +89,9 @@ def surface_bytes(surface: SolvedSurface, *, title: str = "") -> bytes:
     add_array(cells, "panel_size", np.sqrt(_areas(surface.corners)), "m")
     for name, density in zip(surface.conductor_names, surface.densities, strict=True):
         add_array(cells, f"charge_density_{name}", density, _UNIT_DENSITY)
+    if surface.previous is not None:
+        for name, density in zip(surface.conductor_names, surface.previous, strict=True):
+            add_array(cells, f"pass_before_{name}", density, _UNIT_DENSITY)
     if surface.density is not None:
         add_array(cells, "charge_density", surface.density, "C/m2")
     if surface.facet_offset is not None:
@@ -219,6 +226,7 @@ def _from_poly_data(data: Any, file: Path) -> SolvedSurface:
     n_corners = np.diff(offsets)
     slots = offsets[:-1, None] + np.minimum(np.arange(4), n_corners[:, None] - 1)
     sides = [numbers(name) for name in _SIDES]
+    before = [numbers(f"pass_before_{name}") for name in names]
     return SolvedSurface(
         corners=np.ascontiguousarray(points[index[slots]], dtype=np.float64),
         n_corners=n_corners,
@@ -231,4 +239,5 @@ def _from_poly_data(data: Any, file: Path) -> SolvedSurface:
         facet_offset=numbers("facet_offset"),
         body_fill=None if fill is None else vtk_to_numpy(fill).astype(np.int64),
         field_sides=None if any(side is None for side in sides) else np.array(sides, dtype=np.float64),
+        previous=None if any(row is None for row in before) else np.array(before, dtype=np.float64),
     )

@@ -11,6 +11,7 @@ __all__ = [
     "inside_fraction",
     "pair_distances",
     "segment_triangle_distances",
+    "sides_and_areas",
     "slab_gaps",
     "winding_numbers",
 ]
@@ -134,6 +135,28 @@ def pair_distances(a: FloatArray, b: FloatArray) -> tuple[FloatArray, FloatArray
     best = distance.argmin(axis=1)
     row = np.arange(n)
     return distance[row, best], points_a[row, best] + centre[:, 0], points_b[row, best] + centre[:, 0]
+
+
+def sides_and_areas(corners: FloatArray) -> tuple[FloatArray, FloatArray]:
+    """Lengths of the sides of triangles, and twice their areas.
+
+    Parameters
+    ----------
+    corners : (n, 3, 3) float, m
+
+    Returns
+    -------
+    sides : (n, 3) float, m
+        From corner k to corner k + 1.
+    doubled : (n,) float, m2
+    """
+    a, b, c = (np.ascontiguousarray(corners[:, k].T) for k in range(3))  # columns: a third of the time of rows
+    ab, bc, ca = b - a, c - b, a - c
+    sides = np.sqrt(np.stack([(side * side).sum(axis=0) for side in (ab, bc, ca)], axis=1))
+    x = ab[1] * bc[2] - ab[2] * bc[1]
+    y = ab[2] * bc[0] - ab[0] * bc[2]
+    z = ab[0] * bc[1] - ab[1] * bc[0]
+    return sides, np.sqrt(x * x + y * y + z * z)
 
 
 def slab_gaps(a: FloatArray, normal_a: FloatArray, b: FloatArray, normal_b: FloatArray) -> FloatArray:

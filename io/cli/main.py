@@ -18,6 +18,9 @@ __all__ = ["main", "program"]
 #: Registry of sub-commands: each module has NAME, HELP, ``add_arguments(parser)`` and ``run(args)``.
 _COMMANDS = (inspect, solve, field, netlist)
 
+#: Longer complaints are cut.
+_LONGEST_LINE = 4000
+
 _DESCRIPTION = "Capacitance of conductors from CAD surface meshes, with its uncertainty."
 _EPILOG = """\
 Results go to standard output, progress and messages to standard error.
@@ -118,7 +121,9 @@ def _parser() -> argparse.ArgumentParser:
 
 
 def _complain(text: str, code: int) -> int:
-    sys.stderr.write(f"daraf: {' '.join(text.split())}\n")
+    from daraf.io.names import printable  # what an error quotes may come from a hostile file
+
+    sys.stderr.write(f"daraf: {printable(text, _LONGEST_LINE)}\n")
     return code
 
 

@@ -58,13 +58,15 @@ def positive_whole_number(text: str) -> int:
     return int(text)
 
 
-def case_file_among(files: Sequence[str], unit: str | None) -> str | None:
-    """Return the case file, or None if the files are surfaces."""
+def case_file_among(files: Sequence[str], **of_surfaces: str | None) -> str | None:
+    """Return the case file, or None if the files are surfaces; `of_surfaces` are options that a case states itself."""
     cases = [name for name in files if name.lower().endswith(".toml")]
     if not cases:
         return None
     if len(files) > 1:
         raise UsageError(f"{cases[0]}: a case file stands alone; name one case, or surface files only")
-    if unit is not None:
-        raise UsageError(f"--unit is for surface files; {cases[0]} states its unit itself, change it there")
+    for name, value in of_surfaces.items():
+        if value is not None:
+            option = f"--{name.replace('_', '-')}"
+            raise UsageError(f"{option} is for surface files; {cases[0]} states its {name} itself, change it there")
     return str(cases[0])

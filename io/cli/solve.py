@@ -31,7 +31,12 @@ result folder.
 def add_arguments(parser: argparse.ArgumentParser) -> None:
     """Declare the arguments."""
     parser.add_argument("files", nargs="*", metavar="FILE", help="one case file (.toml), or surface files")
-    parser.add_argument("--unit", metavar="UNIT", help="length unit of the surface files, such as mm")
+    parser.add_argument("--unit", metavar="UNIT", help="length unit of the surface files that carry none")
+    parser.add_argument(
+        "--facet-tolerance",
+        metavar="X",
+        help="largest distance of facets from curved shapes (STEP), such as '0.02 mm' or '0.1 %%' of the size",
+    )
     parser.add_argument("--accuracy", metavar="X", help="relative, such as '0.5 %%'; overrides the case (default 1 %%)")
     parser.add_argument("--out", metavar="DIR", help="result folder (default: NAME.daraf beside the first file)")
     parser.add_argument("--json", action="store_true", help="print result.json instead of tables")
@@ -49,7 +54,7 @@ def run(args: argparse.Namespace) -> int:
         return 0
     if not args.files:
         raise UsageError("name a case file or surface files; see `daraf solve --help`")
-    case_file = case_file_among(args.files, args.unit)
+    case_file = case_file_among(args.files, unit=args.unit, facet_tolerance=args.facet_tolerance)
     if args.threads is not None:
         _limit_threads(args.threads)
     from daraf.io.progress import progress_for
@@ -97,7 +102,7 @@ def _read(args: argparse.Namespace, case_file: str | None) -> tuple["Problem", f
     started = time.perf_counter()
     accuracy = None if args.accuracy is None else parse_accuracy(args.accuracy)
     if case_file is None:
-        problem = problem_from_files(args.files, args.unit, accuracy=accuracy)
+        problem = problem_from_files(args.files, args.unit, accuracy=accuracy, facet_tolerance=args.facet_tolerance)
     else:
         problem = build_problem(load_case(case_file))
     return problem, time.perf_counter() - started, accuracy

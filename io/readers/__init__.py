@@ -4,18 +4,22 @@ from pathlib import Path
 
 from daraf.bem.errors import InputError
 
-from . import glb, obj, off, ply, stl, threemf  # noqa: F401  (each registers its extensions)
-from .raw import READERS, RawFile, RawPart, read_bytes, register
+from ..facet_tolerance import FacetTolerance
+from . import archive, gltf, obj, off, ply, step, stl, threemf  # noqa: F401  (each registers its extensions)
+from .dispatch import read_source
+from .raw import READERS, RawFile, RawPart, Remark, Source, check_side_file, read_bytes, register
 
-__all__ = ["READERS", "RawFile", "RawPart", "read_file", "register"]
+__all__ = ["READERS", "RawFile", "RawPart", "Remark", "Source", "may_be_curved", "read_file", "read_source", "register"]
 
 
-def read_file(path: str | Path) -> RawFile:
+def read_file(path: str | Path, facet_tolerance: FacetTolerance | None = None) -> RawFile:
     """Read one mesh file as it is, in its own unit.
 
     Parameters
     ----------
     path : str or Path
+    facet_tolerance : FacetTolerance, optional
+        For formats that hold curved shapes (STEP); chosen from the size by default.
 
     Returns
     -------
@@ -27,17 +31,24 @@ def read_file(path: str | Path) -> RawFile:
         If the file is missing, empty, damaged or of an unknown format; one line that names the file.
     """
     path = Path(path)
-    reader = READERS.get(path.suffix.lower())
-    if reader is None:
-        read_bytes(path)  # a missing file is the better complaint
-        known = ", ".join(sorted(READERS))
-        raise InputError(f"{path}: the format {path.suffix or '(no extension)'!r} is unknown; known are {known}")
+
+    def beside(name: str) -> bytes:
+        return read_bytes(path.parent / check_side_file(path, name))
+
     try:
-        return reader(path)
-    except InputError:
-        raise
+        data = read_bytes(path)
     except MemoryError:
         raise InputError(f"{path}: there is not enough memory to read it; export it with fewer triangles") from None
-    except Exception as error:  # a mesh library may raise anything on a damaged file
-        reason = " ".join(str(error).split())[:120] or type(error).__name__
-        raise InputError(f"{path}: is damaged or no valid {path.suffix} file ({reason}); export it again") from error
+    return read_source(Source(path, data, beside, facet_tolerance))
+
+
+def may_be_curved(path: str | Path) -> bool:
+    """Whether a file may hold curved shapes, by its extension: STEP, or an archive that may hold it.
+
+    Parameters
+    ----------
+    path : str or Path
+    """
+    suffixes = [suffix.lower() for suffix in Path(path).suffixes]
+    inner = suffixes[-2:-1] if suffixes[-1:] == [".gz"] else suffixes[-1:]
+    return inner[0] in (".step", ".stp", ".zip") if inner else False

@@ -4,6 +4,7 @@ Materials, normals, curves and texture coordinates carry no geometry of conducto
 Objects name the parts; where a file has none, its groups do.
 """
 
+from array import array
 from pathlib import Path
 
 import numpy as np
@@ -12,13 +13,14 @@ from daraf.bem.errors import InputError
 
 from .polygons import polygons_to_triangles
 from .raw import (
+    FloatArray,
     RawFile,
     RawPart,
+    Source,
     check_part,
     decimal_comma_line,
     looks_like_text,
     normalised_text,
-    read_bytes,
     register,
     text_spacing,
 )
@@ -27,43 +29,45 @@ __all__ = ["read_obj"]
 
 
 @register(".obj")
-def read_obj(path: Path) -> RawFile:
+def read_obj(source: Source) -> RawFile:
     """Read an OBJ file; polygons are cut into triangles."""
-    data = read_bytes(path)
+    path, data = source.path, source.data
     if not looks_like_text(data):
         raise InputError(f"{path}: is not text, so no OBJ; export it again")
     lines = normalised_text(data).replace(b"\\\n", b" ").split(b"\n")
     by_object = any(line.lstrip()[:2] == b"o " for line in lines)
-    vertices: list[list[float]] = []
-    faces: dict[str, list[list[int]]] = {}
+    vertices = array("d")
+    faces: dict[str, tuple[array[int], array[int]]] = {}  # corners and sizes of each part
     name = ""
     for number, line in enumerate(lines, start=1):
         words = line.split(b"#", 1)[0].split()
         if not words:
             continue
         if words[0] == b"v":
-            vertices.append(_vertex(path, number, words))
+            vertices.extend(_vertex(path, number, words))
         elif words[0] == b"f":
-            corners = [_index(path, number, word, len(vertices)) for word in words[1:]]
-            if len(corners) < 3:
+            one = [_index(path, number, word, len(vertices) // 3) for word in words[1:]]
+            if len(one) < 3:
                 raise InputError(f"{path}: line {number}: a face needs three vertices; the file is damaged")
-            faces.setdefault(name, []).append(corners)
+            corners, sizes = faces.setdefault(name, (array("q"), array("q")))
+            corners.extend(one)
+            sizes.append(len(one))
         elif words[0] == (b"o" if by_object else b"g"):
             name = b" ".join(words[1:]).decode("utf-8", "replace")
     return RawFile(path, _parts(path, np.array(vertices, dtype=np.float64).reshape(-1, 3), faces))
 
 
-def _parts(path: Path, vertices: np.ndarray, faces: dict[str, list[list[int]]]) -> list[RawPart]:
+def _parts(path: Path, vertices: FloatArray, faces: "dict[str, tuple[array[int], array[int]]]") -> list[RawPart]:
     if not faces:
         raise InputError(f"{path}: holds no face ('f' line), so no surface; export it again as a surface mesh")
     parts = []
-    for name, polygons in faces.items():
-        triangles = polygons_to_triangles(vertices, polygons)
-        if triangles.max() >= len(vertices):
-            bad = int(triangles.max())
-            raise InputError(f"{path}: a face names vertex {bad + 1}, there are {len(vertices)}; export it again")
-        used, inverse = np.unique(triangles, return_inverse=True)
-        part = check_part(path, RawPart(name, vertices[used], inverse.reshape(-1, 3), 0.0), "object")
+    for name, (corners, sizes) in faces.items():
+        used, inverse = np.unique(np.array(corners, dtype=np.int64), return_inverse=True)
+        if used[-1] >= len(vertices):
+            raise InputError(f"{path}: a face names vertex {used[-1] + 1}, there are {len(vertices)}; export it again")
+        own = vertices[used]
+        triangles = polygons_to_triangles(own, inverse, np.array(sizes, dtype=np.int64))
+        part = check_part(path, RawPart(name, own, triangles, 0.0), "object")
         parts.append(RawPart(name, part.vertices, part.triangles, text_spacing(part.vertices)))
     return parts
 
@@ -87,6 +91,6 @@ def _index(path: Path, number: int, word: bytes, n_vertices: int) -> int:
             f"{path}: line {number}: {word.decode('latin-1')!r} is no vertex number; the file is damaged"
         ) from None
     index = index - 1 if index > 0 else n_vertices + index if index < 0 else -1
-    if index < 0:
+    if not 0 <= index < 2**62:
         raise InputError(f"{path}: line {number}: a face names a vertex that does not exist; export it again")
     return index

@@ -15,11 +15,11 @@ from .raw import (
     FloatArray,
     RawFile,
     RawPart,
+    Source,
     check_part,
     decimal_comma_line,
     looks_like_text,
     normalised_text,
-    read_bytes,
     register,
     single_spacing,
     text_spacing,
@@ -30,13 +30,15 @@ __all__ = ["read_stl"]
 _HEADER = 84
 _RECORD = np.dtype([("normal", "<f4", 3), ("corners", "<f4", (3, 3)), ("attribute", "<u2")])
 _SOLID_LINE = re.compile(rb"^[ \t]*(end)?solid\b[ \t]*(.*)$", re.IGNORECASE | re.MULTILINE)
+#: Bytes of text taken at once.
+_BLOCK = 2**22
 _PER_FACET = {b" facet normal ": 1, b" outer loop ": 1, b" vertex ": 3, b" endloop ": 1, b" endfacet ": 1}
 
 
 @register(".stl")
-def read_stl(path: Path) -> RawFile:
+def read_stl(source: Source) -> RawFile:
     """Read a binary or ASCII STL file; which of the two it is follows from its content alone."""
-    data = read_bytes(path)
+    path, data = source.path, source.data
     if len(data) >= _HEADER:
         count = int.from_bytes(data[80:84], "little")
         if len(data) == _HEADER + _RECORD.itemsize * count and not _is_ascii(data):
@@ -122,17 +124,39 @@ def _decode(name: bytes) -> str:
 
 def _ascii_solid(path: Path, text: bytes, opened: re.Match[bytes], stop: int) -> RawPart:
     name = _decode(opened[2])
-    body = text[opened.end() : stop].lower()
-    words = b" " + b" ".join(body.split()) + b" "
-    if not words.strip():
+    start = opened.end()
+    if not text[start:stop].strip():
         raise InputError(f"{path}: solid {name!r} holds no triangle; remove it or export it again")
+    blocks = []
+    while start < stop:
+        end = _block_end(text, start, stop)
+        numbers = _block(text[start:end].lower())
+        if numbers is None:
+            first_line = text.count(b"\n", 0, start) + 1
+            raise InputError(f"{path}: solid {name!r}: {_ascii_fault(text[start:end].lower(), first_line)}")
+        blocks.append(numbers)
+        start = end
+    return _part(path, name, np.concatenate(blocks).reshape(-1, 4, 3)[:, 1:], single=False)
+
+
+def _block_end(text: bytes, start: int, stop: int) -> int:
+    """End of a block of whole facets: words take many times the memory of text, so few are held at once."""
+    if stop - start < 2 * _BLOCK:
+        return stop
+    for word in (b"endfacet", b"ENDFACET"):
+        found = text.find(word, start + _BLOCK, start + 2 * _BLOCK)
+        if found >= 0:
+            return found + len(word)
+    return stop
+
+
+def _block(body: bytes) -> FloatArray | None:
+    """Numbers of some facets, twelve each; None if these are no facets."""
+    words = b" " + b" ".join(body.split()) + b" "
     n_facets = words.count(b" facet normal ")
     complete = all(words.count(phrase) == times * n_facets for phrase, times in _PER_FACET.items())
     numbers = _numbers(words) if complete else None
-    if numbers is None or len(numbers) != 12 * n_facets:
-        first_line = text.count(b"\n", 0, opened.end()) + 1
-        raise InputError(f"{path}: solid {name!r}: {_ascii_fault(body, first_line)}")
-    return _part(path, name, numbers.reshape(-1, 4, 3)[:, 1:], single=False)
+    return None if numbers is None or len(numbers) != 12 * n_facets else numbers
 
 
 def _numbers(words: bytes) -> FloatArray | None:

@@ -60,7 +60,9 @@ def test_solve_a_case(folder, solver, capsys):
     assert out.startswith("Two boxes\n2 conductors")
     assert out.endswith(f"\nresult: {folder / 'probe.daraf'}\n")
     assert "1 drive  20 kV" in out
-    assert err == "assembling\n"  # the stages that follow within seconds are not worth a line
+    # stages that follow within seconds are not worth a line; on a busy machine some take longer
+    assert err.splitlines()[0] == "assembling"
+    assert len(err.splitlines()) <= 3
     result = read_result(folder / "probe.daraf")
     assert result.document["conductors"] == ["drive", "sense"]
     assert result.document["inputs"][0]["file"] == "head.stl"

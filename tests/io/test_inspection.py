@@ -212,11 +212,14 @@ def test_dictionary_is_json(files):
     assert inspection_to_dict(inspect_files(files))["length_unit"] == "file"
 
 
-def test_files_with_and_without_unit_do_not_mix(files, tmp_path):
+def test_a_unit_is_for_the_files_that_carry_none(files, tmp_path):
     BOX.export(tmp_path / "other.glb")
-    with pytest.raises(InputError, match=r"plate\.stl: carries no unit while another file does"):
-        inspect_files([*files, tmp_path / "other.glb"])
-    assert inspect_files(tmp_path / "other.glb").unit == "m"
+    with pytest.raises(InputError, match=r"plate\.stl: the file carries no unit, and none is stated"):
+        inspect_files([files[0], tmp_path / "other.glb"])
+    mixed = inspect_files([files[0], tmp_path / "other.glb"], "mm")
+    assert mixed.bodies[1].box == pytest.approx(1e3 * mixed.bodies[0].box, rel=1e-6)  # single precision
+    with pytest.raises(InputError, match=r"other\.glb: the file says m, the unit stated is mm"):
+        inspect_files([tmp_path / "other.glb"], "mm")
 
 
 @pytest.mark.parametrize(

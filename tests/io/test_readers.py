@@ -241,7 +241,9 @@ def test_star_shaped_polygons_are_cut_without_overlap(n, seed):
     flat = np.column_stack([radius * np.cos(angle), radius * np.sin(angle), 0 * angle])
     turn = trimesh.transformations.random_rotation_matrix(rng.random(3))[:3, :3]
     start = int(rng.integers(n))
-    triangles = polygons_to_triangles(flat @ turn.T, [np.roll(np.arange(n), start).tolist(), [0, 1, 2]])
+    triangles = polygons_to_triangles(
+        flat @ turn.T, np.concatenate([np.roll(np.arange(n), start), [0, 1, 2]]), np.array([n, 3])
+    )
     assert triangles.shape == (n - 1, 3)
     assert triangles[-1].tolist() == [0, 1, 2]  # the order of the faces stays
     a, b, c = (flat[triangles[:-1, k]] for k in range(3))

@@ -10,7 +10,7 @@ from hypothesis import strategies as st
 
 from daraf.bem.errors import InputError
 from daraf.io.bodies import read_bodies
-from daraf.io.readers import read_file
+from daraf.io.readers import READERS, read_file
 
 BOX = trimesh.creation.box((40.0, 20.0, 8.0))
 BINARY = BOX.export(file_type="stl")
@@ -56,7 +56,7 @@ BAD = {
     "index.off": ("OFF\n3 1 0\n0 0 0\n1 0 0\n1 1 0\n3 0 1 3\n", "face 1 names a vertex that does not exist"),
     "comma.off": ("OFF\n3 1 0\n0,5 0 0\n1 0 0\n1 1 0\n3 0 1 2\n", "line 3 has a decimal comma"),
     "nan.off": ("OFF\n3 1 0\nnan 0 0\n1 0 0\n1 1 0\n3 0 1 2\n", "not finite"),
-    "faceless.off": ("OFF\n3 0 0\n0 0 0\n1 0 0\n1 1 0\n", "holds no triangle"),
+    "faceless.off": ("OFF\n3 0 0\n0 0 0\n1 0 0\n1 1 0\n", "holds no faces"),
     "page.off": ("<html></html>", "does not start with 'OFF'"),
     "cut.ply": (BOX.export(file_type="ply")[:-30], "truncated"),
     "cut-ascii.ply": (BOX.export(file_type="ply", encoding="ascii")[:-60], "truncated"),
@@ -142,12 +142,12 @@ def test_far_off_model_with_enough_digits_is_read(tmp_path):
     assert body.vertices.shape == far.vertices.shape
 
 
-def test_whatever_the_mesh_library_raises_becomes_one_line(tmp_path, monkeypatch):
+def test_whatever_a_library_raises_becomes_one_line(tmp_path, monkeypatch):
     def fail(*_args, **_options):
         raise IndexError("index 7\nis out of bounds")
 
     BOX.export(tmp_path / "plate.ply")
-    monkeypatch.setattr(trimesh, "load", fail)
+    monkeypatch.setitem(READERS, ".ply", fail)
     with pytest.raises(InputError, match=r"plate\.ply: is damaged or no valid \.ply file \(index 7 is out"):
         read_file(tmp_path / "plate.ply")
 

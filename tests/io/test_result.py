@@ -61,17 +61,13 @@ def test_written_and_read_back(tmp_path, surface):
 
 def test_pass_before_facets_and_metal_are_read_back(tmp_path, surface):
     offset, fill = np.array([0.0, 1e-3, 2e-3]), np.array([1, 0, -1])
-    more = replace(surface, facet_offset=offset, body_fill=fill)
-    folder = write_result(tmp_path / "p.daraf", DOCUMENT, surface_bytes(more), "", previous=surface_bytes(surface))
+    more = replace(surface, facet_offset=offset, body_fill=fill, previous=0.9 * surface.densities)
+    folder = write_result(tmp_path / "p.daraf", DOCUMENT, surface_bytes(more), "")
     back = read_result(folder)
     assert np.array_equal(back.surface.facet_offset, offset)
     assert np.array_equal(back.surface.body_fill, fill)
-    assert np.array_equal(back.previous.densities, surface.densities)
-    assert back.previous.body_fill is None
+    assert np.array_equal(back.surface.previous, 0.9 * surface.densities)
     assert foreign_files(folder) == []
-    # replaced by a result of one pass, the older one's pass before is gone
-    write_result(folder, DOCUMENT, surface_bytes(more), "")
-    assert read_result(folder).previous is None
 
 
 def test_surface_file_carries_names_and_units(tmp_path, surface):

@@ -7,6 +7,7 @@ from hypothesis import given
 from hypothesis import strategies as st
 
 from daraf.bem.errors import InputError
+from daraf.io import units
 from daraf.io.units import decimals, engineering, parse_quantity, prefix_for, rounded, with_uncertainty
 
 
@@ -33,6 +34,13 @@ from daraf.io.units import decimals, engineering, parse_quantity, prefix_for, ro
 )
 def test_known_units(text, kind, expected):
     assert parse_quantity(text, kind) == pytest.approx(expected, rel=1e-15)
+
+
+@pytest.mark.parametrize(("kind", "unit"), [(kind, unit) for kind, table in units._COMMON.items() for unit in table])
+def test_short_table_holds_what_pint_says(kind, unit):
+    si, example = units.KINDS[kind]
+    said = units._factor(f"1 {unit}", unit, kind, si, example)
+    assert units._COMMON[kind][unit] == pytest.approx(said, rel=1e-15)  # one rounding of pint's products
 
 
 @pytest.mark.parametrize(
