@@ -80,8 +80,11 @@ def write_picture(path: str | Path, places: Places, probed: Probed, *, unit: str
         raise InputError(f"{path}: pictures are written as {', '.join(_KINDS)}; name it so")
     if places.kind not in ("line", "plane"):
         raise InputError("a picture shows a line or a plane; ask for one of these with --line, --plane or --sheet")
-    from matplotlib.backends.backend_agg import FigureCanvasAgg
-    from matplotlib.figure import Figure
+    try:
+        from matplotlib.backends.backend_agg import FigureCanvasAgg
+        from matplotlib.figure import Figure
+    except ImportError:
+        raise InputError("pictures need matplotlib, which is not installed; run `pip install matplotlib`") from None
 
     figure = Figure(figsize=(7.4, 5.6), layout="constrained")
     FigureCanvasAgg(figure)
