@@ -101,6 +101,7 @@ def solve_case(
     case: Case,
     *,
     accuracy: float | None = None,
+    method: str | None = None,
     memory_limit: int | None = None,
     progress: ProgressCallback | None = None,
 ) -> Outcome:
@@ -112,6 +113,8 @@ def solve_case(
         From `load_case` or `make_case`.
     accuracy : float, optional
         Relative, overrides the case.
+    method : {"auto", "dense", "fast"}, optional
+        How the equations are solved, overrides the case.
     memory_limit : int, bytes, optional
     progress : callable, optional
         ``progress(stage, done, total, note)``.
@@ -130,6 +133,7 @@ def solve_case(
     return solve_problem(
         problem,
         accuracy=accuracy,
+        method=method,
         memory_limit=memory_limit,
         progress=progress,
         reading=time.perf_counter() - started,
@@ -140,6 +144,7 @@ def solve_problem(
     problem: Problem,
     *,
     accuracy: float | None = None,
+    method: str | None = None,
     memory_limit: int | None = None,
     progress: ProgressCallback | None = None,
     reading: float = 0.0,
@@ -150,6 +155,7 @@ def solve_problem(
     ----------
     problem : Problem
     accuracy : float, optional
+    method : str, optional
     memory_limit : int, bytes, optional
     progress : callable, optional
     reading : float, s
@@ -180,6 +186,7 @@ def solve_problem(
         accuracy=content.accuracy if accuracy is None else accuracy,
         memory_limit=memory_limit,
         facets=content.facets,
+        method=content.method if method is None else method,
         want=_wanted(problem),
         rounding=problem.rounding,
         progress=log,

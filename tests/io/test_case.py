@@ -165,8 +165,8 @@ def test_json_schema_names_every_key():
     text = json.dumps(schema)
     assert schema["$schema"].endswith("2020-12/schema")
     assert schema["additionalProperties"] is False
-    known = {"title", "unit", "facet_tolerance", "accuracy", "facets", "want", "sensitivities", "medium", "air"}
-    assert set(schema["properties"]) == known | {"conductor"}
+    known = {"title", "unit", "facet_tolerance", "accuracy", "facets", "method", "want", "sensitivities", "medium"}
+    assert set(schema["properties"]) == known | {"air", "conductor"}
     for key in ("potential", "charge", "ground", "rotation", "shift", "about", "relative_permittivity"):
         assert f'"{key}"' in text
 
