@@ -69,7 +69,8 @@ def account_bodies(
                 panels=int(np.count_nonzero(panels.body == body)),
                 area_change=float(area_now[body] / area[body] - 1.0) if area[body] > 0.0 else 0.0,
                 volume_change=float(volume_now[body] / volume[body] - 1.0) if solid[body] else None,
-                round_faces=int(np.count_nonzero(faces & is_round)),
+                # faces that turn by less than can be told are flat
+                round_faces=0 if turns[body] is None else int(np.count_nonzero(faces & is_round)),
                 turn=turns[body],
                 round_outline=int(outlines[body]),
                 round_holes=int(holes[body]),

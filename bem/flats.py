@@ -122,8 +122,9 @@ def _raw_notices(surface: Surface, regions: Regions, raw: list[int]) -> list[Not
         return []
     names = sorted({surface.body_names[regions.body[r]] for r in raw})
     shown = ", ".join(names[:4]) + (", ..." if len(names) > 4 else "")
+    many = "1 flat face" if len(raw) == 1 else f"{len(raw)} flat faces"
     text = (
-        f"{len(raw)} flat faces could not be divided into quadrilaterals; their triangles are used as they "
+        f"{many} could not be divided into quadrilaterals; the triangles there are used as they "
         f"are (in {shown}; first at triangle {regions.triangles_of(raw[0])[0]})"
     )
     return [Notice("raw-triangles", text)]

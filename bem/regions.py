@@ -385,5 +385,6 @@ def _degenerate_notices(surface: Surface, region: IntArray) -> list[Notice]:
         return []
     bodies = np.unique(surface.triangle_body[dropped])
     names = ", ".join(surface.body_names[b] for b in bodies[:4]) + (", ..." if len(bodies) > 4 else "")
-    text = f"{len(dropped)} degenerate triangles without area were left out (first: {dropped[0]}; in {names})"
+    many = "1 triangle without area was" if len(dropped) == 1 else f"{len(dropped)} triangles without area were"
+    text = f"{many} left out (first: {dropped[0]}; in {names})"
     return [Notice("degenerate-triangles", text)]

@@ -81,6 +81,8 @@ class Body:
         Rounding of the coordinates as stored in the file, half a step.
     unit : str or None
         Unit of the file.
+    side_files : tuple of str
+        Files that this file names and that were read with it.
     """
 
     name: str
@@ -93,6 +95,7 @@ class Body:
     solid: int = 1
     spacing: float = 0.0
     unit: str | None = None
+    side_files: tuple[str, ...] = ()
 
     @cached_property
     def box(self) -> FloatArray:
@@ -202,12 +205,12 @@ def read_mesh_set(
     units = units_of_files(raws, stated, other_unit, needed=unit_needed)
     if (mend.within or mend.holes) and None in units:
         bare = raws[units.index(None)].path
-        raise InputError(f"{bare}: a length for mending is stated, but the unit of the file is not; state it")
+        raise InputError(f"{bare}: a length for mending is stated, but no unit; state it, such as --unit mm")
     bodies: list[Body] = []
     for raw, file_unit in zip(raws, units, strict=True):
         told = [Fault(one.code, "note", 1, None, one.text, one.remedy) for one in raw.remarks]
         for body in _split(raw.path, raw.parts, file_unit, mend):
-            bodies.append(replace(body, faults=[*told, *body.faults]))
+            bodies.append(replace(body, faults=[*told, *body.faults], side_files=raw.side_files))
     return MeshSet(_unique_names(bodies), stated or units[0], [str(name) for name in names])
 
 

@@ -14,6 +14,7 @@ from daraf.bem.errors import InputError
 from .names import check_file_name
 from .schema import (
     NOT_YET,
+    Air,
     CaseContent,
     ConductorEntry,
     DielectricEntry,
@@ -29,6 +30,7 @@ __all__ = ["Case", "load_case", "make_case"]
 _TABLES: dict[str, Any] = {
     "": CaseContent,
     "medium": Medium,
+    "air": Air,
     "conductor": ConductorEntry,
     "dielectric": DielectricEntry,
     "plane": PlaneEntry,

@@ -6,11 +6,14 @@ from daraf.bem.errors import InputError
 
 from .mesh_units import METRES_PER_UNIT
 
-__all__ = ["MODES", "Change", "Mend", "Place", "length_text", "place_text"]
+__all__ = ["HOLE_SIZE", "MODES", "Change", "Mend", "Place", "length_text", "place_text"]
 
 Place = tuple[float, float, float]
 
 MODES = ("list", "safe", "bold")
+
+#: Holes up to this share of the part, corner to corner, are closed by bold mending unless a length is stated.
+HOLE_SIZE = 0.1
 
 
 @dataclass(frozen=True)
@@ -65,7 +68,7 @@ class Mend:
         """Largest hole to be closed, m; 0 for none."""
         if self.mode != "bold":
             return 0.0
-        return 0.1 * size if self.holes is None else self.holes
+        return HOLE_SIZE * size if self.holes is None else self.holes
 
 
 @dataclass(frozen=True)
@@ -123,5 +126,6 @@ def place_text(place: Place, unit: str | None) -> str:
     str
     """
     scale = 1.0 if unit is None else METRES_PER_UNIT[unit]
-    numbers = ", ".join(f"{value / scale + 0.0:.5g}" for value in place)
+    least = 1e-9 * max(abs(value) for value in place)  # what is nothing beside the others is 0
+    numbers = ", ".join(f"{value / scale if abs(value) > least else 0.0:.5g}" for value in place)
     return f"({numbers})" if unit is None else f"({numbers}) {unit}"

@@ -32,7 +32,7 @@ def permittivities(case: Case) -> NDArray[np.complex128]:
     from daraf.bem.losses import complex_permittivity
 
     content = case.content
-    media = [content.medium, *content.dielectric]
+    media = [one for _, one in content.media]
     if content.conduction:
         # duality: current for charge, conductivity for permittivity, relative to the smallest
         conductivity = np.array([one.conductivity for one in media])
@@ -78,8 +78,8 @@ def with_dielectrics(
     for plane in case.content.plane:
         pieces = without_mirror_faces(pieces, drawn, np.array(plane.point), np.array(plane.normal))
     if case.content.half_space:
-        plane = case.content.half_space
-        pieces = cut_at_plane(pieces, np.array(plane.point), np.array(plane.normal))
+        half = case.content.half_space
+        pieces = cut_at_plane(pieces, np.array(half.point), np.array(half.normal))
     pieces.sort(key=lambda piece: of[piece.drawn])
     owners = [of[piece.drawn] for piece in pieces]
     group = np.unique(owners, return_inverse=True)[1].reshape(-1)

@@ -6,12 +6,14 @@ import numpy as np
 from numpy.typing import NDArray
 
 from .bodies import Fault
+from .changes import HOLE_SIZE
 from .gaps import Shape
+from .holes import hole_loops
 from .mending import HOLE_SHARE, flat_height, flat_rows
 from .self_contact import self_contacts
 from .topology import boundary_loops, coincident_groups, edges_of, signed_volume, winding_flips
 
-__all__ = ["faults_of"]
+__all__ = ["faults_of", "needs_mending"]
 
 FloatArray = NDArray[np.float64]
 IntArray = NDArray[np.int64]
@@ -42,6 +44,12 @@ def faults_of(shape: Shape) -> list[Fault]:
         _self_contact,
     )
     return [*shape.body.faults, *(fault for check in checks for fault in check(shape))]
+
+
+def needs_mending(fault: Fault) -> bool:
+    """Whether a solve that may change nothing refuses the body."""
+    tolerable = ("coarse-coordinates", "self-touching")
+    return fault.severity != "note" and fault.code not in tolerable and not fault.code.endswith("-other")
 
 
 def _place(point: FloatArray) -> tuple[float, float, float]:
@@ -152,13 +160,17 @@ def _holes(shape: Shape) -> Iterator[Fault]:
     vertex, areas = boundary_loops(body.vertices, proper, edges_of(proper))
     area = 0.5 * float(shape.measures[1][rows].sum())
     if len(vertex) and (areas < HOLE_SHARE * area).all():  # else a large rim says that this is a sheet
+        across = [np.linalg.norm(np.ptp(body.vertices[loop], axis=0)) for loop in hole_loops(proper)]
+        share = max(across, default=0.0) / body.diagonal
+        size = f", the largest {share:.2g} of the body across" if across else ""
+        limit = " (state how large a hole it may close)" if share > HOLE_SIZE else ""
         yield Fault(
             "holes",
             "warning",
             len(vertex),
             _place(body.vertices[vertex[0]]),
-            f"closed but for {_count(len(vertex), 'hole')}",
-            "a solve takes it as an open sheet unless bold mending closes it",
+            f"closed but for {_count(len(vertex), 'hole')}{size}",
+            f"a solve takes it as an open sheet unless bold mending closes it{limit}",
         )
 
 

@@ -61,5 +61,5 @@ def _missing_unit(raw: "RawFile") -> str:
     extents = np.ptp(corners, axis=0)
     return (
         f"{raw.path}: the file carries no unit, and none is stated; its bounding box {size_text(extents)} "
-        f"would be {box_in_plausible_units(extents)}: state the unit"
+        f"would be {box_in_plausible_units(extents)}: state the unit, such as --unit mm (in a case file: unit = 'mm')"
     )

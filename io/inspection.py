@@ -3,7 +3,6 @@
 from collections.abc import Iterable, Sequence
 from dataclasses import dataclass, field, replace
 from pathlib import Path
-from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
@@ -16,6 +15,7 @@ from .contacts import Contact, cavity_walls, contacts, shapes_of
 from .facet_tolerance import parse_facet_tolerance
 from .faults import faults_of
 from .gaps import Approach, Shape, box_gap, closest_approach
+from .inspection_document import inspection_to_dict
 from .inspection_text import inspection_to_text
 from .markers import Mark, contact_mark, fault_marks
 from .mending import fit_bodies, make_fit
@@ -116,12 +116,15 @@ class Inspection:
     bodies : list of BodyReport
     marks : list of Mark
         Places of faults and contacts, to be drawn; not part of the text.
+    mend : str
+        How far a solve was supposed to mend.
     """
 
     files: list[str]
     unit: str | None
     bodies: list[BodyReport]
     marks: list[Mark] = field(default_factory=list)
+    mend: str = "safe"
 
     @property
     def box(self) -> FloatArray:
@@ -177,6 +180,7 @@ def inspect_bodies(
     *,
     mend: Mend | None = None,
     marked: bool = False,
+    owner: Sequence[int] | None = None,
     progress: ProgressCallback | None = None,
 ) -> Inspection:
     """Look at every body and at every pair of them.
@@ -191,18 +195,20 @@ def inspect_bodies(
         What a solve would be allowed to change.
     marked : bool
         Whether to draw marks too, which takes as long again where bodies meet.
+    owner : sequence of int, optional
+        Conductor of each body, where that is known.
     progress : callable, optional
 
     Returns
     -------
     Inspection
     """
-    tell = progress or Silence()
+    tell, mend = progress or Silence(), mend or Mend()
     total = sum(len(body.triangles) for body in bodies)
     tell("mending on trial", 0, 1)
-    shapes = shapes_of(_as_solved(bodies, mend or Mend()))
+    shapes = shapes_of(_as_solved(bodies, mend))
     tell("looking for contacts and gaps", 0, 1)
-    found = contacts([shape.body for shape in shapes], shapes=shapes)
+    found = contacts([shape.body for shape in shapes], owner, shapes=shapes)
     cavities = cavity_walls(shapes)
     gaps = _gaps(shapes, found)
     reports, faulty = [], []
@@ -213,14 +219,15 @@ def inspect_bodies(
         own = faults_of(shape if shape.body is body else Shape(body))
         if k in cavities:
             own = [_cavity(bodies[cavities[k]]) if fault.code == "inside-out" else fault for fault in own]
-        faults = [*own, *_contact_faults(k, found, bodies)]
+        faults = [*own, *_contact_faults(k, found, bodies, owner is not None, mend)]
         reports.append(_report(k, replace(body, faults=faults), shape, gaps[k]))
         faulty.append(replace(body, faults=own))
     if marked:
         tell("drawing marks", 0, 1)
     marks = fault_marks(faulty) if marked else []
-    marks += [_contact_mark(contact, shapes) for contact in found if contact.meets and marked]
-    return Inspection(list(dict.fromkeys(body.file for body in bodies)), unit, reports, marks)
+    if marked:
+        marks += [_contact_mark(one, shapes) for one in found if one.meets and not one.same_conductor]
+    return Inspection(list(dict.fromkeys(body.file for body in bodies)), unit, reports, marks, mend.mode)
 
 
 def _contact_mark(contact: Contact, shapes: list[Shape]) -> Mark:
@@ -318,8 +325,8 @@ def _cavity(outer: Body) -> Fault:
     return Fault("cavity-wall", "note", 1, None, text, "its normals point into the cavity")
 
 
-def _contact_faults(k: int, found: list[Contact], bodies: Sequence[Body]) -> list[Fault]:
-    """Contacts of one body with others, told from its own side."""
+def _contact_faults(k: int, found: list[Contact], bodies: Sequence[Body], assigned: bool, mend: Mend) -> list[Fault]:
+    """Contacts of one body with others, told from its own side; `assigned`: it is known which conductor has which."""
     faults = []
     for contact in found:
         if k not in (contact.body_a, contact.body_b):
@@ -330,82 +337,15 @@ def _contact_faults(k: int, found: list[Contact], bodies: Sequence[Body]) -> lis
                 text, remedy = f"lies inside {other!r}", "fine if that is meant"
                 faults.append(Fault("inside-other", "note", 1, contact.place, text, remedy))
             continue
-        text = f"{contact.kind} {other!r}"
+        severity, text = "warning", f"{contact.kind} {other!r}"
         remedy = "give both to one conductor, or separate them in CAD"
-        faults.append(Fault(f"{contact.kind}-other", "warning", 1, contact.place, text, remedy))
+        if assigned and contact.same_conductor:
+            severity = "note" if mend.changes else "error"
+            text += " of the same conductor"
+            remedy = "a solve makes one body of them" if mend.changes else "unite them in CAD, or allow safe mending"
+        elif assigned:
+            severity = "error"
+            text += " of another conductor"
+            remedy = "leave a gap between them, or make them one conductor"
+        faults.append(Fault(f"{contact.kind}-other", severity, 1, contact.place, text, remedy))
     return faults
-
-
-def inspection_to_dict(inspection: Inspection) -> dict[str, Any]:
-    """The inspection as plain numbers, lists and words, ready for JSON; lengths in m.
-
-    Parameters
-    ----------
-    inspection : Inspection
-
-    Returns
-    -------
-    dict
-        ``length_unit`` is ``"m"``, or ``"file"`` if the unit of the files is not known.
-    """
-    return {
-        "files": inspection.files,
-        "unit": inspection.unit,
-        "length_unit": "m" if inspection.unit else "file",
-        "bodies": [_body_to_dict(body) for body in inspection.bodies],
-    }
-
-
-def _body_to_dict(body: BodyReport) -> dict[str, Any]:
-    return {
-        "number": body.number,
-        "name": body.name,
-        "file": body.file,
-        "panels": body.panels,
-        "closed": body.closed,
-        "boundary_loops": body.loops,
-        "box": {"low": body.box[0].tolist(), "high": body.box[1].tolist()},
-        "area": body.area,
-        "volume": body.volume,
-        "edge_length": _spread_to_dict(body.edges),
-        "aspect_ratio": _spread_to_dict(body.aspect),
-        "gaps": [
-            {
-                "other": gap.other,
-                "distance": gap.distance,
-                "at": list(gap.place),
-                "at_other": list(gap.place_other),
-            }
-            for gap in body.gaps
-        ],
-        "faults": [
-            {
-                "code": fault.code,
-                "severity": fault.severity,
-                "count": fault.count,
-                "at": None if fault.place is None else list(fault.place),
-                "text": fault.text,
-                "remedy": fault.remedy,
-            }
-            for fault in body.faults
-        ],
-        "changes": [
-            {
-                "code": note.code,
-                "count": note.count,
-                "at": None if note.place is None else list(note.place),
-                "moved": note.moved,
-                "text": note.text,
-            }
-            for note in body.notes
-        ],
-    }
-
-
-def _spread_to_dict(spread: Spread) -> dict[str, float | None]:
-    finite = np.isfinite(spread.largest)
-    return {
-        "min": spread.smallest if finite else None,
-        "median": spread.median if finite else None,
-        "max": spread.largest if finite else None,
-    }

@@ -6,6 +6,7 @@ from pathlib import Path
 from typing import TYPE_CHECKING
 
 from .bodies import Fault
+from .faults import needs_mending
 from .mesh_units import METRES_PER_UNIT, length_unit, metric_unit, plausible_units, size_text
 
 if TYPE_CHECKING:
@@ -130,10 +131,15 @@ def _verdict(inspection: "Inspection") -> str:
     severities = [{fault.severity for fault in body.faults} for body in inspection.bodies]
     broken = [b.name for b, s in zip(inspection.bodies, severities, strict=True) if "error" in s]
     doubtful = [b.name for b, s in zip(inspection.bodies, severities, strict=True) if "warning" in s - {"error"}]
+    refused = [body.name for body in inspection.bodies if any(needs_mending(fault) for fault in body.faults)]
+    if refused and inspection.mend == "list":
+        return f"A solve that may change nothing refuses {', '.join(refused)}: mend in CAD, or allow safe mending."
     if broken:
         return f"To be mended before a solve can be trusted: {', '.join(broken)}."
     if doubtful:
-        return f"Fit to solve, with remarks on {', '.join(doubtful)}."
+        meet = any(f.code.endswith("-other") and f.severity == "warning" for b in inspection.bodies for f in b.faults)
+        more = " Bodies that meet must be one conductor: a case file says so." if meet else ""
+        return f"Fit to solve, with remarks on {', '.join(doubtful)}.{more}"
     return "Fit to solve."
 
 

@@ -1,6 +1,7 @@
 """Bodies of a case made fit, those of one conductor united, and all joined into the surface that the solver takes."""
 
 from collections.abc import Sequence
+from dataclasses import replace
 
 import numpy as np
 from numpy.typing import NDArray
@@ -16,7 +17,7 @@ from .changes import Change, Mend, place_text
 from .coarsening import coarsen_bodies
 from .contacts import cavity_walls, contacts, shapes_of
 from .dielectrics import said, with_dielectrics
-from .faults import faults_of
+from .faults import faults_of, needs_mending
 from .gaps import Shape
 from .markers import MeetingError, contact_mark
 from .mending import fit_bodies
@@ -138,7 +139,7 @@ def joined(
     changes += [(entries[c].name, "", note) for c, note in united.dropped]
     unit = unit_told(case, bodies)
     notices = [Notice("inner-surface", f"{said(case, c)}: {note.said(unit)}") for c, note in united.dropped]
-    for body, conductor in zip(bodies, owner, strict=True):
+    for body, conductor in zip(_cracks_told_once(bodies), owner, strict=True):
         notices += _body_notices(case, body, _described(case, body, conductor))
     notices += told
     if not case.content.in_one_medium:
@@ -149,6 +150,18 @@ def joined(
     return bodies_to_surface(bodies, owner, names=names, deviation=deviation), None, notices, tuple(changes), rounding
 
 
+def _cracks_told_once(bodies: list[Body]) -> list[Body]:
+    """Cracks between the faces of one part fall to all bodies that they cut it into: the first one tells of them."""
+    seen: set[tuple[str, int]] = set()
+    result = []
+    for body in bodies:
+        part = (body.file, body.solid)
+        faults = [fault for fault in body.faults if fault.code != "cracks" or part not in seen]
+        seen.add(part)
+        result.append(replace(body, faults=faults))
+    return result
+
+
 def _refuse_unfit(case: Case, bodies: list[Body], owner: list[int]) -> None:
     """Refuse a body that a solve would have to mend."""
     cavities = cavity_walls(shapes_of(bodies))
@@ -156,9 +169,7 @@ def _refuse_unfit(case: Case, bodies: list[Body], owner: list[int]) -> None:
         wrong = [
             fault
             for fault in faults_of(Shape(body))
-            if fault.severity != "note"
-            and fault.code not in ("coarse-coordinates", "self-touching")
-            and not (fault.code == "inside-out" and k in cavities)
+            if needs_mending(fault) and not (fault.code == "inside-out" and k in cavities)
         ]
         if wrong:
             place = "" if wrong[0].place is None else f", at {place_text(wrong[0].place, unit_told(case, [body]))}"

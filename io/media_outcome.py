@@ -108,7 +108,7 @@ def _conduction(case: Case, solution: CapacitanceSolution) -> dict[str, Any]:
     """Conductances and resistances by duality, with what to be careful of."""
     from daraf.bem import conductance_by_duality
 
-    smallest = min(one.conductivity for one in (case.content.medium, *case.content.dielectric))
+    smallest = min(one.conductivity for _, one in case.content.media)
     conductance, spread = conductance_by_duality(solution.maxwell, solution.maxwell_uncertainty, smallest)
     resistance = np.linalg.inv(conductance)
     return {
@@ -127,7 +127,7 @@ def _conduction(case: Case, solution: CapacitanceSolution) -> dict[str, Any]:
 
 def media_document(case: Case) -> list[dict[str, Any]]:
     """What surrounds everything, and the dielectrics in order of precedence."""
-    media = [("surrounding medium", case.content.medium), *((one.name, one) for one in case.content.dielectric)]
+    names = ["surrounding medium", *(one.name for one in case.content.dielectric)]
     return [
         {
             "name": name,
@@ -135,5 +135,5 @@ def media_document(case: Case) -> list[dict[str, Any]]:
             "loss_tangent": float(one.loss_tangent),
             "conductivity": float(one.conductivity),
         }
-        for name, one in media
+        for name, (_, one) in zip(names, case.content.media, strict=True)
     ]

@@ -19,6 +19,8 @@ __all__ = ["cut_at_plane", "images_of", "plane_notices", "without_mirror_faces"]
 
 FloatArray = NDArray[np.float64]
 
+_Split = tuple[FloatArray, NDArray[np.int64], NDArray[np.bool_]]
+
 #: Vertices this close to a plane, per extent of the surface, are in it; faces that were put onto others lie a hair off.
 _IN_PLANE = 5e-7
 
@@ -120,7 +122,7 @@ def cut_at_plane(pieces: Sequence[Piece], point: FloatArray, normal: FloatArray)
     return cut
 
 
-def _split(vertices: FloatArray, triangles: NDArray[np.int64], height: FloatArray) -> tuple[FloatArray, ...]:
+def _split(vertices: FloatArray, triangles: NDArray[np.int64], height: FloatArray) -> _Split:
     """Vertices with those on cut edges, triangles with the parts of cut ones, and whether each lies above."""
     points, heights, made = list(vertices), list(height), {}
 

@@ -6,6 +6,7 @@ from pathlib import Path
 from typing import Any
 
 import numpy as np
+from numpy.typing import NDArray
 
 from daraf.bem.network import Excitation, MutualCapacitance, excite, mutual_capacitance
 from daraf.bem.solution import CapacitanceSolution
@@ -18,6 +19,7 @@ from .media_outcome import solve_with_media
 from .problem import Problem, build_problem
 from .progress import Log, ProgressCallback
 from .result import write_result
+from .sensitivity_record import sensitivity_document
 from .surface_file import SolvedSurface, surface_bytes
 from .tables import result_text
 
@@ -38,6 +40,8 @@ class Outcome:
     document : dict
         Content of `result.json`.
     log_lines : list of str
+    sides : (2, n_panels) float, V/m, or None
+        Size of the field on every panel as stated, on the side of its normal and on the other one.
     """
 
     problem: Problem
@@ -46,6 +50,7 @@ class Outcome:
     state: Excitation | None
     document: dict[str, Any]
     log_lines: list[str]
+    sides: NDArray[np.float64] | None = None
 
     def text(self) -> str:
         """Return the tables, as `daraf solve` prints them."""
@@ -73,7 +78,10 @@ class Outcome:
         return write_result(folder, self.document, surface, log)
 
     def _solved_surface(self) -> SolvedSurface:
+        from daraf.bem.meaning import surface_meaning
+
         panels = self.solution.panels
+        meaning = surface_meaning(self.problem.surface, panels, self.solution.facets)
         # interfaces carry no free charge
         rows = np.flatnonzero(panels.conductor < len(self.solution.conductor_names))
         densities = self.solution.densities[:, rows]
@@ -86,6 +94,10 @@ class Outcome:
             body_names=self.problem.surface.body_names,
             densities=densities,
             density=None if self.state is None else self.state.potential @ densities,
+            facet_offset=meaning.facet_offset[rows],
+            body_fill=meaning.fill,
+            field_sides=self.sides,
+            previous=None if self.solution.previous is None else self.solution.previous[:, rows],
         )
 
 
@@ -93,6 +105,7 @@ def solve_case(
     case: Case,
     *,
     accuracy: float | None = None,
+    method: str | None = None,
     memory_limit: int | None = None,
     progress: ProgressCallback | None = None,
 ) -> Outcome:
@@ -104,6 +117,8 @@ def solve_case(
         From `load_case` or `make_case`.
     accuracy : float, optional
         Relative, overrides the case.
+    method : {"auto", "dense", "fast"}, optional
+        How the equations are solved, overrides the case.
     memory_limit : int, bytes, optional
     progress : callable, optional
         ``progress(stage, done, total, note)``.
@@ -122,6 +137,7 @@ def solve_case(
     return solve_problem(
         problem,
         accuracy=accuracy,
+        method=method,
         memory_limit=memory_limit,
         progress=progress,
         reading=time.perf_counter() - started,
@@ -132,6 +148,7 @@ def solve_problem(
     problem: Problem,
     *,
     accuracy: float | None = None,
+    method: str | None = None,
     memory_limit: int | None = None,
     progress: ProgressCallback | None = None,
     reading: float = 0.0,
@@ -142,6 +159,7 @@ def solve_problem(
     ----------
     problem : Problem
     accuracy : float, optional
+    method : str, optional
     memory_limit : int, bytes, optional
     progress : callable, optional
     reading : float, s
@@ -178,6 +196,7 @@ def solve_problem(
             surface,
             relative_permittivity=content.medium.relative_permittivity,
             facets=content.facets,
+            method=content.method if method is None else method,
             rounding=problem.rounding,
             **asked,
         )
@@ -194,9 +213,15 @@ def solve_problem(
     )
     state = _state(problem, solution)
     further: dict[str, float] = {}
-    if state is not None and not solution.interrupted and problem.media is None:
+    sides: NDArray[np.float64] | None = None
+    if not solution.interrupted and problem.media is None:
         try:
-            extras, further = loads(problem, solution, state, progress=log)
+            if state is not None:
+                extras, further, sides = loads(problem, solution, state, progress=log)
+            if content.sensitivities:
+                began = time.perf_counter()
+                extras["sensitivity"] = sensitivity_document(problem, solution, progress=log)
+                further["sensitivities"] = time.perf_counter() - began
         except KeyboardInterrupt:
             # The capacitances are there and paid for: give them, and the exit code of an interruption.
             solution = replace(solution, interrupted=True)
@@ -204,7 +229,7 @@ def solve_problem(
     seconds = document["solution"]["seconds"]
     total = reading + time.perf_counter() - started
     document["solution"]["seconds"] = {"reading": reading, **seconds, **further, "total": total}
-    return Outcome(problem, solution, mutual, state, document, log.lines)
+    return Outcome(problem, solution, mutual, state, document, log.lines, sides)
 
 
 def _wanted(problem: Problem) -> list[tuple[int, int]] | None:

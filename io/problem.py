@@ -19,7 +19,7 @@ from .bodies import Body, pick_bodies, read_bodies
 from .case import Case, make_case
 from .changes import Change
 from .facet_tolerance import FacetTolerance, parse_facet_tolerance
-from .joining import bodies_to_surface, joined, mend_of
+from .joining import joined, mend_of
 from .readers import may_be_curved
 from .schema import Part
 
@@ -27,9 +27,7 @@ __all__ = [
     "InputFile",
     "PlacedBodies",
     "Problem",
-    "bodies_to_surface",
     "build_problem",
-    "mend_of",
     "place",
     "placed_bodies",
     "problem_from_files",
@@ -168,7 +166,7 @@ def build_problem(
     notices = placed.notices
     surface, media, told, changes, rounding = joined(case, bodies, owner, accuracy)
     held, values = _stated(case)
-    inputs = tuple(_input_file(case, entry) for entry in dict.fromkeys(_surfaces(case)))
+    inputs = tuple(_input_file(case, entry) for entry in dict.fromkeys([*_surfaces(case), *_side_files(case, placed)]))
     return Problem(case, surface, inputs, held, values, (*notices, *told), changes, rounding, media)
 
 
@@ -319,8 +317,9 @@ def _unused(files: dict[_Source, list[Body]], used: dict[tuple[_Source, int], st
     for source, bodies in files.items():
         idle = [body.name for body in bodies if (source, body.index_in_file) not in used]
         if idle:
+            verb = "belongs" if len(idle) == 1 else "belong"
             shown = ", ".join(repr(name) for name in idle[:6]) + (", ..." if len(idle) > 6 else "")
-            text = f"{Path(source[0]).name}: {len(idle)} of {len(bodies)} bodies belong to no conductor: {shown}"
+            text = f"{Path(source[0]).name}: {len(idle)} of {len(bodies)} bodies {verb} to no conductor: {shown}"
             notices.append(Notice("unused-body", text + "; left out of the computation"))
     return notices
 
@@ -336,6 +335,13 @@ def _stated(case: Case) -> tuple[BoolArray | None, FloatArray | None]:
 
 def _surfaces(case: Case) -> list[str]:
     return [part.surface for entry in (*case.content.conductor, *case.content.dielectric) for part in entry.parts]
+
+
+def _side_files(case: Case, placed: PlacedBodies) -> list[str]:
+    """Files that surface files name and that were read with them, relative to the case where they lie below it."""
+    files = dict.fromkeys(file for body in placed.bodies for file in body.side_files)
+    near = {file: os.path.relpath(file, case.folder) for file in files}
+    return [str(Path(file).absolute()) if near[file].startswith("..") else near[file] for file in files]
 
 
 def _input_file(case: Case, surface: str) -> InputFile:

@@ -20,6 +20,7 @@ from .units import KINDS, parse_quantity
 
 __all__ = [
     "NOT_YET",
+    "Air",
     "CaseContent",
     "ConductorEntry",
     "DielectricEntry",
@@ -304,9 +305,14 @@ class ConductorEntry(_Placed):
     potential: _quantity("voltage") | None = None  # type: ignore[valid-type]
     charge: _quantity("charge") | None = Field(None, description="floating: the total charge is given")  # type: ignore[valid-type]
     ground: StrictBool = False
+    edge_radius: _quantity("length") | None = Field(  # type: ignore[valid-type]
+        None, description="of all its sharp convex edges, for the peak field; half the thickness of a sheet"
+    )
 
     @whole(mode="after")
     def _check_stated(self) -> Self:
+        if self.edge_radius is not None and self.edge_radius <= 0.0:
+            raise InputError("edge_radius must be positive; leave it out for a sharp edge")
         if len(self.stated) > 1:
             raise InputError(f"{' and '.join(self.stated)} are both given; keep one of potential, charge, ground")
         return self
@@ -324,20 +330,21 @@ Conductivity = Annotated[_quantity("conductivity"), AfterValidator(_not_negative
 Frequency = Annotated[_quantity("frequency"), AfterValidator(_above_zero)]  # type: ignore[valid-type]
 
 
-class DielectricEntry(_Placed):
+class _Losses(_Table):
+    loss_tangent: LossTangent = 0.0  # type: ignore[valid-type]
+    conductivity: Conductivity = 0.0  # type: ignore[valid-type]
+
+
+class DielectricEntry(_Placed, _Losses):
     """Closed bodies of a dielectric."""
 
     relative_permittivity: Permittivity
-    loss_tangent: LossTangent = 0.0  # type: ignore[valid-type]
-    conductivity: Conductivity = 0.0  # type: ignore[valid-type]
 
 
-class Medium(_Table):
+class Medium(_Losses):
     """What fills the space around the conductors."""
 
     relative_permittivity: Permittivity = 1.0
-    loss_tangent: LossTangent = 0.0  # type: ignore[valid-type]
-    conductivity: Conductivity = 0.0  # type: ignore[valid-type]
 
 
 class PlaneEntry(_Table):
@@ -358,6 +365,26 @@ class HalfSpaceEntry(_Table):
     point: Point = (0.0, 0.0, 0.0)
 
 
+class Air(_Table):
+    """Air round the conductors: its table asks how far the potentials are from corona and breakdown."""
+
+    pressure: _quantity("pressure") = 101325.0  # type: ignore[valid-type]
+    temperature: _quantity("temperature") = 293.15  # type: ignore[valid-type]
+    withstand: _quantity("field") | None = Field(  # type: ignore[valid-type]
+        None, description="gradient, peak value, that a surface may carry"
+    )
+
+    @whole(mode="after")
+    def _check(self) -> Self:
+        for key, low, high in (("pressure", 1e3, 1e6), ("temperature", 200.0, 400.0)):
+            value = getattr(self, key)
+            if not low <= value <= high:
+                raise InputError(f"{key} {value:g} is outside {low:g} to {high:g} in SI, where the laws of air hold")
+        if self.withstand is not None and self.withstand <= 0.0:
+            raise InputError("withstand must be positive; leave it out if there is no such limit")
+        return self
+
+
 class CaseContent(_Table):
     """A case: conductors, what is between and around them, and the accuracy asked."""
 
@@ -366,6 +393,10 @@ class CaseContent(_Table):
     facet_tolerance: Facetting | None = None
     accuracy: Accuracy = 0.01
     facets: Facets = "auto"
+    method: Literal["auto", "dense", "fast"] = Field(
+        "auto",
+        description="how the equations are solved: dense (full matrix), fast (multipoles, iteration), auto: by size",
+    )
     mend: Literal["list", "safe", "bold"] = Field(
         "safe",
         description="list: change nothing, refuse what is not fit; safe: only what keeps the shape; "
@@ -377,7 +408,11 @@ class CaseContent(_Table):
     want: tuple[tuple[str, str], ...] = Field(
         (), description="couplings that must meet the accuracy, as pairs of conductors; all if left out"
     )
+    sensitivities: StrictBool = Field(
+        False, description="also tell how the capacitances move when a body is shifted, turned or grows"
+    )
     medium: Medium = Medium(relative_permittivity=1.0)
+    air: Air | None = None
     conductor: tuple[ConductorEntry, ...] = Field(min_length=1)
     dielectric: tuple[DielectricEntry, ...] = Field(
         (), description="in order of precedence: where bodies overlap, conductors come first, then those listed before"
@@ -403,6 +438,10 @@ class CaseContent(_Table):
             if name not in seen:
                 known = ", ".join(repr(entry.name) for entry in self.conductor)
                 raise InputError(f"want: no conductor is named {name!r}; there are {known}")
+        if self.air is not None and not self.conductor[0].stated:
+            raise InputError(
+                "air: the strength hangs on potentials; state potential, charge or ground of all conductors"
+            )
         silent = [entry.name for entry in self.conductor if not entry.stated]
         if silent and len(silent) < len(self.conductor):
             raise InputError(
@@ -411,12 +450,19 @@ class CaseContent(_Table):
             )
         return self
 
+    @property
+    def media(self) -> list[tuple[str, Medium | DielectricEntry]]:
+        """What surrounds everything, then the dielectrics, each with the words for messages."""
+        return [("medium", self.medium), *((f"dielectric {one.name!r}", one) for one in self.dielectric)]
+
     def _check_media(self, taken: set[str]) -> None:
         for entry in self.dielectric:
             if entry.name in taken:
                 raise InputError(f"two bodies are named {entry.name!r}; give each dielectric its own name")
             taken.add(entry.name)
         media = [("medium", self.medium), *((f"dielectric {one.name!r}", one) for one in self.dielectric)]
+        if not self.in_one_medium:
+            self._refuse_what_media_lack()
         if self.conduction:
             self._check_conduction()
             return
@@ -431,9 +477,17 @@ class CaseContent(_Table):
         if self.frequencies and not lossy:
             raise InputError("frequencies: no medium has losses, so nothing depends on them; leave the key out")
 
+    def _refuse_what_media_lack(self) -> None:
+        """Keys that only conductors in one medium have so far."""
+        lacking = {"sensitivities": self.sensitivities, "air": self.air, 'method = "fast"': self.method == "fast"}
+        for key, value in lacking.items():
+            if value:
+                raise InputError(
+                    f"{key}: this version has it for conductors in one medium without losses and planes; leave it out"
+                )
+
     def _check_conduction(self) -> None:
-        media = [("medium", self.medium), *((f"dielectric {one.name!r}", one) for one in self.dielectric)]
-        silent = [where for where, one in media if not one.conductivity]
+        silent = [where for where, one in self.media if not one.conductivity]
         if silent:
             raise InputError(
                 f"conduction: {silent[0]} has no conductivity; write one such as '0.01 S/m' "

@@ -1,5 +1,6 @@
 """Readers of mesh files: one module per format family, found by the extension of the file."""
 
+from dataclasses import replace
 from pathlib import Path
 
 from daraf.bem.errors import InputError
@@ -32,14 +33,19 @@ def read_file(path: str | Path, facet_tolerance: FacetTolerance | None = None) -
     """
     path = Path(path)
 
+    named: list[str] = []
+
     def beside(name: str) -> bytes:
-        return read_bytes(path.parent / check_side_file(path, name))
+        side = path.parent / check_side_file(path, name)
+        named.append(str(side))
+        return read_bytes(side)
 
     try:
         data = read_bytes(path)
     except MemoryError:
         raise InputError(f"{path}: there is not enough memory to read it; export it with fewer triangles") from None
-    return read_source(Source(path, data, beside, facet_tolerance))
+    raw = read_source(Source(path, data, beside, facet_tolerance))
+    return replace(raw, side_files=tuple(dict.fromkeys(named)))
 
 
 def may_be_curved(path: str | Path) -> bool:

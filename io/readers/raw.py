@@ -77,12 +77,13 @@ class Remark:
 
 @dataclass(frozen=True, eq=False)
 class RawFile:
-    """All parts of one file, the unit it carries (None where the format has none), and what is worth saying."""
+    """All parts of one file, the unit it carries (None where the format has none), what is worth saying, side files."""
 
     path: Path
     parts: list[RawPart]
     unit: str | None = None
     remarks: tuple[Remark, ...] = ()
+    side_files: tuple[str, ...] = ()
 
 
 @dataclass(frozen=True, eq=False)

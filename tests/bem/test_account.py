@@ -51,6 +51,14 @@ def test_a_closed_body_without_thickness_has_no_volume_to_compare():
     assert notices == []
 
 
+def test_faces_bent_less_than_can_be_told_are_flat():
+    points, triangles = shapes.cube()
+    points = points + 2e-5 * np.random.default_rng(1).normal(size=points.shape)
+    solution = solve_capacitance(shapes.surface([(points, triangles)]), accuracy=0.05)
+    assert solution.bodies[0].round_faces == 0
+    assert solution.bodies[0].turn is None
+
+
 def test_cylinder_and_box_are_told_apart():
     (tube, box), _ = account(shapes.cylinder(1.0, 2.0, 24), shapes.moved(shapes.cube(), 5.0))
     assert (tube.round_faces, tube.faces) == (24, 26)

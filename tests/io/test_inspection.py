@@ -8,6 +8,7 @@ import trimesh
 
 from daraf.bem.errors import InputError
 from daraf.io.bodies import Body
+from daraf.io.changes import Mend
 from daraf.io.inspection import inspect_bodies, inspect_files, inspection_to_dict, inspection_to_text
 
 BOX = trimesh.creation.box((4.0, 2.0, 1.0))
@@ -232,3 +233,21 @@ def test_a_unit_is_for_the_files_that_carry_none(files, tmp_path):
 def test_places_of_tiny_and_far_off_models(scale, shift, place):
     body = body_of(BOX.vertices * scale + [shift, 0.0, 0.0], BOX.faces)
     assert place in " ".join(inspection_to_text(inspect_bodies([body])).split())
+
+
+def test_verdict_says_what_changing_nothing_and_meeting_mean():
+    doubled = body_of(BALL.vertices, np.vstack([BALL.faces, BALL.faces[:2]]), "ball")
+    assert inspection_to_text(inspect_bodies([doubled])).endswith("Fit to solve, with remarks on ball.\n")
+    refused = " ".join(inspection_to_text(inspect_bodies([doubled], mend=Mend("list"))).split())
+    assert refused.endswith("A solve that may change nothing refuses ball: mend in CAD, or allow safe mending.")
+    meeting = " ".join(
+        inspection_to_text(inspect_bodies([mesh_body(BOX, "a"), mesh_body(BOX, "b", (4, 0, 0))])).split()
+    )
+    assert meeting.endswith("remarks on a, b. Bodies that meet must be one conductor: a case file says so.")
+
+
+def test_size_of_a_hole_is_told_where_bold_mending_leaves_it():
+    opened = ~(BALL.faces == 20).any(axis=1)  # a hole about one vertex
+    fault = faults(body_of(BALL.vertices, BALL.faces[opened]))["holes"]
+    assert fault.text.startswith("closed but for 1 hole, the largest 0.")
+    assert fault.remedy.endswith("unless bold mending closes it (state how large a hole it may close)")

@@ -14,7 +14,9 @@ from fuzz_corpus import box, corpus, mixed_ply, object_xml, spread_3mf, text_glt
 
 from daraf.bem.errors import InputError
 from daraf.io.bodies import read_bodies
+from daraf.io.case import make_case
 from daraf.io.gaps import Shape
+from daraf.io.problem import build_problem
 from daraf.io.readers import archive, threemf
 
 FILES = corpus()
@@ -108,6 +110,9 @@ def test_text_gltf_with_its_buffer_inside_beside_and_in_an_archive(tmp_path):
     document, buffer = text_gltf("data%20of%20it.bin")
     write(tmp_path / "data of it.bin", buffer)
     beside = read_bodies(write(tmp_path / "out.gltf", document), None)
+    assert {body.side_files for body in beside} == {(str(tmp_path / "data of it.bin"),)}
+    case = make_case({"conductor": [{"name": "all", "surface": "out.gltf"}]}, folder=tmp_path)
+    assert [one.file for one in build_problem(case).inputs] == ["out.gltf", "data of it.bin"]
     packed = read_bodies(
         write(tmp_path / "rig.zip", zipped({"a/out.gltf": document, "a/data of it.bin": buffer})), None
     )

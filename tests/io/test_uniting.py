@@ -14,11 +14,14 @@ from daraf.bem import solve_capacitance
 from daraf.bem.errors import InputError
 from daraf.io.bodies import Body
 from daraf.io.case import make_case
+from daraf.io.case_inspection import inspect_case
 from daraf.io.changes import Mend
 from daraf.io.cli.main import main
 from daraf.io.gaps import Shape
+from daraf.io.inspection_text import inspection_to_text
+from daraf.io.joining import bodies_to_surface
 from daraf.io.markers import MeetingError
-from daraf.io.problem import bodies_to_surface, build_problem
+from daraf.io.problem import build_problem
 from daraf.io.self_contact import self_contacts
 from daraf.io.uniting import unite
 
@@ -266,7 +269,7 @@ def test_the_command_draws_the_places_beside_the_error(tmp_path, capsys):
     assert "overlaps conductor" in said  # the error itself comes first
     assert "not drawn: " in said
     assert main(["inspect", *files, "--mend-within", "0.1 mm"]) == 2
-    assert "the unit of the file is not; state it" in capsys.readouterr().err
+    assert "but no unit; state it, such as --unit mm" in capsys.readouterr().err
 
 
 def test_list_refuses_what_safe_would_unite_or_mend(tmp_path):
@@ -300,3 +303,23 @@ def test_changes_reach_the_result(tmp_path, capsys):
     assert (change["conductor"], change["code"], change["count"]) == ("A", "united", 2)
     assert len(change["at"]) == 3
     assert "united 'cube'" in " ".join((tmp_path / "two.daraf" / "log.txt").read_text().split())
+
+
+def test_inspection_of_a_case_tells_what_a_solve_unites_and_what_it_refuses(tmp_path):
+    parts = [trimesh.creation.box(bounds=[(0, 0, z), (4, 4, z + 2)]) for z in (0, 1, 3)]
+    for name, mesh in (("block", trimesh.util.concatenate(parts[:2])), ("lid", parts[2])):
+        mesh.export(tmp_path / f"{name}.stl")
+    conductors = [{"name": name, "surface": f"{name}.stl"} for name in ("block", "lid")]
+    stated = {"unit": "mm", "conductor": conductors}
+    inspection, notices = inspect_case(make_case(stated, folder=tmp_path))
+    (notice,) = notices
+    assert "a solve takes conductor 'block' so: united 'block-1' and 'block-2'" in notice.text
+    told = [{fault.code: fault for fault in body.faults} for body in inspection.bodies]
+    assert told[0]["overlaps-other"].severity == "note"
+    assert told[0]["overlaps-other"].text == "overlaps 'block-2' of the same conductor"
+    assert told[2]["touches-other"].severity == "error"
+    assert told[2]["touches-other"].text == "touches 'block-2' of another conductor"
+    assert "To be mended before a solve can be trusted: block-2, lid." in inspection_to_text(inspection)
+    inspection, notices = inspect_case(make_case({**stated, "mend": "list"}, folder=tmp_path))
+    assert notices == ()
+    assert inspection.bodies[0].faults[0].severity == "error"
