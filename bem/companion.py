@@ -10,7 +10,7 @@ from numpy.typing import NDArray
 
 from .bisection import SPLIT_U, SPLIT_V
 from .frames import AREA, panel_frames
-from .indicator import child_potentials, self_integrals
+from .indicator import PANELS_AT_ONCE, PartPotentials, self_integrals
 from .panels import Panels
 
 __all__ = ["companion_gains", "strip"]
@@ -41,47 +41,44 @@ def strip(corners: FloatArray, direction: int, first: float, last: float) -> Flo
 
 def companion_gains(
     panels: Panels,
-    density: FloatArray,
     self_terms: FloatArray,
     potentials: FloatArray,
     wanted: NDArray[np.bool_],
+    part_potentials: PartPotentials,
 ) -> FloatArray:
     """Gains of the even companions.
 
     Parameters
     ----------
     panels : Panels
-    density : (n_panels, n_conductors) float
     self_terms : (n_panels,) float, m3
     potentials : (n_panels, n_conductors) float
     wanted : (n_panels, 2) bool
         Directions to look at; triangles have none.
+    part_potentials : callable
+        As for :func:`daraf.bem.indicator.two_level_indicator`.
 
     Returns
     -------
     (n_panels, 2, n_conductors) float
         As :func:`daraf.bem.indicator.two_level_indicator`; zero where not wanted.
     """
-    gains = np.zeros((len(panels), 2, density.shape[1]))
+    gains = np.zeros((len(panels), 2, potentials.shape[1]))
     wanted = wanted & (panels.n_corners == 4)[:, None]
-    centre = panels.corners.reshape(-1, 3).mean(axis=0)
-    corners = panels.corners - centre
-    frames = panel_frames(corners, largest_rule=4)
     for slot, direction in enumerate((SPLIT_U, SPLIT_V)):
-        rows = np.flatnonzero(wanted[:, slot])
-        if len(rows) == 0:
-            continue
-        # all three parts by the same rules: what these leave out cancels
-        cuts = [strip(corners[rows], direction, *ends) for ends in ((0.0, 0.25), (0.25, 0.75), (0.75, 1.0))]
-        parts = np.zeros((len(panels), 4, frames.shape[1]))
-        parts[rows, :3] = np.stack([panel_frames(cut, largest_rule=4) for cut in cuts], axis=1)
-        moments = np.empty((len(panels), 4, density.shape[1]))
-        child_potentials(parts, frames, density, moments, 0, len(panels))
-        residual = parts[rows, :3, AREA, None] * potentials[rows, None, :] - moments[rows, :3]
-        middle, with_whole = _products(corners[rows], direction, self_terms[rows])
-        share = with_whole / self_terms[rows]
-        norm2 = middle - share * with_whole
-        gains[rows, slot] = (residual[:, 1] - share[:, None] * residual.sum(axis=1)) / np.sqrt(norm2)[:, None]
+        chosen = np.flatnonzero(wanted[:, slot])
+        for first in range(0, len(chosen), PANELS_AT_ONCE):
+            rows = chosen[first : first + PANELS_AT_ONCE]
+            corners = panels.corners[rows]
+            # all three parts by the same rules: what these leave out cancels
+            cuts = [strip(corners, direction, *ends) for ends in ((0.0, 0.25), (0.25, 0.75), (0.75, 1.0))]
+            packed = [panel_frames(cut, largest_rule=4) for cut in cuts]
+            parts = np.stack([*packed, np.zeros_like(packed[0])], axis=1)
+            residual = parts[:, :3, AREA, None] * potentials[rows, None, :] - part_potentials(parts, rows)[:, :3]
+            middle, with_whole = _products(corners, direction, self_terms[rows])
+            share = with_whole / self_terms[rows]
+            norm2 = middle - share * with_whole
+            gains[rows, slot] = (residual[:, 1] - share[:, None] * residual.sum(axis=1)) / np.sqrt(norm2)[:, None]
     return gains
 
 

@@ -219,8 +219,9 @@ def _gaps(surface: Surface, regions: Regions, depth: FloatArray) -> FloatArray:
         frames = panel_frames(points[others][:, [0, 1, 2, 2]], largest_rule=0)
         distance, whose = np.empty(len(rows)), np.empty(len(rows), dtype=np.int64)
         owner = np.full(len(rows), number)
-        nearest_other(np.ascontiguousarray(regions.origins[rows]), owner, frames, conductor[others], distance, whose)
-        gap[rows] = np.where(distance < WIDE_GAP * depth[rows], np.maximum(distance, depth[rows]), np.inf)
+        middles, limits = np.ascontiguousarray(regions.origins[rows]), WIDE_GAP * depth[rows]
+        nearest_other(middles, owner, limits, frames, conductor[others], distance, whose)
+        gap[rows] = np.where(distance < limits, np.maximum(distance, depth[rows]), np.inf)
     return gap
 
 

@@ -10,7 +10,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from .extrapolation import SMOOTH_DECAY
-from .frames import panel_frames
+from .frames import CENTROID, RADIUS, panel_frames
 from .jit import parallel_kernel, prange
 from .panels import Panels
 from .polygon import polygon_distance
@@ -26,7 +26,7 @@ FRINGE_GAIN = 0.12
 
 
 @parallel_kernel
-def nearest_other(points, owner, frames, conductor, distance, nearest):
+def nearest_other(points, owner, reach, frames, conductor, distance, nearest):
     """Distance from points to the panels of other conductors.
 
     Parameters
@@ -34,10 +34,12 @@ def nearest_other(points, owner, frames, conductor, distance, nearest):
     points : (m, 3) float, m
     owner : (m,) int
         Conductor of each point.
+    reach : (m,) float, m
+        Panels farther than this from a point do not count.
     frames : (n, FRAME_SIZE) float
     conductor : (n,) int
     distance : (m,) float, m
-        Written; infinite if there is no other conductor.
+        Written; infinite if there is no other conductor within reach.
     nearest : (m,) int
         Written: the nearest other conductor, or -1.
     """
@@ -45,9 +47,15 @@ def nearest_other(points, owner, frames, conductor, distance, nearest):
         distance[p] = math.inf
         nearest[p] = -1
         for j in range(len(frames)):
-            if conductor[j] != owner[p]:
+            if conductor[j] == owner[p]:
+                continue
+            # most panels are told to be too far by the balls about them
+            limit = min(reach[p], distance[p]) + frames[j, RADIUS]
+            x, y = points[p, 0] - frames[j, CENTROID], points[p, 1] - frames[j, CENTROID + 1]
+            z = points[p, 2] - frames[j, CENTROID + 2]
+            if x * x + y * y + z * z <= limit * limit:
                 d = polygon_distance(frames[j], points[p, 0], points[p, 1], points[p, 2])
-                if d < distance[p]:
+                if d < distance[p] and d <= reach[p]:
                     distance[p] = d
                     nearest[p] = conductor[j]
 
@@ -76,7 +84,7 @@ def unseen_fringe(panels: Panels, gains: FloatArray, sides: FloatArray) -> Float
     for direction, pair in ((0, (1, 3)), (1, (0, 2))):
         for side in pair:
             rows = np.flatnonzero((sides[:, side] > SMOOTH_DECAY) & (panels.n_corners == 4))
-            gap, other = _gaps(panels, rows, side)
+            gap, other = _gaps(panels, rows, side, widths[rows, direction])
             unseen = widths[rows, direction] > gap
             rows, other = rows[unseen], other[unseen]
             size = np.sqrt(FRINGE_GAIN / (4.0 * np.pi) * lengths[rows, side])
@@ -86,11 +94,11 @@ def unseen_fringe(panels: Panels, gains: FloatArray, sides: FloatArray) -> Float
     return fringe
 
 
-def _gaps(panels: Panels, rows: IntArray, side: int) -> tuple[FloatArray, IntArray]:
-    """Distance from the middle of a side to the nearest other conductor, and which it is."""
+def _gaps(panels: Panels, rows: IntArray, side: int, reach: FloatArray) -> tuple[FloatArray, IntArray]:
+    """Distance from the middle of a side to the nearest other conductor within reach, and which it is."""
     middle = 0.5 * (panels.corners[rows, side] + panels.corners[rows, (side + 1) % 4])
     centre = panels.corners.reshape(-1, 3).mean(axis=0)
     distance, nearest = np.empty(len(rows)), np.empty(len(rows), dtype=np.int64)
     frames = panel_frames(panels.corners - centre, largest_rule=0)
-    nearest_other(middle - centre, panels.conductor[rows], frames, panels.conductor, distance, nearest)
+    nearest_other(middle - centre, panels.conductor[rows], reach, frames, panels.conductor, distance, nearest)
     return distance, nearest

@@ -91,6 +91,8 @@ class Pass:
         Where it is.
     cause : str
         The line of the budget that drives it.
+    iterations : int
+        Of the solution of the equations; 0 where they were factorised.
     """
 
     panels: int
@@ -101,6 +103,7 @@ class Pass:
     uncertainty: float = float("nan")
     entry: tuple[int, int] = (0, 0)
     cause: str = "discretisation"
+    iterations: int = 0
 
 
 @dataclass(frozen=True, eq=False)

@@ -6,7 +6,7 @@ reads the TOML file and turns the complaints of pydantic into one line each.
 
 import math
 import re
-from typing import Annotated, Any, Self
+from typing import Annotated, Any, Literal, Self
 
 from pydantic import BaseModel, BeforeValidator, ConfigDict, Field, StrictBool, WithJsonSchema
 from pydantic import model_validator as whole
@@ -289,6 +289,10 @@ class CaseContent(_Table):
     facet_tolerance: Facetting | None = None
     accuracy: Accuracy = 0.01
     facets: Facets = "auto"
+    method: Literal["auto", "dense", "fast"] = Field(
+        "auto",
+        description="how the equations are solved: dense (full matrix), fast (multipoles, iteration), auto: by size",
+    )
     want: tuple[tuple[str, str], ...] = Field(
         (), description="couplings that must meet the accuracy, as pairs of conductors; all if left out"
     )

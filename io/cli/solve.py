@@ -38,6 +38,11 @@ def add_arguments(parser: argparse.ArgumentParser) -> None:
         help="largest distance of facets from curved shapes (STEP), such as '0.02 mm' or '0.1 %%' of the size",
     )
     parser.add_argument("--accuracy", metavar="X", help="relative, such as '0.5 %%'; overrides the case (default 1 %%)")
+    parser.add_argument(
+        "--method",
+        choices=("auto", "dense", "fast"),
+        help="full matrix, or multipoles and iteration; overrides the case (default: by size)",
+    )
     parser.add_argument("--out", metavar="DIR", help="result folder (default: NAME.daraf beside the first file)")
     parser.add_argument("--json", action="store_true", help="print result.json instead of tables")
     parser.add_argument("-q", "--quiet", action="store_true", help="no progress and no messages")
@@ -65,7 +70,7 @@ def run(args: argparse.Namespace) -> int:
     # Before the solve: an hour's work must not end at a folder that cannot be written.
     check_destination(out)
     with progress_for(quiet=args.quiet) as progress:
-        outcome = _solve(problem, accuracy, progress, seconds)
+        outcome = _solve(problem, accuracy, args.method, progress, seconds)
         progress("writing", 0, 1)
         outcome.write(out)
     _show(outcome, out, args)
@@ -108,10 +113,10 @@ def _read(args: argparse.Namespace, case_file: str | None) -> tuple["Problem", f
     return problem, time.perf_counter() - started, accuracy
 
 
-def _solve(problem: "Problem", accuracy: float | None, progress: Any, seconds: float) -> "Outcome":
+def _solve(problem: "Problem", accuracy: float | None, method: str | None, progress: Any, seconds: float) -> "Outcome":
     from daraf.io.outcome import solve_problem
 
-    return solve_problem(problem, accuracy=accuracy, progress=progress, reading=seconds)
+    return solve_problem(problem, accuracy=accuracy, method=method, progress=progress, reading=seconds)
 
 
 def _show(outcome: "Outcome", out: str, args: argparse.Namespace) -> None:
