@@ -216,7 +216,8 @@ def _moments(
     block = max(8, 200_000 // len(frames))
     for first in range(0, n, block):
         last = min(n, first + block)
-        child_potentials(parts, frames, density, potentials, first, last)
+        rows = slice(first, last)
+        child_potentials(parts[rows], frames[rows], frames, density, potentials[rows])
         if crossed.any():
             child_fluxes(parts, frames, pairs, counted, through, onto, first, last)
         if progress is not None:

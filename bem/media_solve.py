@@ -8,7 +8,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from .capacitance import FIRST_PASS, INTEGRATION, MOST_PANELS, POINTLESS, _accuracies
+from .capacitance import FIRST_PASS, INTEGRATION, MOST_AT_START, MOST_DENSE, POINTLESS, _accuracies
 from .constants import FOUR_PI_EPSILON_0
 from .creases import find_creases
 from .drawn import drawn_surface
@@ -192,7 +192,7 @@ def solve_media(  # noqa: PLR0913 (all but two are options by name)
     if media.n_conductors + len(loads) == 0:
         raise InputError("nothing to solve: neither a conductor nor a load is given")
     start, round_parts, notices, most = _prepared(surface, media, images, facet_meaning(facets), limit)
-    most = max(len(start.panels), min(most, MOST_PANELS, int((limit / (_MATRICES * 8.0 * _cells(media))) ** 0.5)))
+    most = max(len(start.panels), min(most, MOST_DENSE, int((limit / (_MATRICES * 8.0 * _cells(media))) ** 0.5)))
     seconds = {"panels": time.perf_counter() - begin}
     images.place(start.panels, surface.body_names)
     refined = np.zeros(surface.n_bodies, dtype=np.int64)
@@ -259,15 +259,20 @@ def _prepared(
     turn = greatest_turn(meaning)
     regions, notices = find_regions(surface)
     panels, more = panel_regions(surface, regions, creases=find_creases(surface, regions, greatest_turn=turn))
-    refuse_if_too_large(len(panels), limit)
-    most = max(len(panels), min(MOST_PANELS, panels_that_fit(limit)))
+    refuse_if_too_large(len(panels), surface.n_conductors, limit, fast=False)
+    most = max(len(panels), min(MOST_DENSE, panels_that_fit(limit, surface.n_conductors, fast=False)))
     assert media.whole is not None
     drawn = drawn_surface(surface, media.whole, images, greatest_turn=turn)
     decays = drawn.side_decays(panels)
     round_parts = None if meaning == "as drawn" else drawn.facets_of(surface, regions)
     if round_parts is not None:
         panels = drawn.closed(panels, move_facets(round_parts, panels))
-    return starting_panels(panels, decays, max(len(panels), most // 4)), round_parts, notices + more, most
+    return (
+        starting_panels(panels, decays, max(len(panels), min(MOST_AT_START, most // 4))),
+        round_parts,
+        notices + more,
+        most,
+    )
 
 
 def _noted(report: Progress, note: str) -> Callable[[str, float, float], None]:

@@ -325,14 +325,12 @@ class ConductorEntry(_Placed):
 
 
 Permittivity = Annotated[float, Field(ge=1.0, le=1e5, allow_inf_nan=False)]
-LossTangent = Annotated[_quantity("ratio"), AfterValidator(_not_negative)]  # type: ignore[valid-type]
-Conductivity = Annotated[_quantity("conductivity"), AfterValidator(_not_negative)]  # type: ignore[valid-type]
 Frequency = Annotated[_quantity("frequency"), AfterValidator(_above_zero)]  # type: ignore[valid-type]
 
 
 class _Losses(_Table):
-    loss_tangent: LossTangent = 0.0  # type: ignore[valid-type]
-    conductivity: Conductivity = 0.0  # type: ignore[valid-type]
+    loss_tangent: Annotated[_quantity("ratio"), AfterValidator(_not_negative)] = 0.0  # type: ignore[valid-type]
+    conductivity: Annotated[_quantity("conductivity"), AfterValidator(_not_negative)] = 0.0  # type: ignore[valid-type]
 
 
 class DielectricEntry(_Placed, _Losses):
@@ -460,13 +458,12 @@ class CaseContent(_Table):
             if entry.name in taken:
                 raise InputError(f"two bodies are named {entry.name!r}; give each dielectric its own name")
             taken.add(entry.name)
-        media = [("medium", self.medium), *((f"dielectric {one.name!r}", one) for one in self.dielectric)]
         if not self.in_one_medium:
             self._refuse_what_media_lack()
         if self.conduction:
             self._check_conduction()
             return
-        lossy = [where for where, one in media if one.loss_tangent or one.conductivity]
+        lossy = [where for where, one in self.media if max(one.loss_tangent, one.conductivity) > 0.0]
         if self.half_space and (self.dielectric or lossy):
             raise InputError(
                 "half_space: images hold for conductors in media without losses only; leave the dielectrics and losses "
