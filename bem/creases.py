@@ -328,7 +328,8 @@ def corner_normals(surface: Surface, regions: Regions, creases: Creases) -> Floa
     linked = np.flatnonzero(creases.smooth & edges.consistent)
     one, two = _facing_corners(triangles, edges, linked)
     graph = coo_array((np.ones(len(one)), (one, two)), shape=(3 * n, 3 * n))
-    n_groups, group = connected_components(graph, directed=False)
+    n_groups, labels = connected_components(graph, directed=False)
+    group: IntArray = labels.astype(np.int64)
     points = surface.vertices[triangles]
     to_next, to_last = np.roll(points, -1, axis=1) - points, np.roll(points, 1, axis=1) - points
     product = (to_next**2).sum(axis=2) * (to_last**2).sum(axis=2)
