@@ -284,7 +284,8 @@ def _judge(result: PassResult, doubts: ShapeDoubts, accuracy: FloatArray, n_pass
 def _next(result: PassResult, judgement: _Judgement, most: int, limit: int) -> Plan | None:
     """Plan of the next pass, or None if there is no room for it."""
     n = len(judgement.value)
-    plan = plan_next(result, judgement.lines["discretisation"][:, :n] / judgement.targets**2)
+    weights = judgement.lines["discretisation"][:, :n] / judgement.targets**2
+    plan = plan_next(result, weights, judgement.worst[0])
     if len(plan.panels) > most or dense_bytes(len(plan.panels), len(result.panels)) > limit:
         return None
     return plan
