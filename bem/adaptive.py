@@ -21,7 +21,7 @@ from .extrapolation import (
 from .hidden import unseen_fringe
 from .indicator import two_level_indicator
 from .panels import Panels
-from .refinement import choose_splits, gain_worth
+from .refinement import choose_splits, gain_worth, marked_share
 from .solution import Notice
 from .system import Carried, DenseSystem, FastSystem, make_system
 
@@ -254,7 +254,7 @@ def _history(plan: Plan, value: FloatArray, gains: FloatArray) -> tuple[FloatArr
     return decay, realised_share(gained, promised)
 
 
-def plan_next(result: PassResult, weights: FloatArray) -> Plan:
+def plan_next(result: PassResult, weights: FloatArray, excess: float) -> Plan:
     """Split the panels that hold most of what is missing.
 
     Parameters
@@ -262,13 +262,15 @@ def plan_next(result: PassResult, weights: FloatArray) -> Plan:
     result : PassResult
     weights : (n_conductors, n_conductors) float
         How much each entry of the capacitance matrix matters.
+    excess : float
+        Uncertainty over the one asked, where it is largest.
 
     Returns
     -------
     Plan
     """
     worth = gain_worth(result.gains, weights)
-    split = choose_splits(gain_worth(result.steering, weights))
+    split = choose_splits(gain_worth(result.steering, weights), marked_share(excess))
     panels, parent = split_panels(result.panels, split)
     sides = split_sides(result.panels, split, result.sides, SMOOTH_DECAY)
     kept = parent[: int(np.count_nonzero(split == 0))]

@@ -329,7 +329,8 @@ def _judge(result: PassResult, doubts: ShapeDoubts, accuracy: FloatArray, n_pass
 def _next(result: PassResult, judgement: _Judgement, means: _Means) -> Plan | None:
     """Plan of the next pass, or None if there is no room for it."""
     n = len(judgement.value)
-    plan = plan_next(result, judgement.lines["discretisation"][:, :n] / judgement.targets**2)
+    weights = judgement.lines["discretisation"][:, :n] / judgement.targets**2
+    plan = plan_next(result, weights, judgement.worst[0])
     if len(plan.panels) > means.most:
         return None
     if uses_fast(len(plan.panels), means.method):

@@ -337,7 +337,7 @@ def corner_normals(surface: Surface, regions: Regions, creases: Creases) -> Floa
     weight[~usable] = 0.0
     sums = np.zeros((n_groups, 3))
     np.add.at(sums, group, (weight[:, :, None] * facet[:, None, :]).reshape(-1, 3))
-    _straighten(sums, group, surface, regions, creases)
+    _straighten(sums, group.astype(np.int64), surface, regions, creases)
     length = np.linalg.norm(sums, axis=1)
     result = (sums / np.where(length > 0, length, 1.0)[:, None])[group].reshape(n, 3, 3)
     steepest = np.zeros(len(regions))

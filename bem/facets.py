@@ -61,7 +61,7 @@ RIM_SHARE = 0.08
 GAP_SHARE = 0.2
 #: Gaps beyond this multiple of the depth are wide: nothing is added.
 WIDE_GAP = 30.0
-#: Edges of partly round bodies that turn by less than this may stand for round ones, rad.
+#: Edges between single triangles of partly round bodies may stand for round ones if they turn by less than this, rad.
 DOUBTFUL_TURN = np.radians(75.0)
 #: So may those that turn more than the row they end, up to this ratio; the tip of a spheroid of 5 to 1 has 2.8.
 DOUBTFUL_RATIO = 2.0 * SIMILAR_TURN
@@ -199,9 +199,8 @@ def _if_rounder(surface: Surface, regions: Regions, creases: Creases, offset: Fl
     steep = creases.between & ~creases.smooth & (np.abs(creases.angles) < DOUBTFUL_TURN)
     if not steep.any() or not partly.any():
         return np.zeros(len(regions))
-    rounder = find_creases(
-        surface, regions, edges=creases.edges, greatest_turn=DOUBTFUL_TURN, similar_turn=DOUBTFUL_RATIO
-    )
+    # flat faces in a row that turn by more than "round" takes are a polygon: a hexagonal head is no cylinder
+    rounder = find_creases(surface, regions, edges=creases.edges, greatest_turn=WIDE_TURN, similar_turn=DOUBTFUL_RATIO)
     # triangles that lie singly, not in flat pairs, come from a doubly curved surface however unevenly they turn
     single = (np.diff(regions.starts) == 1)[regions.triangle_region[creases.edges.triangles]].all(axis=1)
     rounder = replace(rounder, smooth=rounder.smooth | (steep & single))

@@ -38,9 +38,9 @@ SAME = 0.98
 LEAST_MISSING = 0.1
 
 
-def both_ways(worth: FloatArray) -> NDArray[np.int64]:
+def both_ways(worth: FloatArray, share: float) -> NDArray[np.int64]:
     """Mark the same panels as the loop does, each for a split in both directions."""
-    return np.where(choose_splits(worth) > 0, SPLIT_BOTH, 0)
+    return np.where(choose_splits(worth, share) > 0, SPLIT_BOTH, 0)
 
 
 @contextmanager

@@ -6,6 +6,8 @@ from daraf.bem.extrapolation import (
     EDGE_SHOWN,
     GREATEST_DECAY,
     GREATEST_REALISED,
+    JOINT_ASPECTS,
+    JOINT_REALISED,
     LEAST_REALISED,
     RIM_SHOWN,
     SHARE,
@@ -21,6 +23,7 @@ from daraf.bem.extrapolation import (
     series_factor,
     smooth_factor,
 )
+from daraf.bem.indicator import self_integrals
 
 
 def at_edges(gains, decay):
@@ -103,9 +106,20 @@ def test_second_opinion_takes_the_companion_at_edges_and_smooth_charge_elsewhere
 
 
 def test_smooth_panels_decay_by_an_eighth_and_long_ones_by_a_quarter():
-    factor = smooth_factor(np.array([(1.0, 1.0), (4.0, 1.0), (1.5, 1.0)]), 0.8)
-    # sums of two geometric series by hand
-    np.testing.assert_allclose(factor, 0.8 * np.array([(8 / 7, 8 / 7), (4 / 3, 8 / 7), (16 / 13, 8 / 7)]), rtol=1e-14)
+    factor = smooth_factor(np.array([(1.0, 1.0), (4.0, 1.0), (1.0, 200.0)]), 0.7)
+    joint = np.array([(1.304, 1.304), (0.836, 1.5 * 0.1), (1.614, 0.146)])
+    joint[1, 1] = np.interp(np.log(0.25), np.log([0.2, 0.5]), [1.551, 1.449])
+    # a geometric series by hand
+    np.testing.assert_allclose(factor, 0.7 * 8 / 7 * joint, rtol=1e-14)
+
+
+def test_halves_of_like_neighbours_gain_together_what_the_table_says():
+    """From the self-energy of rectangles, and a square wave's in a plane by its Fourier series."""
+    wave = 8 / np.pi**2 * np.sum(1.0 / np.arange(1, 2001, 2) ** 3)
+    corners = np.array([[(0, 0, 0), (a, 0, 0), (a, 1, 0), (0, 1, 0)] for a in JOINT_ASPECTS])
+    whole, half = self_integrals(corners), self_integrals(corners * (0.5, 1, 1))
+    # four digits
+    np.testing.assert_allclose(JOINT_REALISED, (4 * half - whole) / (wave * JOINT_ASPECTS**2), atol=6e-4)
 
 
 def _uncertainty(first, second, refined, unseen=0.0, realised=1.0):

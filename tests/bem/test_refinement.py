@@ -1,7 +1,15 @@
 import numpy as np
 
 from daraf.bem.bisection import SPLIT_BOTH, SPLIT_NONE, SPLIT_U, SPLIT_V
-from daraf.bem.refinement import COUPLING_FLOOR, MARKED_SHARE, accuracy_targets, choose_splits, gain_worth
+from daraf.bem.refinement import (
+    COUPLING_FLOOR,
+    LEAST_MARKED,
+    MOST_MARKED,
+    accuracy_targets,
+    choose_splits,
+    gain_worth,
+    marked_share,
+)
 
 
 def test_targets_are_relative_with_a_floor_for_weak_couplings():
@@ -25,11 +33,11 @@ def test_worth_is_the_weighted_sum_over_pairs():
 def test_marked_panels_hold_the_share_and_are_the_fewest():
     rng = np.random.default_rng(8)
     worth = rng.exponential(size=(200, 2)) ** 3
-    split = choose_splits(worth)
+    split = choose_splits(worth, LEAST_MARKED)
     total = worth.sum(axis=1)
     marked = np.sort(total[split != SPLIT_NONE])
-    assert marked.sum() >= MARKED_SHARE * total.sum()
-    assert marked[1:].sum() < MARKED_SHARE * total.sum()
+    assert marked.sum() >= LEAST_MARKED * total.sum()
+    assert marked[1:].sum() < LEAST_MARKED * total.sum()
     assert marked[0] >= total[split == SPLIT_NONE].max()
 
 
@@ -40,3 +48,9 @@ def test_direction_follows_the_gain():
 
 def test_no_worth_at_all_marks_at_most_one_panel():
     assert np.count_nonzero(choose_splits(np.zeros((4, 2)))) <= 1
+
+
+def test_more_is_marked_the_farther_the_goal():
+    shares = [marked_share(excess) for excess in (0.5, 1.0, 1.5, 1.8, 3.0, 100.0)]
+    assert shares == sorted(shares)
+    assert (shares[0], shares[-1]) == (LEAST_MARKED, MOST_MARKED)
