@@ -124,9 +124,10 @@ def cut_where_media_meet(drawn: Sequence[Drawn]) -> tuple[list[Piece], list[tupl
         before = [scene.made[i] for i in range(k) if _near(scene, i, k)]
         if before:
             left = own - scene.solids.united(before)
-            lost = 1.0 - left.volume() / own.volume()
-            if lost > 1e-6:
-                yielded.append((number, lost))
+            lost = own.volume() - left.volume()
+            # faces put a hair into others are no overlap that was drawn
+            if lost > 2.0 * scene.hair / scene.solids.size * own.surface_area():
+                yielded.append((number, lost / own.volume()))
         for i, corners in _by_origin(scene, left).items():
             if i != k:
                 pieces.append(_piece(scene, drawn, i, drawn[number].medium, corners[:, ::-1]))

@@ -125,6 +125,8 @@ def test_a_dielectric_of_permittivity_one_changes_nothing(tmp_path):
     spread = bare.maxwell_uncertainty + filled.maxwell_uncertainty
     assert np.all(np.abs(filled.maxwell - bare.maxwell) <= spread)
     assert filled.reached
+    # nothing overlaps, so that nothing yields
+    assert build_problem(case).notices == ()
 
 
 def test_losses_of_one_medium_throughout(tmp_path):
