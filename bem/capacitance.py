@@ -17,7 +17,7 @@ from .extrapolation import extrapolation_uncertainty
 from .facets import Facets, facet_meaning, find_facets, greatest_turn, move_facets
 from .flats import panel_regions
 from .forecast import Goal
-from .memory import dense_bytes, free_memory, panels_that_fit, peak_memory, refuse_if_too_large
+from .memory import dense_bytes, fast_bytes, free_memory, panels_that_fit, peak_memory, refuse_if_too_large
 from .refinement import accuracy_targets
 from .regions import find_regions
 from .rounding import checked_rounding
@@ -25,6 +25,7 @@ from .shape_doubts import ShapeDoubts
 from .solution import BodyAccount, CapacitanceSolution, Notice, Pass
 from .start import side_decays, starting_panels
 from .surface import Surface
+from .system import uses_fast
 
 __all__ = ["solve_capacitance"]
 
@@ -32,8 +33,12 @@ FloatArray = NDArray[np.float64]
 BoolArray = NDArray[np.bool_]
 Progress = Callable[..., None]
 
-#: Most panels of a dense solve; beyond, factorisation takes minutes a pass.
-MOST_PANELS = 15_000
+#: Most panels that refinement goes to with the dense matrix, whose factorisation takes minutes a pass beyond, and with
+#: the fast operator, where a pass takes minutes. Meshes that start with more are solved as far as memory allows.
+MOST_DENSE, MOST_FAST = 15_000, 400_000
+METHODS = ("auto", "dense", "fast")
+#: Most panels that edges are graded to before the first pass.
+MOST_AT_START = 3_750
 #: Relative error of the matrix entries, and with it of the energies, that the rules of
 #: :mod:`daraf.bem.pairs` leave at worst; expanded uncertainty of the line "integration".
 INTEGRATION = 1e-6
@@ -83,13 +88,23 @@ class _Judgement:
         return float(excess[i, j]), (i, j), max(self.lines, key=lambda line: self.lines[line][i, j])
 
 
-def solve_capacitance(
+@dataclass(frozen=True)
+class _Means:
+    """How a solve is done and what it may use: bytes of memory, panels."""
+
+    method: str
+    limit: int
+    most: int
+
+
+def solve_capacitance(  # noqa: PLR0913  the one door to the main job
     surface: Surface,
     *,
     relative_permittivity: float = 1.0,
     accuracy: float = 0.01,
     memory_limit: int | None = None,
     facets: str = "auto",
+    method: str = "auto",
     want: Sequence[tuple[int, int]] | None = None,
     rounding: FloatArray | None = None,
     progress: Progress | None = None,
@@ -113,6 +128,10 @@ def solve_capacitance(
     facets : {"auto", "round", "as drawn"}
         What the facets mean, see :func:`daraf.bem.facets.facet_meaning`: whether edges that turn gently in rows stand
         for a smooth surface, whose capacitance is wanted, or the facets are the part.
+    method : {"auto", "dense", "fast"}
+        How the equations are solved: "dense" by factorising the full matrix, "fast" by the fast multipole method and
+        conjugate gradients, "auto" by whichever is quicker for so many panels. The values agree within their
+        uncertainties.
     want : sequence of (int, int), optional
         Entries of the matrix that must meet the accuracy; all by default. Panels are spent on these alone, and
         the uncertainty of the others is still given.
@@ -137,6 +156,8 @@ def solve_capacitance(
         raise InputError(f"accuracy must lie between 0 and 1, got {accuracy:g}")
     if not 1.0 <= relative_permittivity < float("inf"):
         raise InputError(f"relative permittivity must be at least 1, got {relative_permittivity:g}")
+    if method not in METHODS:
+        raise InputError(f"{method!r} is no method; write one of {', '.join(map(repr, METHODS))}")
     meaning = facet_meaning(facets)
     accuracies = _accuracies(accuracy, want, surface.n_conductors)
     if rounding is not None:
@@ -145,9 +166,10 @@ def solve_capacitance(
     limit = memory_limit if memory_limit is not None else int(0.9 * free_memory())
     report = progress or _silent
     report("panels", 0.0, 1.0, "")
-    start, round_parts, coarse, notices, bodies, most = _prepare(surface, meaning, limit)
+    start, round_parts, coarse, notices, bodies = _prepare(surface, meaning, limit, method)
     doubts = ShapeDoubts(round_parts, rounding, coarse)
-    goal = Goal(accuracy, most, surface.conductor_names)
+    means = _Means(method, limit, _most_panels(len(start.panels), surface.n_conductors, limit, method))
+    goal = Goal(accuracy, means.most, surface.conductor_names)
     seconds = {"panels": time.perf_counter() - begin}
     passes: list[Pass] = []
     plan: Plan | None = start
@@ -155,13 +177,13 @@ def solve_capacitance(
     interrupted = False
     try:
         while plan is not None:
-            result, judgement = _pass(plan, doubts, accuracies, goal, passes, report)
+            result, judgement = _pass(plan, doubts, accuracies, goal, passes, report, method)
             if plan.before is not None:
                 previous = plan.before.density[plan.parent]
             for stage, time_spent in result.seconds.items():
                 seconds[stage] = seconds.get(stage, 0.0) + time_spent
             notices += [notice for notice in result.notices if notice not in notices]
-            plan = None if judgement.reached or judgement.pointless else _next(result, judgement, most, limit)
+            plan = None if judgement.reached or judgement.pointless else _next(result, judgement, means)
     except KeyboardInterrupt:
         if result is None:
             raise
@@ -184,9 +206,12 @@ def solve_capacitance(
         reached=judgement.reached,
         panels=result.panels,
         densities=np.ascontiguousarray(farads * result.density.T),
-        passes=[replace(p, maxwell=farads * p.maxwell, estimate=farads * p.estimate) for p in passes],
-        method="dense Cholesky",
-        iterations=0,
+        passes=[
+            replace(p, maxwell=farads * p.maxwell, estimate=farads * p.estimate, spread=farads * p.spread)
+            for p in passes
+        ],
+        method=result.method,
+        iterations=sum(p.iterations for p in passes),
         seconds=seconds,
         peak_memory_bytes=peak_memory(),
         warnings=notices + _guards(surface, judgement, value, total),
@@ -216,14 +241,14 @@ def _silent(stage: str, done: float, total: float, note: str = "") -> None:
 
 
 def _prepare(
-    surface: Surface, meaning: str, limit: int
-) -> tuple[Plan, Facets | None, FloatArray | None, list[Notice], tuple[BodyAccount, ...], int]:
-    """Panels to start from, round parts, what coarsening moved, notices, bodies, the most panels there is room for."""
+    surface: Surface, meaning: str, limit: int, method: str
+) -> tuple[Plan, Facets | None, FloatArray | None, list[Notice], tuple[BodyAccount, ...]]:
+    """Panels to start from, the round parts, what coarsening moved, notices, what became of the bodies."""
     regions, notices = find_regions(surface)
     creases = find_creases(surface, regions, greatest_turn=greatest_turn(meaning))
     panels, more = panel_regions(surface, regions, creases=creases)
-    refuse_if_too_large(len(panels), limit)
-    most = max(len(panels), min(MOST_PANELS, panels_that_fit(limit)))
+    refuse_if_too_large(len(panels), surface.n_conductors, limit, fast=method != "dense")
+    most = _most_panels(len(panels), surface.n_conductors, limit, method)
     round_parts = None if meaning == "as drawn" else find_facets(surface, regions, creases)
     coarse = region_deviation(surface, regions)
     if coarse is not None and round_parts is not None:
@@ -233,22 +258,41 @@ def _prepare(
     decays = side_decays(surface, creases, panels)
     if round_parts is not None:
         panels = move_facets(round_parts, panels)
-    start = starting_panels(panels, decays, max(len(panels), most // 4))
+    start = starting_panels(panels, decays, max(len(panels), min(MOST_AT_START, most // 4)))
     plan = Plan(start.panels, start.symmetric, start.sides, np.zeros(surface.n_bodies, dtype=np.int64))
-    return plan, round_parts, coarse, notices, bodies, most
+    return plan, round_parts, coarse, notices, bodies
+
+
+def _most_panels(n_panels: int, n_conductors: int, limit: int, method: str) -> int:
+    """Most panels that refinement of so many may go to."""
+    most = MOST_DENSE if method == "dense" else MOST_FAST
+    return max(n_panels, min(most, panels_that_fit(limit, n_conductors, fast=method != "dense")))
 
 
 def _pass(
-    plan: Plan, doubts: ShapeDoubts, accuracies: FloatArray, goal: Goal, passes: list[Pass], report: Progress
+    plan: Plan,
+    doubts: ShapeDoubts,
+    accuracies: FloatArray,
+    goal: Goal,
+    passes: list[Pass],
+    report: Progress,
+    method: str,
 ) -> tuple[PassResult, _Judgement]:
     start = time.perf_counter()
     note = f"pass {len(passes) + 1}, {len(plan.panels)} panels"
-    result = run_pass(plan, lambda stage, done, total: report(stage, done, total, note))
+
+    def told(stage: str, done: float, total: float) -> None:
+        report(stage, done, total, note)
+
+    result = run_pass(plan, told, accuracy=goal.accuracy, method=method)
     judgement = _judge(result, doubts, accuracies, len(passes) + 1)
-    flat = result.gains.reshape(-1, result.gains.shape[2])
+    estimate, n = result.limit - result.value, len(result.value)
     excess, entry, cause = judgement.worst
-    spent = time.perf_counter() - start
-    passes.append(Pass(len(result.panels), result.value, flat.T @ flat, spent, excess * goal.accuracy, entry, cause))
+    spent, largest = time.perf_counter() - start, excess * goal.accuracy
+    spread = judgement.total[:, :n]
+    passes.append(
+        Pass(len(result.panels), result.value, estimate, spread, spent, largest, entry, cause, result.iterations)
+    )
     report("pass", float(len(passes)), 0.0, f"{note}: {goal.standing(passes)}")
     return result, judgement
 
@@ -261,29 +305,38 @@ def _judge(result: PassResult, doubts: ShapeDoubts, accuracy: FloatArray, n_pass
     scale = np.sqrt(np.outer(np.diag(result.limit), np.diag(result.limit)))
     lines = {
         "discretisation": extrapolation_uncertainty(
-            result.feared,
-            result.feared_decay,
-            result.realised,
-            result.drift,
+            result.first,
+            result.second,
+            result.unseen,
             result.panels.body,
             result.change,
             sums,
             result.refined,
+            result.realised,
         ),
         "integration": INTEGRATION * np.hstack([scale, scale.max(axis=1, keepdims=True)]),
+        **{cause: np.hstack([part, part.sum(axis=1, keepdims=True)]) for cause, part in result.open.items()},
         **doubts.lines(result.panels, result.density, sums),
     }
+    # a weak coupling that the estimate moves by as much as is left of it is not known better than that
+    added = np.abs((result.limit - result.value) @ sums)
+    unsure = added * np.minimum(added / np.maximum(np.abs(value), 1e-300), 1.0)
+    lines["discretisation"] = np.maximum(lines["discretisation"], unsure)
     total = np.sqrt(sum(line**2 for line in lines.values()))
     return _Judgement(value, lines, total, accuracy_targets(value[:, :n], accuracy), n_passes)
 
 
-def _next(result: PassResult, judgement: _Judgement, most: int, limit: int) -> Plan | None:
+def _next(result: PassResult, judgement: _Judgement, means: _Means) -> Plan | None:
     """Plan of the next pass, or None if there is no room for it."""
     n = len(judgement.value)
     plan = plan_next(result, judgement.lines["discretisation"][:, :n] / judgement.targets**2)
-    if len(plan.panels) > most or dense_bytes(len(plan.panels), len(result.panels)) > limit:
+    if len(plan.panels) > means.most:
         return None
-    return plan
+    if uses_fast(len(plan.panels), means.method):
+        needed = fast_bytes(len(plan.panels), n) + fast_bytes(len(result.panels), n)
+    else:
+        needed = dense_bytes(len(plan.panels), len(result.panels))
+    return plan if needed <= means.limit else None
 
 
 def _guards(surface: Surface, judgement: _Judgement, value: FloatArray, total: FloatArray) -> list[Notice]:

@@ -24,6 +24,7 @@ __all__ = [
     "edge_angles",
     "facet_offsets",
     "find_creases",
+    "offsets_with_ends",
     "smooth_edges",
 ]
 
@@ -48,6 +49,10 @@ SAME_AXIS = 0.3
 #: Where the normal leaves a facet's by more than this many of its greatest turns, as at the tip of a cone,
 #: there is no smooth surface and the facet's normal is taken.
 TIP = 1.5
+#: Share of what a facet's distance owes to the edges that run inward from a sharp edge, or from a rim, which is not
+#: sure: the law of the charge is that of a straight edge with flat sides. Measured on lenses of 90 to 160 degrees,
+#: hemispheres and bowls: 0.17 and 0.01 at most.
+END_DOUBT, RIM_DOUBT = 0.2, 0.02
 #: Regions with more edges than this are no strips.
 MOST_SIDES = 64
 
@@ -347,7 +352,54 @@ def facet_offsets(surface: Surface, normals: FloatArray) -> FloatArray:
     (n_triangles,) float, m
         Negative where the surface is concave.
     """
+    first, second = _half_turns(surface, normals)
+    return np.asarray((first + second).sum(axis=1) / 24)
+
+
+def offsets_with_ends(surface: Surface, creases: Creases, normals: FloatArray) -> tuple[FloatArray, FloatArray]:
+    """Distance of the smooth surface from each flat triangle as far as the charge feels it.
+
+    As `facet_offsets`, but where the smooth surface ends, at a sharp edge or a rim, the normal at the end knows one
+    side only: along an edge that runs inward from there the other half of the turn is taken twice. Charge crowds at
+    the end, where the surface does not lie outside the facet. Its square goes as x^p with the distance x, with
+    p = -2 turn/(pi + turn) at a sharp edge; at a rim the difference of the squares on both sides goes as x^(-1/2).
+    The mean of x (1 - x) with that weight is 6 (1 + p)/((2 + p)(3 + p)) of the plain one.
+
+    Returns
+    -------
+    offset : (n_triangles,) float, m
+    doubt : (n_triangles,) float, m
+        What is not sure of it, for the edges that run inward from an end: `END_DOUBT` or `RIM_DOUBT` of their part.
+    """
+    turn = np.maximum(creases.angles, 0.0)
+    power = np.where(creases.rim, -0.5, -2.0 * turn / (np.pi + turn))
+    weight = 6.0 * (1.0 + power) / ((2.0 + power) * (3.0 + power))
+    sharp = creases.rim | (creases.between & ~creases.smooth)
+    of_vertex = np.full(len(surface.vertices), np.inf)
+    np.minimum.at(of_vertex, creases.edges.vertices[sharp].reshape(-1), np.repeat(weight[sharp], 2))
+    doubt = np.full(len(surface.vertices), END_DOUBT)
+    doubt[creases.edges.vertices[creases.rim]] = RIM_DOUBT
+    here = of_vertex[surface.triangles]
+    there = np.roll(here, -1, axis=1)
+    first, second = _half_turns(surface, normals)
+    leaves, arrives = np.isfinite(here) & ~np.isfinite(there), np.isfinite(there) & ~np.isfinite(here)
+    # the normal at the end turns with the surface along the end, not inward: that half is all that the other half has
+    # in excess of it
+    known, inward = np.where(arrives, second, first), np.where(arrives, first - second, second - first)
+    inward = 2.0 * np.where(leaves | arrives, inward * np.where(leaves, here, np.where(arrives, there, 0.0)), 0.0)
+    total = np.where(leaves | arrives, 2.0 * known + inward, first + second)
+    sure = doubt[surface.triangles]
+    unsure = np.abs(inward) * np.where(leaves, sure, np.roll(sure, -1, axis=1))
+    return total.sum(axis=1) / 24, unsure.sum(axis=1) / 24
+
+
+def _half_turns(surface: Surface, normals: FloatArray) -> tuple[FloatArray, FloatArray]:
+    """Edge times the turn of the normal from its first corner to the facet, and on to its second, (n_triangles, 3)."""
     points = surface.vertices[surface.triangles]
     along = np.roll(points, -1, axis=1) - points
-    turn = np.roll(normals, -1, axis=1) - normals
-    return np.asarray(np.einsum("tki,tki->t", along, turn) / 24)
+    own = np.cross(along[:, 0], along[:, 1])
+    length = np.linalg.norm(own, axis=1)
+    own = (own / np.where(length > 0, length, 1.0)[:, None])[:, None, :]
+    first = np.einsum("tki,tki->tk", along, own - normals)
+    second = np.einsum("tki,tki->tk", along, np.roll(normals, -1, axis=1) - own)
+    return first, second

@@ -19,9 +19,20 @@ from dataclasses import dataclass, replace
 
 import numpy as np
 from numpy.typing import NDArray
+from scipy.spatial import cKDTree
 
-from .creases import GREATEST_TURN, WIDE_TURN, Creases, corner_normals, facet_offsets
+from .creases import (
+    GREATEST_TURN,
+    LEAST_TURN,
+    WIDE_TURN,
+    Creases,
+    corner_normals,
+    find_creases,
+    offsets_with_ends,
+)
 from .errors import InputError
+from .frames import panel_frames
+from .hidden import nearest_other
 from .panels import Panels
 from .regions import Regions
 from .surface import Surface
@@ -32,12 +43,26 @@ FloatArray = NDArray[np.float64]
 IntArray = NDArray[np.int64]
 BoolArray = NDArray[np.bool_]
 
-#: Expanded uncertainty (k = 2) as a share of the first-order change by a facet; to it is added this multiple of the
-#: square of the facet's depth per width, for what is of second order. Rims: likewise a share, their coefficient is
-#: read off one panel. Measured with ``scripts/coverage`` on the exact set.
-FACET_SHARE, DEPTH_SHARE, RIM_SHARE = 0.006, 0.65, 0.08
 #: What facets may be said to mean.
 FACETS = ("auto", "round", "as drawn")
+#: Expanded uncertainty (k = 2) as a share of the first-order change by a facet.
+FACET_SHARE = 0.004
+#: To it is added this multiple of the square of the facet's depth per width, for what is of second order: of flat pairs
+#: of triangles, where 2.0 was seen on tori of 8 to 16 sides and 1.5 on spheres of 6 rings, and of single triangles,
+#: where it was 0.6 on spheres and spheroids.
+DEPTH_SHARE, SINGLE_DEPTH_SHARE = 2.0, 0.8
+#: Rims: likewise a share; their coefficient is read off one panel.
+RIM_SHARE = 0.08
+#: Near another conductor the facet's hollow counts once more, in second order: this multiple of its depth per gap. The
+#: square of the depth varies over a triangle of a sphere by a tenth about its mean; both sides of the gap may be round.
+GAP_SHARE = 0.2
+#: Gaps beyond this multiple of the depth are wide: nothing is added.
+WIDE_GAP = 30.0
+#: Edges of partly round bodies that turn by less than this may stand for round ones, rad.
+DOUBTFUL_TURN = np.radians(75.0)
+#: What rounding them would change counts this often: to first order it falls short where edges are steep. Measured on
+#: spheroids of 4 to 1 and 5 to 1, an ellipsoid and tori of 6 to 10 sides: true over first order 0.6 to 1.4.
+ROUNDER_SHARE = 1.5
 #: Neighbouring turns of one round edge differ at most by this factor.
 _RIM_SIMILAR = 2.5
 
@@ -50,8 +75,8 @@ class Facets:
     ----------
     offset : (n_regions,) float, m
         Mean outward distance of the smooth surface from each flat region; zero where nothing is round.
-    share : (n_regions,) float
-        Share of what the offset changes that is not known.
+    doubt : (n_regions,) float, m
+        Distance that is not known: a share of the offset, and all of it where it is not sure that anything is round.
     edge_ends : (n_edges, 2, 3) float, m
         Straight edges, at rims or sharp, that stand for round ones; once for each region at the edge.
     edge_region : (n_edges,) int
@@ -64,7 +89,7 @@ class Facets:
     """
 
     offset: FloatArray
-    share: FloatArray
+    doubt: FloatArray
     edge_ends: FloatArray
     edge_region: IntArray
     edge_out: FloatArray
@@ -74,7 +99,7 @@ class Facets:
     @property
     def any(self) -> bool:
         """Whether anything is round."""
-        return bool(np.any(self.offset)) or len(self.edge_offset) > 0
+        return bool(np.any(self.offset) or np.any(self.doubt)) or len(self.edge_offset) > 0
 
 
 def facet_meaning(word: str) -> str:
@@ -124,24 +149,80 @@ def find_facets(surface: Surface, regions: Regions, creases: Creases) -> Facets:
     -------
     Facets
     """
-    offsets = facet_offsets(surface, corner_normals(surface, regions, creases))
-    points = surface.vertices[surface.triangles]
-    areas = 0.5 * np.linalg.norm(np.cross(points[:, 1] - points[:, 0], points[:, 2] - points[:, 0]), axis=1)
-    used = regions.triangle_region >= 0
-    total, weighted = np.zeros(len(regions)), np.zeros(len(regions))
-    np.add.at(total, regions.triangle_region[used], areas[used])
-    np.add.at(weighted, regions.triangle_region[used], (areas * offsets)[used])
-    offset = weighted / np.where(total > 0, total, 1.0)
+    offset, ending, total = _mean_offsets(surface, regions, creases)
     # rounding of the normals is no roundness
     size = np.sqrt(total)
     offset[np.abs(offset) < 1e-9 * size] = 0.0
+    used = regions.triangle_region >= 0
+    points = surface.vertices[surface.triangles]
     low, high = np.full((len(regions), 3), np.inf), np.full((len(regions), 3), -np.inf)
     of, corners = regions.triangle_region[used], points[used]
     np.minimum.at(low, of, corners.min(axis=1))
     np.maximum.at(high, of, corners.max(axis=1))
     # how deep the true surface lies over the narrow way across the facet
     depth = offset * np.linalg.norm(high - low, axis=1) / np.where(total > 0, total, 1.0)
-    return Facets(offset, FACET_SHARE + DEPTH_SHARE * depth**2, *_round_edges(surface, regions, creases))
+    unsure = ending / np.maximum(np.abs(offset), 1e-300)
+    second_order = np.where(np.diff(regions.starts) == 1, SINGLE_DEPTH_SHARE, DEPTH_SHARE)
+    share = FACET_SHARE + second_order * depth**2 + np.minimum(unsure, 1.0)
+    share += GAP_SHARE * np.abs(offset) / _gaps(surface, regions, np.abs(offset))
+    doubt = share * np.abs(offset) + _if_rounder(surface, regions, creases, offset)
+    return Facets(offset, doubt, *_round_edges(surface, regions, creases))
+
+
+def _mean_offsets(surface: Surface, regions: Regions, creases: Creases) -> tuple[FloatArray, FloatArray, FloatArray]:
+    """Mean distance of the smooth surface from each region, what is not sure of it where it ends, and the area."""
+    found = offsets_with_ends(surface, creases, corner_normals(surface, regions, creases))
+    points = surface.vertices[surface.triangles]
+    areas = 0.5 * np.linalg.norm(np.cross(points[:, 1] - points[:, 0], points[:, 2] - points[:, 0]), axis=1)
+    used = regions.triangle_region >= 0
+    sums = np.zeros((3, len(regions)))
+    for row, values in zip(sums, (*found, np.ones(len(points))), strict=True):
+        np.add.at(row, regions.triangle_region[used], (areas * values)[used])
+    area = np.where(sums[2] > 0, sums[2], 1.0)
+    return sums[0] / area, sums[1] / area, sums[2]
+
+
+def _if_rounder(surface: Surface, regions: Regions, creases: Creases, offset: FloatArray) -> FloatArray:
+    """How far each region would move if steeper edges of the same bodies stood for round ones too, (n_regions,) m.
+
+    A body whose facets turn gently here and steeply there, as round the rim of a flat ellipsoid, may be round all
+    over; one without any smooth edge is taken as it is.
+    """
+    bent = creases.smooth & (np.abs(creases.angles) > LEAST_TURN)
+    owner = surface.triangle_body[creases.edges.triangles[bent, 0]]
+    partly = np.isin(regions.body, np.unique(owner))
+    steep = creases.between & ~creases.smooth & (np.abs(creases.angles) < DOUBTFUL_TURN)
+    if not steep.any() or not partly.any():
+        return np.zeros(len(regions))
+    rounder = find_creases(surface, regions, edges=creases.edges, greatest_turn=DOUBTFUL_TURN)
+    # triangles that lie singly, not in flat pairs, come from a doubly curved surface however unevenly they turn
+    single = (np.diff(regions.starts) == 1)[regions.triangle_region[creases.edges.triangles]].all(axis=1)
+    rounder = replace(rounder, smooth=rounder.smooth | (steep & single))
+    moved, _, _ = _mean_offsets(surface, regions, rounder)
+    return np.where(partly, ROUNDER_SHARE * np.abs(moved - offset), 0.0)
+
+
+def _gaps(surface: Surface, regions: Regions, depth: FloatArray) -> FloatArray:
+    """Distance of each region's middle from the nearest other conductor, infinite where it is wide, (n_regions,) m."""
+    gap = np.full(len(regions), np.inf)
+    points = surface.vertices[surface.triangles]
+    centres, conductor = points.mean(axis=1), surface.body_conductor[surface.triangle_body]
+    reach = np.linalg.norm(points - centres[:, None], axis=2).max()
+    hollow, of_region = np.flatnonzero(depth > 0), surface.body_conductor[regions.body]
+    for number in range(surface.n_conductors if surface.n_conductors > 1 else 0):
+        rows = hollow[of_region[hollow] == number]
+        others = np.flatnonzero(conductor != number)
+        if len(rows) == 0:
+            continue
+        nearest = cKDTree(centres[others]).query(regions.origins[rows])[0]
+        rows = rows[nearest - reach < WIDE_GAP * depth[rows]]
+        frames = panel_frames(points[others][:, [0, 1, 2, 2]], largest_rule=0)
+        distance, whose = np.empty(len(rows)), np.empty(len(rows), dtype=np.int64)
+        owner = np.full(len(rows), number)
+        middles, limits = np.ascontiguousarray(regions.origins[rows]), WIDE_GAP * depth[rows]
+        nearest_other(middles, owner, limits, frames, conductor[others], distance, whose)
+        gap[rows] = np.where(distance < limits, np.maximum(distance, depth[rows]), np.inf)
+    return gap
 
 
 def _round_edges(
@@ -272,7 +353,7 @@ def facet_uncertainty(facets: Facets, panels: Panels, density: FloatArray, weigh
         Expanded, k = 2: a share of the first-order change, without regard to sign; the share grows with the depth
         of the facets, since what is left is of second order. Multiply by 4 pi eps for farads.
     """
-    moved = 4.0 * np.pi * (facets.share * np.abs(facets.offset))[panels.region] * panels.areas
+    moved = 4.0 * np.pi * facets.doubt[panels.region] * panels.areas
     combined = density @ weights
     size, combined_size = np.abs(density), np.abs(combined)
     change = np.einsum("p,pi,pj->ij", moved, size, combined_size)
@@ -286,6 +367,10 @@ def _rim_factors(facets: Facets, panels: Panels) -> FloatArray:
     A panel of width w along the rim with the mean density of K / sqrt(d) has K = sigma sqrt(w) / 2.
     """
     shift = facets.edge_offset[:, None] * facets.edge_out
+    # the facets have moved along their normals as well
+    normals = np.zeros((len(facets.offset), 3))
+    normals[panels.region] = panels.normals
+    shift += (facets.offset[:, None] * normals)[facets.edge_region]
     edge, panel, side = _sides_on_edges(facets, panels, facets.edge_ends + shift[:, None, :], facets.edge_rim)
     factor = np.zeros(len(panels))
     length = np.linalg.norm(panels.corners[panel, (side + 1) % 4] - panels.corners[panel, side], axis=1)

@@ -21,9 +21,23 @@ from .pairs import middle_integral
 from .panels import Panels
 from .polygon import polygon_distance, polygon_potential
 
-__all__ = ["child_potentials", "two_level_indicator"]
+__all__ = [
+    "PANELS_AT_ONCE",
+    "PartPotentials",
+    "child_potentials",
+    "direct_part_potentials",
+    "part_integral",
+    "self_integrals",
+    "two_level_indicator",
+]
 
 FloatArray = NDArray[np.float64]
+PartPotentials = Callable[[FloatArray, NDArray[np.int64]], FloatArray]
+
+#: Panels whose parts are packed at once.
+PANELS_AT_ONCE = 4_000
+#: Pairs of panels per call of a kernel.
+_PAIRS_AT_ONCE = 400_000
 
 #: Centre distance over the sum of the radii of panel and source, beyond which one point on the part and one on
 #: the source, or two by two on the source, are enough.
@@ -31,17 +45,20 @@ _PART_FAR, _PART_FAR_2 = 6.0, 1.5
 
 
 @parallel_kernel
-def child_potentials(parts, frames, density, moments, first, last):
-    """Integrals of the potential of all panels over the parts of panels `first` <= p < `last`.
+def child_potentials(parts, wholes, frames, density, moments):
+    """Integrals of the potential of all panels over the parts of some of them.
 
     Parameters
     ----------
-    parts : (n, 4, FRAME_SIZE) float
+    parts : (m, 4, FRAME_SIZE) float
         Parts of each panel; one without area is passed over.
+    wholes : (m, FRAME_SIZE) float
+        Those panels.
     frames : (n, FRAME_SIZE) float
+        All panels.
     density : (n, n_conductors) float
         Bare charge densities.
-    moments : (n, 4, n_conductors) float
+    moments : (m, 4, n_conductors) float
         Written: ``sum_j density_j int_part int_j dS dS / r``.
 
     Notes
@@ -49,17 +66,17 @@ def child_potentials(parts, frames, density, moments, first, last):
     The rules are coarser than in the matrix: 1e-2 of a moment's *variation* over the panel is enough.
     """
     n_columns = density.shape[1]
-    for p in prange(first, last):
+    for p in prange(len(parts)):
         sums = np.zeros((4, n_columns))
         values = np.empty(4)
         for j in range(len(frames)):
-            x = frames[p, CENTROID] - frames[j, CENTROID]
-            y = frames[p, CENTROID + 1] - frames[j, CENTROID + 1]
-            z = frames[p, CENTROID + 2] - frames[j, CENTROID + 2]
-            radii = frames[p, RADIUS] + frames[j, RADIUS]
+            x = wholes[p, CENTROID] - frames[j, CENTROID]
+            y = wholes[p, CENTROID + 1] - frames[j, CENTROID + 1]
+            z = wholes[p, CENTROID + 2] - frames[j, CENTROID + 2]
+            radii = wholes[p, RADIUS] + frames[j, RADIUS]
             ratio2 = (x * x + y * y + z * z) / (radii * radii)
             for c in range(4):
-                values[c] = _part_integral(parts[p, c], frames[j], ratio2)
+                values[c] = part_integral(parts[p, c], frames[j], ratio2)
             for c in range(4):
                 for k in range(n_columns):
                     sums[c, k] += values[c] * density[j, k]
@@ -69,7 +86,7 @@ def child_potentials(parts, frames, density, moments, first, last):
 
 
 @kernel
-def _part_integral(part, source, ratio2):
+def part_integral(part, source, ratio2):
     """Integral of 1/r over a part of a panel and a source panel, to about 1e-2 of its variation.
 
     `ratio2` is the square of the distance of panel and source over the sum of their radii.
@@ -105,6 +122,22 @@ def _self_integrals(frames, values):
         values[p] = self_integral(frames[p])
 
 
+def self_integrals(corners: FloatArray) -> FloatArray:
+    """Double integrals of 1/r of panels with themselves, m3.
+
+    Parameters
+    ----------
+    corners : (n, 4, 3) float, m
+
+    Returns
+    -------
+    (n,) float
+    """
+    values = np.empty(len(corners))
+    _self_integrals(panel_frames(corners, largest_rule=0), values)
+    return values
+
+
 @parallel_kernel
 def _thirds_gram(parts, gram):
     """Galerkin matrices of the three parts of each triangle, (n, 3, 3)."""
@@ -116,11 +149,38 @@ def _thirds_gram(parts, gram):
                 gram[p, d, c] = gram[p, c, d]
 
 
+def direct_part_potentials(panels: Panels, density: FloatArray) -> PartPotentials:
+    """Potentials of parts by sums over all panels.
+
+    Parameters
+    ----------
+    panels : Panels
+    density : (n_panels, n_conductors) float
+        Bare charge densities.
+
+    Returns
+    -------
+    callable
+        ``part_potentials(parts, rows)`` of :func:`two_level_indicator`.
+    """
+    frames = panel_frames(panels.corners, largest_rule=4)
+    step = max(8, _PAIRS_AT_ONCE // len(frames))
+
+    def part_potentials(parts: FloatArray, rows: NDArray[np.int64]) -> FloatArray:
+        moments = np.empty((len(rows), parts.shape[1], density.shape[1]))
+        for first in range(0, len(rows), step):
+            here = slice(first, first + step)
+            child_potentials(parts[here], frames[rows[here]], frames, density, moments[here])
+        return moments
+
+    return part_potentials
+
+
 def two_level_indicator(
     panels: Panels,
-    density: FloatArray,
     self_terms: FloatArray,
     potentials: FloatArray,
+    part_potentials: PartPotentials,
     *,
     progress: Callable[[float, float], None] | None = None,
 ) -> FloatArray:
@@ -129,12 +189,13 @@ def two_level_indicator(
     Parameters
     ----------
     panels : Panels
-    density : (n_panels, n_conductors) float
-        Bare charge density per volt: the solution of ``A density = areas``.
     self_terms : (n_panels,) float, m3
         Diagonal of the Galerkin matrix.
     potentials : (n_panels, n_conductors) float
         The potential of each panel in each excitation.
+    part_potentials : callable
+        ``part_potentials(parts, rows)``: integrals of the solved potential, (k, 4, n_conductors) m3, over packed
+        parts (k, 4, FRAME_SIZE) of the panels `rows`.
     progress : callable, optional
         Told (panels done, panels in all).
 
@@ -145,23 +206,23 @@ def two_level_indicator(
         triangle of two orthonormal functions of its split in three. The sum over panels of
         ``gain_i gain_j`` estimates exact minus Galerkin value of entry (i, j).
     """
-    centre = panels.corners.reshape(-1, 3).mean(axis=0)
-    parts_corners = children(panels.corners - centre, panels.n_corners)
     n = len(panels)
-    parts = panel_frames(parts_corners.reshape(-1, 4, 3), largest_rule=4).reshape(n, 4, -1)
-    frames = panel_frames(panels.corners - centre, largest_rule=4)
-    moments = np.empty((n, 4, density.shape[1]))
-    block = max(8, 400_000 // n)
-    for first in range(0, n, block):
-        child_potentials(parts, frames, density, moments, first, min(n, first + block))
+    gains = np.zeros((n, 2, potentials.shape[1]))
+    for first in range(0, n, PANELS_AT_ONCE):
+        rows = np.arange(first, min(n, first + PANELS_AT_ONCE))
+        corners, n_corners = panels.corners[rows], panels.n_corners[rows]
+        # in the coordinates of the panels: the parts are compared with them
+        parts = panel_frames(children(corners, n_corners).reshape(-1, 4, 3), largest_rule=4)
+        parts = parts.reshape(len(rows), 4, -1)
+        moments = part_potentials(parts, rows)
+        residual = parts[:, :, AREA, None] * potentials[rows, None, :] - moments
+        quads, triangles = np.flatnonzero(n_corners == 4), np.flatnonzero(n_corners == 3)
+        here = np.zeros((len(rows), 2, potentials.shape[1]))
+        _quad_gains(corners[quads], residual[quads], self_terms[rows[quads]], here, quads)
+        _triangle_gains(parts[triangles], residual[triangles], here, triangles)
+        gains[rows] = here
         if progress is not None:
-            progress(min(n, first + block), n)
-    residual = parts[:, :, AREA, None] * potentials[:, None, :] - moments
-    gains = np.zeros((n, 2, density.shape[1]))
-    quads = np.flatnonzero(panels.n_corners == 4)
-    triangles = np.flatnonzero(panels.n_corners == 3)
-    _quad_gains(panels.corners[quads] - centre, residual[quads], self_terms[quads], gains, quads)
-    _triangle_gains(parts[triangles], residual[triangles], gains, triangles)
+            progress(rows[-1] + 1, n)
     return gains
 
 
@@ -173,9 +234,7 @@ def _quad_gains(
     sum_residual = residual.sum(axis=1)
     for slot, direction in enumerate((SPLIT_U, SPLIT_V)):
         pair = halves(corners, direction)
-        first, second = np.empty(len(chosen)), np.empty(len(chosen))
-        _self_integrals(panel_frames(pair[:, 0], largest_rule=0), first)
-        _self_integrals(panel_frames(pair[:, 1], largest_rule=0), second)
+        first, second = self_integrals(pair[:, 0]), self_integrals(pair[:, 1])
         # a(first, whole) from a(whole, whole) = a(1, 1) + a(2, 2) + 2 a(1, 2)
         share = 0.5 * (first + whole - second) / whole
         norm2 = first - share**2 * whole

@@ -7,12 +7,15 @@ from pathlib import Path
 
 from .errors import MemoryRefused
 
-__all__ = ["dense_bytes", "free_memory", "panels_that_fit", "peak_memory", "refuse_if_too_large"]
+__all__ = ["dense_bytes", "fast_bytes", "free_memory", "panels_that_fit", "peak_memory", "refuse_if_too_large"]
 
 #: Dense matrices of the current pass held at once: the matrix and its factor.
 _MATRICES = 2
 #: Bytes a panel costs apart from the matrices: packed geometry of itself, its parts and halves.
 _BYTES_PER_PANEL = 13_000
+#: Bytes a panel costs with the fast operator, and for each conductor besides: near integrals, moments, preconditioner,
+#: geometry; vectors of the iteration, gains. Measured by ``scripts/bench/scale.py --memory``.
+_FAST_BYTES_PER_PANEL, _FAST_BYTES_PER_COLUMN = 8_000, 400
 #: What the libraries and compiled kernels take, bytes.
 _BASE = 300 * 2**20
 
@@ -29,11 +32,32 @@ def dense_bytes(n_panels: int, n_known: int = 0) -> int:
     return _BASE + 8 * (_MATRICES * n_panels**2 + n_known**2) + _BYTES_PER_PANEL * n_panels
 
 
-def panels_that_fit(limit: int) -> int:
-    """Largest number of panels that a single dense pass fits into `limit` bytes."""
+def fast_bytes(n_panels: int, n_columns: int) -> int:
+    """Memory that a pass with the fast operator needs, bytes.
+
+    Parameters
+    ----------
+    n_panels, n_columns : int
+        Panels and conductors.
+    """
+    return _BASE + n_panels * (_FAST_BYTES_PER_PANEL + _FAST_BYTES_PER_COLUMN * n_columns)
+
+
+def panels_that_fit(limit: int, n_columns: int, *, fast: bool) -> int:
+    """Largest number of panels that a single pass fits into `limit` bytes.
+
+    Parameters
+    ----------
+    limit : int, bytes
+    n_columns : int
+        Conductors.
+    fast : bool
+        Whether the fast operator may be used.
+    """
     room = max(limit - _BASE, 0)
     b, a = _BYTES_PER_PANEL, 8 * _MATRICES
-    return int((-b + (b * b + 4.0 * a * room) ** 0.5) / (2.0 * a))
+    dense = int((-b + (b * b + 4.0 * a * room) ** 0.5) / (2.0 * a))
+    return max(dense, room // (fast_bytes(1, n_columns) - _BASE)) if fast else dense
 
 
 def free_memory() -> int:
@@ -70,8 +94,15 @@ def peak_memory() -> int:
     return int(peak if sys.platform == "darwin" else peak * 1024)
 
 
-def refuse_if_too_large(n_panels: int, limit: int) -> None:
-    """Refuse a dense solve that would not fit.
+def refuse_if_too_large(n_panels: int, n_columns: int, limit: int, *, fast: bool) -> None:
+    """Refuse a solve that would not fit.
+
+    Parameters
+    ----------
+    n_panels, n_columns : int
+    limit : int, bytes
+    fast : bool
+        Whether the fast operator may be used.
 
     Raises
     ------
@@ -79,9 +110,11 @@ def refuse_if_too_large(n_panels: int, limit: int) -> None:
         Naming what is needed, what there is and what would fit.
     """
     need = dense_bytes(n_panels)
+    if fast:
+        need = min(need, fast_bytes(n_panels, n_columns))
     if need > limit:
         raise MemoryRefused(
             f"{n_panels} panels need {need / 2**30:.1f} GiB and {limit / 2**30:.1f} GiB are free; about "
-            f"{panels_that_fit(limit)} panels would fit: export coarser surfaces, leave bodies out, or use a "
-            "machine with more memory"
+            f"{panels_that_fit(limit, n_columns, fast=fast)} panels would fit: export coarser surfaces, leave bodies "
+            "out, or use a machine with more memory"
         )

@@ -97,3 +97,9 @@ class Panels:
     def n_conductors(self) -> int:
         """Number of conductors."""
         return int(self.conductor.max()) + 1
+
+    @property
+    def lengths(self) -> FloatArray:
+        """Mean lengths along u (sides 0-1 and 3-2) and v (sides 1-2 and 0-3), (n, 2) m."""
+        sides = np.linalg.norm(np.roll(self.corners, -1, axis=1) - self.corners, axis=2)
+        return np.stack([0.5 * (sides[:, 0] + sides[:, 2]), 0.5 * (sides[:, 1] + sides[:, 3])], axis=1)

@@ -17,6 +17,9 @@ from .progress import ProgressCallback
 
 __all__ = ["loads", "loads_document"]
 
+#: Beyond so many panels the sums over all pairs of panels take minutes, and neither forces nor peak fields are given.
+MOST_PANELS = 30_000
+
 
 def loads(
     problem: Problem, solution: CapacitanceSolution, state: Excitation, *, progress: ProgressCallback | None = None
@@ -42,6 +45,9 @@ def loads(
     from daraf.bem.force import conductor_forces
     from daraf.bem.peak import peak_fields
 
+    if len(solution.panels) > MOST_PANELS:
+        text = f"forces and peak fields need sums over all pairs of panels, and are given up to {MOST_PANELS} panels"
+        return {"warnings": [{"code": "too-many-panels", "text": text}]}, {}
     begin = time.perf_counter()
     charges = stated_charges(problem.surface, solution, state, facets=problem.case.content.facets)
     forces = conductor_forces(charges, progress=progress)

@@ -87,6 +87,7 @@ def solve_case(
     case: Case,
     *,
     accuracy: float | None = None,
+    method: str | None = None,
     memory_limit: int | None = None,
     progress: ProgressCallback | None = None,
 ) -> Outcome:
@@ -98,6 +99,8 @@ def solve_case(
         From `load_case` or `make_case`.
     accuracy : float, optional
         Relative, overrides the case.
+    method : {"auto", "dense", "fast"}, optional
+        How the equations are solved, overrides the case.
     memory_limit : int, bytes, optional
     progress : callable, optional
         ``progress(stage, done, total, note)``.
@@ -116,6 +119,7 @@ def solve_case(
     return solve_problem(
         problem,
         accuracy=accuracy,
+        method=method,
         memory_limit=memory_limit,
         progress=progress,
         reading=time.perf_counter() - started,
@@ -126,6 +130,7 @@ def solve_problem(
     problem: Problem,
     *,
     accuracy: float | None = None,
+    method: str | None = None,
     memory_limit: int | None = None,
     progress: ProgressCallback | None = None,
     reading: float = 0.0,
@@ -136,6 +141,7 @@ def solve_problem(
     ----------
     problem : Problem
     accuracy : float, optional
+    method : str, optional
     memory_limit : int, bytes, optional
     progress : callable, optional
     reading : float, s
@@ -166,6 +172,7 @@ def solve_problem(
         accuracy=content.accuracy if accuracy is None else accuracy,
         memory_limit=memory_limit,
         facets=content.facets,
+        method=content.method if method is None else method,
         want=_wanted(problem),
         rounding=problem.rounding,
         progress=log,

@@ -325,6 +325,10 @@ class CaseContent(_Table):
     mend_within: PositiveLength | None = Field(None, description="nothing moves farther than this")  # type: ignore[valid-type]
     close_holes: PositiveLength | None = Field(None, description="largest hole that bold closes")  # type: ignore[valid-type]
     coarsen: Coarsening = "auto"
+    method: Literal["auto", "dense", "fast"] = Field(
+        "auto",
+        description="how the equations are solved: dense (full matrix), fast (multipoles, iteration), auto: by size",
+    )
     want: tuple[tuple[str, str], ...] = Field(
         (), description="couplings that must meet the accuracy, as pairs of conductors; all if left out"
     )

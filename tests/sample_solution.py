@@ -43,7 +43,7 @@ def sample_solution(surface, *, relative_permittivity=1.0, accuracy=0.01, reache
         interrupted=interrupted,
         panels=panels,
         densities=np.ascontiguousarray((maxwell / area)[:, panel_conductor]),
-        passes=[Pass(len(panels), maxwell, 0.5 * limits, 0.25)],
+        passes=[Pass(len(panels), maxwell, 0.5 * limits, limits, 0.25)],
         method="dense",
         iterations=0,
         seconds={"assembly": 0.25, "solution": 0.125},

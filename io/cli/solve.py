@@ -39,6 +39,11 @@ def add_arguments(parser: argparse.ArgumentParser) -> None:
         help="largest distance of facets from curved shapes (STEP), such as '0.02 mm' or '0.1 %%' of the size",
     )
     parser.add_argument("--accuracy", metavar="X", help="relative, such as '0.5 %%'; overrides the case (default 1 %%)")
+    parser.add_argument(
+        "--method",
+        choices=("auto", "dense", "fast"),
+        help="full matrix, or multipoles and iteration; overrides the case (default: by size)",
+    )
     add_mending(parser)
     parser.add_argument("--coarsen", metavar="X", help="auto, no, or a length within which round parts are coarsened")
     parser.add_argument("--markers", metavar="FILE", help="where to draw places at which conductors meet (.vtp)")
@@ -69,7 +74,7 @@ def run(args: argparse.Namespace) -> int:
     # Before the solve: an hour's work must not end at a folder that cannot be written.
     check_destination(out)
     with progress_for(quiet=args.quiet) as progress:
-        outcome = _solve(problem, accuracy, progress, seconds)
+        outcome = _solve(problem, accuracy, args.method, progress, seconds)
         progress("writing", 0, 1)
         outcome.write(out)
     _show(outcome, out, args)
@@ -134,10 +139,10 @@ def _read(args: argparse.Namespace, case_file: str | None) -> tuple["Problem", f
     return problem, time.perf_counter() - started, accuracy
 
 
-def _solve(problem: "Problem", accuracy: float | None, progress: Any, seconds: float) -> "Outcome":
+def _solve(problem: "Problem", accuracy: float | None, method: str | None, progress: Any, seconds: float) -> "Outcome":
     from daraf.io.outcome import solve_problem
 
-    return solve_problem(problem, accuracy=accuracy, progress=progress, reading=seconds)
+    return solve_problem(problem, accuracy=accuracy, method=method, progress=progress, reading=seconds)
 
 
 def _show(outcome: "Outcome", out: str, args: argparse.Namespace) -> None:

@@ -226,8 +226,8 @@ def test_a_far_body_of_complicated_shape_gets_few_panels_where_only_the_pair_is_
     """A comb of five blocks far away costs most of the panels unless the case says what it wants."""
     comb = [shapes.moved(shapes.block(0.2, 2.0, 2.0), 40.0 + 0.4 * k) for k in range(5)]
     surface = shapes.surface([[shapes.plate()], [shapes.moved(shapes.plate(), z=0.2)], comb])
-    pair = solve_capacitance(surface, accuracy=0.005, want=[(0, 1)])
-    everything = solve_capacitance(surface, accuracy=0.005)
+    pair = solve_capacitance(surface, accuracy=0.002, want=[(0, 1)])
+    everything = solve_capacitance(surface, accuracy=0.002)
     assert pair.reached
     spent, needed = (np.count_nonzero(s.panels.conductor == 2) for s in (pair, everything))
     fewest = solve_capacitance(surface, accuracy=0.5).panels

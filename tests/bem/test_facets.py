@@ -4,8 +4,10 @@ import pytest
 from daraf.bem import InputError, solve_capacitance
 from daraf.bem.constants import FOUR_PI_EPSILON_0
 from daraf.bem.creases import find_creases
-from daraf.bem.facets import facet_meaning, find_facets
+from daraf.bem.facets import _rim_factors, facet_meaning, find_facets, move_facets
+from daraf.bem.flats import panel_regions
 from daraf.bem.regions import find_regions
+from published import exact as reference
 from published import shapes
 from published.exact_tables import solid_cylinder
 
@@ -142,3 +144,43 @@ def test_old_and_wrong_words_for_facets():
     assert facet_meaning("true") == "as drawn"
     with pytest.raises(InputError, match="as drawn"):
         facet_meaning("smooth")
+
+
+@pytest.mark.parametrize(
+    ("mesh", "exact"),
+    [
+        (shapes.spheroid(1.0, 4.0, 2), reference.oblate_spheroid(4, 1)),
+        (shapes.spheroid(5.0, 1.0, 2), reference.prolate_spheroid(5, 1)),
+        (shapes.torus(5.0, 1.0, 36, 10), reference.torus(5, 1)),
+        (shapes.torus(2.0, 1.0, 24, 12), reference.torus(2, 1)),
+        (shapes.bowl(1.0, 2.0 * np.pi / 3.0, 32, 10), reference.bowl(1, 2.0 * np.pi / 3.0)),
+        (shapes.hemisphere(1.0, 32, 8), reference.hemisphere(1)),
+    ],
+    ids=["oblate", "prolate", "torus of 10 sides", "torus of 12 sides", "bowl", "hemisphere"],
+)
+def test_round_parts_with_steep_edges_and_ends_are_within_their_uncertainty(mesh, exact):
+    """The first three turn by more than 35 degrees an edge in places and may be round there or not."""
+    value, uncertainty = in_metres(solve_capacitance(shapes.surface([mesh]), accuracy=0.001))
+    assert abs(value - exact) < uncertainty
+
+
+def test_rims_of_curved_sheets_are_found_again_after_their_facets_moved():
+    surface, facets = facets_of(shapes.bowl(1.0, np.pi / 2, 32, 8))
+    regions = find_regions(surface)[0]
+    panels, _ = panel_regions(surface, regions, creases=find_creases(surface, regions))
+    factor = _rim_factors(facets, move_facets(facets, panels))
+    # one panel at each of the 32 edges of the rim
+    assert np.count_nonzero(factor) == 32
+
+
+def test_facets_near_another_conductor_are_doubted_more():
+    ball = shapes.icosphere(1.0, 2)
+    _, alone = facets_of(ball)
+    _, near = facets_of(ball, shapes.moved(shapes.icosphere(1.0, 2), x=2.05))
+    doubt, offset = near.doubt[: len(alone.doubt)], near.offset[: len(alone.offset)]
+    # the mesh of each ball is the same; rounding of the shift apart
+    np.testing.assert_allclose(offset, alone.offset, rtol=1e-9)
+    assert np.all(doubt > alone.doubt * (1.0 - 1e-9))
+    assert doubt.max() > 1.5 * alone.doubt.max()
+    # the far side sees a wide gap
+    assert np.count_nonzero(doubt > 1.001 * alone.doubt) < len(doubt) / 2

@@ -10,7 +10,7 @@ from daraf.bem.solution import Pass
 def passes(panels, uncertainties, power=2.0):
     nothing = np.zeros((2, 2))
     return [
-        Pass(n, nothing, nothing, 1e-6 * n**power, u, (0, 1), "facets")
+        Pass(n, nothing, nothing, nothing, 1e-6 * n**power, u, (0, 1), "facets")
         for n, u in zip(panels, uncertainties, strict=True)
     ]
 

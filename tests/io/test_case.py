@@ -166,7 +166,7 @@ def test_json_schema_names_every_key():
     assert schema["$schema"].endswith("2020-12/schema")
     assert schema["additionalProperties"] is False
     mending = {"mend", "mend_within", "close_holes", "coarsen"}
-    known = {"title", "unit", "facet_tolerance", "accuracy", "facets", "want", "medium", "conductor"}
+    known = {"title", "unit", "facet_tolerance", "accuracy", "facets", "method", "want", "medium", "conductor"}
     assert set(schema["properties"]) == known | mending
     for key in ("potential", "charge", "ground", "rotation", "shift", "about", "relative_permittivity"):
         assert f'"{key}"' in text

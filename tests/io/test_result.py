@@ -6,6 +6,7 @@ import os
 import resource
 import subprocess
 import sys
+from dataclasses import replace
 
 import numpy as np
 import pytest
@@ -56,6 +57,15 @@ def test_written_and_read_back(tmp_path, surface):
         assert np.array_equal(getattr(back.surface, name), getattr(surface, name)), name
     assert back.surface.conductor_names == surface.conductor_names
     assert back.surface.body_names == surface.body_names
+
+
+def test_names_that_look_like_markup_are_written_and_read_back(tmp_path, surface):
+    named = replace(surface, conductor_names=("<b>\"&amp;'", "x&y>z"), body_names=("<a/>", "&", '"'))
+    file = tmp_path / "surface.vtp"
+    file.write_bytes(surface_bytes(named, title="<title>"))
+    back = read_surface(file)
+    assert (back.conductor_names, back.body_names) == (named.conductor_names, named.body_names)
+    assert np.array_equal(back.densities, named.densities)
 
 
 def test_surface_file_carries_names_and_units(tmp_path, surface):

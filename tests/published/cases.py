@@ -16,6 +16,7 @@ from daraf.bem.constants import FOUR_PI_EPSILON_0
 from published import exact as X  # noqa: N812
 from published import shapes as S  # noqa: N812
 from published.exact_chains import confocal_ellipsoids, nested_shells, sphere_chain
+from published.exact_rectangles import TILT, rectangles
 from published.shapes import Mesh
 
 __all__ = ["CASES", "Case", "case_named", "entries"]
@@ -64,6 +65,8 @@ class Case:
         Of the answer.
     observe : callable
         From the solution to what `exact` gives, and its uncertainty, F or C.
+    want : sequence of (int, int), optional
+        Entries whose accuracy is asked; all unless given. Uncertainties of all are judged.
     """
 
     name: str
@@ -71,6 +74,7 @@ class Case:
     exact: Callable[[], ArrayLike]
     source: str
     observe: Callable[[CapacitanceSolution], Observation] = entries
+    want: tuple[tuple[int, int], ...] | None = None
 
     def reference(self) -> FloatArray:
         """What `observe` should give, F or C: (n, n), or (n,) charges."""
@@ -320,6 +324,59 @@ _NETWORKS = [
 ]
 
 
+def _at(mesh: Mesh, x: float = 0.0, z: float = 0.0) -> Mesh:
+    return S.moved(mesh, x, 0.0, z)
+
+
+def _rectangles(name: str, *meshes: Mesh, want: tuple[tuple[int, int], ...] | None = None) -> Case:
+    """Conductors made of rectangles, in an attitude that favours no axis."""
+    return Case(
+        name,
+        lambda: _each(*(S.turned(mesh, 0.6, (2, 1, 3)) for mesh in meshes)),
+        lambda: rectangles(name),
+        "graded collocation of a code of its own, see exact_rectangles.py",
+        want=want,
+    )
+
+
+#: All of three conductors but the coupling of the outer ones, which thousands of panels would be spent on.
+_NEIGHBOURS = ((0, 0), (1, 1), (2, 2), (0, 1), (1, 2))
+
+
+def _bracket() -> Mesh:
+    """Two unit squares that share an edge, at a right angle."""
+    corners = np.array([(1, 0, 0), (1, 1, 0), (0, 1, 0), (0, 0, 0), (0, 1, 1), (0, 0, 1)], dtype=np.float64)
+    return corners, np.array([(0, 1, 2), (0, 2, 3), (3, 2, 4), (3, 4, 5)], dtype=np.int64)
+
+
+_SQUARE, _BOX = S.plate(), S.cube()
+_ANGLES = [
+    # 20 and 22 mm in proportion: the edges of the outer sheets lie over the middle one, just inside its rim.
+    _rectangles("stacked", _at(_SQUARE, z=-0.1), S.plate(1.1, 1.1), _at(_SQUARE, z=0.1)),
+    # The coupling through the sheet between is 3e-4 of the self entries.
+    _rectangles("screened", _at(_SQUARE, z=-0.12), S.plate(4.0, 4.0), _at(_SQUARE, z=0.12), want=_NEIGHBOURS),
+    _rectangles("coplanar", _at(_SQUARE, -0.55), _at(_SQUARE, 0.55)),
+    _rectangles("offset", _SQUARE, _at(_SQUARE, 0.5, 0.2)),
+    _rectangles(
+        "leaning",
+        _at(S.turned(S.plate(0.5, 2.0), -TILT, (0, 1, 0)), z=0.1 + 0.25 * sin(TILT)),
+        S.plate(2.0, 3.0),
+    ),
+    _rectangles("strips", *(_at(S.plate(0.3, 2.0), x) for x in (-0.4, 0.0, 0.4))),
+    Case(
+        "bracket",
+        lambda: _one(_bracket()),
+        lambda: float(rectangles("bracket")[0, 0]),
+        "graded collocation of a code of its own, see exact_rectangles.py",
+    ),
+    _rectangles("cubes", _at(_BOX, -0.55), _at(_BOX, 0.55)),
+    _rectangles("cubes-in-row", _at(_BOX, -1.0), S.cube(0.5), _at(_BOX, 1.0)),
+    _rectangles("box-over-sheet", _at(S.block(1.0, 1.0, 0.5), z=0.35), S.plate(2.0, 2.0)),
+    # 20, 30 and 20 mm in proportion: a box in a closed one, and one beside.
+    _rectangles("shielded", _BOX, S.cube(1.5), _at(_BOX, 1.75), want=_NEIGHBOURS),
+]
+
+
 def _ball(radius: float, x: float) -> Mesh:
     return S.moved(S.icosphere(radius, 2), x=x)
 
@@ -346,4 +403,5 @@ CASES: tuple[Case, ...] = (
     *_PAIRS,
     *_ENCLOSURES,
     *_NETWORKS,
+    *_ANGLES,
 )

@@ -116,12 +116,16 @@ def judge(case: Case, accuracy: float, memory_limit: int | None = None) -> Verdi
     """
     surface = case.surface()
     start = time.perf_counter()
-    solution = solve_capacitance(surface, accuracy=accuracy, memory_limit=memory_limit)
+    solution = solve_capacitance(surface, accuracy=accuracy, memory_limit=memory_limit, want=case.want)
     seconds = time.perf_counter() - start
     exact = case.reference()
     value, spread = case.observe(solution)
     square = exact.ndim == 2
     target = accuracy_targets(exact, accuracy) if square else accuracy * np.abs(exact)
+    if case.want is not None:
+        asked = np.zeros_like(exact, dtype=bool)
+        asked[tuple(np.transpose(case.want))] = True
+        target = np.where(asked | asked.T, target, np.inf)
     floor = np.sqrt(np.outer(np.diag(exact), np.diag(exact))) if square else np.nanmax(np.abs(exact))
     scale = np.where(exact == 0.0, floor, np.abs(exact))
     known = np.isfinite(exact) & (np.triu(np.ones_like(exact)) > 0 if square else True)
