@@ -20,7 +20,7 @@ from .regions import Regions, find_regions
 from .solution import CapacitanceSolution
 from .surface import Surface
 
-__all__ = ["StatedCharges", "stated_charges"]
+__all__ = ["StatedCharges", "filled_density", "stated_charges"]
 
 FloatArray = NDArray[np.float64]
 
@@ -99,7 +99,7 @@ def stated_charges(
     round_parts = find_facets(surface, regions, creases)
     panels = solution.panels
     galerkin = np.asarray(state.potential @ solution.densities)
-    density = _filled(panels, galerkin, state.charge)
+    density = filled_density(panels, galerkin, state.charge)
     sign = np.sign(np.bincount(panels.conductor, density * panels.areas, len(state.charge)))
     # Hadamard's formula: dQ_i = (1/eps) int sigma_i sigma delta dS, sigma_i with conductor i alone at 1 V
     four_pi_epsilon = FOUR_PI_EPSILON_0 * solution.relative_permittivity
@@ -114,15 +114,26 @@ def stated_charges(
         panels=panels,
         density=density,
         galerkin=galerkin,
-        margin=_filled(panels, density, state.charge + sign * state.charge_uncertainty),
-        faceted=density if meaning == "as drawn" else _filled(panels, density, state.charge - change),
+        margin=filled_density(panels, density, state.charge + sign * state.charge_uncertainty),
+        faceted=density if meaning == "as drawn" else filled_density(panels, density, state.charge - change),
         previous=None if solution.previous is None else np.asarray(state.potential @ solution.previous),
         four_pi_epsilon=four_pi_epsilon,
     )
 
 
-def _filled(panels: Panels, density: FloatArray, charge: FloatArray) -> FloatArray:
-    """Add what is missing of each conductor's charge in proportion to the square of the density."""
+def filled_density(panels: Panels, density: FloatArray, charge: FloatArray) -> FloatArray:
+    """Add what is missing of each conductor's charge in proportion to the square of the density.
+
+    Parameters
+    ----------
+    panels : Panels
+    density : (n_panels,) float, C/m2
+    charge : (n_conductors,) float, C
+
+    Returns
+    -------
+    (n_panels,) float, C/m2
+    """
     weight = density**2
     total = np.bincount(panels.conductor, weight * panels.areas, len(charge))
     held = np.bincount(panels.conductor, density * panels.areas, len(charge))

@@ -18,6 +18,10 @@ from .surface import Surface
 
 __all__ = [
     "GREATEST_TURN",
+    "LEAST_TURN",
+    "SIMILAR_TURN",
+    "TANGENT_TURN",
+    "TANGENT_WIDTH",
     "WIDE_TURN",
     "Creases",
     "corner_normals",
@@ -44,6 +48,13 @@ SIMILAR_TURN = 2.5
 SIMILAR_WIDTH = 3.0
 #: A facet so many times wider than its smooth neighbour is a flat face that a fillet runs into.
 FLAT_WIDTH = 6.0
+#: Where two facets of a surface of even curvature meet, it turns by the mean of their arcs: at a narrow facet, by more
+#: toward a wide one than toward another narrow one. Where a fillet or a dome runs into a flat face or a straight strip
+#: it turns by half as much. Between half and 1.25, for facets at least so many times wider:
+TANGENT_TURN, TANGENT_WIDTH = 0.8, 1.5
+#: Two unit vectors are one direction if the smaller eigenvalue of their sum of squares is below this share of the
+#: larger: at the corners of a polygon of 700 sides, far above the rounding of single precision.
+SAME_DIRECTION = 1e-5
 #: Cosine of the largest angle between the turning axes of consecutive edges.
 SAME_AXIS = 0.3
 #: Where the normal leaves a facet's by more than this many of its greatest turns, as at the tip of a cone,
@@ -135,7 +146,12 @@ def _region_moments(surface: Surface, regions: Regions) -> FloatArray:
 
 
 def find_creases(
-    surface: Surface, regions: Regions, *, edges: MeshEdges | None = None, greatest_turn: float = GREATEST_TURN
+    surface: Surface,
+    regions: Regions,
+    *,
+    edges: MeshEdges | None = None,
+    greatest_turn: float = GREATEST_TURN,
+    similar_turn: float = SIMILAR_TURN,
 ) -> Creases:
     """Classify all edges of a surface.
 
@@ -147,6 +163,8 @@ def find_creases(
         ``mesh_edges(surface.triangles)`` if known already.
     greatest_turn : float, rad
         Edges that turn by more are sharp.
+    similar_turn : float
+        Greatest ratio of neighbouring turns of one smooth surface.
 
     Returns
     -------
@@ -160,7 +178,7 @@ def find_creases(
     smooth = np.zeros(len(angles), bool)
     flat_end = np.zeros((len(angles), 2), bool)
     if len(gentle):
-        chosen, flats = _rows_of_edges(surface, regions, edges, gentle, angles[gentle])
+        chosen, flats = _rows_of_edges(surface, regions, edges, gentle, angles[gentle], similar_turn)
         smooth[gentle] = chosen
         flat_end[gentle] = flats
     smooth |= edges.consistent & (np.abs(angles) <= LEAST_TURN) & (sides >= 0).all(axis=1)
@@ -169,7 +187,7 @@ def find_creases(
 
 
 def _rows_of_edges(
-    surface: Surface, regions: Regions, edges: MeshEdges, gentle: IntArray, angles: FloatArray
+    surface: Surface, regions: Regions, edges: MeshEdges, gentle: IntArray, angles: FloatArray, similar_turn: float
 ) -> tuple[BoolArray, BoolArray]:
     """Find the edges that belong to a row of three; also which of their facets are flats at its end."""
     n = len(gentle)
@@ -190,7 +208,7 @@ def _rows_of_edges(
     one, two = one[different], two[different]
     ratio = np.abs(turn[one] / turn[two])
     cosine = np.einsum("ij,ij->i", axis[one], axis[two])
-    fits = (turn[one] * turn[two] > 0) & (ratio < SIMILAR_TURN) & (ratio > 1 / SIMILAR_TURN)
+    fits = (turn[one] * turn[two] > 0) & (ratio < similar_turn) & (ratio > 1 / similar_turn)
     fits &= cosine < -SAME_AXIS
     continues = np.zeros(2 * n, bool)
     continues[one[fits]] = True
@@ -202,8 +220,25 @@ def _rows_of_edges(
     follows = _follow(sides, axis, turn, smooth)
     wider = np.stack([proportion, 1 / np.maximum(proportion, 1e-300)], axis=1)
     limit = np.where(continues.reshape(n, 2), FLAT_WIDTH, SIMILAR_WIDTH)
-    flat = smooth[:, None] & (wider > limit)
-    return smooth | follows, flat
+    straight = wider > limit
+    straight |= _tangent(one[fits], two[fits], turn, wider)
+    return smooth | follows, smooth[:, None] & straight
+
+
+def _tangent(one: IntArray, two: IntArray, turn: FloatArray, wider: FloatArray) -> BoolArray:
+    """Sides of edges on which a wide facet is straight across, (n_edges, 2): the round one runs into it at a tangent.
+
+    `one` and `two` are sides, 2 e + (0 or 1), at opposite ends of the same facet between which the surface turns on.
+    """
+    onward = np.zeros(len(turn))
+    np.maximum.at(onward, one, np.abs(turn[two]))
+    beyond = onward.reshape(-1, 2)[:, ::-1]
+    halves = np.abs(turn).reshape(-1, 2) < TANGENT_TURN * beyond
+    found = (halves & (wider > TANGENT_WIDTH)).reshape(-1)
+    # a facet in a row that turns less and less is straight at neither end
+    doubted = np.zeros(len(turn), bool)
+    doubted[one[~found[two]]] = True
+    return np.asarray((found & ~doubted).reshape(-1, 2))
 
 
 def _join_over_diagonals(sides: IntArray, turns: FloatArray, sizes: IntArray) -> IntArray:
@@ -271,7 +306,8 @@ def corner_normals(surface: Surface, regions: Regions, creases: Creases) -> Floa
     The facets around a vertex are grouped across edges that are not sharp. The normal of a group is the sum
     of region normals weighted by sin(angle) / (product of the two sides), which is exact on a sphere:
     N. Max, "Weights for computing vertex normals from facet normals", J. Graphics Tools 4 (2) (1999) 1.
-    Where a fillet runs into a flat face the normal is that of the flat face.
+    Where a fillet or a dome runs into a flat face or a straight strip the normal is made perpendicular to the direction
+    in which that is straight: to the generator of a cylinder, to both sides of a flat face's corner.
 
     Parameters
     ----------
@@ -298,12 +334,9 @@ def corner_normals(surface: Surface, regions: Regions, creases: Creases) -> Floa
     product = (to_next**2).sum(axis=2) * (to_last**2).sum(axis=2)
     weight = np.linalg.norm(np.cross(to_next, to_last), axis=2) / np.maximum(product, 1e-300)
     weight[~usable] = 0.0
-    flat_corner = _flat_corners(regions, creases, triangles)
-    has_flat = np.zeros(n_groups, bool)
-    has_flat[group[flat_corner.reshape(-1)]] = True
-    weight[~flat_corner & has_flat[group].reshape(n, 3)] = 0.0
     sums = np.zeros((n_groups, 3))
     np.add.at(sums, group, (weight[:, :, None] * facet[:, None, :]).reshape(-1, 3))
+    _straighten(sums, group, surface, regions, creases)
     length = np.linalg.norm(sums, axis=1)
     result = (sums / np.where(length > 0, length, 1.0)[:, None])[group].reshape(n, 3, 3)
     steepest = np.zeros(len(regions))
@@ -325,13 +358,27 @@ def _facing_corners(triangles: IntArray, edges: MeshEdges, linked: IntArray) -> 
     return np.concatenate([p[0] for p in pairs]), np.concatenate([p[1] for p in pairs])
 
 
-def _flat_corners(regions: Regions, creases: Creases, triangles: IntArray) -> BoolArray:
-    """Corners of flat faces at vertices where a smooth surface runs into them, (n_triangles, 3)."""
+def _straighten(sums: FloatArray, group: IntArray, surface: Surface, regions: Regions, creases: Creases) -> None:
+    """Take from the sums of normals, (n_groups, 3), what is not perpendicular to straight directions at their vertex.
+
+    `group` numbers the groups of corners 3 t + k.
+    """
     edge, side = np.nonzero(creases.flat_end)
-    owner = regions.triangle_region[creases.edges.triangles[edge, side]]
-    base = np.int64(triangles.max()) + 1
-    marked = np.unique(owner[:, None] * base + creases.edges.vertices[edge])
-    return np.isin(regions.triangle_region[:, None] * base + triangles, marked)
+    if len(edge) == 0:
+        return
+    triangle, ends = creases.edges.triangles[edge, side], creases.edges.vertices[edge]
+    along = surface.vertices[ends[:, 1]] - surface.vertices[ends[:, 0]]
+    across = np.cross(regions.normals[regions.triangle_region[triangle]], along)
+    across /= np.linalg.norm(across, axis=1)[:, None]
+    straight = np.zeros((len(sums), 3, 3))
+    for end in (0, 1):
+        corner = np.argmax(surface.triangles[triangle] == ends[:, end, None], axis=1)
+        np.add.at(straight, group[3 * triangle + corner], across[:, :, None] * across[:, None, :])
+    bound = np.flatnonzero(straight.any(axis=(1, 2)))
+    strength, axes = np.linalg.eigh(straight[bound])
+    # one direction is left free whatever the mesh says
+    free = strength <= np.maximum(strength[:, :1], SAME_DIRECTION * strength[:, 2:])
+    sums[bound] = np.einsum("gik,gk,gjk,gj->gi", axes, free, axes, sums[bound])
 
 
 def facet_offsets(surface: Surface, normals: FloatArray) -> FloatArray:

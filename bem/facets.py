@@ -24,6 +24,9 @@ from scipy.spatial import cKDTree
 from .creases import (
     GREATEST_TURN,
     LEAST_TURN,
+    SIMILAR_TURN,
+    TANGENT_TURN,
+    TANGENT_WIDTH,
     WIDE_TURN,
     Creases,
     corner_normals,
@@ -60,6 +63,8 @@ GAP_SHARE = 0.2
 WIDE_GAP = 30.0
 #: Edges of partly round bodies that turn by less than this may stand for round ones, rad.
 DOUBTFUL_TURN = np.radians(75.0)
+#: So may those that turn more than the row they end, up to this ratio; the tip of a spheroid of 5 to 1 has 2.8.
+DOUBTFUL_RATIO = 2.0 * SIMILAR_TURN
 #: What rounding them would change counts this often: to first order it falls short where edges are steep. Measured on
 #: spheroids of 4 to 1 and 5 to 1, an ellipsoid and tori of 6 to 10 sides: true over first order 0.6 to 1.4.
 ROUNDER_SHARE = 1.5
@@ -194,7 +199,9 @@ def _if_rounder(surface: Surface, regions: Regions, creases: Creases, offset: Fl
     steep = creases.between & ~creases.smooth & (np.abs(creases.angles) < DOUBTFUL_TURN)
     if not steep.any() or not partly.any():
         return np.zeros(len(regions))
-    rounder = find_creases(surface, regions, edges=creases.edges, greatest_turn=DOUBTFUL_TURN)
+    rounder = find_creases(
+        surface, regions, edges=creases.edges, greatest_turn=DOUBTFUL_TURN, similar_turn=DOUBTFUL_RATIO
+    )
     # triangles that lie singly, not in flat pairs, come from a doubly curved surface however unevenly they turn
     single = (np.diff(regions.starts) == 1)[regions.triangle_region[creases.edges.triangles]].all(axis=1)
     rounder = replace(rounder, smooth=rounder.smooth | (steep & single))
@@ -232,7 +239,7 @@ def _round_edges(
     edges = creases.edges
     sharp = np.flatnonzero(creases.rim | (creases.between & ~creases.smooth))
     ends = edges.vertices[sharp]
-    before, after = _neighbours(ends)
+    (before, after), (previous, following) = _neighbours(ends)
     points = surface.vertices
     chord = points[ends[:, 1]] - points[ends[:, 0]]
     length = np.linalg.norm(chord, axis=1)
@@ -240,6 +247,8 @@ def _round_edges(
     along = _unit(chord)
     onward = _unit(points[after] - points[ends[:, 1]])
     first, second = along - into, onward - along
+    share = _shares(ends, length, (previous, following), first, second)
+    first, second = share[0][:, None] * first, share[1][:, None] * second
     size = np.linalg.norm(first, axis=1), np.linalg.norm(second, axis=1)
     # corners that turn by more are corners of the drawing
     gentle = 2.0 * np.sin(0.5 * creases.greatest_turn)
@@ -260,17 +269,52 @@ def _round_edges(
     return tuple(np.concatenate(column) for column in zip(*found, strict=True))  # type: ignore[return-value]
 
 
-def _neighbours(ends: IntArray) -> tuple[IntArray, IntArray]:
-    """Far vertex of the one other edge at the start and at the end of each edge; -1 unless there is just one."""
+def _neighbours(ends: IntArray) -> tuple[tuple[IntArray, IntArray], tuple[IntArray, IntArray]]:
+    """The one other edge at the start and at the end of each edge; -1 unless there is just one.
+
+    Returns its far vertex at both, and its number at both.
+    """
     n = len(ends)
     vertex = ends.T.reshape(-1)
     far = ends[:, ::-1].T.reshape(-1)
     order = np.argsort(vertex, kind="stable")
     count = np.bincount(vertex)[vertex[order]] if n else np.zeros(0, np.int64)
     paired = order[count == 2]
-    other = np.full(2 * n, -1, dtype=np.int64)
-    other[paired[0::2]], other[paired[1::2]] = far[paired[1::2]], far[paired[0::2]]
-    return other[:n], other[n:]
+    other, number = np.full(2 * n, -1, dtype=np.int64), np.full(2 * n, -1, dtype=np.int64)
+    for one, two in ((paired[0::2], paired[1::2]), (paired[1::2], paired[0::2])):
+        other[one], number[one] = far[two], two % n
+    return (other[:n], other[n:]), (number[:n], number[n:])
+
+
+def _shares(
+    ends: IntArray,
+    length: FloatArray,
+    neighbours: tuple[IntArray, IntArray],
+    first: FloatArray,
+    second: FloatArray,
+) -> tuple[FloatArray, FloatArray]:
+    """How much of the turn at its start and end belongs to each edge: 1, half to either of two that are round.
+
+    A straight side that an arc runs into at a tangent has none of it, and the arc's last chord has all, 2.
+    """
+    size = np.stack([np.linalg.norm(first, axis=1), np.linalg.norm(second, axis=1)])
+    n = len(ends)
+    straight = np.zeros((2, n), dtype=np.bool_)
+    at = []
+    for slot in (0, 1):
+        other = neighbours[slot]
+        here = np.where(ends[other, 0] == ends[:, slot], 0, 1)
+        straight[slot] = (other >= 0) & (length > TANGENT_WIDTH * length[other])
+        straight[slot] &= size[slot] < TANGENT_TURN * size[1 - here, other]
+        at.append((here, other))
+    # a chord of a curve that turns less and less is straight at neither end
+    ongoing = np.einsum("ij,ij->i", first, second) > 0
+    straight &= straight[::-1] | ~ongoing
+    shares = [
+        np.where(straight[slot], 0.0, np.where((other >= 0) & straight[here, other], 2.0, 1.0))
+        for slot, (here, other) in enumerate(at)
+    ]
+    return shares[0], shares[1]
 
 
 def _unit(vectors: FloatArray) -> FloatArray:

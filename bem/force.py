@@ -19,6 +19,7 @@ from .panels import Panels
 __all__ = ["Forces", "conductor_forces", "interaction"]
 
 FloatArray = NDArray[np.float64]
+IntArray = NDArray[np.int64]
 Progress = Callable[..., None]
 
 #: Pairs of panels per call of the kernel, so that progress moves and Ctrl-C answers.
@@ -130,7 +131,11 @@ def _lengths(parts: list[FloatArray], between: FloatArray, pressure: FloatArray)
 
 
 def interaction(
-    panels: Panels, density: FloatArray, *, progress: Callable[[float, float], None] | None = None
+    panels: Panels,
+    density: FloatArray,
+    *,
+    owner: IntArray | None = None,
+    progress: Callable[[float, float], None] | None = None,
 ) -> FloatArray:
     """Bare force and torque on every conductor by every other one.
 
@@ -139,26 +144,29 @@ def interaction(
     panels : Panels
     density : (n_panels, n_columns) float, C/m2
         Several distributions of charge; each acts on itself only.
+    owner : (n_panels,) int, optional
+        What each panel moves with, if not its conductor: its body, say.
     progress : callable, optional
         Told (pairs done, pairs in all).
 
     Returns
     -------
-    (n_columns, n_conductors, n_conductors, 6) float
+    (n_columns, n_owners, n_owners, 6) float
         Entry [k, a, b]: force (x, y, z) in C2/m2 and torque about the origin in C2/m on conductor a by b; divide
         by 4 pi eps for newtons. Swapping a and b changes the sign exactly.
     """
     centre = panels.corners.reshape(-1, 3).mean(axis=0)
     frames = panel_frames(panels.corners - centre)
     density = np.ascontiguousarray(density)
-    n, n_conductors, n_columns = len(panels), panels.n_conductors, density.shape[1]
-    total = np.zeros((n_conductors, n_conductors, n_columns, 6))
+    owner = panels.conductor if owner is None else np.ascontiguousarray(owner)
+    n, n_owners, n_columns = len(panels), int(owner.max()) + 1, density.shape[1]
+    total = np.zeros((n_owners, n_owners, n_columns, 6))
     first, done = 0, 0.0
     while first < n:
         last = min(n, first + max(8, _PAIRS_PER_BLOCK // (first + 1)))
-        rows = np.empty((last - first, n_conductors, n_columns, 6))
-        interaction_rows(frames, panels.conductor, density, rows, first, last)
-        np.add.at(total, panels.conductor[first:last], rows)
+        rows = np.empty((last - first, n_owners, n_columns, 6))
+        interaction_rows(frames, owner, density, rows, first, last)
+        np.add.at(total, owner[first:last], rows)
         done += 0.5 * (last * (last + 1.0) - first * (first + 1.0))
         first = last
         if progress is not None:

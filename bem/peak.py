@@ -25,7 +25,7 @@ from .frames import POINTS, panel_frames
 from .panels import Panels
 from .sides import two_sided_bodies
 
-__all__ = ["PeakField", "peak_fields", "wedge_exponent"]
+__all__ = ["PeakField", "Sharp", "peak_fields", "sharp_edges", "surface_sides", "wedge_exponent"]
 
 FloatArray = NDArray[np.float64]
 IntArray = NDArray[np.int64]
@@ -110,8 +110,8 @@ def peak_fields(charges: StatedCharges) -> list[PeakField]:
     panels = charges.panels
     stretch, sizes = _facet_shapes(charges)
     two_sided = two_sided_bodies(charges.surface, charges.creases)
-    outer, inner = _sides(charges, two_sided)
-    sharp = _sharp_edges(charges, outer, inner)
+    outer, inner = surface_sides(charges, two_sided)
+    sharp = sharp_edges(charges, outer, inner)
     field = np.maximum(outer, inner) / stretch
     result = []
     for conductor in range(panels.n_conductors):
@@ -131,8 +131,18 @@ def peak_fields(charges: StatedCharges) -> list[PeakField]:
     return result
 
 
-def _sides(charges: StatedCharges, two_sided: BoolArray) -> tuple[FloatArray, FloatArray]:
-    """Size of the field on the side of the normals and on the other one, (n,) V/m each."""
+def surface_sides(charges: StatedCharges, two_sided: BoolArray) -> tuple[FloatArray, FloatArray]:
+    """Size of the field on the side of the normals and on the other one, (n,) V/m each.
+
+    Parameters
+    ----------
+    charges : StatedCharges
+    two_sided : (n_bodies,) bool
+
+    Returns
+    -------
+    outer, inner : (n,) float, V/m
+    """
     panels, density = charges.panels, charges.density
     half = 2.0 * np.pi * density / charges.four_pi_epsilon
     mean = half.copy()
@@ -197,7 +207,7 @@ def _facet_shapes(charges: StatedCharges) -> tuple[FloatArray, FloatArray]:
 
 
 @dataclass(frozen=True, eq=False)
-class _Sharp:
+class Sharp:
     """Sharp edges and tips: conductor (n,), ends (n, 2, 3) m, exponent (n,), not a number where unknown."""
 
     conductor: IntArray
@@ -205,7 +215,19 @@ class _Sharp:
     exponent: FloatArray
 
 
-def _sharp_edges(charges: StatedCharges, outer: FloatArray, inner: FloatArray) -> _Sharp:
+def sharp_edges(charges: StatedCharges, outer: FloatArray, inner: FloatArray) -> Sharp:
+    """Sharp convex edges, rims and tips that carry charge.
+
+    Parameters
+    ----------
+    charges : StatedCharges
+    outer, inner : (n,) float, V/m
+        From :func:`surface_sides`.
+
+    Returns
+    -------
+    Sharp
+    """
     surface, creases = charges.surface, charges.creases
     body = surface.triangle_body[creases.edges.triangles.max(axis=1).clip(0)]
     out, into = _typical_by_body(charges, outer) > 0.0, _typical_by_body(charges, inner) > 0.0
@@ -221,7 +243,7 @@ def _sharp_edges(charges: StatedCharges, outer: FloatArray, inner: FloatArray) -
     owner = np.zeros(len(surface.vertices), np.int64)
     owner[surface.triangles.reshape(-1)] = np.repeat(surface.triangle_body, 3)
     points = surface.vertices[tips]
-    return _Sharp(
+    return Sharp(
         surface.body_conductor[np.concatenate([body[sharp], owner[tips]])],
         np.concatenate([ends, np.stack([points, points], axis=1)]),
         np.concatenate([exponent[sharp], np.full(len(tips), np.nan)]),
@@ -261,7 +283,7 @@ def _tips(charges: StatedCharges) -> IntArray:
     return np.flatnonzero((cosine < np.cos(TIP_TURN)) & (bend > 0) & (count >= 3))
 
 
-def _nearest_edge(sharp: _Sharp, edges: IntArray, place: FloatArray) -> tuple[float | None, FloatArray]:
+def _nearest_edge(sharp: Sharp, edges: IntArray, place: FloatArray) -> tuple[float | None, FloatArray]:
     """Exponent of the sharp edge nearest to a place, and its nearest point."""
     start = sharp.ends[edges, 0]
     along = sharp.ends[edges, 1] - start

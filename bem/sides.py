@@ -6,7 +6,7 @@ from numpy.typing import NDArray
 from .creases import Creases
 from .surface import Surface
 
-__all__ = ["two_sided_bodies"]
+__all__ = ["turns_around", "two_sided_bodies"]
 
 FloatArray = NDArray[np.float64]
 BoolArray = NDArray[np.bool_]
@@ -42,13 +42,22 @@ def two_sided_bodies(surface: Surface, creases: Creases) -> BoolArray:
         )
         near = others[((first[others] > low) & (first[others] < high)).all(axis=1)]
         two_sided[body] = volume < 0 or any(
-            abs(_turns(corners[surface.triangle_body == body] - first[other])) > 0.5 for other in near
+            abs(turns_around(corners[surface.triangle_body == body] - first[other])) > 0.5 for other in near
         )
     return two_sided
 
 
-def _turns(corners: FloatArray) -> float:
-    """How often a closed mesh wraps around the origin (van Oosterom and Strackee 1983, summed over 4 pi)."""
+def turns_around(corners: FloatArray) -> float:
+    """How often a closed mesh wraps around the origin (van Oosterom and Strackee 1983, summed over 4 pi).
+
+    Parameters
+    ----------
+    corners : (n_triangles, 3, 3) float, m
+
+    Returns
+    -------
+    float
+    """
     a, b, c = corners[:, 0], corners[:, 1], corners[:, 2]
     ra, rb, rc = (np.linalg.norm(v, axis=1) for v in (a, b, c))
     numerator = np.einsum("ij,ij->i", a, np.cross(b, c))

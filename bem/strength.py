@@ -183,7 +183,7 @@ def inception_factor(
         If shapes do not fit, the line does not ascend, or is too short for an avalanche at any sensible field.
     """
     s, e = _line(distance, field)
-    peak = float(e[0])
+    peak = float(e.max())
     if peak == 0.0:
         return math.inf
     low = CRITICAL_FIELD * density / peak

@@ -12,13 +12,14 @@ from pydantic import ValidationError
 from daraf.bem.errors import InputError
 
 from .names import check_file_name
-from .schema import NOT_YET, CaseContent, ConductorEntry, Medium, Part, Rotation
+from .schema import NOT_YET, Air, CaseContent, ConductorEntry, Medium, Part, Rotation
 
 __all__ = ["Case", "load_case", "make_case"]
 
 _TABLES: dict[str, Any] = {
     "": CaseContent,
     "medium": Medium,
+    "air": Air,
     "conductor": ConductorEntry,
     "part": Part,
     "rotation": Rotation,

@@ -5,6 +5,9 @@ from dataclasses import dataclass, replace
 from pathlib import Path
 from typing import Any
 
+import numpy as np
+from numpy.typing import NDArray
+
 from daraf.bem.network import Excitation, MutualCapacitance, excite, mutual_capacitance
 from daraf.bem.solution import CapacitanceSolution
 
@@ -15,6 +18,7 @@ from .loads import loads
 from .problem import Problem, build_problem
 from .progress import Log, ProgressCallback
 from .result import write_result
+from .sensitivity_record import sensitivity_document
 from .surface_file import SolvedSurface, surface_bytes
 from .tables import result_text
 
@@ -35,6 +39,8 @@ class Outcome:
     document : dict
         Content of `result.json`.
     log_lines : list of str
+    sides : (2, n_panels) float, V/m, or None
+        Size of the field on every panel as stated, on the side of its normal and on the other one.
     """
 
     problem: Problem
@@ -43,6 +49,7 @@ class Outcome:
     state: Excitation | None
     document: dict[str, Any]
     log_lines: list[str]
+    sides: NDArray[np.float64] | None = None
 
     def text(self) -> str:
         """Return the tables, as `daraf solve` prints them."""
@@ -70,7 +77,10 @@ class Outcome:
         return write_result(folder, self.document, surface, log)
 
     def _solved_surface(self) -> SolvedSurface:
+        from daraf.bem.meaning import surface_meaning
+
         panels, densities = self.solution.panels, self.solution.densities
+        meaning = surface_meaning(self.problem.surface, panels, self.solution.facets)
         return SolvedSurface(
             corners=panels.corners,
             n_corners=panels.n_corners,
@@ -80,6 +90,10 @@ class Outcome:
             body_names=self.problem.surface.body_names,
             densities=densities,
             density=None if self.state is None else self.state.potential @ densities,
+            facet_offset=meaning.facet_offset,
+            body_fill=meaning.fill,
+            field_sides=self.sides,
+            previous=self.solution.previous,
         )
 
 
@@ -189,9 +203,15 @@ def solve_problem(
     state = _state(problem, solution)
     extras: dict[str, Any] = {}
     further: dict[str, float] = {}
-    if state is not None and not solution.interrupted:
+    sides: NDArray[np.float64] | None = None
+    if not solution.interrupted:
         try:
-            extras, further = loads(problem, solution, state, progress=log)
+            if state is not None:
+                extras, further, sides = loads(problem, solution, state, progress=log)
+            if content.sensitivities:
+                began = time.perf_counter()
+                extras["sensitivity"] = sensitivity_document(problem, solution, progress=log)
+                further["sensitivities"] = time.perf_counter() - began
         except KeyboardInterrupt:
             # The capacitances are there and paid for: give them, and the exit code of an interruption.
             solution = replace(solution, interrupted=True)
@@ -199,7 +219,7 @@ def solve_problem(
     seconds = document["solution"]["seconds"]
     total = reading + time.perf_counter() - started
     document["solution"]["seconds"] = {"reading": reading, **seconds, **further, "total": total}
-    return Outcome(problem, solution, mutual, state, document, log.lines)
+    return Outcome(problem, solution, mutual, state, document, log.lines, sides)
 
 
 def _wanted(problem: Problem) -> list[tuple[int, int]] | None:

@@ -20,6 +20,7 @@ from .units import KINDS, parse_quantity
 
 __all__ = [
     "NOT_YET",
+    "Air",
     "CaseContent",
     "ConductorEntry",
     "Medium",
@@ -265,10 +266,15 @@ class ConductorEntry(_Table):
     potential: _quantity("voltage") | None = None  # type: ignore[valid-type]
     charge: _quantity("charge") | None = Field(None, description="floating: the total charge is given")  # type: ignore[valid-type]
     ground: StrictBool = False
+    edge_radius: _quantity("length") | None = Field(  # type: ignore[valid-type]
+        None, description="of all its sharp convex edges, for the peak field; half the thickness of a sheet"
+    )
 
     @whole(mode="after")
     def _check(self) -> Self:
         stated = self.stated
+        if self.edge_radius is not None and self.edge_radius <= 0.0:
+            raise InputError("edge_radius must be positive; leave it out for a sharp edge")
         if len(stated) > 1:
             raise InputError(f"{' and '.join(stated)} are both given; keep one of potential, charge, ground")
         placed = self.model_fields_set & {"unit", "facet_tolerance", "body", "rotation", "shift"}
@@ -309,6 +315,26 @@ class Medium(_Table):
     relative_permittivity: float = Field(1.0, ge=1.0, le=1e5, allow_inf_nan=False)
 
 
+class Air(_Table):
+    """Air round the conductors: its table asks how far the potentials are from corona and breakdown."""
+
+    pressure: _quantity("pressure") = 101325.0  # type: ignore[valid-type]
+    temperature: _quantity("temperature") = 293.15  # type: ignore[valid-type]
+    withstand: _quantity("field") | None = Field(  # type: ignore[valid-type]
+        None, description="gradient, peak value, that a surface may carry"
+    )
+
+    @whole(mode="after")
+    def _check(self) -> Self:
+        for key, low, high in (("pressure", 1e3, 1e6), ("temperature", 200.0, 400.0)):
+            value = getattr(self, key)
+            if not low <= value <= high:
+                raise InputError(f"{key} {value:g} is outside {low:g} to {high:g} in SI, where the laws of air hold")
+        if self.withstand is not None and self.withstand <= 0.0:
+            raise InputError("withstand must be positive; leave it out if there is no such limit")
+        return self
+
+
 class CaseContent(_Table):
     """A case: conductors in a medium and the accuracy asked."""
 
@@ -317,6 +343,10 @@ class CaseContent(_Table):
     facet_tolerance: Facetting | None = None
     accuracy: Accuracy = 0.01
     facets: Facets = "auto"
+    method: Literal["auto", "dense", "fast"] = Field(
+        "auto",
+        description="how the equations are solved: dense (full matrix), fast (multipoles, iteration), auto: by size",
+    )
     mend: Literal["list", "safe", "bold"] = Field(
         "safe",
         description="list: change nothing, refuse what is not fit; safe: only what keeps the shape; "
@@ -325,14 +355,14 @@ class CaseContent(_Table):
     mend_within: PositiveLength | None = Field(None, description="nothing moves farther than this")  # type: ignore[valid-type]
     close_holes: PositiveLength | None = Field(None, description="largest hole that bold closes")  # type: ignore[valid-type]
     coarsen: Coarsening = "auto"
-    method: Literal["auto", "dense", "fast"] = Field(
-        "auto",
-        description="how the equations are solved: dense (full matrix), fast (multipoles, iteration), auto: by size",
-    )
     want: tuple[tuple[str, str], ...] = Field(
         (), description="couplings that must meet the accuracy, as pairs of conductors; all if left out"
     )
+    sensitivities: StrictBool = Field(
+        False, description="also tell how the capacitances move when a body is shifted, turned or grows"
+    )
     medium: Medium = Medium(relative_permittivity=1.0)
+    air: Air | None = None
     conductor: tuple[ConductorEntry, ...] = Field(min_length=1)
 
     @whole(mode="after")
@@ -346,6 +376,10 @@ class CaseContent(_Table):
             if name not in seen:
                 known = ", ".join(repr(entry.name) for entry in self.conductor)
                 raise InputError(f"want: no conductor is named {name!r}; there are {known}")
+        if self.air is not None and not self.conductor[0].stated:
+            raise InputError(
+                "air: the strength hangs on potentials; state potential, charge or ground of all conductors"
+            )
         silent = [entry.name for entry in self.conductor if not entry.stated]
         if silent and len(silent) < len(self.conductor):
             raise InputError(

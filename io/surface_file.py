@@ -2,8 +2,11 @@
 
 Cell arrays: ``conductor`` and ``body`` (index), ``panel_size`` (square root of the area), one
 ``charge_density_NAME`` per conductor (that conductor at 1 V, all others at 0 V) and, when potentials or
-charges were stated, ``charge_density``. Each array carries its unit as VTK's UNITS_LABEL. The names of the
-conductors and bodies are field data.
+charges were stated, ``charge_density``; ``pass_before_NAME`` are the densities of the pass before;
+``facet_offset`` tells how far a panel was moved outward onto the round surface that its facet stands for,
+``field_front`` and ``field_back`` how large the stated field is on both sides. Each array carries its unit as
+VTK's UNITS_LABEL. The names of the conductors and bodies are field data, and so is ``body_fill``: 1 for a body whose
+inside is metal, -1 for the wall of a cavity in one, 0 for sheets and thin shells.
 """
 
 from collections.abc import Sequence
@@ -17,12 +20,14 @@ from numpy.typing import NDArray
 
 from daraf.bem.errors import InputError
 
-__all__ = ["SolvedSurface", "read_surface", "surface_bytes"]
+__all__ = ["SolvedSurface", "add_array", "add_texts", "read_surface", "surface_bytes"]
 
 FloatArray = NDArray[np.float64]
 IntArray = NDArray[np.int64]
 
 _UNIT_DENSITY = "C/m2 per V"
+#: Arrays of the field on the side of the normals and on the other one.
+_SIDES = ("field_front", "field_back")
 
 
 @dataclass(frozen=True, eq=False)
@@ -39,6 +44,14 @@ class SolvedSurface:
     densities : (n_conductors, n) float, C/m2 per V
     density : (n,) float, C/m2, or None
         For the stated excitation.
+    facet_offset : (n,) float, m, or None
+        How far each panel was moved outward onto the round surface meant.
+    body_fill : (n_bodies,) int or None
+        1 where the inside of a body is metal, -1 where it is a cavity in metal, else 0.
+    field_sides : (2, n) float, V/m, or None
+        Size of the field on the side of the normals and on the other one, as stated.
+    previous : (n_conductors, n) float, C/m2 per V, or None
+        Densities of the pass before: what they differ by tells how far a field can be trusted.
     """
 
     corners: FloatArray
@@ -49,6 +62,10 @@ class SolvedSurface:
     body_names: tuple[str, ...]
     densities: FloatArray
     density: FloatArray | None
+    facet_offset: FloatArray | None = None
+    body_fill: IntArray | None = None
+    field_sides: FloatArray | None = None
+    previous: FloatArray | None = None
 
 
 def surface_bytes(surface: SolvedSurface, *, title: str = "") -> bytes:
@@ -68,19 +85,29 @@ def surface_bytes(surface: SolvedSurface, *, title: str = "") -> bytes:
 
     data = _poly_data(surface)
     cells = data.GetCellData()
-    _add(cells, "conductor", surface.conductor.astype(np.int32), "")
-    _add(cells, "body", surface.body.astype(np.int32), "")
-    _add(cells, "panel_size", np.sqrt(_areas(surface.corners)), "m")
+    add_array(cells, "conductor", surface.conductor.astype(np.int32), "")
+    add_array(cells, "body", surface.body.astype(np.int32), "")
+    add_array(cells, "panel_size", np.sqrt(_areas(surface.corners)), "m")
     for name, density in zip(surface.conductor_names, surface.densities, strict=True):
-        _add(cells, f"charge_density_{name}", density, _UNIT_DENSITY)
+        add_array(cells, f"charge_density_{name}", density, _UNIT_DENSITY)
+    if surface.previous is not None:
+        for name, density in zip(surface.conductor_names, surface.previous, strict=True):
+            add_array(cells, f"pass_before_{name}", density, _UNIT_DENSITY)
     if surface.density is not None:
-        _add(cells, "charge_density", surface.density, "C/m2")
+        add_array(cells, "charge_density", surface.density, "C/m2")
+    if surface.facet_offset is not None:
+        add_array(cells, "facet_offset", surface.facet_offset, "m")
+    if surface.field_sides is not None:
+        for name, side in zip(_SIDES, surface.field_sides, strict=True):
+            add_array(cells, name, side, "V/m")
+    if surface.body_fill is not None:
+        add_array(data.GetFieldData(), "body_fill", surface.body_fill.astype(np.int32), "")
     for key, texts in (
         ("title", (title,)),
         ("conductor_names", surface.conductor_names),
         ("body_names", surface.body_names),
     ):
-        _add_texts(data.GetFieldData(), key, texts)
+        add_texts(data.GetFieldData(), key, texts)
 
     writer = vtkXMLPolyDataWriter()
     writer.SetInputData(data)
@@ -153,7 +180,8 @@ def _areas(corners: FloatArray) -> FloatArray:
     return areas
 
 
-def _add(attributes: Any, name: str, values: NDArray[Any], unit: str) -> None:
+def add_array(attributes: Any, name: str, values: NDArray[Any], unit: str) -> None:
+    """Add an array with its unit to the attributes of a VTK data set."""
     from vtkmodules.util.numpy_support import numpy_to_vtk
     from vtkmodules.vtkCommonCore import vtkDataArray
 
@@ -164,7 +192,8 @@ def _add(attributes: Any, name: str, values: NDArray[Any], unit: str) -> None:
     attributes.AddArray(array)
 
 
-def _add_texts(attributes: Any, name: str, texts: Sequence[str]) -> None:
+def add_texts(attributes: Any, name: str, texts: Sequence[str]) -> None:
+    """Add texts to the field data of a VTK data set."""
     from vtkmodules.vtkCommonCore import vtkStringArray
 
     array = vtkStringArray()
@@ -185,6 +214,7 @@ def _from_poly_data(data: Any, file: Path) -> SolvedSurface:
         array = data.GetCellData().GetArray(name)
         return None if array is None else vtk_to_numpy(array).copy()
 
+    fill = data.GetFieldData().GetArray("body_fill")
     names = texts("conductor_names")
     conductor, body = numbers("conductor"), numbers("body")
     densities = [numbers(f"charge_density_{name}") for name in names]
@@ -196,6 +226,8 @@ def _from_poly_data(data: Any, file: Path) -> SolvedSurface:
     index = vtk_to_numpy(data.GetPolys().GetConnectivityArray()).astype(np.int64)
     n_corners = np.diff(offsets)
     slots = offsets[:-1, None] + np.minimum(np.arange(4), n_corners[:, None] - 1)
+    sides = [numbers(name) for name in _SIDES]
+    before = [numbers(f"pass_before_{name}") for name in names]
     return SolvedSurface(
         corners=np.ascontiguousarray(points[index[slots]], dtype=np.float64),
         n_corners=n_corners,
@@ -205,4 +237,8 @@ def _from_poly_data(data: Any, file: Path) -> SolvedSurface:
         body_names=texts("body_names"),
         densities=np.array(found, dtype=np.float64),
         density=numbers("charge_density"),
+        facet_offset=numbers("facet_offset"),
+        body_fill=None if fill is None else vtk_to_numpy(fill).astype(np.int64),
+        field_sides=None if any(side is None for side in sides) else np.array(sides, dtype=np.float64),
+        previous=None if any(row is None for row in before) else np.array(before, dtype=np.float64),
     )

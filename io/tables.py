@@ -8,6 +8,8 @@ from numpy.typing import NDArray
 
 from .account_text import counted, facet_columns
 from .mesh_units import METRES_PER_UNIT
+from .sensitivity_text import sensitivity_tables
+from .strength_text import strength_table
 from .units import engineering, prefix_for, rounded, with_uncertainty
 
 __all__ = [
@@ -63,6 +65,8 @@ def result_text(document: dict[str, Any]) -> str:
         _state(document),
         force_table(document),
         peak_table(document),
+        strength_table(document, _wrapped),
+        *sensitivity_tables(document),
         _facets(document),
         _accuracy(document),
         _effort(document),
@@ -275,8 +279,12 @@ def peak_table(document: dict[str, Any]) -> list[str]:
         else:
             text = "unbounded" if one["exponent"] is None else f"unbounded (E ~ r^-{one['exponent']:.2f})"
         place = ", ".join(f"{value / METRES_PER_UNIT.get(unit, 1.0) + 0.0:.4g}" for value in one["at"])
+        radius = (one.get("edge") or {}).get("radius")
+        text += "" if radius is None else f" (edges rounded by {engineering(radius, 'm')})"
         line = f"{label.ljust(left)}  {text} at ({place}) {unit if unit in METRES_PER_UNIT else 'm'}"
         lines += [line] if len(line) <= WIDTH else _wrapped(line)
+    if any("edge" in one for one in peaks):
+        lines += _wrapped("edges: at their middles; corners where edges meet are stronger and need a larger radius")
     if not all(one["bounded"] for one in peaks):
         lines += _wrapped("unbounded: at sharp convex edges; result.json names the radius to state")
     return lines

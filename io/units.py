@@ -29,6 +29,9 @@ KINDS = {
     "charge": ("C", "3 nC"),
     "angle": ("rad", "30 deg"),
     "ratio": ("", "0.5 %"),
+    "pressure": ("Pa", "101.3 kPa"),
+    "temperature": ("K", "20 degC"),
+    "field": ("V/m", "2 kV/mm"),
 }
 
 _DEFINITIONS = """\
@@ -36,6 +39,7 @@ tera- = 1e12 = T-
 giga- = 1e9 = G-
 mega- = 1e6 = M-
 kilo- = 1e3 = k-
+hecto- = 1e2 = h-
 centi- = 1e-2 = c-
 milli- = 1e-3 = m-
 micro- = 1e-6 = µ- = μ- = u-
@@ -49,6 +53,9 @@ ampere = [current] = A
 radian = [] = rad
 coulomb = ampere * second = C
 volt = [voltage] = V
+pascal = [pressure] = Pa
+bar = 1e5 * pascal
+kelvin = [temperature] = K
 inch = 0.0254 * meter = in
 mil = 0.001 * inch = thou
 foot = 12 * inch = ft = feet
@@ -125,6 +132,8 @@ def _from_text(text: str, kind: str, unit: str, example: str) -> float:
     if not found:
         raise InputError(f"{text!r} does not start with a number; write a {kind} such as {example!r}")
     number, given = float(found[1]), found[2]
+    if kind == "temperature" and given in ("degC", "°C", "C"):
+        return number + 273.15
     if re.match(r",\s*\d", given):
         raise InputError(f"{text!r} holds a decimal comma; write a decimal point, such as {example!r}")
     if not given:

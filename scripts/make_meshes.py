@@ -5,6 +5,8 @@ along z, wetted side up: a sense electrode with a solder stud, a guard ring roun
 behind it, a drive plate opposite, an insulated screw and a folded sheet of the housing. No drawing of
 anybody else's part was used.
 
+Beside it a terminal for 30 kV on a post, with a small or a large grading ring, over an earthed floor plate.
+
 The files look like the export of a CAD program on purpose: round parts are polygons within a chord tolerance,
 drilled faces fall into long thin triangles, and solids meet at odd angles.
 
@@ -20,7 +22,7 @@ import numpy as np
 from manifold3d import CrossSection, JoinType, Manifold, triangulate
 from numpy.typing import NDArray
 
-__all__ = ["bodies", "solids", "write_all"]
+__all__ = ["bodies", "high_voltage", "solids", "write_all"]
 
 FloatArray = NDArray[np.float64]
 IntArray = NDArray[np.int64]
@@ -166,6 +168,26 @@ def bodies() -> dict[str, Mesh]:
     return found
 
 
+def grading_ring(radius: float, wire: float, height: float) -> Manifold:
+    """Ring of round bar, axis along z, mm."""
+    bar = CrossSection.circle(wire, facets(wire)).translate((radius, height))
+    return bar.revolve(circular_segments=facets(radius))
+
+
+def high_voltage() -> dict[str, Mesh]:
+    """Terminal with a domed head, two grading rings to choose from, and the floor plate, mm."""
+    dome, foot = fillet((0.0, 240.0), 18.0, 0.0, 5), fillet((8.0, 184.0), 10.0, 1.5 * pi, 3)
+    terminal = turned([(0.0, 174.0), *foot, *dome], 18.0)
+    floor = Manifold.cube((500.0, 500.0, 4.0), center=True).translate((0.0, 0.0, -2.0))
+    parts = {
+        "terminal": terminal,
+        "ring": grading_ring(50.0, 6.0, 215.0),
+        "ring_large": grading_ring(80.0, 15.0, 215.0),
+        "floor": floor,
+    }
+    return {name: solid_mesh(solid) for name, solid in parts.items()}
+
+
 def corners(mesh: Mesh) -> FloatArray:
     """Triangle corners in mm, rounded to 1 nm and in an order of their own.
 
@@ -239,6 +261,8 @@ def write_all(folder: Path) -> list[Path]:
         "drive.stl": binary_stl("drive plate, mm", drive_plate),
         "housing.stl": binary_stl("housing sheet, mm", sheet),
     }
+    for name, mesh in high_voltage().items():
+        files[f"{name}.stl"] = binary_stl(f"{name.replace('_', ' ')}, mm", mesh)
     folder.mkdir(parents=True, exist_ok=True)
     for name, data in files.items():
         (folder / name).write_bytes(data)

@@ -10,13 +10,13 @@ import tempfile
 import traceback
 from collections.abc import Sequence
 
-from . import inspect, netlist, solve
+from . import field, inspect, netlist, solve
 from .parser import Parser, UsageError
 
 __all__ = ["main", "program"]
 
 #: Registry of sub-commands: each module has NAME, HELP, ``add_arguments(parser)`` and ``run(args)``.
-_COMMANDS = (inspect, solve, netlist)
+_COMMANDS = (inspect, solve, field, netlist)
 
 #: Longer complaints are cut.
 _LONGEST_LINE = 4000

@@ -7,6 +7,7 @@ import pytest
 from daraf.bem.creases import corner_normals, edge_angles, facet_offsets, find_creases, smooth_edges
 from daraf.bem.regions import find_regions, mesh_edges
 from daraf.bem.surface import Surface
+from published import shapes
 
 
 def one_body(vertices, triangles):
@@ -185,3 +186,58 @@ def test_normals_inside_a_flat_face_are_its_own():
     assert normals == pytest.approx(np.repeat(regions.normals[regions.triangle_region][:, None], 3, axis=1))
     assert np.abs(offsets).max() < 1e-15
     assert len(mesh_edges(surface.triangles).vertices) == 18
+
+
+def arc(middle, radius, start, end, steps):
+    angle = np.linspace(start, end, steps + 1)
+    return np.c_[middle[0] + radius * np.cos(angle), middle[1] + radius * np.sin(angle)]
+
+
+@pytest.mark.parametrize("rows", [1, 3])
+@pytest.mark.parametrize("length", [1.0, 2.0, 6.0])
+def test_straight_strips_between_domes_do_not_bulge_along_their_length(length, rows):
+    """Long strips of a cylinder between the rings of half balls: ring and strip meet at half the turn of two rings."""
+    sides = 16
+    low = arc((0, -length / 2), 1.0, -np.pi / 2, 0, 4)
+    rungs = [(1.0, z) for z in np.linspace(-length / 2, length / 2, rows + 1)[1:-1].tolist()]
+    profile = np.array([*low.tolist(), *rungs, *(low[::-1] * (1, -1)).tolist()])
+    surface = one_body(*shapes.lathe([(r if r > 1e-12 else 0.0, z) for r, z in profile.tolist()], sides))
+    _, _, _, offsets = judged(surface)
+    straight = np.abs(surface.vertices[surface.triangles][:, :, 2]).max(axis=1) < length / 2 + 1e-9
+    # two thirds of the sagitta; the parabola's mean is that of the circle to 2/n^2
+    sagitta = 1 - np.cos(np.pi / sides)
+    assert offsets[straight] == pytest.approx(np.full(straight.sum(), 2 / 3 * sagitta), rel=3 / sides**2)
+
+
+def test_uneven_rings_of_a_ball_are_round_however_wide_they_are():
+    """Rings up to four times as wide as their neighbours: the missing volume is that of the ball."""
+    angles = [0, 0.15, 0.3, 0.45, 0.9, 1.05, 1.2, 1.8, 2.0, 2.2, 2.6, 2.8, np.pi]
+    profile = [(np.sin(a) if 0 < k < 12 else 0.0, -np.cos(a)) for k, a in enumerate(angles)]
+    surface = one_body(*shapes.lathe(profile, 32))
+    _, creases, _, offsets = judged(surface)
+    assert not creases.flat_end.any()
+    points = surface.vertices[surface.triangles]
+    areas = 0.5 * np.linalg.norm(np.cross(points[:, 1] - points[:, 0], points[:, 2] - points[:, 0]), axis=1)
+    missing = 4 / 3 * np.pi - np.einsum("ti,ti->t", points[:, 0], np.cross(points[:, 1], points[:, 2])).sum() / 6
+    assert areas @ offsets == pytest.approx(missing, rel=0.05)
+
+
+@pytest.mark.parametrize("steps", [3, 5])
+def test_box_with_all_edges_rounded_is_flat_on_its_faces(steps):
+    """At the corner of a face two fillets and an eighth of a ball meet: the normal there is the face's."""
+    radius, half = 0.4, (1.0, 0.6, 0.3)
+    ball = manifold3d.Manifold.sphere(radius, 4 * steps)
+    signs = [np.array(s) for s in np.ndindex(2, 2, 2)]
+    solid = manifold3d.Manifold.batch_hull([ball.translate((2 * s - 1) * half) for s in signs])
+    surface = from_solid(solid)
+    _, creases, _, offsets = judged(surface)
+    assert creases.smooth.all()
+    points = surface.vertices[surface.triangles]
+    areas = 0.5 * np.linalg.norm(np.cross(points[:, 1] - points[:, 0], points[:, 2] - points[:, 0]), axis=1)
+    face = (np.abs(np.ptp(points, axis=1)) < 1e-9).any(axis=1)
+    assert np.abs(offsets[face]).max() < 1e-14
+    # Steiner's formula for a box swollen by a ball
+    box, sides = 8 * np.prod(half), 8 * (half[0] * half[1] + half[1] * half[2] + half[2] * half[0])
+    true = box + sides * radius + 2 * np.pi * radius**2 * sum(half) + 4 / 3 * np.pi * radius**3
+    # the parabola's mean for the circle's, on strips that turn by 30 degrees or less, and on the ball's triangles
+    assert areas @ offsets == pytest.approx(true - solid.volume(), rel=0.05)

@@ -165,9 +165,9 @@ def test_json_schema_names_every_key():
     text = json.dumps(schema)
     assert schema["$schema"].endswith("2020-12/schema")
     assert schema["additionalProperties"] is False
-    mending = {"mend", "mend_within", "close_holes", "coarsen"}
-    known = {"title", "unit", "facet_tolerance", "accuracy", "facets", "method", "want", "medium", "conductor"}
-    assert set(schema["properties"]) == known | mending
+    known = {"title", "unit", "facet_tolerance", "accuracy", "facets", "method", "want", "sensitivities", "medium"}
+    known |= {"air", "conductor", "mend", "mend_within", "close_holes", "coarsen"}
+    assert set(schema["properties"]) == known
     for key in ("potential", "charge", "ground", "rotation", "shift", "about", "relative_permittivity"):
         assert f'"{key}"' in text
 

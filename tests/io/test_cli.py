@@ -43,8 +43,8 @@ def solver(monkeypatch):
     """Stands for the real solver, which has its own tests; remembers how it was called."""
     calls = []
 
-    def solve(surface, *, relative_permittivity, accuracy, memory_limit, facets, want, rounding, progress):
-        calls.append({"accuracy": accuracy, "memory_limit": memory_limit, "facets": facets})
+    def solve(surface, *, relative_permittivity, accuracy, memory_limit, facets, method, want, rounding, progress):
+        calls.append({"accuracy": accuracy, "memory_limit": memory_limit, "facets": facets, "method": method})
         progress("assembling", 0, 10)
         progress("assembling", 10, 10, "one pass")
         reached = accuracy >= 1e-3
@@ -75,7 +75,7 @@ def test_solve_a_case(folder, solver, capsys):
         assert result.surface.density[mine].sum() * 0.5e-6 == pytest.approx(charge[index], abs=1e-15)
     assert "assembling" in result.log
     assert "Maxwell capacitance matrix" in result.log
-    assert solver == [{"accuracy": 0.01, "memory_limit": None, "facets": "auto"}]
+    assert solver == [{"accuracy": 0.01, "memory_limit": None, "facets": "auto", "method": "auto"}]
 
 
 def test_solve_surface_files(folder, solver, capsys):

@@ -68,6 +68,17 @@ def test_names_that_look_like_markup_are_written_and_read_back(tmp_path, surface
     assert np.array_equal(back.densities, named.densities)
 
 
+def test_pass_before_facets_and_metal_are_read_back(tmp_path, surface):
+    offset, fill = np.array([0.0, 1e-3, 2e-3]), np.array([1, 0, -1])
+    more = replace(surface, facet_offset=offset, body_fill=fill, previous=0.9 * surface.densities)
+    folder = write_result(tmp_path / "p.daraf", DOCUMENT, surface_bytes(more), "")
+    back = read_result(folder)
+    assert np.array_equal(back.surface.facet_offset, offset)
+    assert np.array_equal(back.surface.body_fill, fill)
+    assert np.array_equal(back.surface.previous, 0.9 * surface.densities)
+    assert foreign_files(folder) == []
+
+
 def test_surface_file_carries_names_and_units(tmp_path, surface):
     from vtkmodules.vtkCommonCore import vtkDataArray
     from vtkmodules.vtkIOXML import vtkXMLPolyDataReader
