@@ -26,7 +26,7 @@ MOST_PANELS = 30_000
 
 def loads(
     problem: Problem, solution: CapacitanceSolution, state: Excitation, *, progress: ProgressCallback | None = None
-) -> tuple[dict[str, Any], dict[str, float], NDArray[np.float64]]:
+) -> tuple[dict[str, Any], dict[str, float], NDArray[np.float64] | None]:
     """Compute forces, torques and peak surface fields.
 
     Parameters
@@ -42,7 +42,7 @@ def loads(
     document : dict
         The keys "force", "torque", "surface_field" and, where air was asked for, "strength" of `result.json`.
     seconds : dict of str to float
-    sides : (2, n_panels) float, V/m
+    sides : (2, n_panels) float, V/m, or None
         Size of the field on every panel, on the side of its normal and on the other one.
     """
     # Here, not above: numba.
@@ -54,7 +54,7 @@ def loads(
 
     if len(solution.panels) > MOST_PANELS:
         text = f"forces and peak fields need sums over all pairs of panels, and are given up to {MOST_PANELS} panels"
-        return {"warnings": [{"code": "too-many-panels", "text": text}]}, {}
+        return {"warnings": [{"code": "too-many-panels", "text": text}]}, {}, None
     begin = time.perf_counter()
     charges = stated_charges(problem.surface, solution, state, facets=problem.case.content.facets)
     forces = conductor_forces(charges, progress=progress)

@@ -75,6 +75,14 @@ def test_the_field_on_both_sides_is_kept_with_the_panels(case, tmp_path):
     assert not back.any()
 
 
+def test_too_many_panels_leave_the_capacitances(case, tmp_path, monkeypatch):
+    monkeypatch.setattr("daraf.io.loads.MOST_PANELS", 10)
+    made = solve_case(case)
+    assert made.document["force"] is None
+    assert "too-many-panels" in [one["code"] for one in made.document["warnings"]]
+    assert read_result(made.write(tmp_path / "boxes.daraf")).surface.field_sides is None
+
+
 def test_a_stated_edge_radius_bounds_the_peak(case, tmp_path):
     text = CASE.replace('potential = "1 kV"', 'potential = "1 kV"\nedge_radius = "0.02 mm"')
     (tmp_path / "round.toml").write_text(text)
