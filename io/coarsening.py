@@ -113,6 +113,11 @@ def coarsen_bodies(
         tolerance = wanted_tolerance(body, gaps[k], accuracy) if isinstance(stated, str) else stated
         found = coarsen(body, tolerance)
         if found is None:
+            text = (
+                f"left {faces[k]:,} flat faces as they are: fewer do not follow them within the distance allowed, "
+                "or the body is open, branches or crosses itself"
+            )
+            result[k] = replace(body, notes=[*body.notes, Change("not-coarsened", faces[k], None, text)])
             continue
         left = count_faces(found.body)
         text = (

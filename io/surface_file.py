@@ -13,6 +13,7 @@ from collections.abc import Sequence
 from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
+from xml.sax.saxutils import escape
 
 import numpy as np
 from numpy.typing import NDArray
@@ -185,7 +186,7 @@ def add_array(attributes: Any, name: str, values: NDArray[Any], unit: str) -> No
     from vtkmodules.vtkCommonCore import vtkDataArray
 
     array = numpy_to_vtk(np.ascontiguousarray(values), deep=True)
-    array.SetName(name)
+    array.SetName(escape(name, {'"': "&quot;"}))  # VTK writes names as they are, also what XML takes for markup
     if unit:
         array.GetInformation().Set(vtkDataArray.UNITS_LABEL(), unit)
     attributes.AddArray(array)

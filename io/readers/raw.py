@@ -246,9 +246,10 @@ def check_part(path: Path, part: RawPart, what: str = "part") -> RawPart:
         bad = int(np.flatnonzero(~finite)[0])
         face = np.flatnonzero((part.triangles == bad).any(axis=1))
         place = f"face {int(face[0]) + 1}" if len(face) else f"vertex {bad + 1}"
+        count = int((~finite).sum())
+        many = "1 vertex is" if count == 1 else f"{count} vertices are"
         raise InputError(
-            f"{path}: {label}, {place}: {int((~finite).sum())} vertices are not finite (NaN or infinite); "
-            "mend the part in CAD and export it again"
+            f"{path}: {label}, {place}: {many} not finite (NaN or infinite); mend the part in CAD and export it again"
         )
     return part
 

@@ -50,7 +50,9 @@ def read_stl(source: Source) -> RawFile:
 
 def _is_ascii(data: bytes) -> bool:
     """Whether this is text that starts with ``solid`` (binary headers may start so too)."""
-    return looks_like_text(data) and normalised_text(data[:1024]).lstrip()[:5].lower() == b"solid"
+    head = normalised_text(data[:1024]).lstrip().lower()
+    # a name may hold control characters; the count of a binary file holds a zero
+    return head[:5] == b"solid" and (looks_like_text(data) or (b"\0" not in head and b"facet" in head))
 
 
 def _why_not(data: bytes) -> str:

@@ -72,12 +72,14 @@ def test_the_rule():
     assert count_faces(round_one) < 3000
     assert round_one.notes[0].moved <= 1e-3 * ball.diagonal
     # a tight gap allows next to nothing
-    assert coarsen_bodies([ball], [1e-4], 0.01, "auto")[0][0] is ball
+    (left,), _ = coarsen_bodies([ball], [1e-4], 0.01, "auto")
+    assert left.triangles is ball.triangles
+    assert [note.code for note in left.notes] == ["not-coarsened"]
 
 
 def test_the_capacitance_is_the_same_and_the_budget_says_so():
     (coarse,), deviation = coarsen_bodies([FINE], [np.inf], 0.01, 2e-3)
-    fine = solve_capacitance(bodies_to_surface([FINE]), accuracy=0.01)
+    fine = solve_capacitance(bodies_to_surface([FINE]), accuracy=0.003)  # the sharper of the two is the reference
     less = solve_capacitance(bodies_to_surface([coarse], deviation=deviation), accuracy=0.01)
     assert "coarsening" not in fine.budget
     assert 0.0 < less.budget["coarsening"][0, 0] < 0.01 * less.maxwell[0, 0]

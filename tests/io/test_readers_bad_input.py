@@ -34,7 +34,7 @@ BAD = {
     "long.stl": (BINARY + b"\0" * 10, "promises 12 triangles"),
     "vast.stl": (BINARY[:80] + b"\xff\xff\xff\xff" + BINARY[84:], "promises 4294967295 triangles"),
     "none.stl": (b"\0" * 84, "holds no triangle"),
-    "nan.stl": (corrupted(3, float("nan")), "face 4: 1 vertices are not finite"),
+    "nan.stl": (corrupted(3, float("nan")), "face 4: 1 vertex is not finite"),
     "inf.stl": (corrupted(0, float("inf")), "not finite"),
     "cut-ascii.stl": (ASCII[: len(ASCII) // 2], "truncated"),
     "cut-second.stl": (TWO[: len(TWO) * 3 // 4], "the file ends inside solid"),

@@ -59,6 +59,15 @@ def test_written_and_read_back(tmp_path, surface):
     assert back.surface.body_names == surface.body_names
 
 
+def test_names_that_look_like_markup_are_written_and_read_back(tmp_path, surface):
+    named = replace(surface, conductor_names=("<b>\"&amp;'", "x&y>z"), body_names=("<a/>", "&", '"'))
+    file = tmp_path / "surface.vtp"
+    file.write_bytes(surface_bytes(named, title="<title>"))
+    back = read_surface(file)
+    assert (back.conductor_names, back.body_names) == (named.conductor_names, named.body_names)
+    assert np.array_equal(back.densities, named.densities)
+
+
 def test_pass_before_facets_and_metal_are_read_back(tmp_path, surface):
     offset, fill = np.array([0.0, 1e-3, 2e-3]), np.array([1, 0, -1])
     more = replace(surface, facet_offset=offset, body_fill=fill, previous=0.9 * surface.densities)
