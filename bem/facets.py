@@ -220,8 +220,12 @@ def _gaps(surface: Surface, regions: Regions, depth: FloatArray) -> FloatArray:
         others = np.flatnonzero(conductor != number)
         if len(rows) == 0:
             continue
-        nearest = cKDTree(centres[others]).query(regions.origins[rows])[0]
+        # bounded, so that panels far from all others are told so at once
+        furthest = reach + WIDE_GAP * float(depth[rows].max())
+        nearest = cKDTree(centres[others]).query(regions.origins[rows], distance_upper_bound=furthest)[0]
         rows = rows[nearest - reach < WIDE_GAP * depth[rows]]
+        if len(rows) == 0:
+            continue
         frames = panel_frames(points[others][:, [0, 1, 2, 2]], largest_rule=0)
         distance, whose = np.empty(len(rows)), np.empty(len(rows), dtype=np.int64)
         owner = np.full(len(rows), number)

@@ -84,6 +84,8 @@ def unseen_fringe(panels: Panels, gains: FloatArray, sides: FloatArray) -> Float
     for direction, pair in ((0, (1, 3)), (1, (0, 2))):
         for side in pair:
             rows = np.flatnonzero((sides[:, side] > SMOOTH_DECAY) & (panels.n_corners == 4))
+            if len(rows) == 0:
+                continue
             gap, other = _gaps(panels, rows, side, widths[rows, direction])
             unseen = widths[rows, direction] > gap
             rows, other = rows[unseen], other[unseen]

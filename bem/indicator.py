@@ -140,12 +140,12 @@ def self_integrals(corners: FloatArray) -> FloatArray:
 
 @parallel_kernel
 def _thirds_gram(parts, gram):
-    """Galerkin matrices of the three parts of each triangle, (n, 3, 3)."""
+    """Galerkin matrices of the three parts of each triangle, (n, 3, 3), to 1e-5."""
     for p in prange(len(parts)):
         for c in range(3):
-            gram[p, c, c] = self_integral(parts[p, c])
+            gram[p, c, c] = self_integral(parts[p, c], True)
             for d in range(c):
-                gram[p, c, d] = close_pair_integral(parts[p, c], parts[p, d])
+                gram[p, c, d] = close_pair_integral(parts[p, c], parts[p, d], True)
                 gram[p, d, c] = gram[p, c, d]
 
 

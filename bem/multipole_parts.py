@@ -80,24 +80,14 @@ def _far_parts(parts, centre, origin, scale, rules, locals_, factor, sums):
                 sums[p, c, d] += parts[p, c, AREA] * total * factor[d]
 
 
-def _leaf_neighbours(layout: NearLayout, n_leaves: int) -> tuple[IntArray, IntArray]:
-    """Near leaves of each leaf, both ways, one leaf after the other, and where each begins."""
-    pairs = layout.pairs
-    off = pairs[pairs[:, 0] != pairs[:, 1]]
-    both = np.concatenate([pairs, off[:, ::-1]])
-    both = both[np.lexsort((both[:, 1], both[:, 0]))]
-    return np.searchsorted(both[:, 0], np.arange(n_leaves + 1)), both[:, 1]
-
-
 def part_sums(
     far: FarField, layout: NearLayout, corners: FloatArray, parts: FloatArray, chosen: IntArray, field: "Expansion"
 ) -> FloatArray:
     """Integrals of the potential over parts: see :meth:`daraf.bem.operator.FastOperator.at_parts`."""
     tree = far.tree
-    start, neighbours = _leaf_neighbours(layout, len(tree.leaves))
-    place = np.empty(len(tree.order), dtype=np.int64)
-    place[tree.order] = np.arange(len(tree.order))
-    leaf = np.searchsorted(tree.leaf_start, place[chosen], side="right") - 1
+    start, neighbours = layout.neighbours
+    place = tree.place[chosen]
+    leaf = np.searchsorted(tree.leaf_start, place, side="right") - 1
     by_leaf = np.argsort(leaf, kind="stable")
     result = np.zeros((len(parts), 4, field.density.shape[1]))
     cuts = np.arange(0, len(parts) + _PANELS_PER_TILE, _PANELS_PER_TILE)
@@ -118,17 +108,20 @@ def part_sums(
         near = [neighbours[start[k] : start[k + 1]] for k in leaves]
         wanted = np.unique(np.concatenate(near))
         places = np.concatenate([np.arange(tree.leaf_start[w], tree.leaf_start[w + 1]) for w in wanted])
-        row_of = np.full(len(tree.order), -1, dtype=np.int64)
-        row_of[places] = np.arange(len(places))
-        lists = [
-            np.concatenate([np.arange(tree.leaf_start[w], tree.leaf_start[w + 1]) for w in group]) for group in near
-        ]
+        # rows of a near leaf's panels among the sources of this tile
+        first_row = np.concatenate([[0], np.cumsum(tree.leaf_start[wanted + 1] - tree.leaf_start[wanted])])
+        shift = first_row[:-1] - tree.leaf_start[wanted]
+        lists = []
+        for group in near:
+            k = np.searchsorted(wanted, group)
+            lists.append(np.concatenate([np.arange(first_row[i], first_row[i + 1]) for i in k]))
         size = np.repeat([len(one) for one in lists], last - first)
-        of_panel = np.concatenate([np.tile(row_of[one], b - a) for one, a, b in zip(lists, first, last, strict=True)])
+        of_panel = np.concatenate([np.tile(one, b - a) for one, a, b in zip(lists, first, last, strict=True)])
+        own = place[rows] + np.repeat(shift[np.searchsorted(wanted, leaves)], last - first)
         near_start = np.concatenate([[0], np.cumsum(size)]).astype(np.int64)
         sources = panel_frames(corners[tree.order[places]], largest_rule=4)
         density = field.density[tree.order[places]]
-        _near_parts(here, row_of[place[chosen[rows]]], sources, near_start, of_panel, density, sums)
+        _near_parts(here, own, sources, near_start, of_panel, density, sums)
         result[rows] = sums
 
     run_tiles(task, len(cuts) - 1)

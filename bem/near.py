@@ -22,10 +22,11 @@ from .jit import kernel
 from .parallel import parallel_integral
 from .polygon import polygon_potential
 from .segments import (
+    COARSE_NODES,
+    COARSE_WEIGHTS,
     CROWDED_NODES,
     CROWDED_WEIGHTS,
     MAX_PIECES,
-    N_POINTS,
     NARROW,
     PARALLEL,
     across,
@@ -45,11 +46,12 @@ _FAR_ORIGIN = 30.0
 
 
 @kernel
-def _potential_along(line, other, w0, w1, parts):
+def _potential_along(line, other, w0, w1, parts, coarse):
     """Integral of (potential of panel `other`) x (weight, linear from w0 to w1) along a segment.
 
-    Each of its pieces is cut into `parts` equal ones.
+    Each of its pieces is cut into `parts` equal ones; with `coarse` each takes the rule of fewer points.
     """
+    nodes, weights = (COARSE_NODES, COARSE_WEIGHTS) if coarse else (CROWDED_NODES, CROWDED_WEIGHTS)
     breaks = np.empty(MAX_PIECES)
     n = pieces(breaks, line, other)
     slope = (w1 - w0) / line[6]
@@ -59,16 +61,16 @@ def _potential_along(line, other, w0, w1, parts):
         piece = (breaks[k + 1] - breaks[k]) / parts
         start = breaks[k] + (b - k * parts) * piece
         part = 0.0
-        for q in range(N_POINTS):
-            s = start + piece * CROWDED_NODES[q]
+        for q in range(len(nodes)):
+            s = start + piece * nodes[q]
             value = polygon_potential(other, line[0] + s * line[3], line[1] + s * line[4], line[2] + s * line[5])
-            part += CROWDED_WEIGHTS[q] * (w0 + slope * s) * value
+            part += weights[q] * (w0 + slope * s) * value
         total += part * piece
     return total
 
 
 @kernel
-def _edges_about(panel, other, ox, oy, oz, parts):
+def _edges_about(panel, other, ox, oy, oz, parts, coarse):
     """Sum over the edges of `panel` of (distance from the origin) times (potential along the edge), m3."""
     line = np.empty(7)
     total = 0.0
@@ -79,30 +81,34 @@ def _edges_about(panel, other, ox, oy, oz, parts):
         distance = (panel[c] - ox) * panel[o] + (panel[c + 1] - oy) * panel[o + 1] + (panel[c + 2] - oz) * panel[o + 2]
         if abs(distance) > 1e-14 * panel[RADIUS]:
             edge_line(line, panel, k)
-            total += distance * _potential_along(line, other, 1.0, 1.0, parts)
+            total += distance * _potential_along(line, other, 1.0, 1.0, parts, coarse)
     return total
 
 
 @kernel
-def self_integral(frame):
-    """Integral of 1/r over a panel with itself, m3: all terms are positive, slivers lose nothing."""
-    return 2.0 / 3.0 * _edges_about(frame, frame, frame[CENTROID], frame[CENTROID + 1], frame[CENTROID + 2], 1)
+def self_integral(frame, coarse=False):
+    """Integral of 1/r over a panel with itself, m3: all terms are positive, slivers lose nothing.
+
+    With `coarse` 2e-6 of it may be left out.
+    """
+    x, y, z = frame[CENTROID], frame[CENTROID + 1], frame[CENTROID + 2]
+    return 2.0 / 3.0 * _edges_about(frame, frame, x, y, z, 1, coarse)
 
 
 @kernel
-def _narrow_integral(narrow, other, side, n):
+def _narrow_integral(narrow, other, side, n, coarse):
     """Gauss points across a narrow panel, the potential of the other one along each line, m3."""
     line = np.empty(7)
     total = 0.0
     for q in range(n):
         w0, w1 = across(narrow, side, GAUSS_NODES[n, q], line)
         if line[6] > 0.0:
-            total += GAUSS_WEIGHTS[n, q] * _potential_along(line, other, w0, w1, 1)
+            total += GAUSS_WEIGHTS[n, q] * _potential_along(line, other, w0, w1, 1, coarse)
     return total
 
 
 @kernel
-def close_pair_integral(source, target):
+def close_pair_integral(source, target, coarse=False):
     """Integral of 1/r over two different panels that touch or nearly touch.
 
     Parameters
@@ -110,6 +116,8 @@ def close_pair_integral(source, target):
     source, target : (FRAME_SIZE,) float
         Rows of :func:`daraf.bem.frames.panel_frames`; where both serve, the lines run along `source`, so
         that should be the smaller one.
+    coarse : bool
+        Whether 1e-6 of the integral in the root mean square, 1e-5 at worst, may be left out.
 
     Returns
     -------
@@ -124,24 +132,25 @@ def close_pair_integral(source, target):
         line = np.empty(7)
         ratio, side = narrowness(source, target, line)
         if ratio > NARROW:
-            return _narrow_integral(source, target, side, narrow_rule(ratio))
+            return _narrow_integral(source, target, side, narrow_rule(ratio), coarse)
         ratio, side = narrowness(target, source, line)
         if ratio > NARROW:
-            return _narrow_integral(target, source, side, narrow_rule(ratio))
+            return _narrow_integral(target, source, side, narrow_rule(ratio), coarse)
         # cross product of the normals: direction of the line where the planes meet, length the sine
         lx, ly, lz = ny * mz - nz * my, nz * mx - nx * mz, nx * my - ny * mx
         sin2 = lx * lx + ly * ly + lz * lz
         share = source[RADIUS] ** 2 / (source[RADIUS] ** 2 + target[RADIUS] ** 2)
         height = share * height_over(source, target) + (1.0 - share) * height_over(target, source)
         if sin2 < PARALLEL**2 and height > _COPLANAR * min(source[RADIUS], target[RADIUS]):
-            return parallel_integral(source, target, height)
+            return parallel_integral(source, target, height, coarse)
         # the origin starts half-way between the panels and is moved onto both planes
         ox = 0.5 * (source[CENTROID] + target[CENTROID])
         oy = 0.5 * (source[CENTROID + 1] + target[CENTROID + 1])
         oz = 0.5 * (source[CENTROID + 2] + target[CENTROID + 2])
         if sin2 < PARALLEL**2:
             # in one plane any origin will do
-            return (_edges_about(source, target, ox, oy, oz, 1) + _edges_about(target, source, ox, oy, oz, 1)) / 3.0
+            total = _edges_about(source, target, ox, oy, oz, 1, coarse)
+            return (total + _edges_about(target, source, ox, oy, oz, 1, coarse)) / 3.0
         g = nx * (source[CENTROID] - ox) + ny * (source[CENTROID + 1] - oy) + nz * (source[CENTROID + 2] - oz)
         f = mx * (target[CENTROID] - ox) + my * (target[CENTROID + 1] - oy) + mz * (target[CENTROID + 2] - oz)
         cosine = nx * mx + ny * my + nz * mz
@@ -154,7 +163,8 @@ def close_pair_integral(source, target):
         )
         if far > _FAR_ORIGIN * max(source[RADIUS], target[RADIUS]):
             parts = 2
-    return (_edges_about(source, target, ox, oy, oz, parts) + _edges_about(target, source, ox, oy, oz, parts)) / 3.0
+    total = _edges_about(source, target, ox, oy, oz, parts, coarse)
+    return (total + _edges_about(target, source, ox, oy, oz, parts, coarse)) / 3.0
 
 
 @kernel

@@ -9,18 +9,19 @@ Tiles are runs of first leaves. A tile writes the rows of its own leaves; what i
 to rows of its own behind them, which are added up in the order of the tiles.
 """
 
+import functools
+import math
 from collections.abc import Callable
 from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
 
-from .frames import CENTROID, RADIUS, panel_frames
-from .jit import kernel
+from .frames import AREA, CENTROID, POINTS, RADIUS, panel_frames
+from .jit import REORDER, kernel
 from .multipole_lists import CellPairs
 from .near import self_integral
 from .pairs import far_integral, middle_integral, pair_integral
-from .panels import polygon_geometry
 from .polygon import polygon_distance
 from .threads import run_tiles
 from .tree import Tree
@@ -31,11 +32,14 @@ FloatArray = NDArray[np.float64]
 IntArray = NDArray[np.int64]
 Progress = Callable[[float, float], None]
 
-_REORDER = {"reassoc", "contract", "arcp", "nsz"}
+#: Place of the moments in a row of :func:`_simple_rows`.
+_MOMENTS = 6
 #: Distance from the smaller panel's centroid to the larger panel over the smaller one's radius, beyond which the
 #: closed form at 3 x 3 and 4 x 4 points leaves less than 1e-5 in the root mean square: measured on spheres, plates,
 #: soups and refined plates.
 _COARSE_3, _COARSE_4 = 1.7, 1.2
+#: Panels whose moments are made at once.
+_ROWS_AT_ONCE = 20_000
 #: Entries of one tile: short enough for progress and balance, long enough that few rows belong to two tiles.
 _ENTRIES_PER_TILE = 2_000_000
 
@@ -73,6 +77,14 @@ class NearLayout:
     extra: IntArray
     rows: int
 
+    @functools.cached_property
+    def neighbours(self) -> tuple[IntArray, IntArray]:
+        """Where the near leaves of each leaf begin, and these, both ways, ascending."""
+        off = self.pairs[self.pairs[:, 0] != self.pairs[:, 1]]
+        both = np.concatenate([self.pairs, off[:, ::-1]])
+        both = both[np.lexsort((both[:, 1], both[:, 0]))]
+        return np.searchsorted(both[:, 0], np.arange(len(self.head))), both[:, 1]
+
 
 def near_layout(tree: Tree, pairs: CellPairs) -> NearLayout:
     """Lay out the near blocks of a tree."""
@@ -99,19 +111,63 @@ def near_layout(tree: Tree, pairs: CellPairs) -> NearLayout:
     return NearLayout(near, column, place, head, start, tile, extra, int(stretch[-1]))
 
 
-@kernel
-def _expanded(a, b):
-    """Mean of 1/r over two panels a few radii apart: ``1/d + (3 d.C d / d^2 - tr C) / (2 d^3)``.
+@kernel(fastmath=REORDER)
+def _expanded_mean(x, y, z, m):
+    """Mean of 1/r over charge about the far end of d = (x, y, z), its moments C and T in `m`, by expansion:
 
-    Rows hold centroid, radius and the second central moments C over the area (xx, yy, zz, xy, xz, yz), of which
-    the sum of both counts.
+    ``1/d + (3 d.C d / d^2 - tr C) / (2 d^3) + (5 T:ddd / d^2 - 3 tr T.d) / (2 d^5)``
+
+    `m` holds the second central moments over the area (xx, yy, zz, xy, xz, yz), then the third ones (xxx, yyy, zzz,
+    xxy, xxz, yyx, yyz, zzx, zzy, xyz); d leads from the seen point to the charge's middle, reversed.
     """
-    x, y, z = a[0] - b[0], a[1] - b[1], a[2] - b[2]
-    xx, yy, zz = a[4] + b[4], a[5] + b[5], a[6] + b[6]
-    xy, xz, yz = a[7] + b[7], a[8] + b[8], a[9] + b[9]
     over2 = 1.0 / (x * x + y * y + z * z)
-    along = x * (xx * x + 2.0 * (xy * y + xz * z)) + y * (yy * y + 2.0 * yz * z) + zz * z * z
-    return np.sqrt(over2) * (1.0 + 0.5 * over2 * (3.0 * along * over2 - xx - yy - zz))
+    along = x * (m[0] * x + 2.0 * (m[3] * y + m[4] * z)) + y * (m[1] * y + 2.0 * m[5] * z) + m[2] * z * z
+    cubic = x * x * (m[6] * x + 3.0 * (m[9] * y + m[10] * z)) + y * y * (m[7] * y + 3.0 * (m[11] * x + m[12] * z))
+    cubic += z * z * (m[8] * z + 3.0 * (m[13] * x + m[14] * y)) + 6.0 * m[15] * x * y * z
+    trace = x * (m[6] + m[11] + m[13]) + y * (m[7] + m[9] + m[14]) + z * (m[8] + m[10] + m[12])
+    second = 3.0 * along * over2 - m[0] - m[1] - m[2]
+    third = (5.0 * cubic * over2 - 3.0 * trace) * over2
+    return math.sqrt(over2) * (1.0 + 0.5 * over2 * (second + third))
+
+
+@kernel
+def _expanded(a, b, both):
+    """Mean of 1/r over two panels by the first terms of its expansion about both centroids; `both` is space for 16.
+
+    Rows of :func:`_simple_rows`: the moments of both add up, the third ones with the sign of the direction.
+    """
+    for k in range(6):
+        both[k] = a[_MOMENTS + k] + b[_MOMENTS + k]
+    for k in range(6, 16):
+        both[k] = a[_MOMENTS + k] - b[_MOMENTS + k]
+    return _expanded_mean(b[0] - a[0], b[1] - a[1], b[2] - a[2], both)
+
+
+@kernel(fastmath=REORDER)
+def _half_expanded(frame, small, n):
+    """Mean of 1/r over two panels: n = 9 points on one, the expansion of the other, the smaller one.
+
+    `n` is no constant, so that the compiler takes the points side by side.
+    """
+    s = POINTS[3]
+    px, py, pz, weight = frame[s : s + n], frame[s + n : s + 2 * n], frame[s + 2 * n : s + 3 * n], frame[s + 3 * n :]
+    cx, cy, cz = small[0], small[1], small[2]
+    xx, yy, zz, xy, xz, yz = small[6], small[7], small[8], 2.0 * small[9], 2.0 * small[10], 2.0 * small[11]
+    xxx, yyy, zzz = 5.0 * small[12], 5.0 * small[13], 5.0 * small[14]
+    xxy, xxz, yyx = 15.0 * small[15], 15.0 * small[16], 15.0 * small[17]
+    yyz, zzx, zzy, xyz = 15.0 * small[18], 15.0 * small[19], 15.0 * small[20], 30.0 * small[21]
+    tx, ty, tz = small[12] + small[17] + small[19], small[13] + small[15] + small[20], small[14] + small[16] + small[18]
+    trace = xx + yy + zz
+    total = 0.0
+    for i in range(n):
+        x, y, z = px[i] - cx, py[i] - cy, pz[i] - cz
+        over2 = 1.0 / (x * x + y * y + z * z)
+        along = x * (xx * x + xy * y + xz * z) + y * (yy * y + yz * z) + zz * z * z
+        cubic = x * x * (xxx * x + xxy * y + xxz * z) + y * y * (yyy * y + yyx * x + yyz * z)
+        cubic += z * (z * (zzz * z + zzx * x + zzy * y) + xyz * x * y)
+        third = (cubic * over2 - 3.0 * (tx * x + ty * y + tz * z)) * over2
+        total += weight[i] * math.sqrt(over2) * (1.0 + 0.5 * over2 * (3.0 * along * over2 - trace + third))
+    return total / frame[AREA]
 
 
 @kernel
@@ -139,15 +195,15 @@ def _known_value(p, q, old):
 
 @kernel
 def _close(source, target, coarse):
-    """Integral of 1/r over two panels, m3; with `coarse` 1.0 the rules of close pairs leave 1e-5 of it."""
-    if coarse > 0.0:
+    """Integral of 1/r over two panels, m3; with `coarse` 1 or 2 the rules of close pairs leave 1e-6, 1e-5 of it."""
+    if coarse > 1.0:
         outer, inner = (source, target) if source[RADIUS] <= target[RADIUS] else (target, source)
         ratio = polygon_distance(inner, outer[CENTROID], outer[CENTROID + 1], outer[CENTROID + 2]) / outer[RADIUS]
         if ratio > _COARSE_3:
             return middle_integral(outer, inner, 3)
         if ratio > _COARSE_4:
             return middle_integral(outer, inner, 4)
-    return pair_integral(source, target)
+    return pair_integral(source, target, coarse > 0.0)
 
 
 @kernel
@@ -163,15 +219,17 @@ def _fill(blocks, leaf_start, frames, frame_start, simple, limits, old, values):
         Of the panels of these leaves, each leaf's together.
     frame_start : (n_leaves,) int
         First frame of a leaf.
-    simple : (n, 12) float
-        In the tree's order: centroid, radius, second moments, area, panel.
-    limits : (4,) float
-        Distance over the sum of the radii beyond which the expansion does, beyond which three by three points do;
-        factor of earlier values; 1.0 if the coarser rules of close pairs do.
+    simple : (n, 22) float
+        In the tree's order: see :func:`_simple_rows`.
+    limits : (5,) float
+        Distance over the sum of the radii beyond which the expansion does, beyond which the expansion of one panel
+        does, beyond which three by three points do; factor of earlier values; 0, 1 or 2 as the rules of close pairs
+        may leave 1e-7, 1e-6 or 1e-5.
     old : tuple
         Of earlier blocks: see :func:`_known_value`.
     values : (n_entries,) float
     """
+    both = np.empty(16)
     for k in range(len(blocks)):
         a, b, at, width = blocks[k, 0], blocks[k, 1], blocks[k, 2], blocks[k, 3]
         first, n = leaf_start[b], leaf_start[b + 1] - leaf_start[b]
@@ -182,22 +240,27 @@ def _fill(blocks, leaf_start, frames, frame_start, simple, limits, old, values):
                 x, y, z = pi[0] - pj[0], pi[1] - pj[1], pi[2] - pj[2]
                 ratio2 = (x * x + y * y + z * z) / (pi[3] + pj[3]) ** 2
                 if ratio2 > limits[0] ** 2:
-                    value = _expanded(pi, pj)
+                    value = _expanded(pi, pj, both)
                 elif ratio2 > limits[1] ** 2:
+                    if pi[3] >= pj[3]:
+                        value = _half_expanded(frames[frame_start[a] + i], pj, 9)
+                    else:
+                        value = _half_expanded(frames[frame_start[b] + j], pi, 9)
+                elif ratio2 > limits[2] ** 2:
                     value = far_integral(frames[frame_start[a] + i], frames[frame_start[b] + j], 3)
-                    value /= pi[10] * pj[10]
+                    value /= pi[4] * pj[4]
                 else:
-                    value = limits[2] * _known_value(int(pi[11]), int(pj[11]), old)
+                    value = limits[3] * _known_value(int(pi[5]), int(pj[5]), old)
                     if value < 0.0:
                         fi, fj = frames[frame_start[a] + i], frames[frame_start[b] + j]
-                        value = self_integral(fi) if a == b and i == j else _close(fi, fj, limits[3])
-                        value /= pi[10] * pj[10]
+                        value = self_integral(fi) if a == b and i == j else _close(fi, fj, limits[4])
+                        value /= pi[4] * pj[4]
                 values[at + i * width + j] = value
                 if a == b:
                     values[at + j * width + i] = value
 
 
-@kernel(fastmath=_REORDER)
+@kernel(fastmath=REORDER)
 def _both_ways(block, xa, xb, ya, yb):
     """``ya += block xb`` and ``yb += block^T xa`` with one pass over the block (n_a, n_b), four rows at a time."""
     n_a, n_b = block.shape
@@ -290,22 +353,21 @@ class Known:
 
 
 def _simple_rows(corners: FloatArray, order: IntArray) -> FloatArray:
-    """Centroid, radius, second central moments, area and panel, in the tree's order."""
-    c = corners[order]
-    areas, centroids, _ = polygon_geometry(c)
-    rows = np.empty((len(c), 12))
-    rows[:, :3], rows[:, 10], rows[:, 11] = centroids, areas, order
-    r = c - centroids[:, None, :]
-    rows[:, 3] = np.sqrt((r**2).sum(axis=2).max(axis=1))
-    second = np.zeros((len(c), 6))
-    for k in (1, 2):
-        corner = r[:, [0, k, k + 1]]
-        area = 0.5 * np.linalg.norm(np.cross(corner[:, 1] - corner[:, 0], corner[:, 2] - corner[:, 0]), axis=1)
-        total = corner.sum(axis=1)
-        for m, (i, j) in enumerate(((0, 0), (1, 1), (2, 2), (0, 1), (0, 2), (1, 2))):
-            moment = (corner[:, :, i] * corner[:, :, j]).sum(axis=1) + total[:, i] * total[:, j]
-            second[:, m] += area / 12.0 * moment
-    rows[:, 4:10] = second / areas[:, None]
+    """Centroid, radius, area, panel, and from _MOMENTS on the central moments, in the tree's order."""
+    rows = np.empty((len(order), _MOMENTS + 16))
+    for first in range(0, len(order), _ROWS_AT_ONCE):
+        here = slice(first, min(first + _ROWS_AT_ONCE, len(order)))
+        frames = panel_frames(corners[order[here]], largest_rule=3)
+        rows[here, :3], rows[here, 3], rows[here, 4] = frames[:, CENTROID : CENTROID + 3], frames[:, RADIUS], frames[:, AREA]
+        rows[here, 5] = order[here]
+        points = frames[:, POINTS[3] :].reshape(-1, 4, 9)
+        x, y, z = (points[:, k] - frames[:, CENTROID + k, None] for k in range(3))
+        weight = points[:, 3] / frames[:, AREA, None]
+        products = x * x, y * y, z * z, x * y, x * z, y * z
+        xx, yy, zz, xy = products[:4]
+        products += xx * x, yy * y, zz * z, xx * y, xx * z, yy * x, yy * z, zz * x, zz * y, xy * z
+        for k, product in enumerate(products):
+            rows[here, _MOMENTS + k] = (weight * product).sum(axis=1)
     return rows
 
 
@@ -318,9 +380,9 @@ class NearBlocks:
     layout : NearLayout
     corners : (n, 4, 3) float
         Panels in their own order, in the tree's coordinates.
-    beyond : (float, float, float)
-        Distance over the sum of the radii beyond which a pair is expanded, and beyond which three by three points
-        on both panels do; 1.0 if 1e-5 of a close pair may be left out, else 0.0.
+    beyond : (float, float, float, float)
+        Distance over the sum of the radii beyond which a pair is expanded, one of its panels is, and beyond which
+        three by three points on both do; 0, 1 or 2 as 1e-7, 1e-6 or 1e-5 of a close pair may be left out.
     real : type
         Precision they are stored in; they are computed in double precision.
     known : Known, optional
@@ -333,7 +395,7 @@ class NearBlocks:
         tree: Tree,
         layout: NearLayout,
         corners: FloatArray,
-        beyond: tuple[float, float, float],
+        beyond: tuple[float, float, float, float],
         real: type,
         known: Known | None = None,
         progress: Progress | None = None,
@@ -348,13 +410,13 @@ class NearBlocks:
         return int(self.values.nbytes)
 
     def _assemble(
-        self, corners: FloatArray, beyond: tuple[float, float, float], known: Known | None, progress: Progress | None
+        self, corners: FloatArray, beyond: tuple[float, float, float, float], known: Known | None, progress: Progress | None
     ) -> None:
         tree, layout = self.tree, self.layout
         simple = _simple_rows(corners, tree.order)
         old = _no_known(len(corners), self.values) if known is None else known.blocks.as_known(known.panel)
         factor = 1.0 if known is None else tree.scale / known.blocks.tree.scale
-        limits = np.array([*beyond[:2], factor, beyond[2]])
+        limits = np.array([*beyond[:3], factor, beyond[3]])
         done = 0.0
 
         def task(tile: int) -> None:
@@ -379,9 +441,7 @@ class NearBlocks:
     def as_known(self, panel: IntArray) -> tuple[NDArray[np.generic], ...]:
         """Arrays by which entries are found, for panels that are `panel` here or new (-1)."""
         tree, layout = self.tree, self.layout
-        place_of = np.empty(len(tree.order), dtype=np.int64)
-        place_of[tree.order] = np.arange(len(tree.order))
-        place = np.where(panel >= 0, place_of[np.maximum(panel, 0)], -1)
+        place = np.where(panel >= 0, tree.place[np.maximum(panel, 0)], -1)
         leaf_of_place = np.repeat(np.arange(len(tree.leaves)), np.diff(tree.leaf_start))
         of_tree = place, leaf_of_place, tree.leaf_start
         return *of_tree, layout.head, layout.pairs, layout.column, layout.start, self.values

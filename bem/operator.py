@@ -54,6 +54,8 @@ class Settings:
         What the translation of one pair may leave out, relative, root mean square.
     expand_beyond : float
         Distance over the sum of the radii beyond which a near pair takes the first terms of its expansion.
+    half_beyond : float
+        Likewise for the expansion of the smaller panel alone.
     gauss_beyond : float
         Likewise for three by three points on both panels.
     real : type
@@ -64,6 +66,7 @@ class Settings:
     theta: float
     dropped: float
     expand_beyond: float
+    half_beyond: float
     gauss_beyond: float
     real: type
 
@@ -75,10 +78,11 @@ def settings_for(tolerance: float) -> Settings:
     tubes and graded plates (tests/bem/test_operator.py).
     """
     degree = int(np.clip(np.ceil(7.6 - 2.5 * np.log10(tolerance / 1e-5)), 3, 18))
-    expand_beyond = max(3.2, 5.8 * (tolerance / 1e-5) ** -0.28)
+    expand_beyond = max(3.2, 4.8 * (tolerance / 1e-5) ** -0.28)
+    half_beyond = max(2.5, 3.0 * (tolerance / 1e-5) ** -0.25)
     gauss_beyond = max(1.8, 2.0 * (tolerance / 1e-5) ** -0.17)
     real = np.float32 if tolerance >= _SINGLE else np.float64
-    return Settings(degree, 0.7, 6.0 * tolerance, expand_beyond, gauss_beyond, real)
+    return Settings(degree, 0.7, 6.0 * tolerance, expand_beyond, half_beyond, gauss_beyond, real)
 
 
 @dataclass(frozen=True, eq=False)
@@ -231,7 +235,8 @@ class FastOperator:
         with one_blas_thread():
             self.far.prepare()
             old = None if previous is None or known is None else Known(previous.near, known)
-            rules = (settings.expand_beyond, settings.gauss_beyond, float(tolerance >= _COARSE))
+            coarse = float(tolerance >= _SINGLE) + float(tolerance >= _COARSE)
+            rules = (settings.expand_beyond, settings.half_beyond, settings.gauss_beyond, coarse)
             self.near: NearBlocks = NearBlocks(
                 tree,
                 self.plan.layout,

@@ -53,13 +53,15 @@ def middle_integral(outer, inner, n):
 
 
 @kernel
-def pair_integral(source, target):
+def pair_integral(source, target, coarse=False):
     """Integral of 1/r over two different panels, m3, the rule chosen by their distance.
 
     Parameters
     ----------
     source, target : (FRAME_SIZE,) float
         Rows of :func:`daraf.bem.frames.panel_frames`. The value does not depend on their order.
+    coarse : bool
+        Whether close and touching pairs take the rule of fewer points of :func:`daraf.bem.near.close_pair_integral`.
     """
     rule, swapped = pair_rule(source, target, _FAR, _MIDDLE)
     # written out, so that the compiler knows how many points there are: about 5 % of an assembly
@@ -72,4 +74,4 @@ def pair_integral(source, target):
     outer, inner = (target, source) if swapped else (source, target)
     if rule < 0:
         return middle_integral(outer, inner, -rule)
-    return close_pair_integral(outer, inner)
+    return close_pair_integral(outer, inner, coarse)

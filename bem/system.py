@@ -50,7 +50,7 @@ SERIAL = 3000
 CROSS_OVER = 2_000
 #: Relative error of a product, per relative uncertainty asked: its effect on the capacitances is measured and lies
 #: well below, since errors of single panels average out.
-FAR_SHARE = 1e-3
+FAR_SHARE = 3e-3
 LEAST_TOLERANCE, GREATEST_TOLERANCE = 1e-7, 1e-4
 #: Error of the iteration per relative uncertainty asked, of one conductor and of several: the error of a weak coupling
 #: is only bounded by those of both self entries, and it is asked to 1e-3 of them.

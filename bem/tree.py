@@ -65,6 +65,13 @@ class Tree:
     depth_start: IntArray
 
     @cached_property
+    def place(self) -> IntArray:
+        """Place of each panel in `order`."""
+        place = np.empty(len(self.order), dtype=np.int64)
+        place[self.order] = np.arange(len(self.order))
+        return place
+
+    @cached_property
     def leaves(self) -> IntArray:
         """Cells without children, in order of their panels."""
         found = np.nonzero(self.n_children == 0)[0]

@@ -20,8 +20,8 @@ from collections.abc import Callable
 
 os.environ.setdefault("OMP_NUM_THREADS", "1")
 
-import fmm3dpy
 import numpy as np
+import scipy.linalg
 from numpy.typing import NDArray
 
 from daraf.bem import set_threads
@@ -87,6 +87,8 @@ def least(task: Callable[[], object], times: int) -> float:
 
 def library(points: FloatArray, charges: FloatArray, sampled: NDArray[np.int64], times: int) -> tuple[float, float]:
     """CPU time and relative error of the yardstick, charges (n_columns, n)."""
+    import fmm3dpy  # here, so that --memory and --whole need no further package
+
     x, n_columns = np.ascontiguousarray(points.T), len(charges)
     given = charges if n_columns > 1 else charges[0]
     found = {}
@@ -108,11 +110,12 @@ def library(points: FloatArray, charges: FloatArray, sampled: NDArray[np.int64],
 
 def machine() -> tuple[float, float]:
     """Bytes/s of a read that no cache holds, operations/s of a single-precision product, one thread."""
-    long, a = np.ones(30_000_000), np.ones((2000, 50), dtype=np.float32)
-    stream = long.nbytes / least(lambda: long @ long, 5) * 2
+    read = np.ones(60_000_000, dtype=np.float32)
+    a, b = (np.ones((1500, 1500), dtype=np.float32) for _ in range(2))
     with one_blas_thread():
-        gemm = 2 * 2000 * 50 * 50 * 20 / least(lambda: [a @ a[:50] for _ in range(20)], 5)
-    return stream / 2, gemm
+        stream = read.nbytes / least(lambda: scipy.linalg.blas.sasum(read), 5)
+        gemm = 2.0 * 1500**3 / least(lambda: a @ b, 5)
+    return stream, gemm
 
 
 def case(name: str, n: int, with_library: bool) -> tuple[float, float]:
