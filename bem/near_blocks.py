@@ -113,12 +113,12 @@ def near_layout(tree: Tree, pairs: CellPairs) -> NearLayout:
 
 @kernel(fastmath=REORDER)
 def _expanded_mean(x, y, z, m):
-    """Mean of 1/r over charge about the far end of d = (x, y, z), its moments C and T in `m`, by expansion:
+    """Mean of 1/r over a panel, seen from d = (x, y, z) off its centroid, by the first terms of its expansion.
 
     ``1/d + (3 d.C d / d^2 - tr C) / (2 d^3) + (5 T:ddd / d^2 - 3 tr T.d) / (2 d^5)``
 
-    `m` holds the second central moments over the area (xx, yy, zz, xy, xz, yz), then the third ones (xxx, yyy, zzz,
-    xxy, xxz, yyx, yyz, zzx, zzy, xyz); d leads from the seen point to the charge's middle, reversed.
+    `m` holds the central moments over the area: C (xx, yy, zz, xy, xz, yz), T (xxx, yyy, zzz, xxy, xxz, yyx, yyz,
+    zzx, zzy, xyz).
     """
     over2 = 1.0 / (x * x + y * y + z * z)
     along = x * (m[0] * x + 2.0 * (m[3] * y + m[4] * z)) + y * (m[1] * y + 2.0 * m[5] * z) + m[2] * z * z
@@ -144,12 +144,9 @@ def _expanded(a, b, both):
 
 
 @kernel(fastmath=REORDER)
-def _half_expanded(frame, small, n):
-    """Mean of 1/r over two panels: n = 9 points on one, the expansion of the other, the smaller one.
-
-    `n` is no constant, so that the compiler takes the points side by side.
-    """
-    s = POINTS[3]
+def _half_expanded(frame, small):
+    """Mean of 1/r over two panels: 3 x 3 points on one, the expansion of the other, the smaller one."""
+    s, n = POINTS[3], 9
     px, py, pz, weight = frame[s : s + n], frame[s + n : s + 2 * n], frame[s + 2 * n : s + 3 * n], frame[s + 3 * n :]
     cx, cy, cz = small[0], small[1], small[2]
     xx, yy, zz, xy, xz, yz = small[6], small[7], small[8], 2.0 * small[9], 2.0 * small[10], 2.0 * small[11]
@@ -243,9 +240,9 @@ def _fill(blocks, leaf_start, frames, frame_start, simple, limits, old, values):
                     value = _expanded(pi, pj, both)
                 elif ratio2 > limits[1] ** 2:
                     if pi[3] >= pj[3]:
-                        value = _half_expanded(frames[frame_start[a] + i], pj, 9)
+                        value = _half_expanded(frames[frame_start[a] + i], pj)
                     else:
-                        value = _half_expanded(frames[frame_start[b] + j], pi, 9)
+                        value = _half_expanded(frames[frame_start[b] + j], pi)
                 elif ratio2 > limits[2] ** 2:
                     value = far_integral(frames[frame_start[a] + i], frames[frame_start[b] + j], 3)
                     value /= pi[4] * pj[4]
@@ -358,7 +355,11 @@ def _simple_rows(corners: FloatArray, order: IntArray) -> FloatArray:
     for first in range(0, len(order), _ROWS_AT_ONCE):
         here = slice(first, min(first + _ROWS_AT_ONCE, len(order)))
         frames = panel_frames(corners[order[here]], largest_rule=3)
-        rows[here, :3], rows[here, 3], rows[here, 4] = frames[:, CENTROID : CENTROID + 3], frames[:, RADIUS], frames[:, AREA]
+        rows[here, :3], rows[here, 3], rows[here, 4] = (
+            frames[:, CENTROID : CENTROID + 3],
+            frames[:, RADIUS],
+            frames[:, AREA],
+        )
         rows[here, 5] = order[here]
         points = frames[:, POINTS[3] :].reshape(-1, 4, 9)
         x, y, z = (points[:, k] - frames[:, CENTROID + k, None] for k in range(3))
@@ -410,7 +411,11 @@ class NearBlocks:
         return int(self.values.nbytes)
 
     def _assemble(
-        self, corners: FloatArray, beyond: tuple[float, float, float, float], known: Known | None, progress: Progress | None
+        self,
+        corners: FloatArray,
+        beyond: tuple[float, float, float, float],
+        known: Known | None,
+        progress: Progress | None,
     ) -> None:
         tree, layout = self.tree, self.layout
         simple = _simple_rows(corners, tree.order)

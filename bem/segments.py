@@ -39,8 +39,8 @@ _WU = 0.5 * _WU
 CROWDED_NODES = _U**3 * (10.0 - 15.0 * _U + 6.0 * _U**2)
 CROWDED_WEIGHTS = _WU * 30.0 * (_U * (1.0 - _U)) ** 2
 
-#: A rule of half as many points, crowded by the polynomial of order 2: leaves 1e-6 of the integral of a close pair in the
-#: root mean square, 1e-5 at worst, measured on spheres, plates and graded plates; 16 points leave 1e-9.
+#: A rule of half as many points, crowded by the polynomial of order 2: leaves 1e-6 of the integral of a close pair in
+#: the root mean square, 1e-5 at worst, measured on spheres, plates and graded plates; 16 points leave 1e-9.
 N_COARSE = 8
 _V, _WV = np.polynomial.legendre.leggauss(N_COARSE)
 _V = 0.5 * (_V + 1.0)

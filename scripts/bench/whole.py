@@ -104,7 +104,9 @@ def measure_memory() -> None:
         rows.append((1.0, panels, panels * n_conductors))
         peaks.append(peak)
         foretold = fast_bytes(panels, n_conductors)
-        print(f"{panels:8} panels, {n_conductors:3} conductors: peak {peak / 2**20:.0f} MiB, {foretold / peak:.2f} foretold")
+        print(
+            f"{panels:8} panels, {n_conductors} conductors: peak {peak / 2**20:.0f} MiB, {foretold / peak:.2f} foretold"
+        )
     base, panel, column = np.linalg.lstsq(np.array(rows), np.array(peaks, dtype=np.float64), rcond=None)[0]
     print(f"fit: {base / 2**20:.0f} MiB, {panel:.0f} bytes a panel, {column:.0f} a panel and conductor")
 
