@@ -364,10 +364,10 @@ def _simple_rows(corners: FloatArray, order: IntArray) -> FloatArray:
         points = frames[:, POINTS[3] :].reshape(-1, 4, 9)
         x, y, z = (points[:, k] - frames[:, CENTROID + k, None] for k in range(3))
         weight = points[:, 3] / frames[:, AREA, None]
-        products = x * x, y * y, z * z, x * y, x * z, y * z
-        xx, yy, zz, xy = products[:4]
-        products += xx * x, yy * y, zz * z, xx * y, xx * z, yy * x, yy * z, zz * x, zz * y, xy * z
-        for k, product in enumerate(products):
+        xx, yy, zz, xy = x * x, y * y, z * z, x * y
+        second = (xx, yy, zz, xy, x * z, y * z)
+        third = (xx * x, yy * y, zz * z, xx * y, xx * z, yy * x, yy * z, zz * x, zz * y, xy * z)
+        for k, product in enumerate(second + third):
             rows[here, _MOMENTS + k] = (weight * product).sum(axis=1)
     return rows
 
