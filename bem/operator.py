@@ -78,8 +78,8 @@ def settings_for(tolerance: float) -> Settings:
     tubes and graded plates (tests/bem/test_operator.py).
     """
     degree = int(np.clip(np.ceil(7.6 - 2.5 * np.log10(tolerance / 1e-5)), 3, 18))
-    expand_beyond = max(3.2, 4.8 * (tolerance / 1e-5) ** -0.28)
-    half_beyond = max(2.5, 3.0 * (tolerance / 1e-5) ** -0.25)
+    expand_beyond = max(3.2, 5.8 * (tolerance / 1e-5) ** -0.28)
+    half_beyond = max(2.5, 3.5 * (tolerance / 1e-5) ** -0.25)
     gauss_beyond = max(1.8, 2.0 * (tolerance / 1e-5) ** -0.17)
     real = np.float32 if tolerance >= _SINGLE else np.float64
     return Settings(degree, 0.7, 6.0 * tolerance, expand_beyond, half_beyond, gauss_beyond, real)

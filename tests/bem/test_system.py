@@ -5,7 +5,7 @@ from daraf.bem import InputError, set_threads, solve_capacitance
 from daraf.bem.errors import NumericalError
 from daraf.bem.galerkin import galerkin_matrix
 from daraf.bem.panels import Panels
-from daraf.bem.system import CROSS_OVER, FastSystem, factorise, make_system, uses_fast
+from daraf.bem.system import ALONE_SHARE, CROSS_OVER, FastSystem, factorise, far_tolerance, make_system, uses_fast
 from published import shapes
 
 SQUARE = np.array([(0.0, 0.0, 0.0), (1.0, 0.0, 0.0), (1.0, 1.0, 0.0), (0.0, 1.0, 0.0)])
@@ -60,7 +60,11 @@ def test_fast_and_dense_agree_within_what_they_state(name):
     assert (dense.method, fast.method) == ("dense Cholesky", "fast multipole, conjugate gradients")
     assert dense.iterations == 0 < fast.iterations
     scale = np.sqrt(np.outer(np.diag(dense.maxwell), np.diag(dense.maxwell)))
-    if len(dense.panels) == len(fast.panels):
+    # the first pass has one mesh: the tolerances of the product and of the iteration are all that differs
+    first = np.abs(fast.passes[0].maxwell - dense.passes[0].maxwell)
+    assert (first <= (far_tolerance(accuracy) + ALONE_SHARE * accuracy) * scale).all()
+    # as many panels need not be the same ones: on symmetric bodies equal gains are told apart by rounding
+    if np.array_equal(dense.panels.corners, fast.panels.corners):
         # the same mesh: what differs is what the lines "solver" and "far field" state, and the coarse rules of the
         # estimate, good to a few per cent of what it adds
         stated = fast.budget["solver"] + fast.budget["far field"]
