@@ -14,7 +14,8 @@ _MATRICES = 2
 #: Bytes a panel costs apart from the matrices: packed geometry of itself, its parts and halves.
 _BYTES_PER_PANEL = 13_000
 #: Bytes a panel costs with the fast operator, and for each conductor besides: near integrals, moments, preconditioner,
-#: geometry; vectors of the iteration, gains. Measured by ``scripts/bench/scale.py --memory``.
+#: geometry; vectors of the iteration, gains. A generous round figure: two balls of 764,000
+#: panels took half of it (``scripts/bench/whole.py``).
 _FAST_BYTES_PER_PANEL, _FAST_BYTES_PER_COLUMN = 8_000, 400
 #: What the libraries and compiled kernels take, bytes.
 _BASE = 300 * 2**20

@@ -1,8 +1,8 @@
 """Whole solves with the fast operator: time by stage and peak memory, against LAPACK.
 
 `--solve N K`: K balls a tenth of their radius apart, N panels in all, at 1e-3; prints the time of each stage and the
-peak of the process. `--memory`: the peaks of several such solves, each in a process of its own, and what
-``daraf.bem.memory.fast_bytes`` foretold: its two figures a panel are the fit printed, with a tenth added.
+peak of the process. `--memory`: the peaks of several such solves, each in a process of its own, what
+``daraf.bem.memory.fast_bytes`` foretold, and the two figures a panel that would fit them.
 `--against-cholesky`: 100,000 panels against the Cholesky factorisation of a dense system of 15,000, taken from one of
 6,000 with the cube of the size (floor: under 3 times).
 

@@ -92,8 +92,8 @@ def test_intensity_at_the_rim_of_a_disc(sides, accuracy):
 
 @pytest.mark.xfail(
     strict=False,
-    reason="since passes aim at the goal the two differ by 1.05 times their joint uncertainty: the fit of K to the last "
-    "panels of an edge, or the peak on the fillet, is less sure than it says",
+    reason="since passes aim at the goal the two differ by 1.05 times their joint uncertainty: the fit of K to the "
+    "last panels of an edge, or the peak on the fillet, is less sure than it says",
 )
 def test_a_stated_radius_gives_the_peak_of_a_really_rounded_mesh():
     radius, half = 0.1, 1.0
