@@ -8,6 +8,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
+from daraf.bem.errors import InputError
 from daraf.bem.network import Excitation, MutualCapacitance, excite, mutual_capacitance
 from daraf.bem.solution import CapacitanceSolution
 
@@ -172,7 +173,7 @@ def solve_problem(
     Raises
     ------
     InputError
-        If the job does not fit into memory.
+        If the job does not fit into memory, or the method is not for what is around the conductors.
     """
     # Here, not above: the solver brings numba, which `daraf inspect` need not wait for.
     from daraf.bem import solve_capacitance
@@ -200,6 +201,9 @@ def solve_problem(
             rounding=problem.rounding,
             **asked,
         )
+    elif method == "fast":
+        label = problem.case.label
+        raise InputError(f"{label}: dielectrics and planes are solved with the full matrix; leave the method out")
     else:
         solution, extras = solve_with_media(problem, **asked)
     for one in solution.bodies:

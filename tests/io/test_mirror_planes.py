@@ -51,6 +51,13 @@ def test_eighth_of_a_cube_drawn_as_a_closed_body(tmp_path):
     assert "8 times" in told[0]
 
 
+def test_the_fast_method_is_refused_not_ignored(tmp_path):
+    save(tmp_path, "cube", trimesh.creation.box(bounds=[[0, 0, 0], [0.5, 0.5, 0.5]]))
+    planes = [{"kind": "magnetic", "normal": axis} for axis in AXES]
+    with pytest.raises(InputError, match="full matrix"):
+        solve_case(case_of(tmp_path, "cube", plane=planes), method="fast")
+
+
 def test_sphere_over_an_earthed_plane(tmp_path):
     """Maxwell's sums of images."""
     save(tmp_path, "ball", S.moved(S.icosphere(1.0, 2), z=1.5))
